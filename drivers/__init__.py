@@ -1,0 +1,1 @@
+"""Speak to a function generator and an oscilloscope over VISA; know nothing of recipes."""

@@ -1,0 +1,1 @@
+"""Simulate a cell, its wiring and the instruments, behind real sockets."""
