@@ -1,0 +1,181 @@
+"""Shared ground of the recipe's and the bench file's models: values with places in their errors.
+
+Pydantic does the walking and collects every error; this module makes its errors ours: file,
+line, column, what was found, what is allowed, what to write.
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError, ValidationInfo
+from pydantic_core import ErrorDetails, PydanticCustomError
+
+from pulsetally.sequencer.errors import Mistake
+from pulsetally.sequencer.quantities import KINDS, Kind, QuantityError, is_quantity, parse_quantity
+from pulsetally.sequencer.yaml_places import Path, PlacedData, nearest
+
+
+class Model(BaseModel):
+    """A group of settings: frozen, and nothing but what is declared."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True)
+
+
+def fault(problem: str, remedy: str) -> PydanticCustomError:
+    """Build an error that carries a problem and a remedy through pydantic."""
+    return PydanticCustomError("fault", "{problem}", {"problem": problem, "remedy": remedy})
+
+
+@dataclass(frozen=True, slots=True)
+class Name:
+    """Stand for a parameter, to be looked up when the plan is made."""
+
+    word: str
+
+
+@dataclass(frozen=True, slots=True)
+class Declared:
+    """What a recipe declares, known before its steps are read.
+
+    pulses: the names of its pulses. parameters: name -> value as written.
+    """
+
+    pulses: tuple[str, ...] = ()
+    parameters: dict[str, Any] | None = None
+
+
+def _checked(
+    value: float, least: float | None, most: float | None, above: float | None, whole: bool
+) -> float:
+    if least is not None and value < least:
+        raise fault(f"{value:g} is below {least:g}", f"write {least:g} or more")
+    if above is not None and value <= above:
+        raise fault(f"{value:g} is not above {above:g}", f"write more than {above:g}")
+    if most is not None and value > most:
+        raise fault(f"{value:g} is above {most:g}", f"write {most:g} or less")
+    if whole and value != int(value):
+        raise fault(f"{value:g} is not a whole number", f"write {int(value)} or {int(value) + 1}")
+    return value
+
+
+def quantity(
+    kind: Kind,
+    *,
+    least: float | None = None,
+    most: float | None = None,
+    above: float | None = None,
+    whole: bool = False,
+    names: bool = False,
+) -> Any:
+    """Return a validator that reads a quantity of one kind, or the name of a parameter.
+
+    least, most, above: bounds in SI units. whole: only whole numbers. names: a parameter's
+    name is allowed; the value it was declared with is checked like a written one.
+    """
+
+    def read(written: object, info: ValidationInfo) -> float | Name:
+        try:
+            if names and isinstance(written, str) and not is_quantity(written):
+                return _named(written, info)
+            return _checked(parse_quantity(written, kind), least, most, above, whole)
+        except QuantityError as error:
+            raise fault(error.problem, error.remedy) from error
+
+    def _named(written: str, info: ValidationInfo) -> Name:
+        declared: Declared = info.context or Declared()
+        parameters = declared.parameters or {}
+        if written not in parameters:
+            raise fault(
+                f"{written!r} is neither {kind.name} nor a declared parameter",
+                f"{nearest(written, [*parameters])}, or a value such as '{kind.example}'"
+                if parameters
+                else f"write a value such as '{kind.example}', or declare the parameter",
+            )
+        try:
+            _checked(parse_quantity(parameters[written], kind), least, most, above, whole)
+        except QuantityError as error:
+            raise fault(f"parameter {written!r} does not fit: {error.problem}", error.remedy) from (
+                error
+            )
+        return Name(written)
+
+    return BeforeValidator(read)
+
+
+def kind_of(written: object) -> Kind | None:
+    """Find the kind of a quantity from its unit; None if it is not a quantity."""
+    for kind in reversed(KINDS):
+        try:
+            parse_quantity(written, kind)
+        except QuantityError:
+            continue
+        return kind
+    return None
+
+
+def field_names(model: type[BaseModel]) -> list[str]:
+    """Return the names a model's settings have in a file."""
+    return [field.alias or name for name, field in model.model_fields.items()]
+
+
+def validate(
+    model: type[BaseModel],
+    placed: PlacedData,
+    *,
+    known: Callable[[Path], list[str]],
+    context: Declared | None = None,
+) -> tuple[Any, list[Mistake]]:
+    """Build a model from placed data; return it, or None, and every mistake.
+
+    known: for the path of a group, the names of the settings it may have.
+    """
+    try:
+        return model.model_validate(placed.data, context=context), []
+    except ValidationError as error:
+        return None, [_mistake(entry, placed, known) for entry in error.errors()]
+
+
+def _mistake(
+    entry: ErrorDetails, placed: PlacedData, known: Callable[[Path], list[str]]
+) -> Mistake:
+    # A tag such as <read> says which kind of step was tried; it is no part of the file.
+    path: Path = tuple(part for part in entry["loc"] if not is_tag(part))
+    kind, context = entry["type"], entry.get("ctx", {})
+    if kind == "fault":
+        return placed.mistake(path, context["problem"], context["remedy"])
+    if kind == "extra_forbidden":
+        names = known(entry["loc"][:-1])
+        return placed.mistake(
+            path,
+            f"there is no setting {path[-1]!r} here",
+            nearest(str(path[-1]), names),
+            at_key=True,
+        )
+    if kind == "missing":
+        return placed.mistake(
+            path[:-1], f"the setting {path[-1]!r} is missing", f"add '{path[-1]}: ...'"
+        )
+    found = entry["input"]
+    if kind in ("dict_type", "model_type", "model_attributes_type"):
+        names = known(entry["loc"])
+        remedy = (
+            f"write settings such as '{names[0]}: ...'" if names else "write 'name: value' lines"
+        )
+        return placed.mistake(path, f"{_shown(found)} is not a group of settings", remedy)
+    if kind == "too_short":
+        return placed.mistake(path, "the list is empty", "write at least one item")
+    if kind == "list_type":
+        return placed.mistake(path, f"{_shown(found)} is not a list", "write '- ' before each item")
+    if kind == "string_type":
+        return placed.mistake(path, f"{_shown(found)} is not text", "write a word or a sentence")
+    return placed.mistake(path, f"{_shown(found)}: {entry['msg']}", "write what is allowed")
+
+
+def is_tag(part: str | int) -> bool:
+    """Say whether a part of an error's path names the kind of a step."""
+    return isinstance(part, str) and part.startswith("<")
+
+
+def _shown(found: object) -> str:
+    return "a blank" if found is None else f"{str(found)[:60]!r}"
