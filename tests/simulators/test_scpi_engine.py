@@ -137,11 +137,7 @@ EXCHANGES = [
     (b":TRIG:SOUR 5\n", b"", [-128]),
     (b":TEXT ABC\n", b"", [-148]),
     # A stream has no end of message inside a block: its newline counts as data
-    (b":DATA #15ABC
-*IDN?
-*OPC?
-", b"1
-", [-103]),
+    (b":DATA #15ABC\n*IDN?\n*OPC?\n", b"1\n", [-103]),
     (b":DATA #1xABC\n", b"", [-161]),
     # SUF-8
     (b"*ESE 5 V\n", b"", [-138]),
