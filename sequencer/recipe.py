@@ -25,7 +25,14 @@ from pulsetally.sequencer.models import (
     validate,
 )
 from pulsetally.sequencer.quantities import NUMBER, TIME, VOLTAGE, Kind
-from pulsetally.sequencer.yaml_places import Path, PlacedData, load_yaml, nearest, plain_number
+from pulsetally.sequencer.yaml_places import (
+    Path,
+    PlacedData,
+    load_yaml,
+    nearest,
+    plain_number,
+    read_text,
+)
 
 _WORD = re.compile(r"[A-Za-z][A-Za-z0-9_-]*")
 
@@ -204,22 +211,11 @@ class Recipe:
 
 def load_recipe(path: FilePath, overrides: Mapping[str, str] | None = None) -> Recipe:
     """Read a recipe file. Raises RecipeError with every mistake."""
-    try:
-        text = path.read_text(encoding="utf-8")
-    except (OSError, UnicodeDecodeError) as error:
-        reason = error.strerror if isinstance(error, OSError) else "it is not UTF-8 text"
-        raise RecipeError(
-            [
-                Mistake(
-                    file=str(path),
-                    line=0,
-                    column=0,
-                    path="",
-                    problem=f"the recipe can't be read: {reason}",
-                    remedy="name a recipe file, or one that ships with the program",
-                )
-            ]
-        ) from error
+    text, mistakes = read_text(
+        path, "recipe", "name a recipe file, or one that ships with the program"
+    )
+    if mistakes:
+        raise RecipeError(mistakes)
     return parse_recipe(text, file=str(path), overrides=overrides)
 
 

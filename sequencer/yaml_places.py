@@ -6,6 +6,7 @@ no tags, no duplicate keys. All such mistakes of a file are collected, not only 
 
 from dataclasses import dataclass, field
 from difflib import get_close_matches
+from pathlib import Path as FilePath
 from typing import Any
 
 from pulsetally.sequencer.errors import Mistake
@@ -76,6 +77,21 @@ def nearest(word: str, known: list[str], use: str = "write") -> str:
     if close:
         return f"{use} {close[0]!r}"
     return f"{use} one of {', '.join(known)}" if known else "declare it first"
+
+
+def read_text(path: FilePath, noun: str, remedy: str) -> tuple[str, list[Mistake]]:
+    """Read a file; return its text and, where it can't be read, one mistake that says why."""
+    try:
+        if path.stat().st_size > MOST_BYTES:
+            problem = f"the {noun} has over {MOST_BYTES} bytes"
+        else:
+            return path.read_text(encoding="utf-8-sig"), []
+    except UnicodeDecodeError:
+        problem = f"the {noun} is not UTF-8 text"
+    except OSError as error:
+        problem = f"the {noun} can't be read: {error.strerror}"
+    mistake = Mistake(file=str(path), line=0, column=0, path="", problem=problem, remedy=remedy)
+    return "", [mistake]
 
 
 def load_yaml(text: str, file: str) -> PlacedData:

@@ -1,0 +1,289 @@
+"""The bench file, and what the cell sees for a given generator setting.
+
+The voltage that matters is the one across the cell. Between it and the number on the
+generator's panel lie the load setting, the source resistance, the series resistor and diode,
+the clamp and the probe; this module walks that way in both directions.
+"""
+
+import math
+from dataclasses import dataclass
+from pathlib import Path as FilePath
+from typing import Annotated, Any
+
+from pydantic import BeforeValidator, Field
+
+from pulsetally.sequencer.errors import BenchError
+from pulsetally.sequencer.models import Model, fault, field_names, quantity, validate
+from pulsetally.sequencer.quantities import (
+    AREA,
+    CAPACITANCE,
+    CURRENT,
+    LENGTH,
+    NUMBER,
+    RESISTANCE,
+    VOLTAGE,
+    QuantityError,
+    parse_quantity,
+)
+from pulsetally.sequencer.yaml_places import Path, load_yaml, read_text
+
+DIALECTS = ("scpi99",)
+# Boltzmann constant over elementary charge, exact in the SI of 2019, at 27 degrees Celsius.
+_THERMAL_VOLTS = 1.380649e-23 / 1.602176634e-19 * 300.15
+
+
+def _load(written: object) -> object:
+    if written == "high-z":
+        return math.inf
+    try:
+        ohms = parse_quantity(written, RESISTANCE)
+    except QuantityError as error:
+        raise fault(
+            f"{written!r} is not a load: {error.problem}", "write 'high-z', or '50 ohm'"
+        ) from error
+    if ohms <= 0:
+        raise fault("a load is above 0 ohm", "write 'high-z', or '50 ohm'")
+    return ohms
+
+
+def _dialect(written: object) -> object:
+    if written not in DIALECTS:
+        raise fault(f"there is no dialect {written!r}", f"write one of {', '.join(DIALECTS)}")
+    return written
+
+
+def _none_word(written: object) -> object:
+    return None if written == "none" else written
+
+
+def _address(written: object) -> object:
+    if not isinstance(written, str) or "::" not in written:
+        raise fault(
+            f"{str(written)[:60]!r} is not a VISA address",
+            "write one such as TCPIP::192.0.2.10::5025::SOCKET",
+        )
+    return written
+
+
+Address = Annotated[str, BeforeValidator(_address)]
+Dialect = Annotated[str, BeforeValidator(_dialect)]
+
+
+def _channel() -> Any:
+    return quantity(NUMBER, least=1, most=8, whole=True)
+
+
+class GeneratorSection(Model):
+    """Where the function generator is and what it is told about its load."""
+
+    address: Address
+    dialect: Dialect = "scpi99"
+    channel: Annotated[float, _channel()] = 1.0
+    load: Annotated[float, BeforeValidator(_load)] = math.inf
+
+
+class OscilloscopeSection(Model):
+    """Where the oscilloscope is and what its channels watch."""
+
+    address: Address
+    dialect: Dialect = "scpi99"
+    source_channel: Annotated[float, Field(alias="source channel"), _channel()] = 1.0
+    node_channel: Annotated[float, Field(alias="node channel"), _channel()] = 2.0
+
+
+class DiodeSection(Model):
+    """A series diode after Shockley."""
+
+    saturation_current: Annotated[
+        float, Field(alias="saturation current"), quantity(CURRENT, above=0)
+    ]
+    emission: Annotated[float, quantity(NUMBER, least=0.5, most=5)] = 1.0
+
+
+class ClampSection(Model):
+    """A clamp across the cell that conducts beyond its breakdown voltage."""
+
+    breakdown: Annotated[float, quantity(VOLTAGE, above=0)]
+
+
+class ProbeSection(Model):
+    """What the oscilloscope's probe puts across the cell."""
+
+    resistance: Annotated[float, quantity(RESISTANCE, above=0)] = 10e6
+    capacitance: Annotated[float, quantity(CAPACITANCE, least=0)] = 12e-12
+
+
+class WiringSection(Model):
+    """What lies between the generator and the cell."""
+
+    source_resistance: Annotated[
+        float, Field(alias="source resistance"), quantity(RESISTANCE, least=0)
+    ] = 50.0
+    series_resistance: Annotated[
+        float, Field(alias="series resistance"), quantity(RESISTANCE, above=0)
+    ]
+    series_diode: Annotated[
+        DiodeSection | None, Field(alias="series diode"), BeforeValidator(_none_word)
+    ] = None
+    clamp: Annotated[ClampSection | None, BeforeValidator(_none_word)] = None
+    probe: Annotated[ProbeSection, Field(default_factory=ProbeSection)]
+
+
+class LimitsSection(Model):
+    """Voltages that nothing may pass, whatever a recipe says."""
+
+    source: Annotated[float, quantity(VOLTAGE, above=0)]
+    node: Annotated[float, quantity(VOLTAGE, above=0)]
+
+
+class CellSection(Model):
+    """The cell's geometry."""
+
+    name: str = "unnamed"
+    area: Annotated[float, quantity(AREA, above=0)]
+    thickness: Annotated[float, quantity(LENGTH, above=0)]
+
+
+def _title(written: object) -> object:
+    if not isinstance(written, str) or not written.strip():
+        raise fault("a bench has a name", "write 'bench: what a person calls it'")
+    return written
+
+
+class BenchModel(Model):
+    """A whole bench file."""
+
+    bench: Annotated[str, BeforeValidator(_title)]
+    generator: GeneratorSection
+    oscilloscope: OscilloscopeSection
+    clock: Address | None = None
+    wiring: WiringSection
+    limits: LimitsSection
+    cell: CellSection
+
+
+_SECTIONS: dict[str, type[Model]] = {
+    "generator": GeneratorSection,
+    "oscilloscope": OscilloscopeSection,
+    "wiring": WiringSection,
+    "limits": LimitsSection,
+    "cell": CellSection,
+    "series diode": DiodeSection,
+    "clamp": ClampSection,
+    "probe": ProbeSection,
+}
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Bench:
+    """A bench file that was read without a mistake.
+
+    file: its name in messages. text: as written.
+    """
+
+    file: str
+    text: str
+    model: BenchModel
+
+    def with_addresses(self, *, generator: str, oscilloscope: str, clock: str | None) -> "Bench":
+        """Return the same bench with its instruments at other addresses."""
+        model = self.model
+        return Bench(
+            file=self.file,
+            text=self.text,
+            model=model.model_copy(
+                update={
+                    "generator": model.generator.model_copy(update={"address": generator}),
+                    "oscilloscope": model.oscilloscope.model_copy(update={"address": oscilloscope}),
+                    "clock": clock,
+                }
+            ),
+        )
+
+    def terminal_volts(self, panel_volts: float) -> float:
+        """Return the terminal's voltage with nothing drawn, for a panel setting, in volts.
+
+        A generator told 50 ohm shows what it would deliver into 50 ohm; into a high resistance
+        it delivers twice that.
+        """
+        load, source = self.model.generator.load, self.model.wiring.source_resistance
+        return panel_volts if math.isinf(load) else panel_volts * (1 + source / load)
+
+    def panel_volts(self, terminal_volts: float) -> float:
+        """Return the panel setting for a terminal voltage with nothing drawn, in volts."""
+        return terminal_volts / self.terminal_volts(1.0)
+
+    def cell_volts(self, panel_volts: float) -> float:
+        """Return the voltage across the cell long after its switching ended, in volts.
+
+        The current that remains flows through source, series resistor and diode into the
+        probe; the clamp cuts what is beyond its breakdown.
+        """
+        wiring = self.model.wiring
+        emf = self.terminal_volts(panel_volts)
+        loop = wiring.source_resistance + wiring.series_resistance + wiring.probe.resistance
+        if wiring.series_diode is None:
+            current = emf / loop
+        else:
+            current = _diode_current(emf, loop, wiring.series_diode)
+        volts = current * wiring.probe.resistance
+        if wiring.clamp is not None:
+            volts = math.copysign(min(abs(volts), wiring.clamp.breakdown), volts)
+        return volts
+
+    def panel_limit(self) -> float:
+        """Return the largest panel voltage, either sign, that keeps both limits, in volts."""
+        limits, wiring = self.model.limits, self.model.wiring
+        source = self.panel_volts(limits.source)
+        if wiring.clamp is not None and wiring.clamp.breakdown <= limits.node:
+            return source
+        # Without the diode's drop: the limit must hold for the side on which it conducts best.
+        loop = wiring.source_resistance + wiring.series_resistance + wiring.probe.resistance
+        return min(source, self.panel_volts(limits.node * loop / wiring.probe.resistance))
+
+
+def _diode_current(emf: float, ohms: float, diode: DiodeSection) -> float:
+    """Return the current through a Shockley diode in series with a resistance, in amperes."""
+    from scipy.special import lambertw, wrightomega
+
+    saturation = diode.saturation_current
+    volts = diode.emission * _THERMAL_VOLTS
+    argument = (emf + saturation * ohms) / volts + math.log(saturation * ohms / volts)
+    # The closed form is Lambert's W of exp(argument); the omega function is the same
+    # without the exponential that overflows.
+    root = wrightomega(argument) if argument > 0 else lambertw(math.exp(argument)).real
+    return float(volts / ohms * root - saturation)
+
+
+def is_bench_file(path: FilePath) -> bool:
+    """Say whether a file looks like a bench file rather than a recipe."""
+    text, _ = read_text(path, "file", "name a file")
+    data = load_yaml(text, str(path)).data
+    return isinstance(data, dict) and "bench" in data and "recipe" not in data
+
+
+def load_bench(path: FilePath) -> Bench:
+    """Read a bench file. Raises BenchError with every mistake."""
+    text, mistakes = read_text(path, "bench file", "name a bench file; README.md shows one")
+    if mistakes:
+        raise BenchError(mistakes)
+    return parse_bench(text, file=str(path))
+
+
+def parse_bench(text: str, *, file: str) -> Bench:
+    """Read a bench file's text. Raises BenchError with every mistake."""
+    placed = load_yaml(text, file)
+    if placed.mistakes:
+        raise BenchError(placed.mistakes)
+    model, mistakes = validate(BenchModel, placed, known=_known)
+    if mistakes:
+        raise BenchError(sorted(mistakes, key=lambda each: (each.line, each.column)))
+    if model.oscilloscope.source_channel == model.oscilloscope.node_channel:
+        path: Path = ("oscilloscope", "node channel")
+        problem = "both channels are the same; one watches the terminal, one the cell"
+        raise BenchError([placed.mistake(path, problem, "write the channel that watches the cell")])
+    return Bench(file=file, text=text, model=model)
+
+
+def _known(path: Path) -> list[str]:
+    return field_names(_SECTIONS[str(path[-1])]) if path else field_names(BenchModel)

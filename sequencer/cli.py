@@ -1,0 +1,312 @@
+"""The commands. No logic lives here: each reads its options, calls one part, shows the result.
+
+Heavy libraries are imported inside the commands that need them, so that help is quick.
+"""
+
+import json
+import os
+import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+if TYPE_CHECKING:
+    from rich.console import Console
+
+    from pulsetally.sequencer.bench import Bench
+    from pulsetally.sequencer.errors import Mistake
+    from pulsetally.sequencer.plan import Plan
+    from pulsetally.sequencer.recipe import Recipe
+
+DONE, FAILED, WRONG_INPUT, OUTPUTS_UNKNOWN = 0, 1, 2, 3
+
+app = typer.Typer(
+    add_completion=True,
+    no_args_is_help=True,
+    pretty_exceptions_enable=False,
+    help="Calibrate ferroelectric counting cells: preset, step, read, and keep every waveform.",
+    epilog="Begin with: pulsetally rehearse full_count",
+)
+
+RecipeArgument = Annotated[
+    str, typer.Argument(help="A recipe's path, or the name of one that ships.")
+]
+SetOption = Annotated[
+    list[str] | None,
+    typer.Option("--set", metavar="NAME=VALUE", help="Override a parameter or a pulse setting."),
+]
+LogbookOption = Annotated[
+    Path | None,
+    typer.Option(
+        "--logbook",
+        metavar="PATH",
+        help="The logbook; else PULSETALLY_LOGBOOK, else logbook.db here.",
+    ),
+]
+JsonOption = Annotated[bool, typer.Option("--json", help="Print one JSON object, for programs.")]
+
+
+@app.command(epilog="Example: pulsetally check my_recipe.yaml --bench my_bench.yaml")
+def check(
+    file: Annotated[
+        str, typer.Argument(help="A recipe, a shipped recipe's name, or a bench file.")
+    ],
+    bench: Annotated[Path | None, typer.Option(help="The bench it would run on.")] = None,
+    overrides: SetOption = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Read a recipe or bench file, and say what it will do or what is wrong with it."""
+    from pulsetally.sequencer.bench import is_bench_file, load_bench
+    from pulsetally.sequencer.summary import plan_object, say, show_plan
+
+    with _told():
+        if is_bench_file(Path(file)):
+            found = load_bench(Path(file))
+            limit = found.panel_limit()
+            if as_json:
+                _print_json({"bench": found.model.bench, "panel_limit": limit})
+            else:
+                say(_console(), f"{found.model.bench}: well written; at most {limit:.4g} V"
+                    " at the panel keep its limits")  # fmt: skip
+            return
+        plan, table = _planned(file, bench, overrides)
+        if as_json:
+            _print_json(plan_object(plan))
+        else:
+            show_plan(_console(), plan, table)
+
+
+@app.command(epilog="Example: pulsetally rehearse full_count --set rounds=5")
+def rehearse(
+    recipe: RecipeArgument,
+    overrides: SetOption = None,
+    logbook: LogbookOption = None,
+    seed: Annotated[int, typer.Option(help="Seed of the simulated bench.")] = 1,
+) -> None:
+    """Run a recipe on the simulated bench."""
+    from pulsetally.sequencer.rehearsal import simulated_bench
+
+    with _told():
+        plan, table = _planned(recipe, None, overrides)
+        with simulated_bench(table, ["--seed", str(seed)]) as bench:
+            status = _carry_out(plan, bench, logbook, mode="rehearsal")
+    raise typer.Exit(status)
+
+
+@app.command(epilog="Example: pulsetally run full_count --bench my_bench.yaml")
+def run(
+    recipe: RecipeArgument,
+    bench: Annotated[Path, typer.Option(help="The bench file.")],
+    overrides: SetOption = None,
+    logbook: LogbookOption = None,
+) -> None:
+    """Run a recipe on the instruments of a bench file."""
+    with _told():
+        plan, table = _planned(recipe, bench, overrides)
+        status = _carry_out(plan, table, logbook, mode="run")
+    raise typer.Exit(status)
+
+
+@app.command(epilog="Example: pulsetally runs")
+def runs(logbook: LogbookOption = None, as_json: JsonOption = False) -> None:
+    """List the runs of a logbook."""
+    from dataclasses import asdict
+
+    from pulsetally.sequencer.logbook import Logbook
+    from pulsetally.sequencer.results import list_runs
+    from pulsetally.sequencer.summary import say, show_runs
+
+    with _told():
+        path = _logbook_path(logbook)
+        found = list_runs(Logbook(path, create=False))
+        if as_json:
+            _print_json([asdict(each) for each in found])
+        else:
+            show_runs(_console(), found)
+            say(_console(), f"logbook: {path}")
+
+
+@app.command(epilog="Example: pulsetally show latest --json")
+def show(
+    which: Annotated[str, typer.Argument(metavar="[RUN|latest]", help="Which run.")] = "latest",
+    logbook: LogbookOption = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Show what a run found."""
+    from pulsetally.sequencer.logbook import Logbook
+    from pulsetally.sequencer.results import find_run, run_result
+    from pulsetally.sequencer.summary import show_result
+
+    with _told():
+        book = Logbook(_logbook_path(logbook), create=False)
+        result = run_result(book, find_run(book, which))
+        if as_json:
+            _print_json(result.as_object())
+        else:
+            show_result(_console(), result)
+
+
+@app.command(epilog="Example: pulsetally simulate --write-bench bench.yaml")
+def simulate(
+    as_json: JsonOption = False,
+    seed: Annotated[int, typer.Option(help="Seed of everything random.")] = 1,
+    generator_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
+    oscilloscope_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
+    control_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
+    write_bench: Annotated[
+        Path | None, typer.Option(metavar="FILE", help="Write a bench file with the addresses.")
+    ] = None,
+) -> None:
+    """Start the simulated instruments and keep them until Ctrl-C."""
+    from pulsetally.sequencer.rehearsal import addressed_bench_text
+    from pulsetally.simulators.simulate import Addresses, SimulationSettings, announcement, serve
+
+    def announce(addresses: Addresses) -> None:
+        if write_bench is not None:
+            text = addressed_bench_text(
+                addresses.generator, addresses.oscilloscope, addresses.control
+            )
+            write_bench.write_text(text, encoding="utf-8")
+        typer.echo(announcement(addresses, as_json=as_json))
+        sys.stdout.flush()
+
+    settings = SimulationSettings(
+        seed=seed,
+        generator_port=generator_port,
+        oscilloscope_port=oscilloscope_port,
+        control_port=control_port,
+    )
+    try:
+        serve(settings, announce)
+    except OSError as error:
+        _complain(f"the simulated bench can't listen: {error.strerror}. To fix it, use port 0.")
+        raise typer.Exit(FAILED) from error
+
+
+def _planned(recipe: str, bench: Path | None, overrides: list[str] | None) -> "tuple[Plan, Bench]":
+    """Read recipe and bench, and plan; every mistake of both files is told at once."""
+    from pulsetally.sequencer.bench import load_bench
+    from pulsetally.sequencer.errors import InputError
+    from pulsetally.sequencer.plan import make_plan
+    from pulsetally.sequencer.recipe import load_recipe
+    from pulsetally.sequencer.rehearsal import recipe_path, shipped_bench
+
+    settings, mistakes = _overrides(overrides or [])
+    found: Recipe | None = None
+    table: Bench | None = None
+    try:
+        with recipe_path(recipe) as path:
+            found = load_recipe(path, settings)
+    except InputError as error:
+        mistakes += error.mistakes
+    try:
+        table = shipped_bench() if bench is None else load_bench(bench)
+    except InputError as error:
+        mistakes += error.mistakes
+    if mistakes or found is None or table is None:
+        raise InputError(mistakes)
+    return make_plan(found, table), table
+
+
+def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str) -> int:
+    from pulsetally.sequencer import engine
+    from pulsetally.sequencer.events import RunState
+    from pulsetally.sequencer.live import follow
+    from pulsetally.sequencer.logbook import Logbook
+    from pulsetally.sequencer.progress import Progress
+    from pulsetally.sequencer.results import run_result
+    from pulsetally.sequencer.safety import StopSwitch, signals
+    from pulsetally.sequencer.summary import say, show_result
+
+    console, path = _console(), _logbook_path(logbook)
+    book, stop = Logbook(path), StopSwitch()
+    progress = Progress(rounds=len(plan.rounds), seconds=plan.seconds, swept=plan.swept)
+    for warning in plan.warnings:
+        say(console, f"Note: {warning}.")
+    with signals(stop):
+        recorder = book.begin_run(plan, bench, mode=mode)
+        follow(engine.run(plan, bench, recorder, stop), progress, console)
+    ended = progress.ended
+    show_result(console, run_result(book, recorder.run), rounds=False)
+    say(console, f"Everything is kept in {path} as run {recorder.run};"
+        f" see it with: pulsetally show {recorder.run}")  # fmt: skip
+    if ended is not None and ended.outputs_off:
+        say(console, "Outputs are off, and read back as off.")
+    if ended is None or ended.outputs_off is False:
+        _complain(ended.reason if ended else "the run did not end in order")
+        return OUTPUTS_UNKNOWN
+    if ended.state is RunState.FINISHED:
+        return DONE
+    _complain(f"the run {ended.state.value}: {ended.reason}")
+    return FAILED
+
+
+def _overrides(written: list[str]) -> "tuple[dict[str, str], list[Mistake]]":
+    from pulsetally.sequencer.errors import Mistake
+
+    settings, mistakes = {}, []
+    for each in written:
+        name, _, value = (part.strip() for part in each.partition("="))
+        if name and value:
+            settings[name] = value
+            continue
+        mistakes.append(
+            Mistake(
+                file=f"--set {each}",
+                line=0,
+                column=0,
+                path="",
+                problem="this is not NAME=VALUE",
+                remedy="write it as in --set up.width=80us",
+            )
+        )
+    return settings, mistakes
+
+
+def _logbook_path(given: Path | None) -> Path:
+    return given or Path(os.environ.get("PULSETALLY_LOGBOOK") or "logbook.db")
+
+
+def _console() -> "Console":
+    from rich.console import Console
+
+    return Console(highlight=False)
+
+
+def _print_json(value: object) -> None:
+    typer.echo(json.dumps(value, ensure_ascii=True, allow_nan=False))
+
+
+def _complain(words: str) -> None:
+    from pulsetally.sequencer.progress import printable
+
+    for line in words.splitlines():
+        typer.echo(printable(line), err=True)
+
+
+@contextmanager
+def _told() -> Iterator[None]:
+    """Turn our errors into sentences and exit statuses; there is no traceback for them."""
+    from pulsetally.drivers.errors import PulsetallyError
+    from pulsetally.sequencer.errors import InputError, OutputsNotConfirmed, PlanError
+
+    statuses: list[tuple[type[Exception], int]] = [
+        (InputError, WRONG_INPUT),
+        (PlanError, WRONG_INPUT),
+        (OutputsNotConfirmed, OUTPUTS_UNKNOWN),
+        (PulsetallyError, FAILED),
+    ]
+    try:
+        yield
+    except PulsetallyError as error:
+        _complain(str(error))
+        status = next(code for kind, code in statuses if isinstance(error, kind))
+        raise typer.Exit(status) from error
+
+
+def main() -> None:
+    """Run the command line."""
+    app()

@@ -1,0 +1,366 @@
+"""Run a plan on a bench, as an iterator of events.
+
+The engine knows no screen. It asks the logbook to record each event before anybody else sees
+it and before the next pulse goes out; however it ends, the output is off and read back as off.
+"""
+
+import math
+from collections.abc import Callable, Generator, Iterator
+from dataclasses import replace
+
+from pulsetally.drivers.errors import InstrumentError, PulsetallyError
+from pulsetally.drivers.function_generator import PulseSetting
+from pulsetally.drivers.oscilloscope import AcquisitionSetting, Trace
+from pulsetally.sequencer.analysis.counting import count_read, passes
+from pulsetally.sequencer.analysis.pulses import EndVoltage, PulseUnreadable, end_voltage
+from pulsetally.sequencer.bench import Bench
+from pulsetally.sequencer.errors import (
+    LogbookError,
+    OutputsNotConfirmed,
+    ShotMissing,
+    StopRequested,
+)
+from pulsetally.sequencer.events import (
+    Event,
+    PulseArmed,
+    PulseSetUp,
+    ReadFinished,
+    Role,
+    RoundBegan,
+    RoundFinished,
+    RoundSpoiled,
+    RunBegan,
+    RunEnded,
+    RunState,
+    Shot,
+    ShotTaken,
+    StopAsked,
+    WaitBegan,
+    Waveform,
+)
+from pulsetally.sequencer.instruments import Instruments, open_instruments
+from pulsetally.sequencer.logbook import Recorder
+from pulsetally.sequencer.plan import Plan, Preset, Pulse, Read, Round, Step, Wait, window_points
+from pulsetally.sequencer.safety import StopSwitch
+
+# A round that lost a pulse starts again; one that loses it again and again has a cause.
+MOST_ATTEMPTS = 3
+# Common practice: an output relay is quiet some 10 ms after it was switched.
+_RELAY_SECONDS = 0.05
+_ARM_SECONDS = 5.0
+_DONE_SECONDS = 3.0
+_POLL_SECONDS = 0.002
+# The share of a record that lies before the trigger.
+_BEFORE = 0.1
+# The digitizer's range, against the largest voltage that is expected.
+_HEADROOM = 1.1
+
+
+def run(plan: Plan, bench: Bench, recorder: Recorder, stop: StopSwitch) -> Iterator[Event]:
+    """Carry out a plan; yield what happens. The last event is RunEnded, always recorded."""
+    instruments: Instruments | None = None
+    state, reason = RunState.FAILED, ""
+    try:
+        instruments = open_instruments(bench)
+        for event in _Conductor(plan, bench, instruments, stop).events():
+            recorder.record(event)
+            yield event
+        state = RunState.FINISHED
+    except StopRequested:
+        state, reason = RunState.STOPPED, stop.reason
+    except GeneratorExit:
+        state, reason = RunState.STOPPED, "nobody took its events any more"
+        raise
+    except PulsetallyError as error:
+        reason = str(error)
+    except BaseException as error:
+        reason = f"{type(error).__name__}: {error}"
+        raise
+    finally:
+        ended = _end(instruments, state, reason)
+        try:
+            recorder.close(ended)
+        except LogbookError as error:
+            # The end is told even where it can't be kept, as on a full disk.
+            ended = replace(ended, state=RunState.FAILED, reason=f"{reason} {error}".strip())
+    yield ended
+
+
+def _end(instruments: Instruments | None, state: RunState, reason: str) -> RunEnded:
+    if instruments is None:
+        return RunEnded(state=state, reason=reason, outputs_off=None)
+    try:
+        instruments.quiet()
+    except OutputsNotConfirmed as error:
+        reason = f"{reason} {error}".strip()
+        return RunEnded(state=RunState.FAILED, reason=reason, outputs_off=False)
+    finally:
+        instruments.close()
+    return RunEnded(state=state, reason=reason, outputs_off=True)
+
+
+class _Conductor:
+    """Take the instruments through the rounds of a plan."""
+
+    def __init__(
+        self, plan: Plan, bench: Bench, instruments: Instruments, stop: StopSwitch
+    ) -> None:
+        self._plan, self._bench, self._stop = plan, bench, stop
+        self._generator, self._oscilloscope = instruments.generator, instruments.oscilloscope
+        self._instruments, self._clock = instruments, instruments.clock
+        self._ready_for: Pulse | None = None
+        self._next_at = 0.0
+        self._stop_announced = False
+
+    def events(self) -> Iterator[Event]:
+        identities = {
+            "function generator": self._generator.identify(),
+            "oscilloscope": self._oscilloscope.identify(),
+        }
+        self._instruments.quiet()
+        self._generator.prepare()
+        self._oscilloscope.prepare()
+        yield RunBegan(
+            rounds=len(self._plan.rounds),
+            most_pulses=self._plan.most_pulses,
+            seconds=self._plan.seconds,
+            identities=identities,
+        )
+        for each in self._plan.rounds:
+            yield from self._attempts(each)
+            if self._stop.after_round and each is not self._plan.rounds[-1]:
+                raise StopRequested(self._stop.reason)
+
+    def _attempts(self, each: Round) -> Iterator[Event]:
+        for attempt in range(1, MOST_ATTEMPTS + 1):
+            yield RoundBegan(round=each, attempt=attempt)
+            try:
+                yield from self._round(each)
+            except ShotMissing as error:
+                reason = self._explain(error)
+                yield RoundSpoiled(round=each.number, reason=reason)
+                if not each.repeatable or attempt == MOST_ATTEMPTS:
+                    raise ShotMissing(error.order, reason) from error
+                continue
+            except (InstrumentError, StopRequested) as error:
+                yield RoundSpoiled(round=each.number, reason=self._cut(error))
+                raise
+            yield RoundFinished(round=each.number)
+            return
+
+    def _cut(self, error: PulsetallyError) -> str:
+        return self._stop.reason if isinstance(error, StopRequested) else str(error)
+
+    def _explain(self, error: ShotMissing) -> str:
+        # What the instruments say about it belongs to the reason, and leaves their queues.
+        words = [error.problem]
+        for instrument in (self._generator, self._oscilloscope):
+            for number, text in instrument.errors():
+                words.append(f"{instrument.address} reports {number}, {text!r}")
+        self._oscilloscope.abort()
+        self._generator.abort()
+        self._ready_for = None
+        return "; ".join(words)
+
+    def _round(self, each: Round) -> Iterator[Event]:
+        order, stepped = 0, 0
+        for action in each.actions:
+            match action:
+                case Wait():
+                    yield WaitBegan(round=each.number, seconds=action.seconds)
+                    self._pause(action.seconds)
+                case Preset():
+                    order += 1
+                    yield from self._pulse(each, order, Role.PRESET, action.pulse)
+                case Step():
+                    for _ in range(action.count):
+                        order += 1
+                        yield from self._pulse(each, order, Role.STEP, action.pulse)
+                    stepped += action.count
+                case Read():
+                    order = yield from self._read(each, order, stepped, action)
+        self._generator.raise_errors("")
+        self._oscilloscope.raise_errors("")
+
+    def _read(
+        self, each: Round, order: int, stepped: int, action: Read
+    ) -> Generator[Event, None, int]:
+        rising = action.pulse.rising
+        ends: list[float] = []
+        while len(ends) < action.at_most:
+            order += 1
+            taken = yield from self._pulse(each, order, Role.READ, action.pulse, action)
+            ends.append(taken.volts)
+            if passes(taken.volts, action.threshold, rising=rising):
+                break
+        count = count_read(ends, action.threshold, rising=rising)
+        yield ReadFinished(
+            round=each.number,
+            pulse=action.pulse.name,
+            threshold=action.threshold,
+            count=count.count,
+            crossing=count.crossing,
+            reached=count.reached,
+            stepped=stepped,
+            end_voltages=tuple(ends),
+        )
+        return order
+
+    def _pulse(
+        self, each: Round, order: int, role: Role, pulse: Pulse, read: Read | None = None
+    ) -> Generator[Event, None, EndVoltage]:
+        """Deliver one pulse and record it: arm, know that it is armed, fire, fetch."""
+        if self._stop.after_round and not self._stop_announced:
+            self._stop_announced = True
+            yield StopAsked(at_once=self._stop.at_once)
+        yield from self._set_up(pulse)
+        self._pause(self._next_at - self._clock.now())
+        if self._stop.at_once:
+            raise StopRequested(self._stop.reason)
+        self._oscilloscope.arm()
+        if not self._until(self._oscilloscope.is_armed, _ARM_SECONDS):
+            raise InstrumentError(
+                self._oscilloscope.address,
+                "",
+                f"it did not arm within {_ARM_SECONDS:g} s, so nothing was fired",
+                "look whether its screen waits for a person",
+            )
+        threshold = read.threshold if read else None
+        yield PulseArmed(
+            round=each.number, order=order, role=role, pulse=pulse.name, threshold=threshold
+        )
+        self._generator.fire()
+        if not self._until(self._oscilloscope.is_done, _DONE_SECONDS + 3 * pulse.duration):
+            self._oscilloscope.abort()
+            raise ShotMissing(order, f"pulse {order} was fired and the oscilloscope saw no trigger")
+        shot = self._fetch()
+        self._next_at = shot.bench_seconds + pulse.rest
+        end, problem = self._reduce(shot, pulse)
+        yield ShotTaken(
+            round=each.number,
+            order=order,
+            role=role,
+            pulse=pulse.name,
+            shot=shot,
+            end=end,
+            threshold=threshold,
+            at_most=read.at_most if read else None,
+        )
+        if end is None:
+            raise ShotMissing(order, f"the record of pulse {order} can't be used: {problem}")
+        return end
+
+    def _set_up(self, pulse: Pulse) -> Iterator[Event]:
+        if pulse == self._ready_for:
+            return
+        self._ready_for = None
+        generated = self._generator.set_pulse(
+            PulseSetting(
+                base=pulse.base,
+                level=pulse.level,
+                width=pulse.width,
+                edge=pulse.edge,
+                period=pulse.duration + max(pulse.rest, pulse.duration),
+            )
+        )
+        acquired = self._oscilloscope.set_acquisition(self._acquisition(pulse))
+        self._generator.switch(on=True)
+        self._clock.sleep(_RELAY_SECONDS)
+        self._ready_for = pulse
+        yield PulseSetUp(
+            pulse=pulse.name,
+            settings={
+                "base": generated.base,
+                "level": generated.level,
+                "width": generated.width,
+                "edge": generated.edge,
+                "period": generated.period,
+                "sample interval": acquired.sample_interval,
+                "points": float(acquired.points),
+                "before": acquired.before,
+                "trigger level": acquired.trigger_volts,
+                **{f"span of channel {name}": volts for name, volts in acquired.spans.items()},
+            },
+        )
+
+    def _acquisition(self, pulse: Pulse) -> AcquisitionSetting:
+        oscilloscope = self._bench.model.oscilloscope
+        levels = (pulse.base, pulse.level)
+        source = [self._bench.terminal_volts(volts) for volts in levels]
+        node = [self._bench.cell_volts(volts) for volts in levels]
+        points = window_points()
+        # As much time after the pulse as it lasts: there the cell gives back what it didn't keep.
+        span = pulse.duration * 2 / (1 - _BEFORE)
+        return AcquisitionSetting(
+            sample_interval=next_in_1_2_5(span / points),
+            points=points,
+            before=_BEFORE,
+            spans={
+                int(oscilloscope.source_channel): _span(source),
+                int(oscilloscope.node_channel): _span(node),
+            },
+            trigger_channel=int(oscilloscope.source_channel),
+            trigger_volts=sum(source) / 2,
+            rising=pulse.rising,
+        )
+
+    def _fetch(self) -> Shot:
+        oscilloscope = self._bench.model.oscilloscope
+        source = self._oscilloscope.fetch(int(oscilloscope.source_channel))
+        node = self._oscilloscope.fetch(int(oscilloscope.node_channel))
+        return Shot(
+            source=_waveform(source),
+            node=_waveform(node),
+            sample_interval=source.sample_interval,
+            first_seconds=source.first_seconds,
+            clipped=source.clipped or node.clipped,
+            bench_seconds=self._clock.now(),
+        )
+
+    def _reduce(self, shot: Shot, pulse: Pulse) -> tuple[EndVoltage | None, str]:
+        try:
+            return end_voltage(
+                shot.times,
+                shot.source.volts,
+                shot.node.volts,
+                base=self._bench.terminal_volts(pulse.base),
+                level=self._bench.terminal_volts(pulse.level),
+                ramp=pulse.ramp,
+            ), ""
+        except PulseUnreadable as error:
+            return None, str(error)
+
+    def _pause(self, seconds: float) -> None:
+        if seconds > 0:
+            self._clock.sleep(seconds, lambda: self._stop.at_once)
+        if self._stop.at_once:
+            raise StopRequested(self._stop.reason)
+
+    def _until(self, condition: Callable[[], bool], seconds: float) -> bool:
+        if condition():
+            return True
+        deadline = self._clock.now() + seconds
+        while self._clock.now() < deadline:
+            self._clock.sleep(_POLL_SECONDS)
+            if condition():
+                return True
+        return False
+
+
+def next_in_1_2_5(value: float) -> float:
+    """Return the smallest of ... 1, 2, 5, 10 ... that is not below value."""
+    decade = math.floor(math.log10(value))
+    for step in (1.0, 2.0, 5.0, 10.0):
+        # Written as text and read back, so that 2e-7 is 2e-7 and not its neighbour.
+        candidate = float(f"{step:g}e{decade}")
+        if candidate >= value * (1 - 1e-9):
+            return candidate
+    return float(f"1e{decade + 1}")
+
+
+def _span(levels: list[float]) -> float:
+    return 2 * _HEADROOM * max(abs(volts) for volts in levels)
+
+
+def _waveform(trace: Trace) -> Waveform:
+    return Waveform(codes=trace.codes, scale=trace.volts_per_code, offset=trace.volts_at_zero)

@@ -1,0 +1,194 @@
+"""What happens in a run, as typed, frozen events.
+
+The engine yields them in order. The logbook records them, the terminal shows them, and tests
+read them; nobody needs to know the engine.
+"""
+
+from dataclasses import dataclass, field
+from enum import StrEnum
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pulsetally.sequencer.analysis.pulses import EndVoltage
+from pulsetally.sequencer.plan import Round
+
+
+class Role(StrEnum):
+    """Why a pulse was sent."""
+
+    PRESET = "preset"
+    STEP = "step"
+    READ = "read"
+
+
+class RunState(StrEnum):
+    """How a run stands."""
+
+    RUNNING = "running"
+    FINISHED = "finished"
+    STOPPED = "stopped"
+    FAILED = "failed"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Waveform:
+    """One channel's record: int16 codes, shape (points,); volts = codes * scale + offset."""
+
+    codes: NDArray[np.int16]
+    scale: float
+    offset: float
+
+    @property
+    def volts(self) -> NDArray[np.float64]:
+        """Return the samples in volts, shape (points,)."""
+        return self.codes.astype(np.float64) * self.scale + self.offset
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Shot:
+    """One triggered acquisition of both channels.
+
+    source, node: terminal and cell. sample_interval, first_seconds: seconds; time 0 is the
+    trigger. clipped: the digitizer met an end of its range. bench_seconds: the bench's clock.
+    """
+
+    source: Waveform
+    node: Waveform
+    sample_interval: float
+    first_seconds: float
+    clipped: bool
+    bench_seconds: float
+
+    @property
+    def times(self) -> NDArray[np.float64]:
+        """Return the samples' times in seconds, shape (points,)."""
+        return self.first_seconds + self.sample_interval * np.arange(
+            self.source.codes.size, dtype=np.float64
+        )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunBegan:
+    """The instruments answered and are quiet. identities: by role, as they answered."""
+
+    rounds: int
+    most_pulses: int
+    seconds: float
+    identities: dict[str, str]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RoundBegan:
+    """A round begins; attempt counts from 1."""
+
+    round: Round
+    attempt: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PulseSetUp:
+    """Both instruments were set up for a pulse. settings: as read back, in SI units."""
+
+    pulse: str
+    settings: dict[str, float]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PulseArmed:
+    """The oscilloscope is armed and the generator is about to fire.
+
+    order: which pulse of the round, from 1. Whoever records must have done so before the
+    next event is asked for: the pulse goes out then.
+    """
+
+    round: int
+    order: int
+    role: Role
+    pulse: str
+    threshold: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class ShotTaken:
+    """A pulse was delivered and recorded. end: None when its record doesn't show the pulse."""
+
+    round: int
+    order: int
+    role: Role
+    pulse: str
+    shot: Shot
+    end: EndVoltage | None
+    threshold: float | None = None
+    at_most: int | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class WaitBegan:
+    """The cell is left alone for so many seconds."""
+
+    round: int
+    seconds: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ReadFinished:
+    """A read ended. count, crossing, reached: see ReadCount. end_voltages: volts."""
+
+    round: int
+    pulse: str
+    threshold: float
+    count: int
+    crossing: float | None
+    reached: bool
+    stepped: int
+    end_voltages: tuple[float, ...] = field(default=())
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RoundFinished:
+    """A round is complete."""
+
+    round: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RoundSpoiled:
+    """A round lost a pulse; what it measured is kept and not counted."""
+
+    round: int
+    reason: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class StopAsked:
+    """Somebody asked for an end; the run stops after this round, or at once."""
+
+    at_once: bool
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunEnded:
+    """The run is over. reason: a sentence, or empty.
+
+    outputs_off: read back as off; None when the generator was never reached, nor touched.
+    """
+
+    state: RunState
+    reason: str
+    outputs_off: bool | None
+
+
+Event = (
+    RunBegan
+    | RoundBegan
+    | PulseSetUp
+    | PulseArmed
+    | ShotTaken
+    | WaitBegan
+    | ReadFinished
+    | RoundFinished
+    | RoundSpoiled
+    | StopAsked
+    | RunEnded
+)

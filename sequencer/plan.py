@@ -1,0 +1,387 @@
+"""Recipe and bench -> rounds, and what they will ask of cell, instruments, disk and night.
+
+Everything here happens before power: a plan that stands keeps every limit.
+"""
+
+import itertools
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from typing import Any
+
+from pulsetally.sequencer.bench import Bench
+from pulsetally.sequencer.errors import PlanError
+from pulsetally.sequencer.models import Name, kind_of
+from pulsetally.sequencer.quantities import parse_quantity, show_quantity
+from pulsetally.sequencer.recipe import (
+    PULSE_KINDS,
+    PresetStep,
+    ReadStep,
+    Recipe,
+    RepeatStep,
+    StepStep,
+    SweepStep,
+    WaitStep,
+)
+
+# A night has room for some ten thousand rounds; a million is a mistake in a sweep.
+MOST_ROUNDS = 100_000
+# The share of a ramp that lies between 10 % and 90 %.
+_RAMP_SHARE = 0.8
+_POINTS = 2000
+_BYTES_PER_SHOT = 2 * 2 * _POINTS + 600
+# Common practice: a handful of exchanges a pulse, a few milliseconds each on a real line.
+_SECONDS_PER_SHOT, _SECONDS_PER_SETUP = 0.04, 0.15
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Pulse:
+    """A trapezoid as a recipe means it, in SI units.
+
+    level, base: volts at the panel. width: between the 50 % points. edge: from 10 % to 90 %.
+    rest: least time at base after it.
+    """
+
+    name: str
+    level: float
+    width: float
+    base: float
+    edge: float
+    rest: float
+
+    @property
+    def ramp(self) -> float:
+        """Return the time of one whole edge from 0 to 100 %, in seconds."""
+        return self.edge / _RAMP_SHARE
+
+    @property
+    def duration(self) -> float:
+        """Return the time from leaving base to being back at it, in seconds."""
+        return self.width + self.ramp
+
+    @property
+    def rising(self) -> bool:
+        """Say whether the pulse goes up from its base."""
+        return self.level > self.base
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Preset:
+    """Drive the cell fully down."""
+
+    pulse: Pulse
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Step:
+    """Deliver count pulses."""
+
+    pulse: Pulse
+    count: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Read:
+    """Deliver pulses until the end voltage passes the threshold, in volts."""
+
+    pulse: Pulse
+    threshold: float
+    at_most: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Wait:
+    """Leave the cell alone for so many seconds."""
+
+    seconds: float
+
+
+Action = Preset | Step | Read | Wait
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Round:
+    """The smallest piece of a run that starts from a known state and can be repeated.
+
+    number: from 1. settings: every pulse setting and parameter in force, in SI units.
+    """
+
+    number: int
+    settings: dict[str, float]
+    actions: tuple[Action, ...]
+
+    @property
+    def repeatable(self) -> bool:
+        """Say whether it begins with a preset, so that it can start again."""
+        return bool(self.actions) and isinstance(self.actions[0], Preset)
+
+    @property
+    def most_pulses(self) -> int:
+        """Return how many pulses it delivers if every read goes to its end."""
+        return sum(_most_pulses(action) for action in self.actions)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PulseVolts:
+    """What one pulse means along the way to the cell, in volts."""
+
+    name: str
+    panel: float
+    terminal: float
+    cell: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Plan:
+    """All rounds of a run, and what they ask for.
+
+    swept: names of what the recipe changes. most_pulses: if every read goes to its end.
+    seconds, disk_bytes: estimates for that case. volts: by pulse, largest of each.
+    """
+
+    recipe: Recipe
+    rounds: tuple[Round, ...]
+    swept: tuple[str, ...]
+    most_pulses: int
+    seconds: float
+    disk_bytes: int
+    volts: tuple[PulseVolts, ...]
+    warnings: tuple[str, ...] = field(default=())
+
+
+def make_plan(recipe: Recipe, bench: Bench) -> Plan:
+    """Turn a recipe into rounds for a bench. Raises PlanError with every reason against it."""
+    builder = _Builder(recipe)
+    rounds = builder.rounds()
+    problems = list(dict.fromkeys(builder.problems))
+    pulses = {
+        action.pulse: None
+        for each in rounds
+        for action in each.actions
+        if not isinstance(action, Wait)
+    }
+    volts = _volts(list(pulses), bench)
+    problems += _limit_problems(volts, bench)
+    if problems:
+        raise PlanError(problems)
+    most = sum(each.most_pulses for each in rounds)
+    return Plan(
+        recipe=recipe,
+        rounds=rounds,
+        swept=tuple(builder.swept),
+        most_pulses=most,
+        seconds=sum(_seconds(action) for each in rounds for action in each.actions),
+        disk_bytes=most * _BYTES_PER_SHOT + 100_000,
+        volts=tuple(volts),
+        warnings=tuple(_warnings(rounds, bench)),
+    )
+
+
+def window_points() -> int:
+    """Return how many samples a record has."""
+    return _POINTS
+
+
+class _Builder:
+    """Walk a recipe's steps and cut them into rounds at each preset."""
+
+    def __init__(self, recipe: Recipe) -> None:
+        self._recipe = recipe
+        self._settings: dict[str, float] = {}
+        self._names: dict[str, Name] = {}
+        self.problems: list[str] = []
+        self.swept: dict[str, None] = {}
+        model = recipe.model
+        for name, written in model.parameters.items():
+            self._settings[name] = _written(written)
+        for pulse, settings in model.pulses.items():
+            for setting in PULSE_KINDS:
+                value = getattr(settings, setting)
+                if isinstance(value, Name):
+                    self._names[f"{pulse}.{setting}"] = value
+                else:
+                    self._settings[f"{pulse}.{setting}"] = value
+
+    def rounds(self) -> tuple[Round, ...]:
+        finished: list[Round] = []
+        pending: list[Action] = []
+        settings: dict[str, float] = {}
+        for action, in_force in self._walk(self._recipe.model.steps, self._settings):
+            if isinstance(action, Preset) and pending:
+                finished.append(_round(len(finished) + 1, settings, pending))
+                pending = []
+                if len(finished) >= MOST_ROUNDS:
+                    self.problems.append(
+                        f"{self._recipe.file}: the recipe has over {MOST_ROUNDS} rounds."
+                        " To fix it, sweep fewer values or repeat less often."
+                    )
+                    break
+            if not pending:
+                settings = in_force
+            pending.append(action)
+        if pending:
+            finished.append(_round(len(finished) + 1, settings, pending))
+        return tuple(finished)
+
+    def _walk(
+        self, steps: list[Any], settings: dict[str, float]
+    ) -> Iterator[tuple[Action, dict[str, float]]]:
+        for step in steps:
+            match step:
+                case RepeatStep():
+                    for _ in range(int(self._value(step.repeat, settings))):
+                        yield from self._walk(step.steps, settings)
+                case SweepStep():
+                    names = list(step.sweep)
+                    self.swept.update(dict.fromkeys(names))
+                    axes = [[_written(each) for each in values] for values in step.sweep.values()]
+                    for values in itertools.product(*axes):
+                        changed = settings | dict(zip(names, values, strict=True))
+                        yield from self._walk(step.steps, changed)
+                case WaitStep():
+                    yield Wait(seconds=self._value(step.wait, settings)), settings
+                case PresetStep():
+                    yield Preset(pulse=self._pulse(step.preset, settings)), settings
+                case StepStep():
+                    count = self._whole("count", step.count, settings)
+                    yield Step(pulse=self._pulse(step.step, settings), count=count), settings
+                case ReadStep():
+                    yield self._read(step, settings), settings
+
+    def _read(self, step: ReadStep, settings: dict[str, float]) -> Read:
+        pulse = self._pulse(step.read, settings)
+        threshold = self._value(step.until, settings)
+        low, high = sorted((pulse.base, pulse.level))
+        if not low < threshold < high:
+            self.problems.append(
+                f"{self._recipe.file}: reading with pulse {pulse.name!r} until"
+                f" {show_quantity(threshold, 'V')} can't end, since the pulse goes from"
+                f" {show_quantity(pulse.base, 'V')} to {show_quantity(pulse.level, 'V')}."
+                " To fix it, choose a threshold between the two."
+            )
+        at_most = self._whole("at most", step.at_most, settings)
+        return Read(pulse=pulse, threshold=threshold, at_most=at_most)
+
+    def _value(self, value: float | Name, settings: dict[str, float]) -> float:
+        return settings[value.word] if isinstance(value, Name) else value
+
+    def _whole(self, what: str, value: float | Name, settings: dict[str, float]) -> int:
+        number = self._value(value, settings)
+        if number != int(number) or number < 0:
+            self.problems.append(
+                f"{self._recipe.file}: {what} is {number:g} in a sweep."
+                " To fix it, sweep it over whole numbers."
+            )
+            return 0
+        return int(number)
+
+    def _pulse(self, name: str, settings: dict[str, float]) -> Pulse:
+        values = {}
+        for setting in PULSE_KINDS:
+            key = f"{name}.{setting}"
+            # A sweep of the setting itself wins over the parameter it was declared with.
+            if key not in settings and key in self._names:
+                values[setting] = settings[self._names[key].word]
+            else:
+                values[setting] = settings[key]
+        pulse = Pulse(name=name, **values)
+        self._check_pulse(pulse)
+        return pulse
+
+    def _check_pulse(self, pulse: Pulse) -> None:
+        reasons = []
+        if pulse.level == pulse.base:
+            reasons.append(("its level is its base", "make them differ"))
+        if not pulse.width > 0 or not pulse.edge > 0 or pulse.rest < 0:
+            reasons.append(("a time in it is not above 0", "write times above 0"))
+        elif pulse.width < pulse.ramp:
+            reasons.append(
+                (
+                    f"its edges of {show_quantity(pulse.edge, 's')} leave no flat top in a width"
+                    f" of {show_quantity(pulse.width, 's')}",
+                    "write a shorter edge or a longer width",
+                )
+            )
+        for problem, remedy in reasons:
+            self.problems.append(
+                f"{self._recipe.file}: pulse {pulse.name!r}: {problem}. To fix it, {remedy}."
+            )
+
+
+def _written(written: object) -> float:
+    kind = kind_of(written)
+    if kind is None:
+        raise ValueError(f"{written!r} passed as a quantity")
+    return parse_quantity(written, kind)
+
+
+def _round(number: int, settings: dict[str, float], actions: list[Action]) -> Round:
+    in_force = dict(settings)
+    for action in actions:
+        if not isinstance(action, Wait):
+            for setting in PULSE_KINDS:
+                in_force[f"{action.pulse.name}.{setting}"] = getattr(action.pulse, setting)
+    return Round(number=number, settings=in_force, actions=tuple(actions))
+
+
+def _most_pulses(action: Action) -> int:
+    match action:
+        case Preset():
+            return 1
+        case Step():
+            return action.count
+        case Read():
+            return action.at_most
+        case Wait():
+            return 0
+
+
+def _seconds(action: Action) -> float:
+    if isinstance(action, Wait):
+        return action.seconds
+    each = action.pulse.duration + action.pulse.rest + _SECONDS_PER_SHOT
+    return _SECONDS_PER_SETUP + each * _most_pulses(action)
+
+
+def _volts(pulses: list[Pulse], bench: Bench) -> list[PulseVolts]:
+    largest: dict[str, PulseVolts] = {}
+    for pulse in pulses:
+        panel = max((pulse.level, pulse.base), key=abs)
+        found = PulseVolts(
+            name=pulse.name,
+            panel=panel,
+            terminal=bench.terminal_volts(panel),
+            cell=bench.cell_volts(panel),
+        )
+        if pulse.name not in largest or abs(found.panel) > abs(largest[pulse.name].panel):
+            largest[pulse.name] = found
+    return list(largest.values())
+
+
+def _limit_problems(volts: list[PulseVolts], bench: Bench) -> list[str]:
+    limits = bench.model.limits
+    problems = []
+    for each in volts:
+        for place, value, limit, name in (
+            ("at the terminal", each.terminal, limits.source, "source"),
+            ("across the cell", each.cell, limits.node, "node"),
+        ):
+            if not abs(value) <= limit:
+                problems.append(
+                    f"pulse {each.name!r} of {show_quantity(each.panel, 'V')} at the panel means"
+                    f" {show_quantity(value, 'V')} {place}, beyond the {name} limit of"
+                    f" {show_quantity(limit, 'V')} in {bench.file}. To fix it, lower the pulse,"
+                    " or raise the limit if the cell bears it."
+                )
+    return problems
+
+
+def _warnings(rounds: tuple[Round, ...], bench: Bench) -> Iterator[str]:
+    if rounds and not rounds[0].repeatable:
+        yield "the recipe begins without a preset: the first round starts from an unknown state"
+    if math.isfinite(bench.model.generator.load):
+        yield (
+            "the generator is told a load of"
+            f" {show_quantity(bench.model.generator.load, 'ohm')}; behind the series resistance"
+            f" the terminal gets {bench.terminal_volts(1.0):.3g} times what the panel shows"
+        )

@@ -1,0 +1,170 @@
+"""Follow a run by its events: what a view needs to know, and nothing of how it looks."""
+
+import time
+from collections import Counter
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+from pulsetally.sequencer.analysis.counting import CountStatistics, full_count
+from pulsetally.sequencer.events import (
+    Event,
+    PulseArmed,
+    ReadFinished,
+    Role,
+    RoundBegan,
+    RoundFinished,
+    RoundSpoiled,
+    RunBegan,
+    RunEnded,
+    ShotTaken,
+    StopAsked,
+    WaitBegan,
+)
+from pulsetally.sequencer.quantities import show_duration, show_quantity
+
+
+@dataclass(slots=True)
+class Progress:
+    """How a run stands.
+
+    rounds: planned; done: finished. round: the one that goes on. ends: end voltages of its
+    current read, volts. crossings: full counts so far, pulses. lines: what was said, oldest
+    first; fresh: how many of them nobody has taken yet.
+    """
+
+    rounds: int
+    seconds: float
+    clock: Callable[[], float] = time.monotonic
+    done: int = 0
+    round: int = 0
+    attempt: int = 1
+    swept: tuple[str, ...] = ()
+    setting: str = ""
+    pulses: int = 0
+    stepped: int = 0
+    doing: str = "connecting"
+    threshold: float | None = None
+    level: float = 0.0
+    at_most: int = 0
+    ends: list[float] = field(default_factory=list)
+    crossings: list[float] = field(default_factory=list)
+    counts: Counter[int] = field(default_factory=Counter)
+    stopping: bool = False
+    ended: RunEnded | None = None
+    lines: list[str] = field(default_factory=list)
+    _began: float = 0.0
+
+    def __post_init__(self) -> None:
+        self._began = self.clock()
+
+    @property
+    def statistics(self) -> CountStatistics | None:
+        """Return mean and scatter of the full counts so far."""
+        return full_count(self.crossings)
+
+    @property
+    def seconds_left(self) -> float:
+        """Estimate the time left, from the pace so far or, before there is one, the plan."""
+        if self.ended:
+            return 0.0
+        elapsed = self.clock() - self._began
+        if not self.done:
+            return max(0.0, self.seconds - elapsed)
+        return elapsed / self.done * (self.rounds - self.done)
+
+    def take(self, event: Event) -> list[str]:
+        """Take in an event; return the lines it is worth."""
+        said = self._said(event)
+        self.lines += said
+        del self.lines[:-100]
+        return said
+
+    def _said(self, event: Event) -> list[str]:
+        match event:
+            case RunBegan():
+                return [f"{role}: {who}" for role, who in event.identities.items()]
+            case RoundBegan():
+                return self._begin(event)
+            case PulseArmed():
+                self.doing = {
+                    Role.PRESET: "presetting",
+                    Role.STEP: "stepping",
+                    Role.READ: "reading",
+                }[event.role]
+                if event.role is not Role.READ:
+                    self.ends.clear()
+                    self.threshold = None
+            case ShotTaken():
+                self._shot(event)
+            case WaitBegan():
+                self.doing = f"waiting for {show_duration(event.seconds)}"
+                self.ends.clear()
+                return [f"round {event.round}: {self.doing}"] if event.seconds >= 60 else []
+            case ReadFinished():
+                return [self._read(event)]
+            case RoundFinished():
+                self.done += 1
+            case RoundSpoiled():
+                return [f"round {event.round} is spoiled: {event.reason}"]
+            case StopAsked():
+                self.stopping = True
+                return [
+                    "stopping now"
+                    if event.at_once
+                    else "stopping after this round; press Ctrl-C again to stop at once"
+                ]
+            case RunEnded():
+                self.ended = event
+                self.doing = event.state.value
+        return []
+
+    def _begin(self, event: RoundBegan) -> list[str]:
+        self.round, self.attempt, self.stepped = event.round.number, event.attempt, 0
+        self.ends.clear()
+        self.threshold = None
+        self.setting = ", ".join(
+            f"{name} = {show_setting(name, event.round.settings[name])}" for name in self.swept
+        )
+        again = f" again (attempt {event.attempt})" if event.attempt > 1 else ""
+        return [f"round {self.round} begins{again}"] if again else []
+
+    def _shot(self, event: ShotTaken) -> None:
+        self.pulses += 1
+        if event.role is Role.STEP:
+            self.stepped += 1
+        if event.role is Role.READ and event.end is not None:
+            self.ends.append(event.end.volts)
+            self.threshold = event.threshold
+            self.at_most = event.at_most or 0
+
+    def _read(self, event: ReadFinished) -> str:
+        begin = f"round {event.round} of {self.rounds}"
+        if self.setting:
+            begin += f" ({self.setting})"
+        if not event.reached:
+            return f"{begin}: {show_quantity(event.threshold, 'V')} not reached in {event.count}"
+        count = "not to be interpolated" if event.crossing is None else f"{event.crossing:.2f}"
+        if event.stepped == 0:
+            self.counts[event.count] += 1
+            if event.crossing is not None:
+                self.crossings.append(event.crossing)
+            return f"{begin}: full count {event.count}, crossing {count}"
+        return f"{begin}: {event.stepped} stored, {event.count} remaining, crossing {count}"
+
+
+def show_setting(name: str, value: float) -> str:
+    """Write a swept setting's value with its unit, as far as its name tells it."""
+    from pulsetally.sequencer.recipe import PULSE_KINDS
+
+    kind = PULSE_KINDS.get(name.rpartition(".")[2]) if "." in name else None
+    return show_quantity(value, kind.unit if kind else "")
+
+
+def printable(text: str) -> str:
+    """Make a text from a file or an instrument harmless: no control character survives.
+
+    Escape sequences, bells, line ends and marks that turn the direction of writing become
+    visible stand-ins; very long texts are cut.
+    """
+    shown = "".join(each if each.isprintable() else "\N{REPLACEMENT CHARACTER}" for each in text)
+    return shown if len(shown) <= 500 else shown[:499] + "…"

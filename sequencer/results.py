@@ -1,0 +1,329 @@
+"""Look up what runs found: logbook -> results, for people and for programs."""
+
+import json
+import os
+import socket
+from collections.abc import Iterable
+from dataclasses import dataclass
+from typing import Any
+
+import sqlalchemy as sa
+
+from pulsetally.sequencer.analysis.counting import CountStatistics, full_count
+from pulsetally.sequencer.errors import LogbookError
+from pulsetally.sequencer.events import Role, RunState, Shot
+from pulsetally.sequencer.logbook import (
+    Logbook,
+    pulses,
+    reads,
+    round_ends,
+    rounds,
+    run_ends,
+    run_identities,
+    runs,
+    shots,
+    unpack,
+)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunSummary:
+    """One line about a run. state: a RunState, or 'interrupted' when its process is gone."""
+
+    run: int
+    title: str
+    mode: str
+    state: str
+    reason: str
+    outputs_off: bool | None
+    began_at: str
+    ended_at: str | None
+    rounds: int
+    planned_rounds: int
+    shots: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ReadResult:
+    """One read. end_voltages: volts, one a pulse; other fields as in ReadCount."""
+
+    pulse: str
+    threshold: float
+    count: int
+    crossing: float | None
+    reached: bool
+    end_voltages: tuple[float, ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RoundResult:
+    """One attempt at a round. stepped: pulses of 'step' that were recorded in it."""
+
+    round: int
+    attempt: int
+    settings: dict[str, float]
+    complete: bool
+    spoiled: bool
+    reason: str
+    preset: bool
+    stepped: int
+    reads: tuple[ReadResult, ...]
+
+    @property
+    def full_crossing(self) -> float | None:
+        """Return the crossing if this round measured a full count, else None."""
+        counts = self.complete and not self.spoiled and self.preset and self.stepped == 0
+        return self.reads[0].crossing if counts and self.reads else None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SettingCount:
+    """The full count at one combination of swept settings, in SI units."""
+
+    settings: dict[str, float]
+    count: CountStatistics
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunResult:
+    """All that a run found."""
+
+    summary: RunSummary
+    identities: dict[str, str]
+    swept: tuple[str, ...]
+    rounds: tuple[RoundResult, ...]
+    full_count: CountStatistics | None
+    by_setting: tuple[SettingCount, ...]
+
+    def as_object(self) -> dict[str, Any]:
+        """Return the result as an object for JSON; volts, seconds and pulses throughout."""
+        summary = self.summary
+        return {
+            "run": summary.run,
+            "recipe": summary.title,
+            "mode": summary.mode,
+            "state": summary.state,
+            "reason": summary.reason,
+            "outputs_off": summary.outputs_off,
+            "began_at": summary.began_at,
+            "ended_at": summary.ended_at,
+            "instruments": self.identities,
+            "planned_rounds": summary.planned_rounds,
+            "shots": summary.shots,
+            "swept": list(self.swept),
+            "rounds": [_round_object(each) for each in self.rounds],
+            "full_count": _statistics_object(self.full_count),
+            "full_count_by_setting": [
+                {"settings": each.settings, **(_statistics_object(each.count) or {})}
+                for each in self.by_setting
+            ],
+        }
+
+
+def list_runs(logbook: Logbook) -> list[RunSummary]:
+    """Return all runs, oldest first."""
+    return [_summary(row) for row in logbook.select(_summaries().order_by(runs.c.id))]
+
+
+def find_run(logbook: Logbook, which: str) -> int:
+    """Return the number of a run: 'latest' or a number. Raises LogbookError."""
+    latest = logbook.select(sa.select(sa.func.max(runs.c.id)))[0][0]
+    if latest is None:
+        raise LogbookError(
+            f"{logbook.path}: no run is in this logbook yet. To fix it, make one with"
+            " 'pulsetally rehearse full_count'."
+        )
+    if which == "latest":
+        return int(latest)
+    if which.isdigit() and logbook.select(sa.select(runs.c.id).where(runs.c.id == int(which))):
+        return int(which)
+    raise LogbookError(
+        f"{logbook.path}: there is no run {which!r}. To fix it, write 'latest' or a number"
+        f" from 'pulsetally runs' (the last is {latest})."
+    )
+
+
+def run_result(logbook: Logbook, run: int) -> RunResult:
+    """Look up all that a run found."""
+    summary = _summary(logbook.select(_summaries().where(runs.c.id == run))[0])
+    swept = json.loads(logbook.select(sa.select(runs.c.swept).where(runs.c.id == run))[0][0])
+    found = _rounds(logbook, run, going=summary.state == RunState.RUNNING)
+    crossings = [(each, each.full_crossing) for each in found]
+    counted = [(each, crossing) for each, crossing in crossings if crossing is not None]
+    groups: dict[tuple[float, ...], list[float]] = {}
+    for each, crossing in counted:
+        groups.setdefault(tuple(each.settings[name] for name in swept), []).append(crossing)
+    by_setting = [
+        SettingCount(settings=dict(zip(swept, values, strict=True)), count=statistics)
+        for values, group in groups.items()
+        if swept and (statistics := full_count(group)) is not None
+    ]
+    return RunResult(
+        summary=summary,
+        identities=_identities(logbook, run),
+        swept=tuple(swept),
+        rounds=tuple(found),
+        full_count=full_count([crossing for _, crossing in counted]),
+        by_setting=tuple(by_setting),
+    )
+
+
+def run_shots(logbook: Logbook, run: int, *, round_number: int | None = None) -> Iterable[Shot]:
+    """Return a run's waveforms, in order, or those of one round."""
+    query = (
+        sa.select(shots)
+        .join(pulses, shots.c.pulse == pulses.c.id)
+        .join(rounds, pulses.c.round == rounds.c.id)
+        .where(rounds.c.run == run)
+        .order_by(pulses.c.id)
+    )
+    if round_number is not None:
+        query = query.where(rounds.c.number == round_number)
+    for row in logbook.select(query):
+        yield Shot(
+            source=unpack(row.source_codes, row.source_scale, row.source_offset),
+            node=unpack(row.node_codes, row.node_scale, row.node_offset),
+            sample_interval=row.sample_interval,
+            first_seconds=row.first_seconds,
+            clipped=row.clipped,
+            bench_seconds=row.bench_seconds,
+        )
+
+
+def _summaries() -> "sa.Select[Any]":
+    done = (
+        sa.select(sa.func.count(sa.distinct(rounds.c.number)))
+        .join(round_ends, round_ends.c.round == rounds.c.id)
+        .where(rounds.c.run == runs.c.id, sa.not_(round_ends.c.spoiled))
+    )
+    taken = (
+        sa.select(sa.func.count(shots.c.id))
+        .join(pulses, shots.c.pulse == pulses.c.id)
+        .join(rounds, pulses.c.round == rounds.c.id)
+        .where(rounds.c.run == runs.c.id)
+    )
+    return sa.select(
+        runs,
+        run_ends.c.state,
+        run_ends.c.reason,
+        run_ends.c.outputs_off,
+        run_ends.c.ended_at,
+        done.scalar_subquery().label("rounds_done"),
+        taken.scalar_subquery().label("shots_taken"),
+    ).outerjoin(run_ends, run_ends.c.run == runs.c.id)
+
+
+def _summary(row: Any) -> RunSummary:
+    state, reason = row.state, row.reason or ""
+    if state is None:
+        state = RunState.RUNNING.value
+        if row.host == socket.gethostname() and not _alive(row.process):
+            state, reason = "interrupted", "its process is gone; outputs may be on"
+    return RunSummary(
+        run=row.id,
+        title=row.title,
+        mode=row.mode,
+        state=state,
+        reason=reason,
+        outputs_off=row.outputs_off,
+        began_at=row.began_at,
+        ended_at=row.ended_at,
+        rounds=row.rounds_done,
+        planned_rounds=row.planned_rounds,
+        shots=row.shots_taken,
+    )
+
+
+def _alive(process: int) -> bool:
+    try:
+        os.kill(process, 0)
+    except ProcessLookupError:
+        return False
+    except PermissionError:
+        return True
+    return True
+
+
+def _identities(logbook: Logbook, run: int) -> dict[str, str]:
+    query = sa.select(run_identities).where(run_identities.c.run == run)
+    return {row.role: row.identity for row in logbook.select(query)}
+
+
+def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
+    sent: dict[int, list[str]] = {}
+    recorded = (
+        sa.select(pulses.c.round, pulses.c.role)
+        .join(shots, shots.c.pulse == pulses.c.id)
+        .join(rounds, pulses.c.round == rounds.c.id)
+        .where(rounds.c.run == run)
+        .order_by(pulses.c.id)
+    )
+    for row in logbook.select(recorded):
+        sent.setdefault(row.round, []).append(row.role)
+    read: dict[int, list[ReadResult]] = {}
+    for row in logbook.select(
+        sa.select(reads)
+        .join(rounds, reads.c.round == rounds.c.id)
+        .where(rounds.c.run == run)
+        .order_by(reads.c.id)
+    ):
+        read.setdefault(row.round, []).append(
+            ReadResult(
+                pulse=row.pulse,
+                threshold=row.threshold,
+                # 'count' is a method of every row, so the column is asked for by name.
+                count=row._mapping["count"],
+                crossing=row.crossing,
+                reached=row.reached,
+                end_voltages=tuple(json.loads(row.end_voltages)),
+            )
+        )
+    query = (
+        sa.select(rounds, round_ends.c.spoiled, round_ends.c.reason)
+        .outerjoin(round_ends, round_ends.c.round == rounds.c.id)
+        .where(rounds.c.run == run)
+        .order_by(rounds.c.id)
+    )
+    return [
+        RoundResult(
+            round=row.number,
+            attempt=row.attempt,
+            settings=json.loads(row.settings),
+            complete=row.spoiled is False,
+            # A round without an end was cut, unless it is the one that is going on.
+            spoiled=not going if row.spoiled is None else row.spoiled,
+            reason=("still going" if going else "cut off") if row.reason is None else row.reason,
+            preset=sent.get(row.id, [""])[0] == Role.PRESET.value,
+            stepped=sent.get(row.id, []).count(Role.STEP.value),
+            reads=tuple(read.get(row.id, [])),
+        )
+        for row in logbook.select(query)
+    ]
+
+
+def _round_object(each: RoundResult) -> dict[str, Any]:
+    return {
+        "round": each.round,
+        "attempt": each.attempt,
+        "settings": each.settings,
+        "spoiled": each.spoiled,
+        "reason": each.reason,
+        "stepped": each.stepped,
+        "reads": [
+            {
+                "pulse": read.pulse,
+                "threshold": read.threshold,
+                "count": read.count,
+                "crossing": read.crossing,
+                "reached": read.reached,
+                "end_voltages": list(read.end_voltages),
+            }
+            for read in each.reads
+        ],
+    }
+
+
+def _statistics_object(count: CountStatistics | None) -> dict[str, Any] | None:
+    if count is None:
+        return None
+    return {"mean": count.mean, "sd": count.sd, "rounds": count.rounds}

@@ -1,0 +1,166 @@
+"""Write plans and results for people: tables and sentences, for a terminal or a pipe."""
+
+from rich.console import Console
+from rich.table import Table
+from rich.text import Text
+
+from pulsetally.sequencer.analysis.counting import CountStatistics
+from pulsetally.sequencer.bench import Bench
+from pulsetally.sequencer.plan import Plan
+from pulsetally.sequencer.progress import printable, show_setting
+from pulsetally.sequencer.quantities import show_duration, show_quantity
+from pulsetally.sequencer.results import RoundResult, RunResult, RunSummary
+
+_MOST_ROWS = 60
+
+
+def say(console: Console, words: str, style: str = "") -> None:
+    """Print one sentence that may hold text from a file or an instrument."""
+    console.print(Text(printable(words), style=style), soft_wrap=True)
+
+
+def show_plan(console: Console, plan: Plan, bench: Bench) -> None:
+    """Print what a plan will ask for."""
+    say(console, plan.recipe.title, style="bold")
+    if plan.recipe.model.purpose:
+        say(console, plan.recipe.model.purpose)
+    reading = f"at most {plan.most_pulses} pulses"
+    say(console, f"{len(plan.rounds)} rounds, {reading}, at most about"
+        f" {show_duration(plan.seconds)} and {show_bytes(plan.disk_bytes)} of logbook")  # fmt: skip
+    table = Table("pulse", "at the panel", "at the terminal", "across the cell", title="Voltages")
+    for each in plan.volts:
+        table.add_row(
+            Text(printable(each.name)),
+            *(show_quantity(volts, "V") for volts in (each.panel, each.terminal, each.cell)),
+        )
+    limits = bench.model.limits
+    table.add_row(
+        "limit",
+        "",
+        show_quantity(limits.source, "V"),
+        show_quantity(limits.node, "V"),
+        end_section=True,
+    )
+    console.print(table)
+    for warning in plan.warnings:
+        say(console, f"Note: {warning}.")
+
+
+def plan_object(plan: Plan) -> dict[str, object]:
+    """Return a plan as an object for JSON, in SI units."""
+    return {
+        "recipe": plan.recipe.title,
+        "rounds": len(plan.rounds),
+        "most_pulses": plan.most_pulses,
+        "seconds": plan.seconds,
+        "disk_bytes": plan.disk_bytes,
+        "swept": list(plan.swept),
+        "pulses": [
+            {"pulse": each.name, "panel": each.panel, "terminal": each.terminal, "cell": each.cell}
+            for each in plan.volts
+        ],
+        "warnings": list(plan.warnings),
+    }
+
+
+def show_runs(console: Console, found: list[RunSummary]) -> None:
+    """Print one line for each run."""
+    table = Table("run", "began (UTC)", "recipe", "kind", "state", "rounds", "shots")
+    for each in found:
+        table.add_row(
+            str(each.run),
+            each.began_at[:19].replace("T", " "),
+            Text(printable(each.title)),
+            each.mode,
+            each.state,
+            f"{each.rounds} of {each.planned_rounds}",
+            str(each.shots),
+        )
+    console.print(table)
+    for each in found:
+        if each.reason and each.state != "finished":
+            say(console, f"run {each.run}: {each.reason}")
+
+
+def show_result(console: Console, result: RunResult, *, rounds: bool = True) -> None:
+    """Print what a run found."""
+    summary = result.summary
+    say(console, f"Run {summary.run}: {summary.title} ({summary.mode}, {summary.state})", "bold")
+    if summary.reason and summary.state != "finished":
+        say(console, summary.reason)
+    for role, identity in result.identities.items():
+        say(console, f"{role}: {identity}")
+    say(
+        console,
+        f"{summary.rounds} of {summary.planned_rounds} rounds, {summary.shots} shots kept",
+    )
+    if rounds and result.rounds:
+        console.print(_round_table(result))
+        if len(result.rounds) > _MOST_ROWS:
+            say(console, f"The last {_MOST_ROWS} of {len(result.rounds)} rounds are shown.")
+    show_answer(console, result)
+
+
+def show_answer(console: Console, result: RunResult) -> None:
+    """Print the full count, for each combination of what was swept."""
+    if result.full_count is None:
+        say(console, "No round gave a full count.")
+        return
+    # With stored counts swept, only the round with none stored is a full count.
+    if len(result.by_setting) > 1:
+        table = Table(*result.swept, "full count", "scatter", "rounds", title="Full count")
+        for each in result.by_setting:
+            values = [show_setting(name, value) for name, value in each.settings.items()]
+            table.add_row(
+                *values, f"{each.count.mean:.2f}", _scatter(each.count), str(each.count.rounds)
+            )
+        console.print(table)
+        return
+    say(console, f"Full count: {spell_count(result.full_count)}", style="bold")
+
+
+def spell_count(count: CountStatistics) -> str:
+    """Write a full count with what it stands on."""
+    if count.sd is None:
+        return f"{count.mean:.2f} pulses (1 round; its scatter needs more)"
+    return (
+        f"{count.mean:.2f} pulses, scatter {count.sd:.2f} pulses"
+        f" (standard deviation of {count.rounds} rounds; mean known to"
+        f" {count.mean_uncertainty:.2f})"
+    )
+
+
+def show_bytes(count: float) -> str:
+    """Write a size for reading."""
+    for unit in ("bytes", "kB", "MB"):
+        if count < 1000:
+            return f"{count:.3g} {unit}"
+        count /= 1000
+    return f"{count:.3g} GB"
+
+
+def _scatter(count: CountStatistics) -> str:
+    return "" if count.sd is None else f"{count.sd:.2f}"
+
+
+def _round_table(result: RunResult) -> Table:
+    table = Table("round", *result.swept, "stored", "remaining", "crossing", "sum", "note")
+    for each in result.rounds[-_MOST_ROWS:]:
+        swept = [show_setting(name, each.settings[name]) for name in result.swept]
+        for read in each.reads or (None,):
+            if read is None:
+                table.add_row(str(each.round), *swept, str(each.stepped), "", "", "", _note(each))
+                continue
+            crossing = "" if read.crossing is None else f"{read.crossing:.2f}"
+            total = "" if read.crossing is None else f"{each.stepped + read.crossing:.2f}"
+            note = _note(each) or ("" if read.reached else "threshold not reached")
+            table.add_row(
+                str(each.round), *swept, str(each.stepped), str(read.count), crossing, total, note
+            )
+    return table
+
+
+def _note(each: RoundResult) -> str:
+    if each.spoiled:
+        return printable(f"spoiled: {each.reason}")
+    return "" if each.complete else printable(each.reason)
