@@ -8,15 +8,17 @@ it ends when its standard input closes, so that it never outlives a program that
 import json
 import subprocess
 import sys
+import tempfile
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from importlib.resources import as_file, files
 from pathlib import Path
+from typing import IO
 
 from pulsetally.drivers.errors import PulsetallyError
 from pulsetally.sequencer.bench import Bench, parse_bench
 
-_START_SECONDS = 30.0
+_STOP_SECONDS = 10.0
 
 
 class RehearsalError(PulsetallyError):
@@ -73,23 +75,23 @@ def simulated_bench(bench: Bench, options: Sequence[str] = ()) -> Iterator[Bench
         "--until-stdin-closes",
         *options,
     ]
-    with subprocess.Popen(
-        command,
-        stdin=subprocess.PIPE,
-        stdout=subprocess.PIPE,
-        stderr=subprocess.PIPE,
-        text=True,
-        start_new_session=True,
-    ) as process:
+    # A file and not a pipe: nobody reads it until the end, and a full pipe would stop the bench.
+    with (
+        tempfile.TemporaryFile("w+", encoding="utf-8", errors="replace") as complaints,
+        subprocess.Popen(
+            command,
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            stderr=complaints,
+            text=True,
+            start_new_session=True,
+        ) as process,
+    ):
+        keep_alive, announced = _pipes(process)
         try:
-            line = outputs.readline()
+            line = announced.readline()
             if not line:
-                process.stdin.close()
-                said = process.stderr.read().strip().splitlines()
-                raise RehearsalError(
-                    f"the simulated bench did not start ({said[-1] if said else 'no word'})."
-                    " To fix it, try 'pulsetally simulate' by itself."
-                )
+                raise RehearsalError(_why_not(complaints))
             addresses = json.loads(line)
             yield bench.with_addresses(
                 generator=addresses["generator"],
@@ -97,8 +99,21 @@ def simulated_bench(bench: Bench, options: Sequence[str] = ()) -> Iterator[Bench
                 clock=addresses["control"],
             )
         finally:
-            process.stdin.close()
+            keep_alive.close()
             try:
-                process.wait(timeout=_START_SECONDS)
+                process.wait(timeout=_STOP_SECONDS)
             except subprocess.TimeoutExpired:
                 process.kill()
+
+
+def _pipes(process: subprocess.Popen[str]) -> tuple[IO[str], IO[str]]:
+    if process.stdin is None or process.stdout is None:
+        raise RehearsalError("the simulated bench has no pipes. To fix it, report this.")
+    return process.stdin, process.stdout
+
+
+def _why_not(complaints: IO[str]) -> str:
+    complaints.seek(0)
+    said = complaints.read().strip().splitlines()
+    why = said[-1] if said else "it said nothing"
+    return f"the simulated bench did not start ({why}). To fix it, try 'pulsetally simulate'."
