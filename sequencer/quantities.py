@@ -99,7 +99,10 @@ def parse_quantity(written: object, kind: Kind) -> float:
         return float(number) * kind.fixed[unit]
     for symbol in kind.scaled:
         prefix = unit.removesuffix(symbol)
-        if unit.endswith(symbol) and (prefix == "" or (len(prefix) == 1 and prefix in _PREFIXES)):
+        if unit == symbol:
+            # Not for quantiphy, which would take the m of metres for milli.
+            return float(number)
+        if unit.endswith(symbol) and len(prefix) == 1 and prefix in _PREFIXES:
             return float(Quantity(f"{number} {prefix}{symbol}", units=symbol))
     raise _wrong(written, kind, "is not")
 

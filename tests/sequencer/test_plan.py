@@ -1,0 +1,127 @@
+"""From recipe and bench to rounds, before power."""
+
+import pytest
+
+from pulsetally.sequencer.bench import parse_bench
+from pulsetally.sequencer.errors import PlanError
+from pulsetally.sequencer.plan import Plan, Preset, Read, Step, Wait, make_plan
+from pulsetally.sequencer.recipe import parse_recipe
+from pulsetally.sequencer.rehearsal import recipe_path, shipped_bench, shipped_names
+
+HEAD = """\
+recipe: test
+parameters: {stored: 2, hold: 10 s, wide: 100 us}
+pulses:
+  down: {level: -5 V, width: 2 ms}
+  up: {level: 4 V, width: wide}
+steps:
+"""
+
+
+def plan_of(steps: str, overrides: dict[str, str] | None = None) -> Plan:
+    recipe = parse_recipe(HEAD + steps, file="r.yaml", overrides=overrides)
+    return make_plan(recipe, shipped_bench())
+
+
+def test_each_preset_begins_a_round() -> None:
+    plan = plan_of("  - {repeat: 3, steps: [{preset: down}, {step: up}, {wait: hold}]}\n")
+    assert [each.number for each in plan.rounds] == [1, 2, 3]
+    assert [type(action) for action in plan.rounds[0].actions] == [Preset, Step, Wait]
+    assert plan.most_pulses == 6
+    assert plan.seconds > 30
+
+
+def test_a_sweep_of_several_axes_is_a_grid_in_the_order_written() -> None:
+    plan = plan_of(
+        "  - sweep: {stored: [1, 2], up.width: [80 us, 100 us]}\n"
+        "    steps: [{preset: down}, {step: up, count: stored}]\n"
+    )
+    grid = [(each.settings["stored"], each.settings["up.width"]) for each in plan.rounds]
+    assert grid == [(1, 80e-6), (1, 100e-6), (2, 80e-6), (2, 100e-6)]
+    assert plan.swept == ("stored", "up.width")
+    widths = [
+        action.pulse.width
+        for each in plan.rounds
+        for action in each.actions
+        if isinstance(action, Step)
+    ]
+    assert widths == [80e-6, 100e-6, 80e-6, 100e-6]
+
+
+def test_a_swept_parameter_reaches_the_pulse_that_names_it() -> None:
+    plan = plan_of("  - sweep: {wide: [80 us, 125 us]}\n    steps: [{preset: down}, {step: up}]\n")
+    assert [each.settings["up.width"] for each in plan.rounds] == [80e-6, 125e-6]
+
+
+def test_a_round_without_a_preset_is_not_repeatable_and_is_mentioned() -> None:
+    plan = plan_of("  - {read: up, until: 2.5 V, at most: 9}\n")
+    (only,) = plan.rounds
+    assert not only.repeatable
+    assert any("unknown state" in warning for warning in plan.warnings)
+    (read,) = only.actions
+    assert isinstance(read, Read)
+    assert (read.threshold, read.at_most) == (2.5, 9)
+
+
+@pytest.mark.parametrize(
+    ("overrides", "words"),
+    [
+        ({"up.level": "7 V"}, "'up' of 7 V at the panel means 6.8.* V across the cell, beyond"),
+        ({"down.level": "-12 V"}, "'down' of -12 V .* at the terminal, beyond the source limit"),
+        ({"up.edge": "90 us"}, "leave no flat top"),
+        ({"up.level": "0 V"}, "its level is its base"),
+        ({"up.level": "2 V"}, "can't end, since the pulse goes from 0 V to 2 V"),
+    ],
+)
+def test_what_must_not_run_is_refused_before_power(overrides: dict[str, str], words: str) -> None:
+    steps = "  - preset: down\n  - {read: up, until: 2.5 V, at most: 9}\n"
+    with pytest.raises(PlanError, match=words):
+        plan_of(steps, overrides)
+
+
+def test_a_swept_level_beyond_the_limit_is_refused() -> None:
+    with pytest.raises(PlanError, match="beyond the node limit of 6 V"):
+        plan_of("  - sweep: {up.level: [4 V, 8 V]}\n    steps: [{preset: down}, {step: up}]\n")
+
+
+def test_a_panel_told_50_ohm_counts_twice_against_the_limits() -> None:
+    recipe = parse_recipe(HEAD + "  - preset: down\n", file="r.yaml")
+    bench = parse_bench(shipped_bench().text.replace("high-z", "50 ohm"), file="b.yaml")
+    with pytest.raises(PlanError, match=r"-5 V at the panel means -9\.78.* V across the cell"):
+        make_plan(recipe, bench)
+
+
+def test_too_many_rounds_are_refused_quickly() -> None:
+    steps = "  - {repeat: 1000000, steps: [{preset: down}]}\n"
+    with pytest.raises(PlanError, match="over 100000 rounds"):
+        plan_of(steps)
+
+
+def test_a_count_swept_over_fractions_is_refused() -> None:
+    with pytest.raises(PlanError, match=r"count is 1\.5"):
+        plan_of(
+            "  - sweep: {stored: [1.5]}\n    steps: [{preset: down}, {step: up, count: stored}]\n"
+        )
+
+
+# What the shipped recipes promise: rounds, and what they sweep.
+SHIPPED = {
+    "full_count": (20, ()),
+    "width_sweep": (15, ("up.width",)),
+    "step_and_read": (5, ("stored",)),
+}
+
+
+def test_every_shipped_recipe_is_listed_here() -> None:
+    assert shipped_names() == sorted(SHIPPED)
+
+
+@pytest.mark.parametrize("name", sorted(SHIPPED))
+def test_shipped_recipes_plan_on_the_shipped_bench(name: str) -> None:
+    from pulsetally.sequencer.recipe import load_recipe
+
+    with recipe_path(name) as path:
+        plan = make_plan(load_recipe(path), shipped_bench())
+    assert (len(plan.rounds), plan.swept) == SHIPPED[name]
+    assert all(each.repeatable for each in plan.rounds)
+    assert plan.recipe.model.purpose
