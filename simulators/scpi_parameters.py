@@ -86,10 +86,10 @@ class Number:
             return value
         limits = self.limits()
         # The slack is for 20 NS, which in binary is not quite 20e-9.
-        slack = 1e-12 * max(abs(limits.lowest), abs(limits.highest))
+        below, above = 1e-12 * abs(limits.lowest), 1e-12 * abs(limits.highest)
         if self.whole:
             value = round(value) if math.isfinite(value) else value
-        if not limits.lowest - slack <= value <= limits.highest + slack:
+        if not limits.lowest - below <= value <= limits.highest + above:
             raise ScpiError(-222)
         return min(max(value, limits.lowest), limits.highest)
 

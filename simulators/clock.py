@@ -1,0 +1,61 @@
+"""Let virtual time pass on the table, and do what is due on the way."""
+
+import heapq
+from collections.abc import Callable
+from itertools import count
+
+from pulsetally.simulators.table import Table
+
+
+class Appointment:
+    """Something to be done at an instant, unless it is called off before."""
+
+    def __init__(self, at_seconds: float, action: Callable[[], None]) -> None:
+        self.at_seconds, self.action, self.cancelled = at_seconds, action, False
+
+    def cancel(self) -> None:
+        """Call it off."""
+        self.cancelled = True
+
+
+class VirtualClock:
+    """The one clock of the simulated bench; it moves only when it is told to.
+
+    Every instrument lets time pass through here, never through the table itself, so that
+    a relay closes and a burst ends at its own instant whoever moves the clock.
+    """
+
+    def __init__(self, table: Table) -> None:
+        self._table = table
+        self._agenda: list[tuple[float, int, Appointment]] = []
+        self._order = count()
+
+    @property
+    def now(self) -> float:
+        """Virtual time, s."""
+        return self._table.now
+
+    def call_at(self, at_seconds: float, action: Callable[[], None]) -> Appointment:
+        """Have something done when the clock reaches an instant (at once if it passed)."""
+        appointment = Appointment(at_seconds, action)
+        heapq.heappush(self._agenda, (at_seconds, next(self._order), appointment))
+        return appointment
+
+    def advance(self, seconds: float) -> None:
+        """Let this many seconds pass, at least 0."""
+        self.advance_to(self.now + seconds)
+
+    def advance_to(self, at_seconds: float) -> None:
+        """Let time pass until an instant; what is due until then is done in order."""
+        while self._agenda and self._agenda[0][0] <= at_seconds:
+            due_seconds, _, appointment = heapq.heappop(self._agenda)
+            if appointment.cancelled:
+                continue
+            self._pass_until(due_seconds)
+            appointment.action()
+        self._pass_until(at_seconds)
+
+    def _pass_until(self, at_seconds: float) -> None:
+        seconds = at_seconds - self.now
+        if seconds > 0:
+            self._table.advance(seconds)

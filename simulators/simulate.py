@@ -1,0 +1,191 @@
+"""Serve the simulated bench: a generator, an oscilloscope and a control port over TCP."""
+
+import argparse
+import asyncio
+import json
+import os
+import signal
+import sys
+import threading
+from collections.abc import Callable, Sequence
+from dataclasses import asdict, dataclass, field, replace
+
+from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.circuit import Wiring
+from pulsetally.simulators.clock import VirtualClock
+from pulsetally.simulators.control import BenchControl
+from pulsetally.simulators.function_generator import FunctionGenerator
+from pulsetally.simulators.oscilloscope import Oscilloscope
+from pulsetally.simulators.server import LOOPBACK, DeviceServer
+from pulsetally.simulators.table import Table
+
+VERSION = "1"
+VACUUM_PERMITTIVITY = 8.8541878128e-12
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SimulationSettings:
+    """What the simulated bench is made of.
+
+    seed: of everything random. *_port: 0 for any free one.
+    exchange_seconds: virtual time that each program message takes.
+    until_stdin_closes: end when standard input does, besides SIGTERM and SIGINT.
+    """
+
+    cell: CellDescription = field(default_factory=CellDescription)
+    wiring: Wiring = field(default_factory=Wiring)
+    seed: int = 1
+    generator_port: int = 0
+    oscilloscope_port: int = 0
+    control_port: int = 0
+    exchange_seconds: float = 1e-3
+    until_stdin_closes: bool = False
+
+    def __post_init__(self) -> None:
+        for name in ("generator_port", "oscilloscope_port", "control_port"):
+            if not 0 <= getattr(self, name) <= 65535:
+                raise ValueError(f"{name} must be from 0 to 65535, not {getattr(self, name)}")
+        if not 0 <= self.exchange_seconds <= 3600:
+            raise ValueError(
+                f"exchange_seconds must be from 0 to 3600 s, not {self.exchange_seconds}"
+            )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Addresses:
+    """VISA resource names of the three instruments."""
+
+    generator: str
+    oscilloscope: str
+    control: str
+
+
+class Bench:
+    """The instruments and the table between them, not yet on any port."""
+
+    def __init__(self, settings: SimulationSettings) -> None:
+        cell, wiring = settings.cell, settings.wiring
+        self.table = Table(cell, wiring, seed=settings.seed)
+        self.clock = VirtualClock(self.table)
+        self.oscilloscope = Oscilloscope(
+            _identity("OSCILLOSCOPE", settings), clock=self.clock, seed=settings.seed
+        )
+        self.table.observe(self.oscilloscope)
+        self.generator = FunctionGenerator(
+            _identity("FUNCTION GENERATOR", settings),
+            table=self.table,
+            clock=self.clock,
+            source_ohms=wiring.source_ohms,
+            sync=self.oscilloscope.trigger_externally,
+        )
+        self.control = BenchControl(
+            _identity("BENCH CONTROL", settings),
+            table=self.table,
+            clock=self.clock,
+            generator=self.generator,
+            farads=VACUUM_PERMITTIVITY * cell.relative_permittivity * cell.area / cell.thickness
+            + wiring.probe_farads,
+        )
+
+
+def _identity(what: str, settings: SimulationSettings) -> str:
+    return f"PULSETALLY,SIMULATED {what},{settings.seed},{VERSION}"
+
+
+async def serve_until(
+    settings: SimulationSettings, announce: Callable[[Addresses], None], stop: asyncio.Event
+) -> None:
+    """Serve the bench in the running event loop until stop is set."""
+    bench = Bench(settings)
+
+    def pass_time() -> None:
+        bench.clock.advance(settings.exchange_seconds)
+
+    servers = [
+        DeviceServer(device, after_message=pass_time)
+        for device in (bench.generator, bench.oscilloscope, bench.control)
+    ]
+    ports = (settings.generator_port, settings.oscilloscope_port, settings.control_port)
+    try:
+        names = [
+            f"TCPIP::{LOOPBACK}::{await server.start(port)}::SOCKET"
+            for server, port in zip(servers, ports, strict=True)
+        ]
+        announce(Addresses(generator=names[0], oscilloscope=names[1], control=names[2]))
+        await stop.wait()
+    finally:
+        for server in servers:
+            await server.stop()
+
+
+def serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
+    """Serve the bench until SIGTERM, SIGINT or, when asked, the end of standard input.
+
+    announce: called once, when all three ports listen. OSError when a port is taken.
+    """
+    asyncio.run(_serve(settings, announce))
+
+
+async def _serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
+    loop, stop = asyncio.get_running_loop(), asyncio.Event()
+    for number in (signal.SIGTERM, signal.SIGINT):
+        loop.add_signal_handler(number, stop.set)
+    if settings.until_stdin_closes:
+
+        def read_to_the_end() -> None:
+            # os.read holds no lock of the interpreter's, so that a signal can end us
+            # while this thread still waits.
+            while os.read(0, 65_536):
+                pass
+            loop.call_soon_threadsafe(stop.set)
+
+        threading.Thread(target=read_to_the_end, daemon=True).start()
+    await serve_until(settings, announce, stop)
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Serve the bench from the command line; return the exit status."""
+    parser = argparse.ArgumentParser(
+        prog="python -m pulsetally.simulators.simulate",
+        description="Serve a simulated function generator and oscilloscope on loopback ports.",
+    )
+    parser.add_argument("--json", action="store_true", help="print the addresses as JSON")
+    parser.add_argument("--seed", type=int, default=1, help="seed of everything random")
+    parser.add_argument("--domains", type=int, help="make full counts scatter: number of domains")
+    for name in ("generator", "oscilloscope", "control"):
+        parser.add_argument(f"--{name}-port", type=int, default=0, help="0: any free port")
+    parser.add_argument(
+        "--until-stdin-closes", action="store_true", help="end when standard input does"
+    )
+    given = parser.parse_args(arguments)
+
+    def announce(addresses: Addresses) -> None:
+        if given.json:
+            print(json.dumps(asdict(addresses)), flush=True)
+            return
+        print(f"The function generator listens at {addresses.generator}.")
+        print(f"The oscilloscope listens at {addresses.oscilloscope}.")
+        print(f"The control port, for rehearsals only, is {addresses.control}.", flush=True)
+
+    try:
+        cell = replace(CellDescription(), domains=given.domains)
+        settings = SimulationSettings(
+            cell=cell,
+            seed=given.seed,
+            generator_port=given.generator_port,
+            oscilloscope_port=given.oscilloscope_port,
+            control_port=given.control_port,
+            until_stdin_closes=given.until_stdin_closes,
+        )
+    except ValueError as error:
+        parser.error(str(error))
+    try:
+        serve(settings, announce)
+    except OSError as error:
+        print(f"The simulated bench can't listen: {error}.", file=sys.stderr)
+        return 1
+    return 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,72 @@
+"""The control port: virtual time and ground truth."""
+
+import pytest
+
+from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.scpi_engine import ScpiEngine
+from pulsetally.simulators.simulate import Bench, SimulationSettings
+
+
+class Talk:
+    def __init__(self) -> None:
+        self.bench = Bench(SimulationSettings(cell=CellDescription()))
+        self._engine = ScpiEngine(self.bench.control)
+        self._generator = ScpiEngine(self.bench.generator)
+
+    def say(self, text: str) -> str:
+        return self._engine.receive(text.encode() + b"\n").decode().removesuffix("\n")
+
+    def number(self, query: str) -> float:
+        return float(self.say(query))
+
+    def output(self, text: str) -> None:
+        self._generator.receive(text.encode() + b"\n")
+
+
+@pytest.fixture
+def talk() -> Talk:
+    return Talk()
+
+
+def test_the_clock_moves_as_told(talk: Talk) -> None:
+    assert talk.number(":CLOC:TIME?") == 0
+    talk.say(":CLOCk:ADVance 1.5;ADV 250 MS")
+    assert talk.number(":CLOC:TIME?") == pytest.approx(1.75, rel=1e-15)
+    talk.say(":CLOC:ADV -1")
+    assert talk.say(":SYST:ERR?").startswith("-222,")
+
+
+def test_the_cell_starts_fully_down_and_nothing_is_on(talk: Talk) -> None:
+    assert talk.number(":TRUTh:POLarization?") == pytest.approx(-0.25)
+    assert talk.number(":TRUT:UP?") == 0
+    assert talk.say(":TRUT:OUTP?;DEL?") == "0;0"
+    assert talk.number(":TRUT:NODE?") == talk.number(":TRUT:TERM?") == 0
+    assert talk.number(":TRUT:MAX?") == 0
+
+
+# FE-23 scaled (A): eps0 500 1e-8 m2 / 150 nm = 295.1396 pF, and 12 pF of probe.
+def test_the_capacitance_is_that_of_cell_and_probe(talk: Talk) -> None:
+    assert talk.number(":TRUT:CAP?") == pytest.approx(221.3547e-12 * 200 / 150 + 12e-12, rel=1e-6)
+
+
+def test_a_pulse_is_seen_in_every_truth(talk: Talk) -> None:
+    talk.output(":VOLT:HIGH 4;LOW 0;:PULS:WIDT 100 US;TRAN 100 NS;TRAN:TRA 100 NS;:OUTP ON")
+    talk.say(":CLOC:ADV 0.02")
+    assert talk.say(":TRUT:OUTP?") == "1"
+    talk.output(":INIT;*TRG")
+    talk.say(":CLOC:ADV 90 US")
+    assert talk.number(":TRUT:TERM?") == pytest.approx(4, abs=2e-3)
+    node = talk.number(":TRUT:NODE?")
+    assert 0.5 < node < 4
+    talk.say(":CLOC:ADV 0.01")
+    assert talk.number(":TRUT:MAX?") == pytest.approx(4, abs=1e-3)
+    assert talk.say(":TRUT:DEL?") == "1"
+    up = talk.number(":TRUT:UP?")
+    assert up > 0.01
+    # A: P = P_r (2 u - 1).
+    assert talk.number(":TRUT:POL?") == pytest.approx(0.25 * (2 * up - 1), abs=1e-9)
+
+
+def test_truth_cannot_be_set(talk: Talk) -> None:
+    talk.say(":TRUT:POL 0.1")
+    assert talk.say(":SYST:ERR?").startswith("-113,")
