@@ -143,10 +143,12 @@ class Oscilloscope(ScpiDevice):
         if acquisition is None:
             return
         settings = acquisition.settings
-        window_seconds = settings.points * settings.interval_seconds
-        self._clock.advance_to(acquisition.armed_seconds + window_seconds)
+        if acquisition.trigger_seconds is None:
+            window_seconds = settings.points * settings.interval_seconds
+            self._clock.advance_to(acquisition.armed_seconds + window_seconds)
         if acquisition.trigger_seconds is None:
             raise ScpiError(-214)
+        # One interval more, so that rounding can't leave the last sample out.
         self._clock.advance_to(acquisition.last_seconds + settings.interval_seconds)
 
     def operation_condition(self) -> int:

@@ -3,6 +3,7 @@
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from functools import cache
 from typing import Protocol
 
 from pulsetally.simulators.scpi_errors import ScpiError
@@ -49,6 +50,7 @@ class Limits:
     default: float
 
 
+@cache
 def spellings(words: tuple[str, ...]) -> dict[str, str]:
     """Return every accepted spelling, in capitals, with the short form it stands for."""
     return {form: short_form(word) for word in words for form in (word.upper(), short_form(word))}

@@ -8,6 +8,7 @@ import signal
 import sys
 import threading
 from collections.abc import Callable, Sequence
+from contextlib import suppress
 from dataclasses import asdict, dataclass, field, replace
 
 from pulsetally.simulators.cell import CellDescription
@@ -121,26 +122,36 @@ async def serve_until(
 def serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
     """Serve the bench until SIGTERM, SIGINT or, when asked, the end of standard input.
 
-    announce: called once, when all three ports listen. OSError when a port is taken.
+    announce: called once, when all three ports listen. To be called in the main thread.
+    Raises OSError when a port is taken.
     """
     asyncio.run(_serve(settings, announce))
 
 
 async def _serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
     loop, stop = asyncio.get_running_loop(), asyncio.Event()
-    for number in (signal.SIGTERM, signal.SIGINT):
-        loop.add_signal_handler(number, stop.set)
-    if settings.until_stdin_closes:
 
-        def read_to_the_end() -> None:
-            # os.read holds no lock of the interpreter's, so that a signal can end us
-            # while this thread still waits.
-            while os.read(0, 65_536):
-                pass
+    def end(*_: object) -> None:
+        # A loop that is closing no longer needs to hear of the end.
+        with suppress(RuntimeError):
             loop.call_soon_threadsafe(stop.set)
 
+    def read_to_the_end() -> None:
+        # os.read holds no lock of the interpreter's, so that a signal can end the
+        # process while this thread still waits.
+        while os.read(0, 65_536):
+            pass
+        end()
+
+    # Not the loop's own handlers, which not every platform has.
+    before = {number: signal.signal(number, end) for number in (signal.SIGTERM, signal.SIGINT)}
+    if settings.until_stdin_closes:
         threading.Thread(target=read_to_the_end, daemon=True).start()
-    await serve_until(settings, announce, stop)
+    try:
+        await serve_until(settings, announce, stop)
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
 
 
 def main(arguments: Sequence[str] | None = None) -> int:

@@ -1,6 +1,8 @@
 """The control port: virtual time and ground truth."""
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.scpi_engine import ScpiEngine
@@ -70,3 +72,57 @@ def test_a_pulse_is_seen_in_every_truth(talk: Talk) -> None:
 def test_truth_cannot_be_set(talk: Talk) -> None:
     talk.say(":TRUT:POL 0.1")
     assert talk.say(":SYST:ERR?").startswith("-113,")
+
+
+# Messages in any order to the three instruments: 0 generator, 1 oscilloscope, 2 control.
+MESSAGES = [
+    (0, ":VOLT:HIGH 4;LOW 0"),
+    (0, ":VOLT:HIGH -2"),
+    (0, ":VOLT:LOW -5"),
+    (0, ":PULS:POL INV"),
+    (0, ":PULS:WIDT 1 MS;COUN 3"),
+    (0, ":OUTP1:LOAD 50"),
+    (0, ":OUTP ON"),
+    (0, ":OUTP OFF"),
+    (0, ":INIT"),
+    (0, "*TRG"),
+    (0, ":INIT;*TRG"),
+    (0, "*WAI"),
+    (0, ":ABOR"),
+    (0, "*RST"),
+    (1, ":TRIG:SOUR INT1;LEV 1"),
+    (1, ":TRIG:SOUR BUS"),
+    (1, ":TRIG:SOUR EXT"),
+    (1, ":SENS:SWE:POIN 100;OREF:LOC 0.5"),
+    (1, ":INIT"),
+    (1, "*TRG"),
+    (1, "*WAI"),
+    (1, ":ABOR"),
+    (1, "*RST"),
+    (2, ":CLOC:ADV 20 US"),
+    (2, ":CLOC:ADV 2 MS"),
+    (2, ":CLOC:ADV 15 MS"),
+]
+
+
+@settings(deadline=None, max_examples=60)
+@given(st.lists(st.sampled_from(MESSAGES), max_size=15))
+def test_any_order_of_messages_keeps_the_bench_whole(messages: list[tuple[int, str]]) -> None:
+    bench = Bench(SimulationSettings(cell=CellDescription(regions=4)))
+    generator, oscilloscope, control = (
+        ScpiEngine(device) for device in (bench.generator, bench.oscilloscope, bench.control)
+    )
+    for index, message in messages:
+        assert (generator, oscilloscope, control)[index].receive(f"{message}\n".encode()) == b""
+        high, low = map(float, generator.receive(b":VOLT:HIGH?;LOW?\n").split(b";"))
+        assert high > low
+        condition = int(generator.receive(b":STAT:OPER:COND?\n"))
+        assert condition & (8 + 32) != 8 + 32  # never waiting and running at once
+        measuring = int(oscilloscope.receive(b":STAT:OPER:COND?\n"))
+        assert measuring in (0, 16, 48)
+        assert 0 <= bench.table.up_fraction <= 1
+        assert abs(bench.table.terminal_volts) <= 10
+    generator.receive(b"*RST\n")
+    oscilloscope.receive(b":ABOR\n")
+    assert control.receive(b":TRUT:OUTP?\n") == b"0\n"
+    assert oscilloscope.receive(b"*CLS;*RST;:INIT;*WAI;*OPC?;:SYST:ERR?\n") == b'1;0,"No error"\n'
