@@ -6,7 +6,7 @@ found interrupted (-410) or deadlocked (-430), and nobody can ask for an answer 
 not made (-420). Only -440, a query behind an answer without an end of its own, is left.
 """
 
-from collections.abc import Callable
+from collections.abc import Iterator
 
 from pulsetally.simulators.scpi_device import Call, Command, ScpiDevice
 from pulsetally.simulators.scpi_errors import ScpiError
@@ -24,39 +24,32 @@ from pulsetally.simulators.scpi_parameters import Number, Parameter, Value
 _COMMAND_ERRORS = range(-199, -99)
 
 
-def _nothing() -> None:
-    pass
-
-
 class ScpiEngine:
     """Follow the messages of one connection to an instrument.
 
     device: the instrument; several engines may share one.
     limit: most bytes of one message; a longer one is -363 and is left out.
-    after_message: called when a program message has been followed, before the next.
     """
 
-    def __init__(
-        self,
-        device: ScpiDevice,
-        *,
-        limit: int = 65_536,
-        after_message: Callable[[], None] = _nothing,
-    ) -> None:
+    def __init__(self, device: ScpiDevice, *, limit: int = 65_536) -> None:
         self._device = device
         self._reader = MessageReader(limit)
-        self._after_message = after_message
 
     def receive(self, data: bytes) -> bytes:
         """Take newly arrived bytes, however cut; return what the instrument answers."""
-        answers = []
+        return b"".join(self.answers(data))
+
+    def answers(self, data: bytes) -> Iterator[bytes]:
+        """Take newly arrived bytes; follow each message they complete when its turn comes.
+
+        Yields one item a message, b"" for one without an answer, so that the caller can
+        send it and let time pass before the next message is looked at.
+        """
         for message in self._reader.feed(data):
             if isinstance(message, ScpiError):
                 self._device.status.report(message)
-                continue
-            answers.append(self._follow(message))
-            self._after_message()
-        return b"".join(answers)
+            else:
+                yield self._follow(message)
 
     def _follow(self, message: bytes) -> bytes:
         device = self._device

@@ -17,8 +17,13 @@ LOOPBACK = "127.0.0.1"
 
 
 class _Connection(asyncio.Protocol):
-    def __init__(self, engine: ScpiEngine, present: set[asyncio.Transport]) -> None:
-        self._engine, self._present = engine, present
+    def __init__(
+        self,
+        engine: ScpiEngine,
+        present: set[asyncio.Transport],
+        after_message: Callable[[], None],
+    ) -> None:
+        self._engine, self._present, self._after_message = engine, present, after_message
         self._transport: asyncio.Transport | None = None
 
     def connection_made(self, transport: asyncio.BaseTransport) -> None:
@@ -32,9 +37,11 @@ class _Connection(asyncio.Protocol):
             self._present.discard(self._transport)
 
     def data_received(self, data: bytes) -> None:
-        answer = self._engine.receive(data)
-        if answer and self._transport is not None and not self._transport.is_closing():
-            self._transport.write(answer)
+        for answer in self._engine.answers(data):
+            if answer and self._transport is not None and not self._transport.is_closing():
+                self._transport.write(answer)
+            # The client has its answer and can work on it while time passes here.
+            self._after_message()
 
     # A client that sends and never reads must not fill the memory.
     def pause_writing(self) -> None:
@@ -64,8 +71,7 @@ class DeviceServer:
         return int(self._server.sockets[0].getsockname()[1])
 
     def _connect(self) -> asyncio.Protocol:
-        engine = ScpiEngine(self._device, after_message=self._after_message)
-        return _Connection(engine, self._present)
+        return _Connection(ScpiEngine(self._device), self._present, self._after_message)
 
     async def stop(self) -> None:
         """Stop listening and cut every connection."""

@@ -335,12 +335,16 @@ def test_engines_share_the_instrument_and_not_the_message() -> None:
     assert ScpiEngine(device).receive(b"*ESE?\n") == b"7\n"
 
 
-def test_each_message_is_reported_when_followed() -> None:
-    seen = []
+def test_each_message_is_followed_when_its_turn_comes() -> None:
     device = Notebook()
-    engine = ScpiEngine(device, after_message=lambda: seen.append(len(device.notes)))
-    engine.receive(b":VOLT 1;VOLT 2\n:VOLT 3\n:VOLT")
-    assert seen == [2, 3]
+    engine = ScpiEngine(device)
+    turns = engine.answers(b":VOLT 1;VOLT 2\n:VOLT 3;*OPC?\n:VOLT")
+    assert device.notes == []
+    assert next(turns) == b""
+    assert len(device.notes) == 2
+    assert next(turns) == b"1\n"
+    assert len(device.notes) == 3
+    assert list(turns) == []
 
 
 @given(st.binary(max_size=80))
