@@ -154,6 +154,16 @@ async def _serve(settings: SimulationSettings, announce: Callable[[Addresses], N
             signal.signal(number, handler)
 
 
+def tell(addresses: Addresses, *, as_json: bool) -> None:
+    """Print the addresses, as one line of JSON or as three sentences, and flush them."""
+    if as_json:
+        print(json.dumps(asdict(addresses)), flush=True)
+        return
+    print(f"The function generator listens at {addresses.generator}.")
+    print(f"The oscilloscope listens at {addresses.oscilloscope}.")
+    print(f"The control port, for rehearsals only, is {addresses.control}.", flush=True)
+
+
 def main(arguments: Sequence[str] | None = None) -> int:
     """Serve the bench from the command line; return the exit status."""
     parser = argparse.ArgumentParser(
@@ -170,14 +180,6 @@ def main(arguments: Sequence[str] | None = None) -> int:
     )
     given = parser.parse_args(arguments)
 
-    def announce(addresses: Addresses) -> None:
-        if given.json:
-            print(json.dumps(asdict(addresses)), flush=True)
-            return
-        print(f"The function generator listens at {addresses.generator}.")
-        print(f"The oscilloscope listens at {addresses.oscilloscope}.")
-        print(f"The control port, for rehearsals only, is {addresses.control}.", flush=True)
-
     try:
         cell = replace(CellDescription(), domains=given.domains)
         settings = SimulationSettings(
@@ -191,7 +193,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except ValueError as error:
         parser.error(str(error))
     try:
-        serve(settings, announce)
+        serve(settings, lambda addresses: tell(addresses, as_json=given.json))
     except OSError as error:
         print(f"The simulated bench can't listen: {error}.", file=sys.stderr)
         return 1
