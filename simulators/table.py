@@ -1,0 +1,142 @@
+"""The table of the simulated bench: one cell, its wiring, the drive and virtual time."""
+
+import math
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from pulsetally.simulators.cell import Cell, CellDescription
+from pulsetally.simulators.circuit import Circuit, Wiring
+from pulsetally.simulators.drive import PulseTrain, Rest
+from pulsetally.simulators.solver import Ramp, Solver
+
+Array = NDArray[np.float64]
+
+
+class Observer(Protocol):
+    """Whoever watches the table's two voltages."""
+
+    def saw(self, times: Array, terminal_volts: Array, node_volts: Array) -> None:
+        """Take one stretch of samples: absolute times (s, strictly rising) and volts.
+
+        The first sample is the instant of the last one before; its terminal voltage
+        differs where the EMF or the relay jumped. Straight lines between samples are
+        within 0.1 mV of the course. The arrays are not to be changed.
+        """
+
+
+class Table:
+    """A cell in its wiring, driven by an EMF, in virtual time.
+
+    Starts at 0 s, fully down, discharged, at rest at 0 V and with the output relay off.
+    now: virtual time, s. delivered: whole pulses of an amplitude other than 0 that
+    reached the terminal, the relay being on from begin to end.
+    """
+
+    def __init__(self, cell: CellDescription, wiring: Wiring, *, seed: int = 1) -> None:
+        self.now = 0.0
+        self.delivered = 0
+        self._cell = Cell(cell, seed=seed)
+        self._circuit = Circuit(cell, wiring)
+        self._solver = Solver(self._cell, self._circuit)
+        self._drive: PulseTrain | Rest = Rest()
+        self._observers: list[Observer] = []
+        # Pulses of the present train that are settled: delivered, or missed.
+        self._settled_pulses = 0
+
+    @property
+    def polarization(self) -> float:
+        """Polarization of the cell, C/m2."""
+        return self._cell.polarization
+
+    @property
+    def up_fraction(self) -> float:
+        """Part of the cell that is up, 0 to 1."""
+        return self._cell.up_fraction
+
+    @property
+    def node_volts(self) -> float:
+        """Voltage across the cell, V."""
+        return self._solver.node_volts
+
+    @property
+    def terminal_volts(self) -> float:
+        """Voltage at the generator's terminal, V; the node's while the relay is off."""
+        emf_volts = np.array([self._drive.volts_at(self.now)])
+        return float(self._circuit.terminal_volts(emf_volts, np.array([self.node_volts]))[0])
+
+    def observe(self, observer: Observer) -> None:
+        """Show every stretch from now on to an observer."""
+        self._observers.append(observer)
+
+    def connect(self, on: bool) -> None:
+        """Switch the output relay; a pulse under way is lost either way."""
+        if on == self._circuit.relay_on:
+            return
+        self._circuit.relay_on = on
+        if isinstance(self._drive, PulseTrain):
+            self._settled_pulses = self._drive.pulses_begun(self.now)
+
+    def rest_at(self, volts: float) -> None:
+        """Put the EMF at a constant, V, at once and until something else is said."""
+        self._drive = Rest(base_volts=volts)
+
+    def play(self, train: PulseTrain) -> None:
+        """Play a train; until it starts the EMF is at the train's base."""
+        if train.start_seconds < self.now:
+            raise ValueError(
+                f"the train starts at {train.start_seconds} s, which is before now, {self.now} s"
+            )
+        self._drive, self._settled_pulses = train, 0
+
+    def stop_drive(self) -> None:
+        """Abort: the EMF falls to its base at once."""
+        self.rest_at(self._drive.base_volts)
+
+    def advance(self, seconds: float) -> None:
+        """Let this many seconds pass, at least 0; observers see each stretch of them."""
+        if not 0 <= seconds < math.inf:
+            raise ValueError(f"seconds is {seconds}; time passes forwards and not for ever")
+        end_seconds = self.now + seconds
+        while self.now < end_seconds:
+            stretch = self._drive.stretch_at(self.now)
+            stop_seconds = min(stretch.end_seconds, end_seconds)
+            slope = 0.0
+            if stretch.begin_volts != stretch.end_volts:
+                slope = (stretch.end_volts - stretch.begin_volts) / (stretch.end_seconds - self.now)
+            self._pass(
+                Ramp(
+                    begin_volts=stretch.begin_volts,
+                    volts_per_second=slope,
+                    seconds=stop_seconds - self.now,
+                ),
+                stop_seconds,
+            )
+            self._count_pulses()
+
+    def _pass(self, ramp: Ramp, stop_seconds: float) -> None:
+        times, node_volts = self._solver.run(ramp, sampled=bool(self._observers))
+        begin_seconds, self.now = self.now, stop_seconds
+        if not self._observers:
+            return
+        emf_volts = ramp.begin_volts + ramp.volts_per_second * times
+        times = begin_seconds + times
+        times[-1] = stop_seconds
+        # Late in virtual time the clock is coarser than the solver's shortest steps.
+        rising = np.concatenate(([True], np.diff(times) > 0))
+        rising[:-1] &= times[:-1] < stop_seconds
+        times, emf_volts, node_volts = times[rising], emf_volts[rising], node_volts[rising]
+        terminal_volts = self._circuit.terminal_volts(emf_volts, node_volts)
+        for observer in self._observers:
+            observer.saw(times, terminal_volts, node_volts)
+
+    def _count_pulses(self) -> None:
+        train = self._drive
+        if not isinstance(train, PulseTrain):
+            return
+        ended = train.pulses_ended(self.now)
+        if ended > self._settled_pulses:
+            if self._circuit.relay_on and train.level_volts != train.base_volts:
+                self.delivered += ended - self._settled_pulses
+            self._settled_pulses = ended
