@@ -56,6 +56,6 @@ class VirtualClock:
         self._pass_until(at_seconds)
 
     def _pass_until(self, at_seconds: float) -> None:
-        seconds = at_seconds - self.now
-        if seconds > 0:
+        # Twice where the first sum was rounded: a burst's end must really be reached.
+        while (seconds := at_seconds - self.now) > 0:
             self._table.advance(seconds)

@@ -22,8 +22,8 @@ from pulsetally.simulators.table import Table
 # The EMF is a 14-bit two's complement code over -10 V to +10 V.
 LEVEL_BITS = 14
 EMF_SPAN_VOLTS = 10.0
-VOLTS_PER_CODE = 2 * EMF_SPAN_VOLTS / 2**LEVEL_BITS
-_LARGEST_CODE = 2 ** (LEVEL_BITS - 1) - 1
+VOLTS_PER_CODE = 2 * EMF_SPAN_VOLTS / (1 << LEVEL_BITS)
+_LARGEST_CODE = (1 << (LEVEL_BITS - 1)) - 1
 
 TIME_STEPS_PER_SECOND = 1e9
 SMALLEST_EDGE_SECONDS = 5e-9

@@ -21,7 +21,6 @@ from pulsetally.simulators.server import LOOPBACK, DeviceServer
 from pulsetally.simulators.table import Table
 
 VERSION = "1"
-VACUUM_PERMITTIVITY = 8.8541878128e-12
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -84,8 +83,7 @@ class Bench:
             table=self.table,
             clock=self.clock,
             generator=self.generator,
-            farads=VACUUM_PERMITTIVITY * cell.relative_permittivity * cell.area / cell.thickness
-            + wiring.probe_farads,
+            farads=cell.farads + wiring.probe_farads,
         )
 
 

@@ -193,6 +193,17 @@ def test_the_output_can_be_switched_off_behind_a_conflict(talk: Talk) -> None:
     assert talk.say(":OUTP?") == "0"
 
 
+def test_edges_that_just_touch_are_no_conflict(talk: Talk) -> None:
+    # A: a ramp of 100 ns from 10 % to 90 % lasts 125 ns, so that a triangle is 125 ns wide.
+    talk.say(":VOLT:HIGH 4;LOW 0;:PULS:WIDT 125 NS;PER 250 NS;COUN 4;TRAN 1E-7;TRAN:TRA 1E-7")
+    assert talk.error() == 0
+    talk.switch_on()
+    assert talk.say(":INIT;*TRG;*OPC?") == "1"
+    assert talk.bench.table.delivered == 4
+    talk.say(":PULS:WIDT 124 NS")
+    assert talk.error() == -221
+
+
 # Load (section 1.8 of the reference values: public manuals; closed form).
 
 
@@ -352,7 +363,8 @@ def test_new_levels_cut_a_burst_short_and_new_times_do_not(talk: Talk) -> None:
 
 # CIR-1 and the RC charge (A): one pulse into a linear capacitor.
 def test_a_pulse_charges_the_node_as_the_closed_form_says(talk: Talk) -> None:
-    talk.say(":VOLT:HIGH 4;LOW 0;:PULS:TRAN 5 NS;TRAN:TRA 5 NS;WIDT 100 US;PER 1 MS")
+    talk.say(":VOLT:HIGH 4;LOW 0;:PULS:WIDT 100 US;PER 1 MS;TRAN 5 NS;TRAN:TRA 5 NS")
+    assert talk.error() == 0
     talk.switch_on()
     talk.say(":INIT;*TRG")
     talk.advance(50e-6)

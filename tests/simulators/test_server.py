@@ -213,6 +213,37 @@ def test_a_whole_shot_follows_the_closed_form(
         assert client.ask(":SYST:ERR?") == '0,"No error"'
 
 
+# design.md section 6: the default cell reaches 2.5 V in about nine pulses after a preset.
+def test_the_default_cell_is_full_after_about_nine_pulses() -> None:
+    with (
+        served(SimulationSettings()) as addresses,
+        Client(addresses.generator) as generator,
+        Client(addresses.oscilloscope) as oscilloscope,
+    ):
+        generator.write(":VOLT:HIGH 0;LOW -5;:PULS:POL INV;WIDT 2E-3;PER 4E-3")
+        generator.write(":PULS:TRAN 1E-7;TRAN:TRA 1E-7;:OUTP1 ON")
+        while generator.ask(":STAT:OPER:COND?") != "0":
+            pass
+        assert generator.ask(":INIT;*TRG;*OPC?") == "1"
+        generator.write(":VOLT:HIGH 4;LOW 0;:PULS:POL NORM;WIDT 1E-4;PER 1E-3")
+        oscilloscope.write(":SENS1:VOLT:RANG:PTP 16;:SENS2:VOLT:RANG:PTP 8")
+        oscilloscope.write(":SENS:SWE:POIN 1200;TINT 1E-7;:TRIG:SOUR INT1;LEV 2")
+        count, end_volts = 0, 0.0
+        while end_volts < 2.5:
+            oscilloscope.write(":INIT")
+            while int(oscilloscope.ask(":STAT:OPER:COND?")) & 32 == 0:
+                pass
+            assert generator.ask(":INIT;*TRG;*OPC?") == "1"
+            while int(oscilloscope.ask(":STAT:OPER:COND?")) & 16:
+                pass
+            codes = np.frombuffer(oscilloscope.ask_block(":TRAC:DATA? CHAN2"), ">i2")
+            end_volts = float(np.mean(codes[970:990])) * 8 / 4096
+            count += 1
+            assert count < 20
+        assert 8 <= count <= 10
+        assert generator.ask(":SYST:ERR?") == oscilloscope.ask(":SYST:ERR?") == '0,"No error"'
+
+
 COMMAND = [sys.executable, "-m", "pulsetally.simulators.simulate"]
 
 
