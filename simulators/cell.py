@@ -6,6 +6,7 @@ nucleation-limited switching.
 """
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 from statistics import NormalDist
 
@@ -120,6 +121,8 @@ class Cell:
         self.up: Array = np.zeros(description.regions)
         self.weights: Array = np.full(description.regions, 1 / description.regions)
         self._random = np.random.default_rng(seed)
+        self._negative_activations = -self.activations
+        self._attempts_per_second = 1 / description.attempt_seconds
         self._softest_volts = float(self.activations[0])
         self._used = False
         self._deal()
@@ -134,26 +137,27 @@ class Cell:
         """Polarization, C/m2; -P_r when fully down."""
         return self.description.remanent_polarization * (2 * self.up_fraction - 1)
 
-    def rates_and_slopes(self, driving_volts: Array) -> tuple[Array, Array]:
+    def rates_and_slopes(self, driving_volts: Sequence[float]) -> tuple[Array, Array]:
         """Evaluate the activation law at distances from the imprint voltage, V.
 
         At or below 0 nothing switches. Return rates 1/tau (1/s) and their derivatives
         (1/(s V)): a row for each distance, a column for each region.
         """
-        description = self.description
-        distances = np.maximum(driving_volts, _LEAST_DRIVING_VOLTS)[:, np.newaxis]
-        barriers = self.activations / distances
-        if description.alpha != 1:
-            barriers **= description.alpha
-        rates = np.exp(-barriers)
-        rates *= 1 / description.attempt_seconds
-        slopes = barriers * rates
-        slopes *= description.alpha / distances
+        alpha = self.description.alpha
+        inverses = np.array([[1 / max(volts, _LEAST_DRIVING_VOLTS)] for volts in driving_volts])
+        barriers = self._negative_activations * inverses
+        if alpha != 1:
+            barriers = -((-barriers) ** alpha)
+        rates = np.exp(barriers)
+        rates *= self._attempts_per_second
+        slopes = barriers
+        slopes *= rates
+        slopes *= inverses * -alpha
         return rates, slopes
 
     def rates(self, driving_volts: float) -> Array:
         """Return each region's switching rate, 1/s, this far (V) from the imprint voltage."""
-        rates: Array = self.rates_and_slopes(np.array((driving_volts,)))[0][0]
+        rates: Array = self.rates_and_slopes((driving_volts,))[0][0]
         return rates
 
     def softest_rate(self, driving_volts: float) -> float:
@@ -166,10 +170,9 @@ class Cell:
         """Return the part of each region that can still go up (side 1) or down (side -1)."""
         return 1 - self.up if side > 0 else self.up.copy()
 
-    def switch(self, side: int, exposures: Array) -> None:
-        """Let each region's remainder decay as exp(-exposure) towards a side."""
-        left = np.exp(-exposures)
-        self.up = 1 - (1 - self.up) * left if side > 0 else self.up * left
+    def switch(self, side: int, kept: Array) -> None:
+        """Keep this part of what each region can still switch to a side; switch the rest."""
+        self.up = 1 - (1 - self.up) * kept if side > 0 else self.up * kept
 
     def settle(self) -> bool:
         """Deal new domains when the cell has become fully down; tell whether that was so."""

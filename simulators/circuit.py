@@ -79,6 +79,7 @@ class Circuit:
         self.wiring = wiring
         self.farads = cell.farads + wiring.probe_farads
         self.relay_on = False
+        self._branch_siemens = 1 / wiring.branch_ohms
         self._shunt_siemens = 1 / cell.leak_ohms + 1 / wiring.probe_ohms
 
     @property
@@ -97,22 +98,24 @@ class Circuit:
         """Part of a constant EMF that a linear circuit's node settles to."""
         return 1 / (self.wiring.branch_ohms * self.node_siemens) if self.relay_on else 0.0
 
-    def node_current(self, emf_volts: float, node_volts: float) -> tuple[float, float]:
-        """Return the current into the node's capacitance and its slope against node_volts.
+    def node_current(self, emf_volts: float, node_volts: float) -> tuple[float, float, float]:
+        """Return the current into the node's capacitance and its two slopes.
 
-        In A and A/V; without the switching current, which belongs to the cell.
+        In A, A/V against node_volts and A/V against emf_volts; without the switching
+        current, which belongs to the cell.
         """
         amperes = -self._shunt_siemens * node_volts
         siemens = -self._shunt_siemens
+        emf_siemens = 0.0
         if self.relay_on:
-            branch, slope = self._branch_current(emf_volts - node_volts)
+            branch, emf_siemens = self._branch_current(emf_volts - node_volts)
             amperes += branch
-            siemens -= slope
+            siemens -= emf_siemens
         if self.wiring.clamp_volts is not None:
             clamp, slope = clamp_current(node_volts, self.wiring.clamp_volts)
             amperes -= clamp
             siemens -= slope
-        return amperes, siemens
+        return amperes, siemens, emf_siemens
 
     def terminal_volts(self, emf_volts: Array, node_volts: Array) -> Array:
         """Return the voltage at the generator's terminal for pairs of EMF and node, V."""
@@ -128,7 +131,7 @@ class Circuit:
     def _branch_current(self, across_volts: float) -> tuple[float, float]:
         wiring = self.wiring
         if wiring.diode_saturation_amperes is None:
-            return across_volts / wiring.branch_ohms, 1 / wiring.branch_ohms
+            return across_volts * self._branch_siemens, self._branch_siemens
         return diode_branch_current(
             across_volts,
             wiring.branch_ohms,

@@ -10,7 +10,7 @@ charge = C v + A P as the constraint.
 """
 
 import math
-from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -31,7 +31,6 @@ def _integrals_of_lagrange_polynomials() -> Array:
 
 
 MATRIX = _integrals_of_lagrange_polynomials()
-_ROWS: list[list[float]] = MATRIX.tolist()
 # Lagrange polynomials of the nodes, evaluated at the step's begin.
 _AT_BEGIN = np.linalg.inv(np.vander(np.array(NODES), 3, increasing=True))[0]
 _A0, _A1, _A2 = (float(weight) for weight in _AT_BEGIN)
@@ -39,18 +38,19 @@ _A0, _A1, _A2 = (float(weight) for weight in _AT_BEGIN)
 # eigenvalue of MATRIX, so that its error is filtered with a factor that is at hand.
 _EMBEDDED = 1 / (3 + 3 ** (2 / 3) - 3 ** (1 / 3))
 
-NEWTON_TOLERANCE_VOLTS = 1e-6
+# Newton's method doubles the right digits: below this correction the next one is noise.
+NEWTON_TOLERANCE_VOLTS = 5e-5
 _MOST_NEWTON = 10
 _LARGEST_CORRECTION_VOLTS = 0.5
 
 
-@dataclass(frozen=True, slots=True)
-class Begin:
-    """What a step starts from.
+class Point(NamedTuple):
+    """The state at one end of a step, with what the equations say about it.
 
     volts: of the node. side: 1 where the cell is driven up, -1 down. open_shares: each
     region's share of the cell that can still switch to that side. rates: of the regions,
-    1/s. amperes: into the node, without switching. slope: dv/dt, V/s.
+    1/s. amperes: into the node, without switching. slope: dv/dt, V/s. bend: its rate, V/s2.
+    moving: part of the cell that switches, 1/s.
     """
 
     volts: float
@@ -59,93 +59,122 @@ class Begin:
     rates: Array
     amperes: float
     slope: float
+    bend: float
+    moving: float
 
 
-@dataclass(frozen=True, slots=True)
-class Trial:
+class Trial(NamedTuple):
     """A solved step.
 
-    seconds: its length. volts: node at NODES. exposures: S of each region over the step.
-    open_shares, rates, amperes, slope: as in Begin, at the step's end.
-    moved: part of the cell that switched. error_volts: embedded error.
+    seconds: its length. volts: node at NODES. end: the state after it. kept: exp(-S) of
+    each region over the step. moved: part of the cell that switched. error_volts: the
+    embedded error.
     """
 
     seconds: float
     volts: Triple
-    exposures: Array
-    open_shares: Array
-    rates: Array
-    amperes: float
-    slope: float
+    end: Point
+    kept: Array
     moved: float
     error_volts: float
 
 
-def begin_step(
-    cell: Cell, circuit: Circuit, emf_volts: float, node_volts: float, side: int
-) -> Begin:
-    """Evaluate the equations where a step starts."""
+def point_at(
+    cell: Cell,
+    circuit: Circuit,
+    node_volts: float,
+    side: int,
+    *,
+    emf_volts: float,
+    emf_slope: float,
+) -> Point:
+    """Evaluate the equations at an instant; emf_slope is de/dt, V/s."""
     open_shares = cell.weights * cell.remaining(side)
-    rates = cell.rates(side * (node_volts - cell.description.imprint_volts))
-    amperes, _ = circuit.node_current(emf_volts, node_volts)
-    switching = cell.description.switchable_coulombs * float(open_shares @ rates)
-    return Begin(
-        node_volts, side, open_shares, rates, amperes, (amperes - side * switching) / circuit.farads
+    distance = side * (node_volts - cell.description.imprint_volts)
+    rates, slopes = cell.rates_and_slopes((distance,))
+    current = circuit.node_current(emf_volts, node_volts)
+    coulombs = cell.description.switchable_coulombs
+    return _point(
+        node_volts, side, open_shares, rates[0], slopes[0], current, emf_slope, coulombs, circuit
     )
+
+
+def _point(
+    volts: float,
+    side: int,
+    open_shares: Array,
+    rates: Array,
+    slopes: Array,
+    current: Triple,
+    emf_slope: float,
+    coulombs: float,
+    circuit: Circuit,
+) -> Point:
+    amperes, siemens, emf_siemens = current
+    flow = open_shares * rates
+    moving = float(flow.sum())
+    slope = (amperes - side * coulombs * moving) / circuit.farads
+    # The switching current grows with the voltage and dies with what has switched.
+    growth = slope * float(open_shares @ slopes) - side * float(flow @ rates)
+    bend = (emf_siemens * emf_slope + siemens * slope - coulombs * growth) / circuit.farads
+    return Point(volts, side, open_shares, rates, amperes, slope, bend, moving)
 
 
 def try_step(
     cell: Cell,
     circuit: Circuit,
-    begin: Begin,
-    emf_volts: Triple,
+    begin: Point,
     seconds: float,
     guess_volts: Triple,
+    *,
+    emf_volts: float,
+    emf_slope: float,
 ) -> Trial | None:
     """Solve one step by Newton's method; None when it does not converge.
 
-    emf_volts: at NODES. guess_volts: first guess of the node there.
+    emf_volts, emf_slope: EMF at the step's begin, V, and its rise, V/s. guess_volts:
+    first guess of the node at NODES.
     """
     side, coulombs, farads = begin.side, cell.description.switchable_coulombs, circuit.farads
-    imprint_volts = cell.description.imprint_volts
+    origin_volts = side * cell.description.imprint_volts
     open_total = float(begin.open_shares.sum())
-    scaled = seconds * MATRIX
-    rows = scaled.tolist()
+    signed = side * coulombs
+    ones = np.ones(len(begin.open_shares))
+    # Negative, so that exp() takes the product as it is.
+    scaled = -seconds * MATRIX
+    (a11, a12, a13), (a21, a22, a23), (a31, a32, a33) = scaled.tolist()
     v0 = begin.volts
     v1, v2, v3 = guess_volts
-    e1, e2, e3 = emf_volts
+    rise = emf_slope * seconds
+    e1, e2, e3 = emf_volts + NODES[0] * rise, emf_volts + NODES[1] * rise, emf_volts + rise
     for _ in range(_MOST_NEWTON):
-        i1, d1 = circuit.node_current(e1, v1)
-        i2, d2 = circuit.node_current(e2, v2)
-        i3, d3 = circuit.node_current(e3, v3)
+        i1, d1, _g = circuit.node_current(e1, v1)
+        i2, d2, _g = circuit.node_current(e2, v2)
+        i3, d3, g3 = circuit.node_current(e3, v3)
         rates, slopes = cell.rates_and_slopes(
-            np.array((v1 - imprint_volts, v2 - imprint_volts, v3 - imprint_volts)) * side
+            (side * v1 - origin_volts, side * v2 - origin_volts, side * v3 - origin_volts)
         )
-        exposures = scaled @ rates
+        exponents = scaled @ rates
         # Between the nodes a steep rise can make an exposure negative for a moment.
-        np.maximum(exposures, 0.0, out=exposures)
-        shares = np.exp(-exposures)
+        np.minimum(exponents, 0.0, out=exponents)
+        shares = np.exp(exponents)
         shares *= begin.open_shares
-        left = shares.sum(axis=1).tolist()
-        steep = (shares @ slopes.T).tolist()
-        residual = []
-        jacobian = []
-        for k, (volts, row, steep_row) in enumerate(zip((v1, v2, v3), rows, steep, strict=True)):
-            a1, a2, a3 = row
-            residual.append(
-                farads * (volts - v0)
-                + side * coulombs * (open_total - left[k])
-                - (a1 * i1 + a2 * i2 + a3 * i3)
-            )
-            s1, s2, s3 = steep_row
-            line = [
-                a1 * (coulombs * s1 - d1),
-                a2 * (coulombs * s2 - d2),
-                a3 * (coulombs * s3 - d3),
-            ]
-            line[k] += farads
-            jacobian.append(line)
-        x1, x2, x3 = _solve3(jacobian, residual)
+        left1, left2, left3 = (shares @ ones).tolist()
+        (s11, s12, s13), (s21, s22, s23), (s31, s32, s33) = (shares @ slopes.T).tolist()
+        x1, x2, x3 = _solve3(
+            farads - a11 * (coulombs * s11 - d1),
+            -a12 * (coulombs * s12 - d2),
+            -a13 * (coulombs * s13 - d3),
+            -a21 * (coulombs * s21 - d1),
+            farads - a22 * (coulombs * s22 - d2),
+            -a23 * (coulombs * s23 - d3),
+            -a31 * (coulombs * s31 - d1),
+            -a32 * (coulombs * s32 - d2),
+            farads - a33 * (coulombs * s33 - d3),
+            farads * (v1 - v0) + signed * (open_total - left1) + (a11 * i1 + a12 * i2 + a13 * i3),
+            farads * (v2 - v0) + signed * (open_total - left2) + (a21 * i1 + a22 * i2 + a23 * i3),
+            farads * (v3 - v0) + signed * (open_total - left3) + (a31 * i1 + a32 * i2 + a33 * i3),
+        )
         largest = max(abs(x1), abs(x2), abs(x3))
         if not largest < math.inf:
             return None
@@ -157,34 +186,53 @@ def try_step(
             break
     else:
         return None
-    last = shares[2]
+    # The last correction goes into the exposures too, or charge would be lost.
+    changes = np.array((-side * a31 * x1, -side * a32 * x2, -side * a33 * x3))
+    exponents = exponents[2] + changes @ slopes
+    np.minimum(exponents, 0.0, out=exponents)
+    kept = np.exp(exponents)
+    open_shares = begin.open_shares * kept
+    end_rates = rates[2] - side * x3 * slopes[2]
+    end = _point(
+        v3,
+        side,
+        open_shares,
+        end_rates,
+        slopes[2],
+        (i3 - d3 * x3, d3, g3),
+        emf_slope,
+        coulombs,
+        circuit,
+    )
     # Both quadratures differ by what the nodes extrapolate to at the begin, and miss.
     missed_rates = begin.rates - _AT_BEGIN @ rates
     missed_amperes = begin.amperes - (_A0 * i1 + _A1 * i2 + _A2 * i3)
     weight = _EMBEDDED * seconds
-    missed = weight * (missed_amperes - side * coulombs * float(last @ missed_rates))
-    stiffness = farads + weight * (coulombs * steep[2][2] - d3)
-    return Trial(
-        seconds,
-        (v1, v2, v3),
-        exposures[2],
-        last,
-        rates[2],
-        i3,
-        (i3 - side * coulombs * float(last @ rates[2])) / farads,
-        open_total - left[2],
-        abs(missed) / stiffness,
-    )
+    missed = weight * (missed_amperes - signed * float(open_shares @ missed_rates))
+    stiffness = farads + weight * (coulombs * float(open_shares @ slopes[2]) - d3)
+    moved = open_total - float(open_shares.sum())
+    return Trial(seconds, (v1, v2, v3), end, kept, moved, abs(missed) / stiffness)
 
 
-def _solve3(rows: list[list[float]], right: list[float]) -> Triple:
-    """Solve three linear equations by elimination; the diagonal leads in all of ours."""
-    (a, b, c), (d, e, f), (g, h, i) = rows
+def _solve3(
+    a: float,
+    b: float,
+    c: float,
+    d: float,
+    e: float,
+    f: float,
+    g: float,
+    h: float,
+    i: float,
+    x: float,
+    y: float,
+    z: float,
+) -> Triple:
+    """Solve three linear equations: rows (a, b, c | x), (d, e, f | y), (g, h, i | z)."""
     minor1, minor2, minor3 = e * i - f * h, f * g - d * i, d * h - e * g
     determinant = a * minor1 + b * minor2 + c * minor3
     if determinant == 0:
         return math.inf, math.inf, math.inf
-    x, y, z = right
     return (
         (x * minor1 + y * (c * h - b * i) + z * (b * f - c * e)) / determinant,
         (x * minor2 + y * (a * i - c * g) + z * (c * d - a * f)) / determinant,

@@ -7,8 +7,15 @@ from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import Cell
 from pulsetally.simulators.circuit import Circuit
-from pulsetally.simulators.collocation import NODES, Begin, Trial, Triple, begin_step, try_step
-from pulsetally.simulators.trajectory import decay_times, dense_error, sample_step
+from pulsetally.simulators.collocation import NODES, Point, Trial, Triple, point_at, try_step
+from pulsetally.simulators.trajectory import (
+    Quintic,
+    decay_times,
+    extrapolate,
+    missed_volts,
+    quintic_of,
+    sample_step,
+)
 
 Array = NDArray[np.float64]
 
@@ -18,7 +25,8 @@ STEP_TOLERANCE_VOLTS = 2e-3
 # Largest change of the dense output when one of its conditions is left out, V.
 DENSE_TOLERANCE_VOLTS = 1e-4
 _LARGEST_GROWTH, _LARGEST_SHRINK, _SAFETY = 12.0, 0.15, 0.85
-_FIRST_SHARE = 0.05
+FIRST_MOVE_VOLTS = 0.3
+_LEAST_SHARE = 1e-15
 # A stretch over which less than this part of the cell could switch is left unswitched.
 QUIET_FRACTION = 1e-12
 
@@ -39,6 +47,14 @@ class Ramp:
         """Return the EMF this long after the begin, V."""
         return self.begin_volts + self.volts_per_second * seconds
 
+    def after(self, seconds: float) -> "Ramp":
+        """Return what is left of the ramp after this long."""
+        return Ramp(
+            begin_volts=self.at(seconds),
+            volts_per_second=self.volts_per_second,
+            seconds=self.seconds - seconds,
+        )
+
 
 class Solver:
     """Integrate one cell in one circuit.
@@ -56,63 +72,54 @@ class Solver:
     def run(self, ramp: Ramp, *, sampled: bool) -> tuple[Array, Array]:
         """Integrate along a ramp.
 
-        Return times after its begin (s, strictly rising, from 0 to its length) and node
-        voltages there; straight lines between them stay within 0.1 mV. Not sampled: only
-        the two ends. Raises StepTooSmallError when the equations can't be satisfied.
+        Return times after its begin (s, from 0 to its length) and node voltages there;
+        straight lines between them stay within 0.1 mV. Not sampled: fewer of them.
+        Raises StepTooSmallError when the equations can't be satisfied.
         """
         times, volts = [np.zeros(1)], [np.array([self.node_volts])]
         done_seconds = 0.0
-        begin: Begin | None = None
-        previous: Trial | None = None
-        self._next_seconds = _FIRST_SHARE * ramp.seconds
+        begin: Point | None = None
+        previous: tuple[Quintic, Trial] | None = None
         while done_seconds < ramp.seconds:
-            rest_seconds = ramp.seconds - done_seconds
-            emf_volts = ramp.at(done_seconds)
-            quiet = self.circuit.is_linear and self._is_quiet(
-                rest_seconds, emf_volts, ramp.at(ramp.seconds)
-            )
-            if quiet:
-                rest = Ramp(
-                    begin_volts=emf_volts,
-                    volts_per_second=ramp.volts_per_second,
-                    seconds=rest_seconds,
-                )
+            rest = ramp.after(done_seconds)
+            if self.circuit.is_linear and self._is_quiet(rest, begin):
                 more_times, more_volts = self._follow(rest)
-                more_times += done_seconds
-                more_times[-1] = ramp.seconds
-                done_seconds = ramp.seconds
+                taken_seconds = rest.seconds
             else:
-                begin, trial = self._step(ramp, done_seconds, begin, previous)
-                last = trial.seconds >= rest_seconds
+                if begin is None:
+                    begin = self._begin(rest)
+                    self._next_seconds = self._first_seconds(rest, begin)
+                trial, quintic = self._step(rest, begin, previous)
+                taken_seconds = trial.seconds
                 if sampled:
-                    more_times, more_volts = sample_step(
-                        trial.seconds, begin.volts, begin.slope, trial.volts, trial.slope
-                    )
-                    more_times += done_seconds
+                    more_times, more_volts = sample_step(quintic, trial.seconds)
                 else:
-                    more_times = np.array([done_seconds + trial.seconds])
-                    more_volts = np.array([trial.volts[2]])
-                done_seconds = ramp.seconds if last else done_seconds + trial.seconds
-                more_times[-1] = done_seconds
-                previous = trial
-                begin = self._accept(begin, trial)
+                    more_times, more_volts = np.array([taken_seconds]), np.array([trial.volts[2]])
+                previous = (quintic, trial)
+                begin = self._accept(rest, trial)
+            more_times += done_seconds
+            last = taken_seconds >= rest.seconds
+            done_seconds = ramp.seconds if last else done_seconds + taken_seconds
+            more_times[-1] = done_seconds
             times.append(more_times)
             volts.append(more_volts)
         return np.concatenate(times), np.concatenate(volts)
 
-    def _is_quiet(self, seconds: float, emf_volts: float, end_emf_volts: float) -> bool:
+    def _is_quiet(self, ramp: Ramp, begin: Point | None) -> bool:
         """Tell whether the cell switches nothing, wherever a linear node can get to."""
+        if begin is not None and begin.moving * ramp.seconds > QUIET_FRACTION:
+            return False
         gain = self.circuit.gain
-        reach = (self.node_volts, gain * emf_volts, gain * end_emf_volts)
+        reach = (self.node_volts, gain * ramp.begin_volts, gain * ramp.at(ramp.seconds))
         cell = self.cell
         imprint_volts = cell.description.imprint_volts
-        distances = np.array((max(reach) - imprint_volts, imprint_volts - min(reach)))
+        up_volts, down_volts = max(reach) - imprint_volts, imprint_volts - min(reach)
         # Cheap, and enough in most idle times: not even the softest region moves.
-        if cell.softest_rate(float(distances.max())) * seconds < QUIET_FRACTION:
+        if cell.softest_rate(max(up_volts, down_volts)) * ramp.seconds < QUIET_FRACTION:
             return True
-        rates, _ = cell.rates_and_slopes(distances)
+        rates, _ = cell.rates_and_slopes((up_volts, down_volts))
         moving = rates[0] * (1 - cell.up) + rates[1] * cell.up
-        return bool(moving @ cell.weights * seconds < QUIET_FRACTION)
+        return bool(moving @ cell.weights * ramp.seconds < QUIET_FRACTION)
 
     def _follow(self, ramp: Ramp) -> tuple[Array, Array]:
         """Follow a ramp in closed form: one resistance and one capacitance."""
@@ -130,23 +137,45 @@ class Solver:
         self.node_volts = float(volts[-1])
         return times, volts
 
+    def _begin(self, ramp: Ramp) -> Point:
+        distance = self.node_volts - self.cell.description.imprint_volts
+        if distance != 0:
+            self._side = 1 if distance > 0 else -1
+        return self._point(ramp)
+
+    def _point(self, ramp: Ramp) -> Point:
+        return point_at(
+            self.cell,
+            self.circuit,
+            self.node_volts,
+            self._side,
+            emf_volts=ramp.begin_volts,
+            emf_slope=ramp.volts_per_second,
+        )
+
+    def _first_seconds(self, ramp: Ramp, begin: Point) -> float:
+        """Return a step over which the node moves by about FIRST_MOVE_VOLTS."""
+        amperes, _, _ = self.circuit.node_current(ramp.at(ramp.seconds), self.node_volts)
+        slope = max(abs(begin.slope), abs(amperes) / self.circuit.farads)
+        return min(ramp.seconds, FIRST_MOVE_VOLTS / slope) if slope > 0 else ramp.seconds
+
     def _step(
-        self, ramp: Ramp, done_seconds: float, begin: Begin | None, previous: Trial | None
-    ) -> tuple[Begin, Trial]:
-        emf_volts = ramp.at(done_seconds)
-        rest_seconds = ramp.seconds - done_seconds
-        if begin is None:
-            begin = self._begin(emf_volts)
+        self, ramp: Ramp, begin: Point, previous: tuple[Quintic, Trial] | None
+    ) -> tuple[Trial, Quintic]:
         seconds = self._next_seconds
         flipped = False
-        while seconds > 1e-15 * ramp.seconds:
+        while seconds > _LEAST_SHARE * ramp.seconds:
             # A sliver left over would cost a whole step.
-            if seconds > 0.9 * rest_seconds:
-                seconds = rest_seconds
-            ends = [ramp.at(done_seconds + node * seconds) for node in NODES]
-            guess = _guess(begin, previous, seconds)
+            if seconds > 0.9 * ramp.seconds:
+                seconds = ramp.seconds
             trial = try_step(
-                self.cell, self.circuit, begin, (ends[0], ends[1], ends[2]), seconds, guess
+                self.cell,
+                self.circuit,
+                begin,
+                seconds,
+                _guess(begin, previous, seconds),
+                emf_volts=ramp.begin_volts,
+                emf_slope=ramp.volts_per_second,
             )
             if trial is None:
                 seconds *= 0.25
@@ -156,13 +185,12 @@ class Solver:
                     seconds *= self._crossing(begin, trial)
                 else:
                     self._side, flipped = -begin.side, True
-                    begin = begin_step(
-                        self.cell, self.circuit, emf_volts, self.node_volts, self._side
-                    )
+                    begin = self._point(ramp)
                 continue
-            dense_volts = dense_error(seconds, begin.volts, begin.slope, trial.volts, trial.slope)
+            quintic = quintic_of(begin, trial)
             error = max(
-                trial.error_volts / STEP_TOLERANCE_VOLTS, dense_volts / DENSE_TOLERANCE_VOLTS
+                trial.error_volts / STEP_TOLERANCE_VOLTS,
+                missed_volts(quintic, trial) / DENSE_TOLERANCE_VOLTS,
             )
             factor = _SAFETY * max(error, 1e-9) ** -0.25
             factor = min(max(factor, _LARGEST_SHRINK), _LARGEST_GROWTH)
@@ -170,18 +198,12 @@ class Solver:
                 seconds *= factor
                 continue
             self._next_seconds = factor * seconds
-            return begin, trial
+            return trial, quintic
         raise StepTooSmallError(
             f"no step from {self.node_volts} V at the node satisfies the equations"
         )
 
-    def _begin(self, emf_volts: float) -> Begin:
-        distance = self.node_volts - self.cell.description.imprint_volts
-        if distance != 0:
-            self._side = 1 if distance > 0 else -1
-        return begin_step(self.cell, self.circuit, emf_volts, self.node_volts, self._side)
-
-    def _is_one_sided(self, begin: Begin, trial: Trial) -> bool:
+    def _is_one_sided(self, begin: Point, trial: Trial) -> bool:
         """Tell whether the step neglects no switching to the other side."""
         imprint_volts = self.cell.description.imprint_volts
         other = max(begin.side * (imprint_volts - volts) for volts in trial.volts)
@@ -190,7 +212,7 @@ class Solver:
         shares = self.cell.weights * self.cell.remaining(-begin.side)
         return bool(shares @ self.cell.rates(other) * trial.seconds < QUIET_FRACTION)
 
-    def _crossing(self, begin: Begin, trial: Trial) -> float:
+    def _crossing(self, begin: Point, trial: Trial) -> float:
         """Return the part of a step after which the node comes to the imprint voltage."""
         imprint_volts = self.cell.description.imprint_volts
         before, place = begin.volts - imprint_volts, 0.0
@@ -202,28 +224,23 @@ class Solver:
             before, place = after, node
         return 0.5
 
-    def _accept(self, begin: Begin, trial: Trial) -> Begin:
-        cell = self.cell
-        cell.switch(begin.side, trial.exposures)
+    def _accept(self, ramp: Ramp, trial: Trial) -> Point:
+        self.cell.switch(trial.end.side, trial.kept)
         self.node_volts = trial.volts[2]
-        if cell.settle():
+        if self.cell.settle():
             # The new weights change how fast the node's charge goes into the cell.
-            open_shares = cell.weights * cell.remaining(begin.side)
-            switching = cell.description.switchable_coulombs * float(open_shares @ trial.rates)
-            slope = (trial.amperes - begin.side * switching) / self.circuit.farads
-            return Begin(trial.volts[2], begin.side, open_shares, trial.rates, trial.amperes, slope)
-        return Begin(
-            trial.volts[2],
-            begin.side,
-            trial.open_shares,
-            trial.rates,
-            trial.amperes,
-            trial.slope,
-        )
+            return self._point(ramp.after(trial.seconds))
+        return trial.end
 
 
-def _guess(begin: Begin, previous: Trial | None, seconds: float) -> Triple:
-    del previous
-    limit = 0.3
-    points = [begin.volts + min(max(begin.slope * node * seconds, -limit), limit) for node in NODES]
-    return points[0], points[1], points[2]
+def _guess(begin: Point, previous: tuple[Quintic, Trial] | None, seconds: float) -> Triple:
+    """Guess the node at NODES of the next step, V."""
+    if previous is not None:
+        quintic, trial = previous
+        if seconds < 2 * trial.seconds and begin.side == trial.end.side:
+            return extrapolate(quintic, seconds / trial.seconds)
+    limit = FIRST_MOVE_VOLTS
+    first, second, third = (
+        begin.volts + min(max(begin.slope * node * seconds, -limit), limit) for node in NODES
+    )
+    return first, second, third

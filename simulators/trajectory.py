@@ -5,69 +5,74 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from pulsetally.simulators.collocation import NODES, Triple
+from pulsetally.simulators.collocation import NODES, Point, Trial, Triple
 
 Array = NDArray[np.float64]
 
 # A straight line between two samples leaves the curve by at most this, V.
 CHORD_VOLTS = 2e-5
 _MOST_SAMPLES = 4000
+_CURVATURE_PLACES = (0.0, 0.2, 0.4, 0.6, 0.8, 1.0)
 
 
-def _hermite_inverse() -> Array:
-    """Invert the conditions on a quintic: values at 0 and NODES, slopes at 0 and 1."""
-    rows = [[float(place) ** k for k in range(6)] for place in (0.0, *NODES)]
-    rows += [[0.0, 1.0, 0.0, 0.0, 0.0, 0.0], [float(k) for k in range(6)]]
-    return np.linalg.inv(np.array(rows))
+# Coefficients of 1, x, ... x^5, in V, with x from 0 to 1 over a step.
+Quintic = tuple[float, float, float, float, float, float]
 
 
-_INVERSE = _hermite_inverse()
-# Slope at the begin of the quartic that takes every condition but that slope.
-_QUARTIC_INVERSE = np.linalg.inv(
-    np.array(
-        [[float(place) ** k for k in range(5)] for place in (0.0, *NODES)]
-        + [[float(k) for k in range(5)]]
+def quintic_of(begin: Point, trial: Trial) -> Quintic:
+    """Return the quintic with a step's values, slopes and bends at both of its ends.
+
+    The ends are of order 5, the inner nodes only of order 3, so this is the better curve.
+    """
+    seconds, end = trial.seconds, trial.end
+    c0, c1, c2 = begin.volts, seconds * begin.slope, seconds**2 * begin.bend / 2
+    values = end.volts - c0 - c1 - c2
+    slopes = seconds * end.slope - c1 - 2 * c2
+    bends = (seconds**2 * end.bend - 2 * c2) / 2
+    return (
+        c0,
+        c1,
+        c2,
+        10 * values - 4 * slopes + bends,
+        -15 * values + 7 * slopes - 2 * bends,
+        6 * values - 3 * slopes + bends,
     )
-)[1].tolist()
-_PLACES = np.linspace(0, 1, 9)
-_CURVATURE = np.array(
-    [[k * (k - 1) * place ** (k - 2) if k > 1 else 0.0 for k in range(6)] for place in _PLACES]
-)
-# The quintic and the quartic differ by a multiple of this polynomial.
-_BUMP = max(
-    abs(x * (x - NODES[0]) * (x - NODES[1]) * (x - 1) ** 2) for x in np.linspace(0, 1, 401)
-) / (NODES[0] * NODES[1])
 
 
-def dense_error(
-    seconds: float, begin_volts: float, begin_slope: float, stage_volts: Triple, end_slope: float
-) -> float:
-    """Return how far the step's polynomial changes when one condition is left out, V."""
-    q = _QUARTIC_INVERSE
-    quartic_slope = (
-        q[0] * begin_volts
-        + q[1] * stage_volts[0]
-        + q[2] * stage_volts[1]
-        + q[3] * stage_volts[2]
-        + q[4] * end_slope * seconds
+def _value(quintic: Quintic, place: float) -> float:
+    c0, c1, c2, c3, c4, c5 = quintic
+    return c0 + place * (c1 + place * (c2 + place * (c3 + place * (c4 + place * c5))))
+
+
+def missed_volts(quintic: Quintic, trial: Trial) -> float:
+    """Return how far the step's quintic passes by the inner nodes, V."""
+    return max(
+        abs(_value(quintic, NODES[0]) - trial.volts[0]),
+        abs(_value(quintic, NODES[1]) - trial.volts[1]),
     )
-    return float(_BUMP * abs(seconds * begin_slope - quartic_slope))
 
 
-def sample_step(
-    seconds: float, begin_volts: float, begin_slope: float, stage_volts: Triple, end_slope: float
-) -> tuple[Array, Array]:
+def extrapolate(quintic: Quintic, ratio: float) -> Triple:
+    """Continue a step's quintic to NODES of a next step that is ratio times as long, V."""
+    first, second, third = (_value(quintic, 1 + ratio * node) for node in NODES)
+    return first, second, third
+
+
+def sample_step(quintic: Quintic, seconds: float) -> tuple[Array, Array]:
     """Return times after the step's begin (s, its end included) and node voltages there."""
-    conditions = np.array([begin_volts, *stage_volts, begin_slope * seconds, end_slope * seconds])
-    coefficients = _INVERSE @ conditions
-    curvature = float(np.abs(_CURVATURE @ coefficients).max())
+    _, _, c2, c3, c4, c5 = quintic
+    curvature = max(
+        abs(2 * c2 + place * (6 * c3 + place * (12 * c4 + place * 20 * c5)))
+        for place in _CURVATURE_PLACES
+    )
     count = min(math.ceil(math.sqrt(curvature / (8 * CHORD_VOLTS))) + 1, _MOST_SAMPLES)
-    places = np.arange(1, count + 1) / count
-    volts = np.full(count, coefficients[5])
-    for coefficient in coefficients[4::-1].tolist():
-        volts *= places
+    places: Array = np.arange(1, count + 1) * (1 / count)
+    places[-1] = 1.0
+    volts = c5 * places
+    for coefficient in quintic[4:0:-1]:
         volts += coefficient
-    volts[-1] = stage_volts[2]
+        volts *= places
+    volts += quintic[0]
     return places * seconds, volts
 
 
