@@ -81,12 +81,13 @@ class PulseTrain:
         half_ramps = (self.leading_seconds + self.trailing_seconds) / RAMP_SHARE / 2
         if self.width_seconds < half_ramps - GRACE_SECONDS:
             raise ValueError(
-                f"width_seconds is {self.width_seconds} s; half of both ramps takes {half_ramps} s"
+                f"width_seconds is {self.width_seconds} s; "
+                f"half of both ramps takes {half_ramps:.6g} s"
             )
         if self.width_seconds + half_ramps > self.period_seconds + GRACE_SECONDS:
             raise ValueError(
                 f"period_seconds is {self.period_seconds} s; width and ramps take "
-                f"{self.width_seconds + half_ramps} s"
+                f"{self.width_seconds + half_ramps:.6g} s"
             )
 
     @property

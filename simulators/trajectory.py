@@ -12,8 +12,12 @@ Array = NDArray[np.float64]
 # A straight line between two samples leaves the curve by at most this, V.
 CHORD_VOLTS = 2e-5
 _MOST_SAMPLES = 4000
+_SURE_VOLTS = 1e-7
 _CURVATURE_PLACES = (0.0, 0.2, 0.4, 0.6, 0.8, 1.0)
 
+
+# Coefficients of x, x^2, x^3 of the cubic through the begin and NODES.
+_CUBIC = np.linalg.inv(np.array([[node, node**2, node**3] for node in NODES]))
 
 # Coefficients of 1, x, ... x^5, in V, with x from 0 to 1 over a step.
 Quintic = tuple[float, float, float, float, float, float]
@@ -44,12 +48,19 @@ def _value(quintic: Quintic, place: float) -> float:
     return c0 + place * (c1 + place * (c2 + place * (c3 + place * (c4 + place * c5))))
 
 
-def missed_volts(quintic: Quintic, trial: Trial) -> float:
-    """Return how far the step's quintic passes by the inner nodes, V."""
-    return max(
+def curve_of(begin: Point, trial: Trial) -> tuple[Quintic, float]:
+    """Return the curve to draw for a step, and how far it may be off, V."""
+    quintic = quintic_of(begin, trial)
+    off_volts = max(
         abs(_value(quintic, NODES[0]) - trial.volts[0]),
         abs(_value(quintic, NODES[1]) - trial.volts[1]),
     )
+    # Over a step much longer than the node's own time, rounding alone spoils slopes and
+    # bends; the nodes themselves are then as good as the embedded error says.
+    if off_volts > CHORD_VOLTS and trial.error_volts < _SURE_VOLTS:
+        c1, c2, c3 = (_CUBIC @ np.array([volts - begin.volts for volts in trial.volts])).tolist()
+        return (begin.volts, c1, c2, c3, 0.0, 0.0), trial.error_volts
+    return quintic, off_volts
 
 
 def extrapolate(quintic: Quintic, ratio: float) -> Triple:
@@ -66,7 +77,7 @@ def sample_step(quintic: Quintic, seconds: float) -> tuple[Array, Array]:
         for place in _CURVATURE_PLACES
     )
     count = min(math.ceil(math.sqrt(curvature / (8 * CHORD_VOLTS))) + 1, _MOST_SAMPLES)
-    places: Array = np.arange(1, count + 1) * (1 / count)
+    places: Array = np.arange(1, count + 1, dtype=np.float64) * (1 / count)
     places[-1] = 1.0
     volts = c5 * places
     for coefficient in quintic[4:0:-1]:
