@@ -5,7 +5,6 @@ Heavy libraries are imported inside the commands that need them, so that help is
 
 import json
 import os
-import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -46,6 +45,11 @@ LogbookOption = Annotated[
         help="The logbook; else PULSETALLY_LOGBOOK, else logbook.db here.",
     ),
 ]
+SeedOption = Annotated[int, typer.Option(min=0, help="Seed of everything random.")]
+DomainsOption = Annotated[
+    int | None,
+    typer.Option(min=0, help="Domains of the cell: fewer scatter more; 0 for no scatter."),
+]
 JsonOption = Annotated[bool, typer.Option("--json", help="Print one JSON object, for programs.")]
 
 
@@ -84,14 +88,18 @@ def rehearse(
     recipe: RecipeArgument,
     overrides: SetOption = None,
     logbook: LogbookOption = None,
-    seed: Annotated[int, typer.Option(help="Seed of the simulated bench.")] = 1,
+    seed: SeedOption = 1,
+    domains: DomainsOption = None,
 ) -> None:
     """Run a recipe on the simulated bench."""
     from pulsetally.sequencer.rehearsal import simulated_bench
 
     with _told():
         plan, table = _planned(recipe, None, overrides)
-        with simulated_bench(table, ["--seed", str(seed)]) as bench:
+        options = ["--seed", str(seed)]
+        if domains is not None:
+            options += ["--domains", str(domains)]
+        with simulated_bench(table, options) as bench:
             status = _carry_out(plan, bench, logbook, mode="rehearsal")
     raise typer.Exit(status)
 
@@ -152,7 +160,8 @@ def show(
 @app.command(epilog="Example: pulsetally simulate --write-bench bench.yaml")
 def simulate(
     as_json: JsonOption = False,
-    seed: Annotated[int, typer.Option(help="Seed of everything random.")] = 1,
+    seed: SeedOption = 1,
+    domains: DomainsOption = None,
     generator_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
     oscilloscope_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
     control_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
@@ -162,7 +171,14 @@ def simulate(
 ) -> None:
     """Start the simulated instruments and keep them until Ctrl-C."""
     from pulsetally.sequencer.rehearsal import addressed_bench_text
-    from pulsetally.simulators.simulate import Addresses, SimulationSettings, announcement, serve
+    from pulsetally.simulators.cell import DEFAULT_DOMAINS
+    from pulsetally.simulators.simulate import (
+        Addresses,
+        SimulationSettings,
+        cell_with,
+        serve,
+        tell,
+    )
 
     def announce(addresses: Addresses) -> None:
         if write_bench is not None:
@@ -170,10 +186,10 @@ def simulate(
                 addresses.generator, addresses.oscilloscope, addresses.control
             )
             write_bench.write_text(text, encoding="utf-8")
-        typer.echo(announcement(addresses, as_json=as_json))
-        sys.stdout.flush()
+        tell(addresses, as_json=as_json)
 
     settings = SimulationSettings(
+        cell=cell_with(DEFAULT_DOMAINS if domains is None else domains),
         seed=seed,
         generator_port=generator_port,
         oscilloscope_port=oscilloscope_port,

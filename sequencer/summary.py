@@ -88,12 +88,11 @@ def show_result(console: Console, result: RunResult, *, rounds: bool = True) -> 
     say(console, f"Run {summary.run}: {summary.title} ({summary.mode}, {summary.state})", "bold")
     if summary.reason and summary.state != "finished":
         say(console, summary.reason)
-    for role, identity in result.identities.items():
-        say(console, f"{role}: {identity}")
-    say(
-        console,
-        f"{summary.rounds} of {summary.planned_rounds} rounds, {summary.shots} shots kept",
-    )
+    if rounds:
+        for role, identity in result.identities.items():
+            say(console, f"{role}: {identity}")
+    kept = f"{summary.rounds} of {summary.planned_rounds} rounds, {summary.shots} shots kept"
+    say(console, kept)
     if rounds and result.rounds:
         console.print(_round_table(result))
         if len(result.rounds) > _MOST_ROWS:

@@ -11,7 +11,7 @@ from collections.abc import Callable, Sequence
 from contextlib import suppress
 from dataclasses import asdict, dataclass, field, replace
 
-from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
 from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.clock import VirtualClock
 from pulsetally.simulators.control import BenchControl
@@ -162,6 +162,11 @@ def tell(addresses: Addresses, *, as_json: bool) -> None:
     print(f"The control port, for rehearsals only, is {addresses.control}.", flush=True)
 
 
+def cell_with(domains: int) -> CellDescription:
+    """Return the default cell with so many domains; 0 for one that never scatters."""
+    return replace(CellDescription(), domains=domains or None)
+
+
 def main(arguments: Sequence[str] | None = None) -> int:
     """Serve the bench from the command line; return the exit status."""
     parser = argparse.ArgumentParser(
@@ -170,7 +175,12 @@ def main(arguments: Sequence[str] | None = None) -> int:
     )
     parser.add_argument("--json", action="store_true", help="print the addresses as JSON")
     parser.add_argument("--seed", type=int, default=1, help="seed of everything random")
-    parser.add_argument("--domains", type=int, help="make full counts scatter: number of domains")
+    parser.add_argument(
+        "--domains",
+        type=int,
+        default=DEFAULT_DOMAINS,
+        help="number of domains, whose fewness makes full counts scatter; 0: no scatter",
+    )
     for name in ("generator", "oscilloscope", "control"):
         parser.add_argument(f"--{name}-port", type=int, default=0, help="0: any free port")
     parser.add_argument(
@@ -179,7 +189,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     given = parser.parse_args(arguments)
 
     try:
-        cell = replace(CellDescription(), domains=given.domains)
+        cell = cell_with(given.domains)
         settings = SimulationSettings(
             cell=cell,
             seed=given.seed,

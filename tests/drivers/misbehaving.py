@@ -3,7 +3,7 @@
 import socket
 import threading
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 
 Answer = Callable[[socket.socket, bytes], None]
 
@@ -12,6 +12,7 @@ Answer = Callable[[socket.socket, bytes], None]
 def server(answer: Answer) -> Iterator[str]:
     """Serve connections one after another; answer is called with each line that comes."""
     listener = socket.create_server(("127.0.0.1", 0))
+    open_now: list[socket.socket] = []
     ended = threading.Event()
 
     def serve() -> None:
@@ -20,8 +21,10 @@ def server(answer: Answer) -> Iterator[str]:
                 connection, _ = listener.accept()
             except OSError:
                 return
+            open_now.append(connection)
             with connection:
-                _converse(connection, answer)
+                if not ended.is_set():
+                    _converse(connection, answer)
 
     thread = threading.Thread(target=serve)
     thread.start()
@@ -29,7 +32,10 @@ def server(answer: Answer) -> Iterator[str]:
         yield f"TCPIP::127.0.0.1::{listener.getsockname()[1]}::SOCKET"
     finally:
         ended.set()
-        listener.shutdown(socket.SHUT_RDWR)
+        # A client that is still there must not keep the server waiting for its next line.
+        for each in (listener, *open_now):
+            with suppress(OSError):
+                each.shutdown(socket.SHUT_RDWR)
         listener.close()
         thread.join()
 

@@ -1,0 +1,301 @@
+"""The engine on a simulated bench, over real sockets."""
+
+import math
+from collections.abc import Callable, Generator, Iterator
+from pathlib import Path
+from typing import TypeVar
+
+import numpy as np
+import pytest
+
+from pulsetally.drivers.errors import LimitError
+from pulsetally.drivers.function_generator import FunctionGenerator, PulseSetting
+from pulsetally.drivers.link import VisaLink
+from pulsetally.sequencer import engine
+from pulsetally.sequencer.analysis.pulses import cell_charge
+from pulsetally.sequencer.bench import Bench
+from pulsetally.sequencer.errors import PlanError
+from pulsetally.sequencer.events import (
+    Event,
+    PulseArmed,
+    ReadFinished,
+    Role,
+    RoundFinished,
+    RoundSpoiled,
+    RunEnded,
+    RunState,
+    ShotTaken,
+)
+from pulsetally.sequencer.logbook import Logbook
+from pulsetally.sequencer.plan import make_plan
+from pulsetally.sequencer.recipe import load_recipe, parse_recipe
+from pulsetally.sequencer.rehearsal import recipe_path
+from pulsetally.sequencer.results import list_runs, run_result, run_shots
+from pulsetally.sequencer.safety import StopSwitch
+from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.simulate import SimulationSettings
+from tests.simulated import Simulated, simulated
+
+Kind = TypeVar("Kind")
+
+
+@pytest.fixture(scope="module")
+def table() -> Iterator[Simulated]:
+    with simulated() as running:
+        yield running
+
+
+@pytest.fixture
+def logbook(tmp_path: Path) -> Iterator[Logbook]:
+    book = Logbook(tmp_path / "logbook.db")
+    yield book
+    book.close()
+
+
+def begin(
+    name: str,
+    bench: Bench,
+    logbook: Logbook,
+    overrides: dict[str, str] | None = None,
+    stop: StopSwitch | None = None,
+) -> Iterator[Event]:
+    with recipe_path(name) as path:
+        recipe = load_recipe(path, overrides)
+    plan = make_plan(recipe, bench)
+    recorder = logbook.begin_run(plan, bench, mode="run")
+    return engine.run(plan, bench, recorder, stop or StopSwitch())
+
+
+def of_kind(events: list[Event], kind: type[Kind]) -> list[Kind]:
+    return [event for event in events if isinstance(event, kind)]
+
+
+def test_a_calibration_gives_a_full_count_and_keeps_everything(
+    table: Simulated, logbook: Logbook
+) -> None:
+    before = table.truth("DELivered")
+    events = list(begin("full_count", table.bench, logbook, {"rounds": "4"}))
+    reads = of_kind(events, ReadFinished)
+    assert len(reads) == 4
+    assert all(each.reached and each.crossing is not None for each in reads)
+    taken = of_kind(events, ShotTaken)
+    assert table.truth("DELivered") - before == len(taken) == len(of_kind(events, PulseArmed))
+
+    result = run_result(logbook, 1)
+    assert result.summary.state == "finished"
+    assert result.summary.shots == len(taken)
+    assert result.full_count is not None
+    assert result.full_count.rounds == 4
+    assert result.full_count.mean == pytest.approx(
+        np.mean([each.crossing for each in reads if each.crossing])
+    )
+    # design value: the default cell fills in about nine pulses.
+    assert 8 <= result.full_count.mean <= 10
+    assert [each.reads[0].count for each in result.rounds] == [each.count for each in reads]
+    for kept, event in zip(run_shots(logbook, 1), taken, strict=True):
+        assert np.array_equal(kept.node.codes, event.shot.node.codes)
+        assert np.array_equal(kept.source.volts, event.shot.source.volts)
+        assert np.array_equal(kept.times, event.shot.times)
+
+
+def test_nothing_is_fired_before_the_armed_event_has_been_taken(
+    table: Simulated, logbook: Logbook
+) -> None:
+    before = table.truth("DELivered")
+    taken = 0
+    for event in begin("full_count", table.bench, logbook, {"rounds": "1"}):
+        if isinstance(event, PulseArmed):
+            with table.client(table.addresses.oscilloscope) as client:
+                # Bit 5: the oscilloscope waits for its trigger.
+                assert int(client.ask(":STATus:OPERation:CONDition?")) & 32
+            assert table.truth("DELivered") - before == taken
+        if isinstance(event, ShotTaken):
+            taken += 1
+            assert table.truth("DELivered") - before == taken
+    assert taken > 5
+
+
+def test_stored_and_remaining_make_up_the_full_count(table: Simulated, logbook: Logbook) -> None:
+    reads = of_kind(list(begin("step_and_read", table.bench, logbook)), ReadFinished)
+    assert [each.stepped for each in reads] == [0, 2, 4, 6, 8]
+    full = reads[0].crossing
+    assert full is not None
+    for each in reads:
+        # A read that passes with its first pulse has no crossing, and lies within that pulse.
+        crossing = 0.5 if each.crossing is None else each.crossing
+        assert abs(each.stepped + crossing - full) <= 1
+    assert [each.stepped for each in run_result(logbook, 1).rounds] == [0, 2, 4, 6, 8]
+
+
+def test_a_sweep_gives_a_full_count_for_each_width(table: Simulated, logbook: Logbook) -> None:
+    list(begin("width_sweep", table.bench, logbook, {"rounds": "2"}))
+    found = run_result(logbook, 1).by_setting
+    assert [each.settings["up.width"] for each in found] == [80e-6, 100e-6, 125e-6]
+    counts = [each.count.mean for each in found]
+    # Longer pulses switch more each: fewer of them fill the cell (common practice).
+    assert counts == sorted(counts, reverse=True)
+    assert counts[0] - counts[2] > 2
+
+
+def test_a_wait_passes_on_the_bench_and_not_on_the_wall(table: Simulated, logbook: Logbook) -> None:
+    recipe = parse_recipe(
+        "recipe: wait\npulses:\n  down: {level: -5 V, width: 2 ms}\n"
+        "steps:\n  - preset: down\n  - wait: 8 h\n",
+        file="r.yaml",
+    )
+    plan = make_plan(recipe, table.bench)
+    with table.client(table.addresses.control) as client:
+        before = float(client.ask(":CLOCk:TIME?"))
+        recorder = logbook.begin_run(plan, table.bench, mode="run")
+        ended = list(engine.run(plan, table.bench, recorder, StopSwitch()))[-1]
+        assert isinstance(ended, RunEnded)
+        assert ended.state is RunState.FINISHED
+        assert float(client.ask(":CLOCk:TIME?")) - before >= 8 * 3600
+
+
+# How a run can end before its time; in each case the output must be off and the rest kept.
+def close_it(events: Iterator[Event], stop: StopSwitch) -> None:
+    assert isinstance(events, Generator)
+    events.close()
+
+
+def stop_after_round(events: Iterator[Event], stop: StopSwitch) -> None:
+    stop.press("Ctrl-C")
+    *_, ended = events
+    assert isinstance(ended, RunEnded)
+    assert ended.state is RunState.STOPPED
+
+
+def stop_at_once(events: Iterator[Event], stop: StopSwitch) -> None:
+    stop.press_hard("the terminal was closed")
+    *_, ended = events
+    assert isinstance(ended, RunEnded)
+    assert ended.reason == "the terminal was closed"
+
+
+@pytest.mark.parametrize("end", [close_it, stop_after_round, stop_at_once])
+def test_however_it_ends_the_output_is_off(
+    table: Simulated,
+    logbook: Logbook,
+    end: Callable[[Iterator[Event], StopSwitch], None],
+) -> None:
+    stop = StopSwitch()
+    events = begin("full_count", table.bench, logbook, {"rounds": "5"}, stop)
+    shots = 0
+    for event in events:
+        shots += isinstance(event, ShotTaken)
+        if shots == 4:
+            break
+    assert table.truth("OUTPut") == 1
+    end(events, stop)
+    assert table.truth("OUTPut") == 0
+    (summary,) = list_runs(logbook)
+    assert summary.state == "stopped"
+    assert summary.outputs_off
+    assert summary.shots >= 4
+    assert summary.rounds <= 1
+
+
+def test_a_failing_consumer_leaves_the_output_off(table: Simulated, logbook: Logbook) -> None:
+    def show() -> None:
+        for event in begin("full_count", table.bench, logbook):
+            if isinstance(event, ShotTaken):
+                raise RuntimeError("the view broke")
+
+    with pytest.raises(RuntimeError, match="the view broke"):
+        show()
+    assert table.truth("OUTPut") == 0
+
+
+def test_a_round_that_lost_a_pulse_is_spoiled_and_repeated(
+    table: Simulated, logbook: Logbook
+) -> None:
+    events: list[Event] = []
+    lost = False
+    for event in begin("full_count", table.bench, logbook, {"rounds": "2"}):
+        events.append(event)
+        if isinstance(event, PulseArmed) and event.order == 3 and not lost:
+            lost = True
+            # Somebody turns the trigger knob: the pulse goes out and no record is taken.
+            with table.client(table.addresses.oscilloscope) as client:
+                client.ask(":TRIGger:LEVel 7.9;:TRIGger:LEVel?")
+    (spoiled,) = of_kind(events, RoundSpoiled)
+    assert spoiled.round == 1
+    assert "saw no trigger" in spoiled.reason
+    assert [each.round for each in of_kind(events, RoundFinished)] == [1, 2]
+    assert [each.state for each in of_kind(events, RunEnded)] == [RunState.FINISHED]
+    result = run_result(logbook, 1)
+    assert [(each.round, each.spoiled) for each in result.rounds] == [
+        (1, True),
+        (1, False),
+        (2, False),
+    ]
+    assert result.full_count is not None
+    assert result.full_count.rounds == 2
+
+
+# Closed form: a linear capacitor behind a resistor charges as V (1 - exp(-t / RC)).
+def test_waveforms_of_a_linear_capacitor_are_the_rc_charge(logbook: Logbook) -> None:
+    linear = CellDescription(remanent_polarization=1e-12)
+    with simulated(SimulationSettings(cell=linear)) as table:
+        recipe = {"rounds": "1", "threshold": "3.2 V"}
+        events = list(begin("full_count", table.bench, logbook, recipe))
+        farads = table.truth("CAPacitance")
+    up = [each for each in of_kind(events, ShotTaken) if each.role is Role.READ]
+    wiring = table.bench.model.wiring
+    ohms = wiring.source_resistance + wiring.series_resistance
+    # The probe's resistance shares in the end value and in the time constant.
+    share = wiring.probe.resistance / (ohms + wiring.probe.resistance)
+    tau = farads * ohms * share
+    shot = up[0].shot
+    # The trigger is at half of the leading edge, whose ramp is short against tau.
+    inside = (shot.times > 1e-6) & (shot.times < 99e-6)
+    expected = 4.0 * share * (1 - np.exp(-shot.times[inside] / tau))
+    error = shot.node.volts[inside] - expected
+    noise = shot.node.scale * 2
+    assert abs(float(np.mean(error))) < noise / 4
+    assert float(np.std(error)) < noise
+    assert float(np.max(np.abs(error))) < 6 * noise
+
+
+def test_the_charge_of_each_pulse_is_the_charge_the_cell_took(
+    table: Simulated, logbook: Logbook
+) -> None:
+    wiring, cell = table.bench.model.wiring, CellDescription()
+    farads, area = table.truth("CAPacitance"), cell.area
+    polarization = math.nan
+    compared = 0
+    for event in begin("full_count", table.bench, logbook, {"rounds": "1"}):
+        if isinstance(event, PulseArmed):
+            polarization = table.truth("POLarization")
+        if isinstance(event, ShotTaken) and event.role is Role.READ:
+            shot = event.shot
+            charge = cell_charge(
+                shot.times,
+                shot.source.volts,
+                shot.node.volts,
+                series_ohms=wiring.series_resistance,
+                probe_ohms=wiring.probe.resistance,
+            )
+            volts = shot.node.volts
+            stored = farads * (np.mean(volts[-50:]) - np.mean(volts[:50]))
+            stored += area * (table.truth("POLarization") - polarization)
+            assert charge == pytest.approx(stored, rel=0.02)
+            compared += 1
+    assert compared >= 8
+
+
+def test_a_pulse_beyond_the_limits_is_never_sent(table: Simulated) -> None:
+    link = VisaLink(table.addresses.generator)
+    try:
+        generator = FunctionGenerator(link, limit_volts=6.0)
+        generator.prepare()
+        with pytest.raises(LimitError, match="it was not sent"):
+            generator.set_pulse(
+                PulseSetting(base=0.0, level=6.1, width=1e-4, edge=1e-7, period=1e-3)
+            )
+        assert float(link.ask(":SOURce1:VOLTage:LEVel:IMMediate:HIGH?")) < 6.0
+    finally:
+        link.close()
+    with pytest.raises(PlanError, match="beyond the source limit"), recipe_path("full_count") as at:
+        make_plan(load_recipe(at, {"up.level": "11 V"}), table.bench)

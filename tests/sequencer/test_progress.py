@@ -1,0 +1,132 @@
+"""What a view knows of a run, and that nothing foreign reaches a screen raw."""
+
+import io
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from rich.console import Console
+
+from pulsetally.sequencer.analysis.pulses import EndVoltage
+from pulsetally.sequencer.events import (
+    Event,
+    PulseArmed,
+    ReadFinished,
+    Role,
+    RoundBegan,
+    RoundFinished,
+    RoundSpoiled,
+    RunBegan,
+    RunEnded,
+    RunState,
+    ShotTaken,
+    StopAsked,
+    WaitBegan,
+)
+from pulsetally.sequencer.live import draw, follow
+from pulsetally.sequencer.plan import Round
+from pulsetally.sequencer.progress import Progress, printable
+from tests.sequencer.test_logbook import invented_shot
+
+
+def read_pulse(order: int, volts: float) -> list[Event]:
+    end = EndVoltage(volts=volts, uncertainty=1e-3, samples=9, seconds=1e-4)
+    return [
+        PulseArmed(round=1, order=order, role=Role.READ, pulse="up", threshold=2.5),
+        ShotTaken(
+            round=1,
+            order=order,
+            role=Role.READ,
+            pulse="up",
+            shot=invented_shot(),
+            end=end,
+            threshold=2.5,
+            at_most=60,
+        ),
+    ]
+
+
+def finished(number: int, crossing: float) -> ReadFinished:
+    return ReadFinished(
+        round=number,
+        pulse="up",
+        threshold=2.5,
+        count=int(crossing) + 1,
+        crossing=crossing,
+        reached=True,
+        stepped=0,
+    )
+
+
+def one_round(number: int = 1) -> Round:
+    return Round(number=number, settings={"up.width": 1e-4}, actions=())
+
+
+def test_progress_counts_and_estimates() -> None:
+    seconds = iter(range(0, 1000, 10))
+    progress = Progress(rounds=4, seconds=100.0, swept=("up.width",), clock=lambda: next(seconds))
+    progress.take(RoundBegan(round=one_round(), attempt=1))
+    assert progress.setting == "up.width = 100 us"
+    # Before a round is done the plan's estimate counts: 100 s less the 10 s that went by.
+    assert progress.seconds_left == 90.0
+    for event in [*read_pulse(1, 2.0), *read_pulse(2, 2.6)]:
+        progress.take(event)
+    assert progress.ends == [2.0, 2.6]
+    (line,) = progress.take(finished(1, 1.83))
+    assert line == "round 1 of 4 (up.width = 100 us): full count 2, crossing 1.83"
+    progress.take(RoundFinished(round=1))
+    # One round took 20 s; three are left.
+    assert progress.seconds_left == 60.0
+    assert progress.statistics is not None
+    assert progress.statistics.rounds == 1
+
+
+@pytest.mark.parametrize("height", [10, 24, 60])
+@pytest.mark.parametrize("width", [40, 80, 200])
+def test_the_drawing_fits_the_terminal(width: int, height: int) -> None:
+    progress = Progress(rounds=20, seconds=100.0)
+    events: list[Event] = [RoundBegan(round=one_round(), attempt=2)]
+    for order in range(1, 40):
+        events += read_pulse(order, order / 14)
+    events += [finished(number, 8.0 + number / 10) for number in range(1, 9)]
+    events += read_pulse(1, 1.0)
+    for event in events:
+        progress.take(event)
+    screen = io.StringIO()
+    console = Console(file=screen, width=width, height=height, force_terminal=True)
+    console.print(draw(progress, height))
+    lines = screen.getvalue().splitlines()
+    assert len(lines) <= max(height, 18)
+    assert "threshold" in screen.getvalue()
+
+
+HOSTILE = "A\x1b[2Jb\x07[red]c[/red]\u202ed\r\n<script>"
+
+
+def test_what_comes_from_outside_is_never_printed_raw() -> None:
+    events: list[Event] = [
+        RunBegan(rounds=1, most_pulses=1, seconds=1.0, identities={"oscilloscope": HOSTILE}),
+        RoundBegan(round=one_round(), attempt=1),
+        WaitBegan(round=1, seconds=3600.0),
+        RoundSpoiled(round=1, reason=HOSTILE),
+        StopAsked(at_once=False),
+        RunEnded(state=RunState.FAILED, reason=HOSTILE, outputs_off=True),
+    ]
+    screen = io.StringIO()
+    progress = Progress(rounds=1, seconds=1.0)
+    follow(iter(events), progress, Console(file=screen, width=200, force_terminal=False))
+    shown = screen.getvalue()
+    assert "\x1b" not in shown
+    assert "\x07" not in shown
+    assert "\u202e" not in shown
+    # Markup is text and not markup.
+    assert "[red]c[/red]" in shown
+    assert "waiting for 1 h 00 min" in shown
+    assert "press Ctrl-C again" in shown
+
+
+@given(st.text(max_size=600))
+def test_printable_text_has_no_control_characters(text: str) -> None:
+    shown = printable(text)
+    assert all(each.isprintable() for each in shown)
+    assert len(shown) <= 500

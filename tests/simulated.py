@@ -1,0 +1,86 @@
+"""Run a simulated bench for a test, reached over real sockets, with its ground truth at hand."""
+
+import asyncio
+import socket
+import threading
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+
+from pulsetally.sequencer.bench import Bench
+from pulsetally.sequencer.rehearsal import shipped_bench
+from pulsetally.simulators.simulate import Addresses, SimulationSettings, serve_until
+
+
+class PlainClient:
+    """A SCPI client that is not ours: a bare socket."""
+
+    def __init__(self, address: str) -> None:
+        _, host, port, _ = address.split("::")
+        self._socket = socket.create_connection((host, int(port)), timeout=10)
+        self._file = self._socket.makefile("rb")
+
+    def write(self, command: str) -> None:
+        self._socket.sendall(command.encode() + b"\n")
+
+    def ask(self, command: str) -> str:
+        self.write(command)
+        return self._file.readline().decode().rstrip("\n")
+
+    def close(self) -> None:
+        self._file.close()
+        self._socket.close()
+
+
+@dataclass(frozen=True, kw_only=True)
+class Simulated:
+    """addresses: of the three ports. bench: the shipped bench file with these addresses."""
+
+    addresses: Addresses
+    bench: Bench
+
+    @contextmanager
+    def client(self, address: str) -> Iterator[PlainClient]:
+        client = PlainClient(address)
+        try:
+            yield client
+        finally:
+            client.close()
+
+    def truth(self, what: str) -> float:
+        """Ask the control port, which knows what no instrument does."""
+        with self.client(self.addresses.control) as client:
+            return float(client.ask(f":TRUTh:{what}?"))
+
+
+@contextmanager
+def simulated(settings: SimulationSettings | None = None) -> Iterator[Simulated]:
+    """Serve a bench in a thread for as long as the block runs."""
+    listening = threading.Event()
+    found: list[Addresses] = []
+    loop = asyncio.new_event_loop()
+    stop = asyncio.Event()
+
+    def announce(addresses: Addresses) -> None:
+        found.append(addresses)
+        listening.set()
+
+    def serve() -> None:
+        asyncio.set_event_loop(loop)
+        loop.run_until_complete(serve_until(settings or SimulationSettings(), announce, stop))
+        loop.close()
+
+    thread = threading.Thread(target=serve)
+    thread.start()
+    try:
+        assert listening.wait(20)
+        (addresses,) = found
+        bench = shipped_bench().with_addresses(
+            generator=addresses.generator,
+            oscilloscope=addresses.oscilloscope,
+            clock=addresses.control,
+        )
+        yield Simulated(addresses=addresses, bench=bench)
+    finally:
+        loop.call_soon_threadsafe(stop.set)
+        thread.join()
