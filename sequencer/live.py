@@ -131,7 +131,9 @@ def _counts(progress: Progress) -> RenderableType:
         return Text("no full count yet", style="dim")
     scatter = "" if statistics.sd is None else f", scatter {statistics.sd:.2f}"
     rounds = "1 round" if statistics.rounds == 1 else f"{statistics.rounds} rounds"
-    words = Text(f"full count {statistics.mean:.2f}{scatter} pulses ({rounds})", style="bold")
+    where = f" at {progress.setting}" if progress.setting else ""
+    answer = f"full count{where}: {statistics.mean:.2f}{scatter} pulses ({rounds})"
+    words = Text(printable(answer), style="bold")
     table = Table.grid(padding=(0, 1))
     most = max(progress.counts.values(), default=1)
     for count in sorted(progress.counts)[-5:]:

@@ -28,8 +28,8 @@ class Progress:
     """How a run stands.
 
     rounds: planned; done: finished. round: the one that goes on. ends: end voltages of its
-    current read, volts. crossings: full counts so far, pulses. lines: what was said, oldest
-    first; fresh: how many of them nobody has taken yet.
+    current read, volts. crossings: full counts so far at this setting, pulses. lines: what was
+    said, oldest first.
     """
 
     rounds: int
@@ -122,9 +122,14 @@ class Progress:
         self.round, self.attempt, self.stepped = event.round.number, event.attempt, 0
         self.ends.clear()
         self.threshold = None
-        self.setting = ", ".join(
+        setting = ", ".join(
             f"{name} = {show_setting(name, event.round.settings[name])}" for name in self.swept
         )
+        if setting != self.setting:
+            # Counts at different settings have no common mean.
+            self.setting = setting
+            self.crossings.clear()
+            self.counts.clear()
         again = f" again (attempt {event.attempt})" if event.attempt > 1 else ""
         return [f"round {self.round} begins{again}"] if again else []
 

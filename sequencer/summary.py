@@ -125,7 +125,7 @@ def spell_count(count: CountStatistics) -> str:
     return (
         f"{count.mean:.2f} pulses, scatter {count.sd:.2f} pulses"
         f" (standard deviation of {count.rounds} rounds; mean known to"
-        f" {count.mean_uncertainty:.2f})"
+        f" {count.mean_uncertainty:.2g})"
     )
 
 
@@ -143,7 +143,7 @@ def _scatter(count: CountStatistics) -> str:
 
 
 def _round_table(result: RunResult) -> Table:
-    table = Table("round", *result.swept, "stored", "remaining", "crossing", "sum", "note")
+    table = Table("round", *result.swept, "stepped", "remaining", "crossing", "sum", "note")
     for each in result.rounds[-_MOST_ROWS:]:
         swept = [show_setting(name, each.settings[name]) for name in result.swept]
         for read in each.reads or (None,):
@@ -152,6 +152,9 @@ def _round_table(result: RunResult) -> Table:
                 continue
             crossing = "" if read.crossing is None else f"{read.crossing:.2f}"
             total = "" if read.crossing is None else f"{each.stepped + read.crossing:.2f}"
+            if read.reached and read.crossing is None:
+                # The first pulse passed: the crossing lies somewhere within it.
+                total = f"{each.stepped} to {each.stepped + 1}"
             note = _note(each) or ("" if read.reached else "threshold not reached")
             table.add_row(
                 str(each.round), *swept, str(each.stepped), str(read.count), crossing, total, note
