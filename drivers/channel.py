@@ -139,6 +139,15 @@ class VisaChannel:
 
     def __init__(self, resource: Any) -> None:
         self._resource = resource
+        # An answer that is an exact multiple of the chunk size times out on VXI-11.
+        resource.chunk_size = 1 << 20 | 1
+        if str(getattr(resource, "resource_name", "")).upper().startswith("ASRL"):
+            from pyvisa import constants
+
+            # XON and XOFF are bytes of a block, and so is every would-be end of input.
+            resource.flow_control = constants.ControlFlow.none
+            resource.end_input = constants.SerialTermination.none
+            resource.flush(constants.BufferOperation.discard_read_buffer)
 
     def _prepare(self, deadline: float, *, line: bool) -> None:
         resource = self._resource

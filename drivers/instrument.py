@@ -1,26 +1,32 @@
-"""Ask what every SCPI instrument can answer: who it is, its errors, numbers and words."""
+"""Speak a dialect over a link: send commands, ask, set and read back, judge."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
+from pulsetally.drivers.dialect import (
+    Predicate,
+    Setting,
+    Speech,
+    fill,
+    says_yes,
+    understand,
+)
 from pulsetally.drivers.errors import BadReply, InstrumentComplaint, SettingRefused
 from pulsetally.drivers.link import Link
-from pulsetally.drivers.numbers import (
-    NumberError,
-    parse_error_entry,
-    parse_number,
-    parse_whole,
-)
+from pulsetally.drivers.numbers import NumberError, parse_error_entry, parse_number
 
 # More entries than any queue holds: an instrument that reports errors without end is broken.
 _MOST_ENTRIES = 100
-_OTHER_DIALECT = "check that the dialect fits this instrument"
+OTHER_DIALECT = "check that the dialect fits this instrument"
+
+# What a setting is set to: a number in SI units, or one of our words.
+Wanted = Mapping[str, float | str]
 
 
 class Instrument:
-    """Speak the part of SCPI-99 that generators and oscilloscopes share."""
+    """Speak the part of a dialect that generators and oscilloscopes share."""
 
-    def __init__(self, link: Link) -> None:
-        self._link = link
+    def __init__(self, link: Link, speech: Speech) -> None:
+        self._link, self._speech = link, speech
 
     @property
     def address(self) -> str:
@@ -42,27 +48,22 @@ class Instrument:
 
     def reset(self) -> None:
         """Bring the instrument into its default state and empty its error queue."""
-        self._link.write("*RST;*CLS")
+        self._send(self._speech.reset)
 
     def errors(self) -> list[tuple[int, str]]:
         """Empty the error queue; return its entries, oldest first."""
         entries: list[tuple[int, str]] = []
+        command = self._speech.error_query
         for _ in range(_MOST_ENTRIES):
-            command = ":SYSTem:ERRor:NEXT?"
-            answer = self._link.ask(command)
             try:
-                number, text = parse_error_entry(answer)
+                number, text = parse_error_entry(self.ask(command))
             except NumberError as error:
-                raise BadReply(self.address, command, str(error), _OTHER_DIALECT) from error
+                raise BadReply(self.address, command, str(error), OTHER_DIALECT) from error
             if number == 0:
                 return entries
             entries.append((number, text))
-        raise BadReply(
-            self.address,
-            ":SYSTem:ERRor:NEXT?",
-            f"the error queue held more than {_MOST_ENTRIES} entries",
-            _OTHER_DIALECT,
-        )
+        problem = f"the error queue held more than {_MOST_ENTRIES} entries"
+        raise BadReply(self.address, command, problem, OTHER_DIALECT)
 
     def raise_errors(self, command: str) -> None:
         """Empty the error queue; raise InstrumentComplaint for its first entry."""
@@ -70,47 +71,103 @@ class Instrument:
         if entries:
             raise InstrumentComplaint(self.address, command, *entries[0])
 
-    def conditions(self) -> int:
-        """Read the bits of the operation condition register (SCPI-99 volume 1, 9)."""
-        return self._ask_whole(":STATus:OPERation:CONDition?")
+    def abort(self) -> None:
+        """End what goes on: pulses that are sent, or an acquisition that is not complete."""
+        self._send(self._speech.abort)
 
-    def _ask_number(self, command: str) -> float:
-        answer = self._link.ask(command)
+    def ask(self, query: str) -> str:
+        """Ask one query; return its answer without the header that some dialects repeat."""
+        return self._bare(self._link.ask(query))
+
+    def apply(self, settings: Sequence[Setting], wanted: Wanted, channel: int) -> None:
+        """Set several settings at once, then empty the error queue. Raises InstrumentComplaint.
+
+        They travel in as few messages as fit: coupled settings, such as high and low, are
+        judged together at the end of a message (IEEE Std 488.2-1992, 6.4.5.3; from memory).
+        """
+        commands = [self.spell(each, wanted[each.name], channel) for each in settings]
+        message = ""
+        for command in commands:
+            if message and len(message) + len(command) + 1 > self._speech.line.longest:
+                self._link.write(message)
+                message = ""
+            message += f";{command}" if message else command
+        if message:
+            self._link.write(message)
+        self.raise_errors(";".join(commands))
+
+    def spell(self, setting: Setting, value: float | str, channel: int) -> str:
+        """Write the command for a setting. A word must be one that the dialect knows."""
+        if isinstance(value, str):
+            text = setting.words[value][0]
+        else:
+            text = self._speech.line.format(value)
+        return fill(setting.send, channel=channel, value=text)
+
+    def read_back(
+        self, settings: Sequence[Setting], wanted: Wanted, channel: int
+    ) -> dict[str, float]:
+        """Read settings back and compare them; return the numbers found, by name.
+
+        Raises SettingRefused when one is not what was wanted: instruments round and clip
+        without an error.
+        """
+        asked = [each for each in settings if each.ask]
+        if not asked:
+            return {}
+        queries = [fill(each.ask, channel=channel) for each in asked]
+        command = ";".join(queries)
+        if len(command) > self._speech.line.longest:
+            answers = [self._link.ask(query) for query in queries]
+        else:
+            answers = self._link.ask(command).split(";")
+        if len(answers) != len(asked):
+            problem = f"{len(asked)} answers were expected, {len(answers)} came"
+            raise BadReply(self.address, command, problem, OTHER_DIALECT)
+        found: dict[str, float] = {}
+        for setting, query, answer in zip(asked, queries, answers, strict=True):
+            value = self._judge(setting, query, self._bare(answer), wanted[setting.name])
+            if value is not None:
+                found[setting.name] = value
+        return found
+
+    def _judge(
+        self, setting: Setting, query: str, answer: str, wanted: float | str
+    ) -> float | None:
+        remedy = "choose a value that the instrument can make, or mend its dialect"
+        if isinstance(wanted, str):
+            word = understand(answer, setting.words)
+            if word != wanted:
+                raise SettingRefused(self.address, setting.name, wanted, answer[:40], remedy)
+            return None
         try:
-            return parse_number(answer)
+            value = parse_number(answer)
         except NumberError as error:
-            raise BadReply(self.address, command, str(error), _OTHER_DIALECT) from error
-
-    def _ask_whole(self, command: str) -> int:
-        answer = self._link.ask(command)
-        try:
-            return parse_whole(answer)
-        except NumberError as error:
-            raise BadReply(self.address, command, str(error), _OTHER_DIALECT) from error
-
-    def _ask_numbers(self, queries: Mapping[str, str]) -> dict[str, float]:
-        """Ask several queries in one message; return name -> number."""
-        command = ";".join(queries.values())
-        answers = self._link.ask(command).split(";")
-        if len(answers) != len(queries):
-            raise BadReply(
-                self.address,
-                command,
-                f"{len(queries)} answers were expected, {len(answers)} came",
-                _OTHER_DIALECT,
-            )
-        try:
-            return {
-                name: parse_number(answer) for name, answer in zip(queries, answers, strict=True)
-            }
-        except NumberError as error:
-            raise BadReply(self.address, command, str(error), _OTHER_DIALECT) from error
-
-    def _compare(
-        self, name: str, asked: float, found: float, *, within: float, unit: str, remedy: str
-    ) -> None:
-        # Settings are rounded or clipped without an error, so what matters is read back.
-        if asked != found and not abs(asked - found) <= within:
+            raise BadReply(self.address, query, str(error), OTHER_DIALECT) from error
+        tolerance = max(setting.share * abs(wanted), setting.least)
+        fine = value == wanted or abs(value - wanted) <= tolerance * (1 + 1e-9)
+        if not fine and setting.larger_is_fine:
+            fine = value > wanted
+        if not fine:
             raise SettingRefused(
-                self.address, name, f"{asked:.6g} {unit}", f"{found:.6g} {unit}", remedy
+                self.address, setting.name, f"{wanted:.6g}", f"{value:.6g}", remedy
             )
+        return value
+
+    def says_yes(self, predicate: Predicate) -> bool:
+        """Ask a predicate's question. Raises BadReply when the answer makes no sense."""
+        answer = self.ask(predicate.ask)
+        try:
+            return says_yes(predicate, answer)
+        except NumberError as error:
+            raise BadReply(self.address, predicate.ask, str(error), OTHER_DIALECT) from error
+
+    def _send(self, templates: Sequence[str], channel: int = 1) -> None:
+        for template in templates:
+            self._link.write(fill(template, channel=channel))
+
+    def _bare(self, answer: str) -> str:
+        if not self._speech.line.echoed_headers:
+            return answer
+        head, space, rest = answer.strip().partition(" ")
+        return rest if space and head[:1].isalpha() else answer

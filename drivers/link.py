@@ -21,6 +21,7 @@ from pulsetally.drivers.channel import (
     VisaChannel,
 )
 from pulsetally.drivers.errors import BadReply, LinkClosed, LinkError, NoAnswer
+from pulsetally.drivers.lock import AddressLock
 
 _LINE_LIMIT = 65_536
 _BLOCK_LIMIT = 1 << 28
@@ -40,17 +41,38 @@ class Link(Protocol):
     def ask(self, command: str) -> str:
         """Send one query; return its answer without the line end."""
 
-    def ask_block(self, command: str) -> bytes:
+    def ask_block(self, command: str, *, line_end: bool = True, header: bool = False) -> bytes:
         """Send one query; return the payload of the block that answers it."""
 
 
 class VisaLink:
-    """Speak with one instrument over PyVISA."""
+    """Speak with one instrument over PyVISA.
 
-    def __init__(self, address: str, *, seconds: float = 5.0, backend: str = "@py") -> None:
-        self._address, self._seconds, self._backend = address, seconds, backend
-        self._channel: Channel | None = _open_channel(address, backend)
+    seconds: how long a whole exchange may take. ending: what ends a message that is sent.
+    gap_seconds: least pause between two messages. public: use PyVISA's public interface even
+    where the session shows its socket. exclusive: refuse an address that another process has.
+    """
+
+    def __init__(
+        self,
+        address: str,
+        *,
+        seconds: float = 5.0,
+        ending: str = "\n",
+        gap_seconds: float = 0.0,
+        public: bool = False,
+        exclusive: bool = True,
+    ) -> None:
+        self._address, self._seconds, self._public = address, seconds, public
+        self._ending, self._gap, self._free_at = ending.encode("ascii"), gap_seconds, 0.0
+        self._lock = AddressLock(address) if exclusive else None
+        self._channel: Channel | None = None
         self._tainted_by = ""
+        try:
+            self._channel = _open_channel(address, public=public)
+        finally:
+            if self._channel is None:
+                self.close()
 
     @property
     def address(self) -> str:
@@ -64,14 +86,19 @@ class VisaLink:
 
     def close(self) -> None:
         """Give the line back; closing twice is harmless."""
+        self._drop()
+        if self._lock is not None:
+            self._lock.release()
+
+    def _drop(self) -> None:
         if self._channel is not None:
             self._channel.close()
             self._channel = None
 
     def reopen(self) -> None:
         """Open the line anew and clear what the instrument kept of the old one."""
-        self.close()
-        self._channel, self._tainted_by = _open_channel(self._address, self._backend), ""
+        self._drop()
+        self._channel, self._tainted_by = _open_channel(self._address, public=self._public), ""
         # A server may hold half a message from the connection before; the line feed ends it.
         self.write("")
         self.ask("*IDN?")
@@ -93,22 +120,27 @@ class VisaLink:
         except (ChannelTimeout, ChannelClosed, ChannelOverrun) as error:
             raise self._taint(error, command) from error
 
-    def ask_block(self, command: str) -> bytes:
+    def ask_block(self, command: str, *, line_end: bool = True, header: bool = False) -> bytes:
         """Send one query; return the payload of the block that answers it.
 
-        The block is read by exact count, then the line end that follows it. Raises as ask.
+        The block is read by exact count. line_end: a line feed follows it, and is read too.
+        header: the answer begins with the query's header and a space. Raises as ask.
         """
         deadline = time.monotonic() + self._seconds
         channel = self._send(command, deadline)
         try:
+            if header:
+                self._skip_header(channel, command, deadline)
             start = channel.read_exactly(2, deadline)
-            header = parse_header(start, limit=_BLOCK_LIMIT)
-            if header is None:
+            found = parse_header(start, limit=_BLOCK_LIMIT)
+            if found is None:
                 start += channel.read_exactly(int(start[1:2]), deadline)
-                header = parse_header(start, limit=_BLOCK_LIMIT)
-            if header is None or header.payload_bytes is None:
+                found = parse_header(start, limit=_BLOCK_LIMIT)
+            if found is None or found.payload_bytes is None:
                 return channel.read_line(_BLOCK_LIMIT, deadline)
-            payload = channel.read_exactly(header.payload_bytes, deadline)
+            payload = channel.read_exactly(found.payload_bytes, deadline)
+            if not line_end:
+                return payload
             after = channel.read_line(_LINE_LIMIT, deadline)
             if after not in (b"", b"\r"):
                 raise BlockError(f"{len(after)} bytes follow the block: {after[:16]!r}")
@@ -124,6 +156,15 @@ class VisaLink:
         except (ChannelTimeout, ChannelClosed, ChannelOverrun) as error:
             raise self._taint(error, command) from error
 
+    def _skip_header(self, channel: Channel, command: str, deadline: float) -> None:
+        header = command.removesuffix("?").lstrip(":").encode("ascii") + b" "
+        found = channel.read_exactly(1, deadline)
+        if found == b":":
+            found = channel.read_exactly(1, deadline)
+        found += channel.read_exactly(len(header) - 1, deadline)
+        if found.upper() != header.upper():
+            raise BlockError(f"it begins with {found!r} instead of {header!r}")
+
     def _send(self, command: str, deadline: float) -> Channel:
         channel = self._channel
         if channel is None or self._tainted_by:
@@ -134,7 +175,7 @@ class VisaLink:
                 "reopen it before the next command",
             )
         try:
-            data = command.encode("ascii") + b"\n"
+            data = command.encode("ascii") + self._ending
         except UnicodeEncodeError as error:
             raise LinkError(
                 self._address, command, "a command is plain ASCII", "mend the dialect"
@@ -142,7 +183,10 @@ class VisaLink:
         try:
             if channel.waiting():
                 raise ChannelOverrun("bytes came that nobody asked for")
+            if self._gap:
+                time.sleep(max(0.0, self._free_at - time.monotonic()))
             channel.send(data, deadline)
+            self._free_at = time.monotonic() + self._gap
         except (ChannelTimeout, ChannelClosed, ChannelOverrun) as error:
             raise self._taint(error, command) from error
         return channel
@@ -173,15 +217,18 @@ class VisaLink:
 
 
 @functools.cache
-def _manager(backend: str) -> Any:
-    # One per process, and never closed here: closing it closes every session of the process.
+def manager() -> Any:
+    """Return the one resource manager of this process.
+
+    It is never closed: closing it closes every session of the process.
+    """
     import pyvisa
 
-    return pyvisa.ResourceManager(backend)
+    return pyvisa.ResourceManager("@py")
 
 
-def _open_channel(address: str, backend: str) -> Channel:
-    from pyvisa import errors, rname
+def _open_channel(address: str, *, public: bool) -> Channel:
+    from pyvisa import rname
 
     try:
         rname.ResourceName.from_string(address)
@@ -193,12 +240,12 @@ def _open_channel(address: str, backend: str) -> Channel:
             "write one such as TCPIP::192.0.2.10::5025::SOCKET or ASRL/dev/ttyUSB0::INSTR",
         ) from error
     try:
-        resource = _manager(backend).open_resource(address, open_timeout=3000)
-    except (errors.Error, OSError, RuntimeError, ValueError) as error:
-        raise LinkError(address, "", f"it can't be opened ({error})", _CHECK_LINE) from error
+        resource = manager().open_resource(address, open_timeout=3000)
     except Exception as error:
-        # The pyvisa-py backend raises bare Exception when a host does not answer.
-        raise LinkError(address, "", f"it can't be opened ({error})", _CHECK_LINE) from error
+        # The backend raises its own errors, its libraries' and bare Exception. A word such as
+        # 'No module named usb' among them says what a kind of line needs.
+        reason = " ".join(str(error).split())[:300] or type(error).__name__
+        raise LinkError(address, "", f"it can't be opened ({reason})", _CHECK_LINE) from error
     connection = _own_socket(resource)
     if connection is None:
         return VisaChannel(resource)
@@ -206,7 +253,10 @@ def _open_channel(address: str, backend: str) -> Channel:
     failure = connection.getsockopt(socket.SOL_SOCKET, socket.SO_ERROR)
     if failure:
         resource.close()
-        raise LinkError(address, "", f"nobody answers there ({os.strerror(failure)})", _CHECK_LINE)
+        reason = f"nobody answers there ({os.strerror(failure)})"
+        raise LinkError(address, "", reason, _CHECK_LINE)
+    if public:
+        return VisaChannel(resource)
     return SocketChannel(connection, resource.close)
 
 

@@ -6,7 +6,7 @@ import re
 # SCPI-99 volume 1, 7.2.1 (clause from memory): values that stand for infinity and not a number.
 _INFINITY, _NOT_A_NUMBER = 9.9e37, 9.91e37
 _DECIMAL = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?")
-_ENTRY = re.compile(r'\s*([+-]?\d{1,6})\s*,\s*"(.*)"\s*', re.DOTALL)
+_ENTRY = re.compile(r'\s*([+-]?\d{1,6})(?:\s*,\s*(?:"(.*)"|([^"]*)))?\s*', re.DOTALL)
 
 
 class NumberError(ValueError):
@@ -49,8 +49,11 @@ def parse_whole(text: str) -> int:
 
 
 def parse_error_entry(text: str) -> tuple[int, str]:
-    """Read one entry of an error queue: its number and its words (SCPI-99 volume 2, 21.8)."""
+    """Read one entry of an error queue: its number and its words (SCPI-99 volume 2, 21.8).
+
+    Some instruments leave out the quotes around the words, or the words.
+    """
     found = _ENTRY.fullmatch(text)
     if not found:
         raise NumberError(f"{text[:60]!r} is not an entry of an error queue")
-    return int(found[1]), found[2]
+    return int(found[1]), found[2] or (found[3] or "").strip()

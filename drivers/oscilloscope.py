@@ -1,22 +1,22 @@
-"""Drive an oscilloscope that takes one record at a time.
+"""Drive an oscilloscope that takes one record at a time, in any dialect."""
 
-The commands are those of SCPI-99's SENSe, TRIGger, FORMat and TRACe subsystems (volume 2; from
-memory); the preamble is a data interchange expression in the style of its volume 3.
-"""
-
-import re
+import math
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsetally.drivers.dialect import (
+    CHANNEL_SETTINGS,
+    SAMPLE_TYPES,
+    OscilloscopeDialect,
+    fill,
+    read_preamble,
+)
 from pulsetally.drivers.errors import BadReply
-from pulsetally.drivers.instrument import Instrument
+from pulsetally.drivers.instrument import OTHER_DIALECT, Instrument
 from pulsetally.drivers.link import Link
-from pulsetally.drivers.numbers import NumberError, parse_finite, parse_whole
-
-_MEASURING, _WAITING = 16, 32
-_DIMENSION = re.compile(r"DIMension=([A-Z])\(([^()]*)\)", re.IGNORECASE)
+from pulsetally.drivers.numbers import NumberError
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -35,6 +35,23 @@ class AcquisitionSetting:
     trigger_channel: int
     trigger_volts: float
     rising: bool
+
+    def values(self, divisions_wide: int) -> dict[str, float | str]:
+        """Return all that a dialect may want to set for the whole instrument, by name."""
+        window = self.sample_interval * self.points
+        return {
+            "points": float(self.points),
+            "sample interval": self.sample_interval,
+            "sample rate": 1 / self.sample_interval,
+            "window": window,
+            "time per division": window / divisions_wide,
+            "share before trigger": self.before,
+            "delay to start": -self.before * window,
+            "delay to centre": (0.5 - self.before) * window,
+            "trigger source": float(self.trigger_channel),
+            "trigger level": self.trigger_volts,
+            "trigger slope": "rising" if self.rising else "falling",
+        }
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -68,176 +85,154 @@ class Trace:
         )
 
 
-def parse_preamble(text: str) -> dict[str, dict[str, str]]:
-    """Read the dimensions of a data interchange expression: axis -> keyword -> value.
-
-    Keywords come back in capitals as they are written in long form, short forms expanded.
-    Raises ValueError when an axis lacks what a waveform needs.
-    """
-    axes: dict[str, dict[str, str]] = {}
-    for axis, body in _DIMENSION.findall(text):
-        words = body.split()
-        if len(words) % 2:
-            raise ValueError(f"axis {axis} has a keyword without a value")
-        axes[axis.upper()] = {
-            word.upper()[:4]: value for word, value in zip(words[::2], words[1::2], strict=True)
-        }
-    for axis in ("X", "Y"):
-        for word in ("SCAL", "OFFS", "SIZE"):
-            if word not in axes.get(axis, {}):
-                raise ValueError(f"axis {axis} lacks {word}")
-    return axes
-
-
 class Oscilloscope(Instrument):
     """Set up, arm and fetch single records of several channels."""
 
-    def __init__(self, link: Link) -> None:
-        super().__init__(link)
-        self._points = 0
+    def __init__(self, link: Link, dialect: OscilloscopeDialect) -> None:
+        super().__init__(link, dialect)
+        self._dialect = dialect
+        self._points, self._interval = 0, 0.0
 
     def prepare(self) -> None:
-        """Reset, and choose 16-bit big-endian samples."""
+        """Reset, and choose the form of the records."""
         self.reset()
-        command = ":FORMat:DATA INTeger,16;:FORMat:BORDer NORMal"
-        self._link.write(command)
-        self.raise_errors(command)
+        self._send(self._dialect.prepare)
+        self.raise_errors("; ".join(self._dialect.prepare))
 
-    def set_acquisition(self, setting: AcquisitionSetting) -> AcquisitionSetting:
-        """Set up the next records; return the setting as read back.
+    def interval_for(self, window: float, points: int) -> float:
+        """Return the shortest sample interval it makes whose record covers a window, seconds.
+
+        Instruments that step their time base in 1-2-5 do so by division, sample or rate.
+        """
+        wanted = window / points
+        wide = self._dialect.divisions[1]
+        for name, value in (
+            ("sample interval", wanted),
+            ("time per division", window / wide),
+            ("window", window),
+        ):
+            setting = self._dialect.setting(name)
+            if setting is not None and setting.stepped:
+                return wanted * next_step(value) / value
+        rate = self._dialect.setting("sample rate")
+        if rate is not None and rate.stepped:
+            return 1 / previous_step(1 / wanted)
+        return wanted
+
+    def set_acquisition(self, setting: AcquisitionSetting) -> dict[str, float]:
+        """Set up the next records; return the numbers as read back, by name.
 
         Raises SettingRefused when the oscilloscope made something else of it.
         """
-        source = f"INTernal{setting.trigger_channel}"
-        ranges = [
-            f":SENSe{channel}:VOLTage:DC:RANGe:PTPeak {volts:.9G}"
-            f";:SENSe{channel}:VOLTage:DC:RANGe:OFFSet 0"
-            for channel, volts in setting.spans.items()
-        ]
-        command = ";".join(
-            [
-                ":ABORt",
-                *ranges,
-                f":SENSe:SWEep:POINts {setting.points:d}",
-                f":SENSe:SWEep:TINTerval {setting.sample_interval:.9G}",
-                f":SENSe:SWEep:OREFerence:LOCation {setting.before:.6G}",
-                f":TRIGger:SEQuence:SOURce {source}",
-                f":TRIGger:SEQuence:LEVel {setting.trigger_volts:.9G}",
-                f":TRIGger:SEQuence:SLOPe {'POSitive' if setting.rising else 'NEGative'}",
-            ]
-        )
-        self._link.write(command)
-        self.raise_errors(command)
-        found = self._ask_numbers(
-            {
-                "interval": ":SENSe:SWEep:TINTerval?",
-                "points": ":SENSe:SWEep:POINts?",
-                "before": ":SENSe:SWEep:OREFerence:LOCation?",
-                "level": ":TRIGger:SEQuence:LEVel?",
-                **{
-                    f"span {channel}": f":SENSe{channel}:VOLTage:DC:RANGe:PTPeak?"
-                    for channel in setting.spans
-                },
-            }
-        )
-        self._check(setting, found)
-        self._points = int(found["points"])
-        return AcquisitionSetting(
-            sample_interval=found["interval"],
-            points=int(found["points"]),
-            before=found["before"],
-            spans={channel: found[f"span {channel}"] for channel in setting.spans},
-            trigger_channel=setting.trigger_channel,
-            trigger_volts=found["level"],
-            rising=setting.rising,
-        )
-
-    def _check(self, asked: AcquisitionSetting, found: dict[str, float]) -> None:
-        remedy = "choose a value this oscilloscope can make"
-        swing = max(asked.spans.values())
-        checks = [
-            ("the sample interval", asked.sample_interval, found["interval"], 0.01, "s"),
-            ("the record length", float(asked.points), found["points"], 0.0, "points"),
-        ]
-        for name, wanted, got, share, unit in checks:
-            self._compare(name, wanted, got, within=share * wanted, unit=unit, remedy=remedy)
-        self._compare(
-            "the share before the trigger",
-            asked.before,
-            found["before"],
-            within=0.02,
-            unit="of the record",
-            remedy=remedy,
-        )
-        self._compare(
-            "the trigger level",
-            asked.trigger_volts,
-            found["level"],
-            within=0.02 * swing,
-            unit="V",
-            remedy=remedy,
-        )
-        for channel, volts in asked.spans.items():
-            # A wider range than asked for costs resolution; a narrower one clips.
-            got = found[f"span {channel}"]
-            if got < volts * 0.999:
-                self._compare(
-                    f"the range of channel {channel}",
-                    volts,
-                    got,
-                    within=0,
-                    unit="V",
-                    remedy="use a probe that divides, or a smaller pulse",
-                )
+        high, wide = self._dialect.divisions
+        found: dict[str, float] = {}
+        self.abort()
+        each_channel = [each for each in self._dialect.settings if each.name in CHANNEL_SETTINGS]
+        for channel, span in setting.spans.items():
+            wanted = {"span": span, "volts per division": span / high, "centre": 0.0}
+            self.apply(each_channel, wanted, channel)
+            numbers = self.read_back(each_channel, wanted, channel)
+            found |= {f"channel {channel} {name}": value for name, value in numbers.items()}
+        whole = [each for each in self._dialect.settings if each.name not in CHANNEL_SETTINGS]
+        values = setting.values(wide)
+        self.apply(whole, values, setting.trigger_channel)
+        found |= self.read_back(whole, values, setting.trigger_channel)
+        self._points, self._interval = setting.points, setting.sample_interval
+        return found
 
     def arm(self) -> None:
         """Begin one acquisition. It is armed only once is_armed says so."""
-        self._link.write(":INITiate:IMMediate")
+        self._send(self._dialect.arm)
+
+    def record_now(self) -> None:
+        """Take one record without waiting for a trigger."""
+        self._send(self._dialect.record_now)
 
     def is_armed(self) -> bool:
         """Say whether the record before the trigger is full and a trigger would be taken."""
-        return bool(self.conditions() & _WAITING)
+        return self.says_yes(self._dialect.armed)
 
     def is_done(self) -> bool:
         """Say whether the record is complete."""
-        return not self.conditions() & (_MEASURING | _WAITING)
-
-    def abort(self) -> None:
-        """End an acquisition that is not complete."""
-        self._link.write(":ABORt")
+        return self.says_yes(self._dialect.done)
 
     def fetch(self, channel: int) -> Trace:
         """Fetch the last record of one channel. Raises BadReply when it isn't whole."""
-        query = f":TRACe:DATA:PREamble? CHANnel{channel}"
-        preamble = self._link.ask(query)
-        try:
-            axes = parse_preamble(preamble)
-            step, first = parse_finite(axes["X"]["SCAL"]), parse_finite(axes["X"]["OFFS"])
-            scale, zero = parse_finite(axes["Y"]["SCAL"]), parse_finite(axes["Y"]["OFFS"])
-            points, codes = parse_whole(axes["X"]["SIZE"]), parse_whole(axes["Y"]["SIZE"])
-        except (ValueError, NumberError) as error:
-            raise self._faulty(query, f"the preamble can't be read: {error}") from error
-        if not (step > 0 and scale != 0 and 2 <= codes <= 65_536):
-            raise self._faulty(query, f"the preamble makes no sense: {preamble[:120]!r}")
-        command = f":TRACe:DATA? CHANnel{channel}"
-        data = self._link.ask_block(command)
-        if len(data) != 2 * points or points != self._points:
+        form = self._dialect.waveform
+        self._send(form.select, channel)
+        fields, told = self._preamble(channel)
+        points, step, gain = int(fields["points"]), fields["step"], fields["gain"]
+        if not (step > 0 and gain != 0 and math.isfinite(gain) and math.isfinite(step)):
+            raise self._faulty(told, "the preamble makes no sense")
+        if points != self._points or abs(step - self._interval) > 0.01 * self._interval:
             raise self._faulty(
-                command,
-                f"{self._points} samples were asked for, the preamble says {points}"
-                f" and {len(data)} bytes came",
+                told,
+                f"{self._points} samples every {self._interval:.4g} s were set up, and the preamble"
+                f" says {points} every {step:.4g} s",
             )
+        command = fill(form.data, channel=channel)
+        data = self._link.ask_block(
+            command,
+            line_end=form.line_end_after_block,
+            header=self._dialect.line.echoed_headers,
+        )
+        kind, lowest, highest = SAMPLE_TYPES[form.samples]
+        samples = np.dtype(kind)
+        if len(data) != points * samples.itemsize:
+            raise self._faulty(
+                command, f"{points} samples of {samples.itemsize} bytes were due, {len(data)} came"
+            )
+        if form.clips_at is not None:
+            lowest, highest = form.clips_at
+        if "codes" in fields:
+            half = int(fields["codes"]) // 2
+            lowest, highest = -half, half - 1
+        # Kept as int16 whatever came; unsigned 16-bit codes are moved down to fit.
+        shift = 32768 if kind in (">u2", "<u2") else 0
+        codes = (np.frombuffer(data, samples).astype(np.int32) - shift).astype(np.int16)
         return Trace(
-            codes=np.frombuffer(data, dtype=">i2").astype(np.int16),
-            volts_per_code=scale,
-            volts_at_zero=zero,
+            codes=codes,
+            volts_per_code=gain,
+            volts_at_zero=fields["zero"] + (shift - fields.get("reference", 0.0)) * gain,
             sample_interval=step,
-            first_seconds=first,
-            lowest_code=-(codes // 2),
-            highest_code=codes // 2 - 1,
+            first_seconds=fields["first"] - fields.get("first index", 0.0) * step,
+            lowest_code=lowest - shift,
+            highest_code=highest - shift,
         )
 
+    def _preamble(self, channel: int) -> tuple[dict[str, float], str]:
+        fields: dict[str, float] = {}
+        told = ""
+        for query in self._dialect.waveform.preamble:
+            told = fill(query.ask, channel=channel)
+            answer = self.ask(told)
+            try:
+                fields |= read_preamble(query, answer)
+            except (NumberError, ValueError) as error:
+                problem = f"the preamble {answer[:120]!r} can't be read: {error}"
+                raise self._faulty(told, problem) from error
+        return fields, told
+
     def _faulty(self, command: str, problem: str) -> BadReply:
-        return BadReply(
-            self.address, command, problem, "check that the dialect fits this instrument"
-        )
+        return BadReply(self.address, command, problem, OTHER_DIALECT)
+
+
+def next_step(value: float) -> float:
+    """Return the smallest of ... 1, 2, 5, 10 ... that is not below value."""
+    decade = math.floor(math.log10(value))
+    for digit in (1, 2, 5, 10):
+        # Written as text and read back, so that 2e-7 is 2e-7 and not its neighbour.
+        candidate = float(f"{digit}e{decade}")
+        if candidate >= value * (1 - 1e-9):
+            return candidate
+    return float(f"1e{decade + 1}")
+
+
+def previous_step(value: float) -> float:
+    """Return the largest of ... 1, 2, 5, 10 ... that is not above value."""
+    decade = math.floor(math.log10(value) + 1e-9)
+    for digit in (5, 2, 1):
+        candidate = float(f"{digit}e{decade}")
+        if candidate <= value * (1 + 1e-9):
+            return candidate
+    return float(f"5e{decade - 1}")

@@ -6,12 +6,14 @@ the clamp and the probe; this module walks that way in both directions.
 """
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path as FilePath
 from typing import Annotated, Any
 
 from pydantic import BeforeValidator, Field
 
+from pulsetally.drivers.dialect import Dialect, GeneratorDialect, OscilloscopeDialect
+from pulsetally.sequencer.dialects import DialectError, find_dialect, shipped_dialects
 from pulsetally.sequencer.errors import BenchError
 from pulsetally.sequencer.models import Model, fault, field_names, quantity, validate
 from pulsetally.sequencer.quantities import (
@@ -25,9 +27,8 @@ from pulsetally.sequencer.quantities import (
     QuantityError,
     parse_quantity,
 )
-from pulsetally.sequencer.yaml_places import Path, load_yaml, read_text
+from pulsetally.sequencer.yaml_places import Path, load_yaml, nearest, read_text
 
-DIALECTS = ("scpi99",)
 # Boltzmann constant over elementary charge, exact in the SI of 2019, at 27 degrees Celsius.
 _THERMAL_VOLTS = 1.380649e-23 / 1.602176634e-19 * 300.15
 
@@ -47,8 +48,10 @@ def _load(written: object) -> object:
 
 
 def _dialect(written: object) -> object:
-    if written not in DIALECTS:
-        raise fault(f"there is no dialect {written!r}", f"write one of {', '.join(DIALECTS)}")
+    if not isinstance(written, str) or not written.strip():
+        raise fault(
+            f"{written!r} names no dialect", f"write one of {', '.join(shipped_dialects())}"
+        )
     return written
 
 
@@ -66,7 +69,7 @@ def _address(written: object) -> object:
 
 
 Address = Annotated[str, BeforeValidator(_address)]
-Dialect = Annotated[str, BeforeValidator(_dialect)]
+DialectName = Annotated[str, BeforeValidator(_dialect)]
 
 
 def _channel() -> Any:
@@ -77,7 +80,7 @@ class GeneratorSection(Model):
     """Where the function generator is and what it is told about its load."""
 
     address: Address
-    dialect: Dialect = "scpi99"
+    dialect: DialectName = "scpi99"
     channel: Annotated[float, _channel()] = 1.0
     load: Annotated[float, BeforeValidator(_load)] = math.inf
 
@@ -86,7 +89,7 @@ class OscilloscopeSection(Model):
     """Where the oscilloscope is and what its channels watch."""
 
     address: Address
-    dialect: Dialect = "scpi99"
+    dialect: DialectName = "scpi99"
     source_channel: Annotated[float, Field(alias="source channel"), _channel()] = 1.0
     node_channel: Annotated[float, Field(alias="node channel"), _channel()] = 2.0
 
@@ -184,13 +187,14 @@ class Bench:
     file: str
     text: str
     model: BenchModel
+    generator_dialect: GeneratorDialect
+    oscilloscope_dialect: OscilloscopeDialect
 
     def with_addresses(self, *, generator: str, oscilloscope: str, clock: str | None) -> "Bench":
         """Return the same bench with its instruments at other addresses."""
         model = self.model
-        return Bench(
-            file=self.file,
-            text=self.text,
+        return replace(
+            self,
             model=model.model_copy(
                 update={
                     "generator": model.generator.model_copy(update={"address": generator}),
@@ -267,22 +271,58 @@ def load_bench(path: FilePath) -> Bench:
     text, mistakes = read_text(path, "bench file", "name a bench file; README.md shows one")
     if mistakes:
         raise BenchError(mistakes)
-    return parse_bench(text, file=str(path))
+    return parse_bench(text, file=str(path), folder=path.parent)
 
 
-def parse_bench(text: str, *, file: str) -> Bench:
-    """Read a bench file's text. Raises BenchError with every mistake."""
+def parse_bench(text: str, *, file: str, folder: FilePath | None = None) -> Bench:
+    """Read a bench file's text. Raises BenchError with every mistake.
+
+    folder: where a dialect that is named by its path is looked for.
+    """
     placed = load_yaml(text, file)
     if placed.mistakes:
         raise BenchError(placed.mistakes)
     model, mistakes = validate(BenchModel, placed, known=_known)
     if mistakes:
         raise BenchError(sorted(mistakes, key=lambda each: (each.line, each.column)))
+    path: Path
     if model.oscilloscope.source_channel == model.oscilloscope.node_channel:
-        path: Path = ("oscilloscope", "node channel")
+        path = ("oscilloscope", "node channel")
         problem = "both channels are the same; one watches the terminal, one the cell"
-        raise BenchError([placed.mistake(path, problem, "write the channel that watches the cell")])
-    return Bench(file=file, text=text, model=model)
+        remedy = "write the channel that watches the cell"
+        mistakes.append(placed.mistake(path, problem, remedy))
+    spoken: dict[str, Dialect] = {}
+    base = folder or FilePath()
+    for section, name in (
+        ("generator", model.generator.dialect),
+        ("oscilloscope", model.oscilloscope.dialect),
+    ):
+        path = (section, "dialect")
+        if name not in shipped_dialects() and not (base / name).is_file():
+            problem = f"there is no dialect {name!r}, shipped or as a file"
+            remedy = f"{nearest(name, shipped_dialects())}, or the path of your own"
+            mistakes.append(placed.mistake(path, problem, remedy))
+            continue
+        try:
+            spoken[section] = find_dialect(name, base)
+        except DialectError as error:
+            mistakes += [each for each in error.mistakes if each not in mistakes]
+            continue
+        if getattr(spoken[section], section) is None:
+            problem = f"the dialect {name!r} doesn't describe this instrument"
+            remedy = f"name a dialect with a section {section!r}"
+            mistakes.append(placed.mistake(path, problem, remedy))
+    generator = spoken["generator"].generator if "generator" in spoken else None
+    oscilloscope = spoken["oscilloscope"].oscilloscope if "oscilloscope" in spoken else None
+    if mistakes or generator is None or oscilloscope is None:
+        raise BenchError(mistakes)
+    return Bench(
+        file=file,
+        text=text,
+        model=model,
+        generator_dialect=generator,
+        oscilloscope_dialect=oscilloscope,
+    )
 
 
 def _known(path: Path) -> list[str]:

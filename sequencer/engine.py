@@ -4,7 +4,6 @@ The engine knows no screen. It asks the logbook to record each event before anyb
 it and before the next pulse goes out; however it ends, the output is off and read back as off.
 """
 
-import math
 from collections.abc import Callable, Generator, Iterator
 from dataclasses import replace
 
@@ -45,8 +44,6 @@ from pulsetally.sequencer.safety import StopSwitch
 
 # A round that lost a pulse starts again; one that loses it again and again has a cause.
 MOST_ATTEMPTS = 3
-# Common practice: an output relay is quiet some 10 ms after it was switched.
-_RELAY_SECONDS = 0.05
 _ARM_SECONDS = 5.0
 _DONE_SECONDS = 3.0
 _POLL_SECONDS = 0.002
@@ -265,21 +262,13 @@ class _Conductor:
         )
         acquired = self._oscilloscope.set_acquisition(self._acquisition(pulse))
         self._generator.switch(on=True)
-        self._clock.sleep(_RELAY_SECONDS)
+        self._clock.sleep(self._generator.settle_seconds)
         self._ready_for = pulse
         yield PulseSetUp(
             pulse=pulse.name,
             settings={
-                "base": generated.base,
-                "level": generated.level,
-                "width": generated.width,
-                "edge": generated.edge,
-                "period": generated.period,
-                "sample interval": acquired.sample_interval,
-                "points": float(acquired.points),
-                "before": acquired.before,
-                "trigger level": acquired.trigger_volts,
-                **{f"span of channel {name}": volts for name, volts in acquired.spans.items()},
+                **{f"generator {name}": value for name, value in generated.items()},
+                **{f"oscilloscope {name}": value for name, value in acquired.items()},
             },
         )
 
@@ -292,7 +281,7 @@ class _Conductor:
         # As much time after the pulse as it lasts: there the cell gives back what it didn't keep.
         span = pulse.duration * 2 / (1 - _BEFORE)
         return AcquisitionSetting(
-            sample_interval=next_in_1_2_5(span / points),
+            sample_interval=self._oscilloscope.interval_for(span, points),
             points=points,
             before=_BEFORE,
             spans={
@@ -345,17 +334,6 @@ class _Conductor:
             if condition():
                 return True
         return False
-
-
-def next_in_1_2_5(value: float) -> float:
-    """Return the smallest of ... 1, 2, 5, 10 ... that is not below value."""
-    decade = math.floor(math.log10(value))
-    for step in (1.0, 2.0, 5.0, 10.0):
-        # Written as text and read back, so that 2e-7 is 2e-7 and not its neighbour.
-        candidate = float(f"{step:g}e{decade}")
-        if candidate >= value * (1 - 1e-9):
-            return candidate
-    return float(f"1e{decade + 1}")
 
 
 def _span(levels: list[float]) -> float:

@@ -41,21 +41,27 @@ def open_instruments(bench: Bench) -> Instruments:
     model = bench.model
     links: list[VisaLink] = []
     try:
-        for address in (model.generator.address, model.oscilloscope.address):
-            links.append(VisaLink(address))
+        for address, line in (
+            (model.generator.address, bench.generator_dialect.line),
+            (model.oscilloscope.address, bench.oscilloscope_dialect.line),
+        ):
+            # Some oscilloscopes have a generator built in: one instrument, one line.
+            if not links or links[0].address != address:
+                links.append(VisaLink(address, ending=line.ending, gap_seconds=line.gap_seconds))
         generator = FunctionGenerator(
             links[0],
+            bench.generator_dialect,
             channel=int(model.generator.channel),
             load=model.generator.load,
             limit_volts=bench.panel_limit(),
         )
-        oscilloscope = Oscilloscope(links[1])
+        oscilloscope = Oscilloscope(links[-1], bench.oscilloscope_dialect)
         generator.identify()
         oscilloscope.identify()
         clock: Clock = WallClock()
         if model.clock is not None:
             links.append(VisaLink(model.clock))
-            clock = BenchClock(links[2])
+            clock = BenchClock(links[-1])
     except PulsetallyError:
         for link in links:
             with contextlib.suppress(Exception):

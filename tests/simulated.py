@@ -7,9 +7,15 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
 
+from pulsetally.drivers.dialect import GeneratorDialect
 from pulsetally.sequencer.bench import Bench
 from pulsetally.sequencer.rehearsal import shipped_bench
 from pulsetally.simulators.simulate import Addresses, SimulationSettings, serve_until
+
+
+def scpi99() -> GeneratorDialect:
+    """Return how a function generator is spoken to in the first dialect."""
+    return shipped_bench().generator_dialect
 
 
 class PlainClient:

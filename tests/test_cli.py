@@ -3,6 +3,7 @@
 import json
 import os
 import signal
+import socket
 import subprocess
 import sys
 import time
@@ -182,7 +183,11 @@ def test_an_instrument_that_is_not_there_gives_a_sentence(tmp_path: Path) -> Non
 
 
 def test_something_else_at_the_address_gives_a_sentence(tmp_path: Path) -> None:
-    with server(lambda connection, line: connection.sendall(b"220 mail ready\x1b[2J\n")) as address:
+
+    def answer(connection: socket.socket, line: bytes) -> None:
+        connection.sendall(b"220 mail ready\x1b[2J\n")
+
+    with server(answer) as address:
         bench_at(tmp_path, address, address)
         done = pulsetally("run", "full_count", "--bench", "bench.yaml", cwd=tmp_path)
     assert done.returncode == 1

@@ -34,7 +34,7 @@ from pulsetally.sequencer.results import list_runs, run_result, run_shots
 from pulsetally.sequencer.safety import StopSwitch
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.simulate import SimulationSettings
-from tests.simulated import Simulated, simulated
+from tests.simulated import Simulated, scpi99, simulated
 
 Kind = TypeVar("Kind")
 
@@ -288,7 +288,7 @@ def test_the_charge_of_each_pulse_is_the_charge_the_cell_took(
 def test_a_pulse_beyond_the_limits_is_never_sent(table: Simulated) -> None:
     link = VisaLink(table.addresses.generator)
     try:
-        generator = FunctionGenerator(link, limit_volts=6.0)
+        generator = FunctionGenerator(link, scpi99(), limit_volts=6.0)
         generator.prepare()
         with pytest.raises(LimitError, match="it was not sent"):
             generator.set_pulse(

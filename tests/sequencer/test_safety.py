@@ -12,6 +12,7 @@ from pulsetally.drivers.link import VisaLink
 from pulsetally.sequencer.errors import OutputsNotConfirmed
 from pulsetally.sequencer.safety import StopSwitch, quiet, signals
 from tests.drivers.misbehaving import server
+from tests.simulated import scpi99
 
 
 class Output:
@@ -39,7 +40,7 @@ def go_quiet(answer: Callable[[socket.socket, bytes], None]) -> None:
     with server(answer) as address:
         link = VisaLink(address, seconds=0.2)
         try:
-            quiet(FunctionGenerator(link, limit_volts=5.0), link)
+            quiet(FunctionGenerator(link, scpi99(), limit_volts=5.0), link)
         finally:
             link.close()
 
@@ -60,7 +61,7 @@ def test_a_generator_that_is_gone_is_said_loudly() -> None:
     with server(Output().answer) as address:
         link = VisaLink(address, seconds=0.2)
     with pytest.raises(OutputsNotConfirmed, match="by hand"):
-        quiet(FunctionGenerator(link, limit_volts=5.0), link)
+        quiet(FunctionGenerator(link, scpi99(), limit_volts=5.0), link)
     link.close()
 
 

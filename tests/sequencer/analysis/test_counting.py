@@ -17,7 +17,8 @@ def test_the_crossing_lies_between_the_last_below_and_the_first_above() -> None:
 
 def test_negative_pulses_cross_downwards() -> None:
     found = count_read([-1.0, -2.0, -3.0], -2.5, rising=False)
-    assert (found.count, found.crossing) == (3, pytest.approx(2.5))
+    assert found.count == 3
+    assert found.crossing == pytest.approx(2.5)
 
 
 def test_a_first_pulse_above_has_no_crossing() -> None:
