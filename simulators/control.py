@@ -6,7 +6,7 @@ For rehearsals and tests only. No real table has one, so nothing that measures m
 from collections.abc import Callable
 
 from pulsetally.simulators.clock import VirtualClock
-from pulsetally.simulators.function_generator import FunctionGenerator
+from pulsetally.simulators.generator_model import GeneratorModel
 from pulsetally.simulators.scpi_device import Call, Command, ScpiDevice
 from pulsetally.simulators.scpi_numbers import format_integer, format_real
 from pulsetally.simulators.scpi_parameters import number
@@ -29,7 +29,7 @@ class BenchControl(ScpiDevice):
         *,
         table: Table,
         clock: VirtualClock,
-        generator: FunctionGenerator,
+        generator: GeneratorModel,
         farads: float,
     ) -> None:
         super().__init__(identity)

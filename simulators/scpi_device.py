@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from pulsetally.simulators.scpi_errors import ScpiError
 from pulsetally.simulators.scpi_headers import HeaderTable
 from pulsetally.simulators.scpi_numbers import format_integer
-from pulsetally.simulators.scpi_parameters import Parameter, Switch, Value, number
+from pulsetally.simulators.scpi_parameters import Parameter, Value, number
 from pulsetally.simulators.scpi_status import OPERATION_COMPLETE, EventGroup, Status
 
 SCPI_VERSION = "1999.0"
@@ -60,6 +60,7 @@ class Command:
     coupled: a setting that is checked against others when the group of coupled commands
     ends (IEEE 488.2 section 6.4.5), that is before any other command or query.
     indefinite: the answer has no end of its own, so that no query may follow it (-440).
+    unterminated: no newline is sent behind the answer when it is the message's last.
     """
 
     pattern: str
@@ -70,17 +71,36 @@ class Command:
     answer: Callable[[Call], Answer] | None = None
     coupled: bool = False
     indefinite: bool = False
+    unterminated: bool = False
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Manner:
+    """How a family of instruments speaks, whatever the instrument is for.
+
+    name: of the family; identity: what it adds to the model in *IDN?.
+    system: returns the rows for the error queue and whatever else every instrument of
+    the family has besides the common commands.
+    echoes: answers repeat the header of the query, common commands' excepted.
+    """
+
+    name: str
+    identity: str
+    system: Callable[["ScpiDevice"], list[Command]]
+    echoes: bool = False
 
 
 class ScpiDevice:
     """What the engine needs to know of an instrument, shared by all its connections."""
 
-    def __init__(self, identity: str) -> None:
+    def __init__(self, identity: str, manner: Manner | None = None) -> None:
         self.identity = identity
+        self.manner = SCPI99 if manner is None else manner
         self.status = Status()
         self._completion_wanted = False
         self.table: HeaderTable[Command] = HeaderTable()
         self.declare(common_commands(self))
+        self.declare(self.manner.system(self))
 
     def declare(self, commands: Iterable[Command]) -> None:
         """Add rows to the command table."""
@@ -129,7 +149,7 @@ class ScpiDevice:
 
 
 def common_commands(device: ScpiDevice) -> list[Command]:
-    """Return the IEEE 488.2 commands and the STATus and SYSTem commands of SCPI-99."""
+    """Return the IEEE 488.2 commands, which every family has."""
     status = device.status
     byte = number(0, 255, 0, whole=True)
 
@@ -180,6 +200,13 @@ def common_commands(device: ScpiDevice) -> list[Command]:
         Command(pattern="*TST", answer=lambda _: "0"),
         Command(pattern="*TRG", execute=lambda _: device.trigger()),
         Command(pattern="*WAI", execute=wait),
+    ]
+
+
+def scpi99_system(device: ScpiDevice) -> list[Command]:
+    """Return the STATus and SYSTem commands of SCPI-99."""
+    status = device.status
+    return [
         Command(pattern=":STATus:PRESet", execute=lambda _: status.preset()),
         *_event_group_commands(":STATus:OPERation", status.operation),
         *_event_group_commands(":STATus:QUEStionable", status.questionable),
@@ -226,11 +253,4 @@ def _event_group_commands(root: str, group: EventGroup) -> list[Command]:
     ]
 
 
-def on_off(execute: Callable[[Call], None], answer: Callable[[], bool], pattern: str) -> Command:
-    """Return the row of a setting that is on or off."""
-    return Command(
-        pattern=pattern,
-        parameters=(Switch(),),
-        execute=execute,
-        answer=lambda _: "1" if answer() else "0",
-    )
+SCPI99 = Manner(name="scpi99", identity="", system=scpi99_system)

@@ -57,7 +57,7 @@ class ScpiEngine:
         device.begin_message()
         answers: list[bytes] = []
         path: tuple[str, ...] = ()
-        endless = False
+        endless = unterminated = False
         for unit in split_units(message):
             try:
                 header, data = split_header(unit)
@@ -75,8 +75,10 @@ class ScpiEngine:
                     raise ScpiError(-440)
                 answer = self._do(command, query, suffixes, elements, bool(answers))
                 if answer is not None:
+                    if device.manner.echoes and not header.startswith("*"):
+                        answer = b"%s %s" % (":".join(mnemonics).upper().encode("ascii"), answer)
                     answers.append(answer)
-                    endless = command.indefinite
+                    endless, unterminated = command.indefinite, command.unterminated
                 device.refresh()
             except ScpiError as error:
                 device.status.report(error)
@@ -85,7 +87,9 @@ class ScpiEngine:
                     break
         self._end_coupled()
         device.refresh()
-        return b";".join(answers) + b"\n" if answers else b""
+        if not answers:
+            return b""
+        return b";".join(answers) + (b"" if unterminated else b"\n")
 
     def _end_coupled(self) -> None:
         try:

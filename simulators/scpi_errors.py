@@ -163,14 +163,22 @@ class ScpiError(Exception):
         super().__init__(number, detail)
         self.number, self.detail = number, detail
 
-    def entry(self) -> str:
-        """Return the answer to SYSTem:ERRor?: number, then the quoted description."""
-        text = ERROR_TEXTS.get(self.number, "Device-specific error")
+    @property
+    def standard_text(self) -> str:
+        """The text that belongs to the number, without what the device adds."""
+        return ERROR_TEXTS.get(self.number, "Device-specific error")
+
+    def entry(self, number_format: str = "d") -> str:
+        """Return the answer to SYSTem:ERRor?: number, then the quoted description.
+
+        number_format: of the number; '+d' for a family that always writes the sign.
+        """
+        text = self.standard_text
         if self.detail:
             # What came over the wire is shown, but never with quotes or control characters.
             shown = "".join(c if " " <= c <= "~" and c != '"' else "." for c in self.detail)
             text = f"{text};{shown}"[:_LONGEST_DESCRIPTION]
-        return f'{self.number},"{text}"'
+        return f'{self.number:{number_format}},"{text}"'
 
 
 class ErrorQueue:

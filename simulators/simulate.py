@@ -15,8 +15,9 @@ from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
 from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.clock import VirtualClock
 from pulsetally.simulators.control import BenchControl
-from pulsetally.simulators.function_generator import FunctionGenerator
-from pulsetally.simulators.oscilloscope import Oscilloscope
+from pulsetally.simulators.digitizer import Digitizer
+from pulsetally.simulators.families import FAMILIES
+from pulsetally.simulators.generator_model import GeneratorModel
 from pulsetally.simulators.server import LOOPBACK, DeviceServer
 from pulsetally.simulators.table import Table
 
@@ -27,6 +28,7 @@ VERSION = "1"
 class SimulationSettings:
     """What the simulated bench is made of.
 
+    family: the language of generator and oscilloscope, a key of FAMILIES.
     seed: of everything random. *_port: 0 for any free one.
     exchange_seconds: virtual time that each program message takes.
     until_stdin_closes: end when standard input does, besides SIGTERM and SIGINT.
@@ -34,6 +36,7 @@ class SimulationSettings:
 
     cell: CellDescription = field(default_factory=CellDescription)
     wiring: Wiring = field(default_factory=Wiring)
+    family: str = "scpi99"
     seed: int = 1
     generator_port: int = 0
     oscilloscope_port: int = 0
@@ -42,6 +45,8 @@ class SimulationSettings:
     until_stdin_closes: bool = False
 
     def __post_init__(self) -> None:
+        if self.family not in FAMILIES:
+            raise ValueError(f"family must be one of {', '.join(FAMILIES)}, not {self.family}")
         for name in ("generator_port", "oscilloscope_port", "control_port"):
             if not 0 <= getattr(self, name) <= 65535:
                 raise ValueError(f"{name} must be from 0 to 65535, not {getattr(self, name)}")
@@ -67,28 +72,39 @@ class Bench:
         cell, wiring = settings.cell, settings.wiring
         self.table = Table(cell, wiring, seed=settings.seed)
         self.clock = VirtualClock(self.table)
-        self.oscilloscope = Oscilloscope(
-            _identity("OSCILLOSCOPE", settings), clock=self.clock, seed=settings.seed
+        family = FAMILIES[settings.family]
+        self.digitizer = Digitizer(
+            clock=self.clock,
+            converter=family.converter,
+            power_on=family.scope_power_on,
+            seed=settings.seed,
         )
-        self.table.observe(self.oscilloscope)
-        self.generator = FunctionGenerator(
-            _identity("FUNCTION GENERATOR", settings),
+        self.table.observe(self.digitizer)
+        self.generator_model = GeneratorModel(
             table=self.table,
             clock=self.clock,
             source_ohms=wiring.source_ohms,
-            sync=self.oscilloscope.trigger_externally,
+            sync=self.digitizer.trigger_externally,
+        )
+        adds = family.manner.identity
+        self.oscilloscope = family.oscilloscope(
+            _identity("OSCILLOSCOPE", adds, settings), self.digitizer
+        )
+        self.generator = family.generator(
+            _identity("FUNCTION GENERATOR", adds, settings), self.generator_model
         )
         self.control = BenchControl(
-            _identity("BENCH CONTROL", settings),
+            _identity("BENCH CONTROL", "", settings),
             table=self.table,
             clock=self.clock,
-            generator=self.generator,
+            generator=self.generator_model,
             farads=cell.farads + wiring.probe_farads,
         )
 
 
-def _identity(what: str, settings: SimulationSettings) -> str:
-    return f"PULSETALLY,SIMULATED {what},{settings.seed},{VERSION}"
+def _identity(what: str, adds: str, settings: SimulationSettings) -> str:
+    model = f"SIMULATED {what} {adds}".rstrip()
+    return f"PULSETALLY,{model},{settings.seed},{VERSION}"
 
 
 async def serve_until(
@@ -174,6 +190,12 @@ def main(arguments: Sequence[str] | None = None) -> int:
         description="Serve a simulated function generator and oscilloscope on loopback ports.",
     )
     parser.add_argument("--json", action="store_true", help="print the addresses as JSON")
+    parser.add_argument(
+        "--family",
+        choices=tuple(FAMILIES),
+        default="scpi99",
+        help="what generator and oscilloscope speak",
+    )
     parser.add_argument("--seed", type=int, default=1, help="seed of everything random")
     parser.add_argument(
         "--domains",
@@ -192,6 +214,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         cell = cell_with(given.domains)
         settings = SimulationSettings(
             cell=cell,
+            family=given.family,
             seed=given.seed,
             generator_port=given.generator_port,
             oscilloscope_port=given.oscilloscope_port,

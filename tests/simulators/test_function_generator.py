@@ -5,7 +5,7 @@ import math
 import pytest
 
 from pulsetally.simulators.cell import CellDescription
-from pulsetally.simulators.function_generator import VOLTS_PER_CODE
+from pulsetally.simulators.generator_model import VOLTS_PER_CODE
 from pulsetally.simulators.scpi_engine import ScpiEngine
 from pulsetally.simulators.simulate import Bench, SimulationSettings
 
@@ -269,7 +269,7 @@ def test_switching_off_opens_at_once_and_calls_a_closing_off(talk: Talk) -> None
     talk.switch_on()
     assert talk.bench.table.terminal_volts == pytest.approx(1, abs=0.01)
     talk.say(":OUTP OFF")
-    assert talk.bench.generator.relay_on is False
+    assert talk.bench.generator_model.relay_on is False
     # An open output shows the node, which the probe discharges (A: 10 Mohm, 307 pF).
     node = talk.bench.table.node_volts
     talk.advance(10e6 * 307.139593760e-12)
@@ -400,11 +400,11 @@ def test_reset_opens_the_output_and_restores_everything(talk: Talk) -> None:
 
 def test_the_largest_emf_counts_only_on_a_closed_output(talk: Talk) -> None:
     talk.say(":VOLT:HIGH 9;LOW 0;:INIT;*TRG;*WAI")
-    assert talk.bench.generator.largest_emf_volts == 0
+    assert talk.bench.generator_model.largest_emf_volts == 0
     talk.say(":VOLT:HIGH 2;LOW -1")
     talk.switch_on()
-    assert talk.bench.generator.largest_emf_volts == pytest.approx(1, abs=1e-3)
+    assert talk.bench.generator_model.largest_emf_volts == pytest.approx(1, abs=1e-3)
     talk.say(":INIT;*TRG;*WAI")
-    assert talk.bench.generator.largest_emf_volts == pytest.approx(2, abs=1e-3)
+    assert talk.bench.generator_model.largest_emf_volts == pytest.approx(2, abs=1e-3)
     talk.say(":VOLT:LOW -6")
-    assert talk.bench.generator.largest_emf_volts == pytest.approx(6, abs=1e-3)
+    assert talk.bench.generator_model.largest_emf_volts == pytest.approx(6, abs=1e-3)

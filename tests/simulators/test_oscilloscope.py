@@ -8,7 +8,7 @@ import pytest
 from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import CellDescription
-from pulsetally.simulators.oscilloscope import first_crossing, next_step
+from pulsetally.simulators.digitizer import first_crossing, next_step
 from pulsetally.simulators.scpi_engine import ScpiEngine
 from pulsetally.simulators.simulate import Bench, SimulationSettings
 
@@ -310,9 +310,8 @@ def test_long_waits_keep_no_more_than_the_window(talk: Talk) -> None:
     talk.say(":SENS:SWE:POIN 100;TINT 1E-6;OREF:LOC 0.5;:TRIG:SOUR INT1;LEV 3.99;SLOP NEG;:INIT")
     for _ in range(50):
         talk.advance(0.001)
-    acquisition = talk.bench.oscilloscope._acquisition
-    assert acquisition is not None
-    assert len(acquisition.stretches) <= 3
+    assert talk.bench.digitizer.is_acquiring
+    assert talk.bench.digitizer.kept_stretches <= 3
 
 
 @pytest.mark.parametrize(

@@ -1,0 +1,307 @@
+"""What a pulse generator with one output does, whatever language it is spoken to in.
+
+Its levels have 14 bits, its times 1 ns; the panel shows levels into the load it was told
+about, while the terminal shows what the wiring makes of them. A changed level moves the
+resting output at once, also in the middle of a round. Refusals are the numbered errors of
+SCPI-99, which every family of instruments here reports.
+"""
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from enum import Enum, auto
+
+from pulsetally.simulators.clock import Appointment, VirtualClock
+from pulsetally.simulators.drive import PulseTrain
+from pulsetally.simulators.scpi_errors import ScpiError
+from pulsetally.simulators.table import Table
+
+# The EMF is a 14-bit two's complement code over -10 V to +10 V.
+LEVEL_BITS = 14
+EMF_SPAN_VOLTS = 10.0
+VOLTS_PER_CODE = 2 * EMF_SPAN_VOLTS / (1 << LEVEL_BITS)
+_LARGEST_CODE = (1 << (LEVEL_BITS - 1)) - 1
+
+TIME_STEPS_PER_SECOND = 1e9
+SMALLEST_EDGE_SECONDS = 5e-9
+LARGEST_EDGE_SECONDS = 1.0
+SMALLEST_WIDTH_SECONDS = 20e-9
+LARGEST_WIDTH_SECONDS = 1000.0
+SMALLEST_PERIOD_SECONDS = 40e-9
+LARGEST_PERIOD_SECONDS = 2000.0
+MOST_PULSES = 10**9
+SMALLEST_LOAD_OHMS = 1.0
+LARGEST_LOAD_OHMS = 1e6
+
+RELAY_SECONDS = 0.010
+# A linear ramp goes from 10 % to 90 % in this part of its whole duration.
+RAMP_SHARE = 0.8
+
+
+class FireSource(Enum):
+    """What fires a burst that was initiated."""
+
+    COMMAND = auto()
+    AT_ONCE = auto()
+    EXTERNAL = auto()
+
+
+def stepped(seconds: float) -> float:
+    """Return a time rounded to the generator's steps."""
+    return round(seconds * TIME_STEPS_PER_SECOND) / TIME_STEPS_PER_SECOND
+
+
+def _code(emf_volts: float) -> int:
+    # +10 V has no code of its own: the converter stops one step below.
+    return min(round(emf_volts / VOLTS_PER_CODE), _LARGEST_CODE)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PulseSettings:
+    """What the generator is set to.
+
+    high_emf_volts, low_emf_volts: levels as asked for, before the converter rounds them,
+    so that a level may be given as the sum of two settings and is rounded only once.
+    load_ohms: the load that levels on the panel are meant for; inf for an open circuit.
+    width_seconds at 50 %, edges from 10 % to 90 %.
+    """
+
+    high_emf_volts: float = 819 * VOLTS_PER_CODE
+    low_emf_volts: float = 0.0
+    load_ohms: float = math.inf
+    inverted: bool = False
+    width_seconds: float = 100e-6
+    period_seconds: float = 1e-3
+    leading_seconds: float = 10e-9
+    trailing_seconds: float = 10e-9
+    count: int = 1
+
+    @property
+    def high_volts(self) -> float:
+        """EMF of the high level as the converter makes it."""
+        return VOLTS_PER_CODE * _code(self.high_emf_volts)
+
+    @property
+    def low_volts(self) -> float:
+        """EMF of the low level as the converter makes it."""
+        return VOLTS_PER_CODE * _code(self.low_emf_volts)
+
+    @property
+    def base_volts(self) -> float:
+        """EMF at rest."""
+        return self.high_volts if self.inverted else self.low_volts
+
+    @property
+    def level_volts(self) -> float:
+        """EMF on the flat top of a pulse."""
+        return self.low_volts if self.inverted else self.high_volts
+
+    def conflict(self) -> str:
+        """Return what about the settings can't go together; '' when all can."""
+        half_ramps = (self.leading_seconds + self.trailing_seconds) / RAMP_SHARE / 2
+        slack = 0.1 / TIME_STEPS_PER_SECOND
+        largest_volts = max(abs(self.high_emf_volts), abs(self.low_emf_volts))
+        if largest_volts > EMF_SPAN_VOLTS * (1 + 1e-12):
+            return "a level is out of range"
+        if self.high_volts <= self.low_volts:
+            return "HIGH is not above LOW"
+        if self.width_seconds < half_ramps - slack:
+            return "the edges are longer than the width"
+        if self.width_seconds + half_ramps > self.period_seconds + slack:
+            return "width and edges are longer than the period"
+        return ""
+
+
+class GeneratorModel:
+    """The generator of the simulated bench.
+
+    source_ohms: output resistance, which the panel's levels assume.
+    sync: called with the instant (s) at which a burst begins; the sync output.
+    changed: called when something changed by itself as time passed.
+    wanted: the settings as sent so far; they are taken over together (take_over).
+    """
+
+    def __init__(
+        self,
+        *,
+        table: Table,
+        clock: VirtualClock,
+        source_ohms: float = 50.0,
+        sync: Callable[[float], None] = lambda _: None,
+    ) -> None:
+        self._table, self._clock = table, clock
+        self.source_ohms, self._sync = source_ohms, sync
+        self.changed: Callable[[], None] = lambda: None
+        self._settings = self.wanted = PulseSettings()
+        self._conflict = False
+        self.fire_source = FireSource.COMMAND
+        self._initiated = False
+        self._relay_on = False
+        self._closing: Appointment | None = None
+        self._closed = False
+        self._burst: tuple[PulseTrain, Appointment] | None = None
+        self._largest_emf_volts = 0.0
+        self._rest()
+
+    # What it is doing.
+
+    @property
+    def relay_on(self) -> bool:
+        """Whether the output is commanded on."""
+        return self._relay_on
+
+    @property
+    def is_settling(self) -> bool:
+        """Whether the output relay is on its way to being closed."""
+        return self._closing is not None
+
+    @property
+    def is_waiting(self) -> bool:
+        """Whether a burst is initiated and waits for its trigger."""
+        return self._initiated
+
+    @property
+    def is_running(self) -> bool:
+        """Whether a burst runs."""
+        return self._burst is not None
+
+    @property
+    def largest_emf_volts(self) -> float:
+        """Largest EMF, without its sign, that was ever put on the closed output."""
+        return self._largest_emf_volts
+
+    # Settings.
+
+    def reset(self) -> None:
+        """Open the output first, then go back to the settings after power-on."""
+        self.switch_output(False)
+        self._initiated = False
+        self.fire_source = FireSource.COMMAND
+        self._settings = self.wanted = PulseSettings()
+        self._end_burst()
+        self._rest()
+
+    def forget_conflict(self) -> None:
+        """Begin anew after a group of settings that was put back."""
+        self._conflict = False
+
+    def take_over(self) -> None:
+        """Check the wanted settings together; use them, or put the old ones back (-221)."""
+        wanted = self.wanted
+        if wanted == self._settings:
+            return
+        if problem := wanted.conflict():
+            self.wanted, self._conflict = self._settings, True
+            raise ScpiError(-221, problem)
+        before, self._settings = self._settings, wanted
+        if (before.base_volts, before.level_volts) != (wanted.base_volts, wanted.level_volts):
+            # New levels reach the output at once and cut a burst short; times wait for
+            # the next burst.
+            self._end_burst()
+            self._rest()
+
+    @property
+    def panel_factor(self) -> float:
+        """Volts on the panel for one volt of EMF, into the load that was told."""
+        load_ohms = self.wanted.load_ohms
+        return 1.0 if math.isinf(load_ohms) else load_ohms / (load_ohms + self.source_ohms)
+
+    # Bursts.
+
+    def initiate(self) -> None:
+        """Wait for a trigger, or fire when the source wants none; -213 when already busy."""
+        self.refuse_after_conflict()
+        if self._initiated or self._burst is not None:
+            raise ScpiError(-213)
+        self._initiated = True
+        if self.fire_source is FireSource.AT_ONCE:
+            self._fire()
+
+    def fire(self) -> None:
+        """Fire by command; -211 unless initiated with the command as source."""
+        self.refuse_after_conflict()
+        if not self._initiated or self.fire_source is not FireSource.COMMAND:
+            raise ScpiError(-211)
+        self._fire()
+
+    def abort(self) -> None:
+        """End a burst, or the waiting for one."""
+        self._initiated = False
+        self._end_burst()
+
+    def wait(self) -> None:
+        """Let time pass until the burst has ended; -214 when it waits for a trigger."""
+        if self._initiated:
+            raise ScpiError(-214)
+        if self._burst is not None:
+            self._clock.advance_to(self._burst[0].end_seconds)
+
+    def refuse_after_conflict(self) -> None:
+        """Raise -221 where the settings meant for what comes now were put back."""
+        if self._conflict:
+            raise ScpiError(-221, "the settings of this message were put back")
+
+    def _fire(self) -> None:
+        settings = self._settings
+        train = PulseTrain(
+            base_volts=settings.base_volts,
+            level_volts=settings.level_volts,
+            width_seconds=settings.width_seconds,
+            leading_seconds=settings.leading_seconds,
+            trailing_seconds=settings.trailing_seconds,
+            period_seconds=settings.period_seconds,
+            count=settings.count,
+            start_seconds=self._clock.now,
+        )
+        self._initiated = False
+        self._table.play(train)
+        self._note_emf(train.base_volts, train.level_volts)
+        self._burst = (train, self._clock.call_at(train.end_seconds, self._burst_ended))
+        self._sync(train.start_seconds)
+
+    def _burst_ended(self) -> None:
+        self._burst = None
+        self.changed()
+
+    def _end_burst(self) -> None:
+        if self._burst is None:
+            return
+        self._burst[1].cancel()
+        self._burst = None
+        self._table.stop_drive()
+
+    # The output.
+
+    def switch_output(self, on: bool) -> None:
+        """Close the relay, which takes RELAY_SECONDS, or open it at once."""
+        if on:
+            self.refuse_after_conflict()
+        if on == self._relay_on:
+            return
+        self._relay_on = on
+        if on:
+            self._closing = self._clock.call_at(self._clock.now + RELAY_SECONDS, self._close)
+            return
+        if self._closing is not None:
+            self._closing.cancel()
+            self._closing = None
+        # Opening takes no time: an interlock would not wait either.
+        self._closed = False
+        self._table.connect(False)
+
+    def _close(self) -> None:
+        self._closing = None
+        self._closed = True
+        self._table.connect(True)
+        self._note_emf(self._settings.base_volts)
+        if self._burst is not None:
+            self._note_emf(self._burst[0].level_volts)
+        self.changed()
+
+    def _rest(self) -> None:
+        self._table.rest_at(self._settings.base_volts)
+        self._note_emf(self._settings.base_volts)
+
+    def _note_emf(self, *volts: float) -> None:
+        if self._closed:
+            self._largest_emf_volts = max(self._largest_emf_volts, *map(abs, volts))
