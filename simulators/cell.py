@@ -21,7 +21,8 @@ DEFAULT_DOMAINS = 168
 
 # A normal distribution has no lower end: activation voltages stop at this part of their
 # mean, so that the law stays a barrier for every region.
-LEAST_ACTIVATION_SHARE = 0.01
+LEAST_ACTIVATION_SHARE = 0.05
+LEAST_ACTIVATION_VOLTS = 0.5
 
 # A cell counts as fully down below this up fraction, and as used again above the other.
 FULLY_DOWN_FRACTION = 1e-4
@@ -41,8 +42,10 @@ class CellDescription:
     remanent_polarization: C/m2 (1 uC/cm2 is 0.01 C/m2).
     relative_permittivity: of the film without switching.
     activation_volts, activation_spread: mean and standard deviation of the regions'
-    activation voltages, V; a normal distribution cut off at 1 % of its mean.
-    alpha: exponent of the activation law, 0.3 to 5 (below, no voltage stops switching).
+    activation voltages, V; a normal distribution cut off at 5 % of its mean;
+    the mean is at least 0.5 V (a lower barrier holds no polarization at microvolts, and
+    the solver would have to follow it there).
+    alpha: exponent of the activation law, 0.5 to 5 (far below, hardly a voltage stops switching).
     attempt_seconds: switching time at infinite voltage, s.
     regions: how many, from 1.
     leak_ohms: resistance across the film; inf for none.
@@ -69,7 +72,6 @@ class CellDescription:
             "area",
             "thickness",
             "relative_permittivity",
-            "activation_volts",
             "attempt_seconds",
         ):
             if not 0 < getattr(self, name) < math.inf:
@@ -77,8 +79,13 @@ class CellDescription:
         for name in ("remanent_polarization", "activation_spread"):
             if not 0 <= getattr(self, name) < math.inf:
                 raise ValueError(f"{name} is {getattr(self, name)}; it must be 0 or more")
-        if not 0.3 <= self.alpha <= 5:
-            raise ValueError(f"alpha is {self.alpha}; it must be from 0.3 to 5")
+        if not LEAST_ACTIVATION_VOLTS <= self.activation_volts < math.inf:
+            raise ValueError(
+                f"activation_volts is {self.activation_volts}; "
+                f"it must be at least {LEAST_ACTIVATION_VOLTS}"
+            )
+        if not 0.5 <= self.alpha <= 5:
+            raise ValueError(f"alpha is {self.alpha}; it must be from 0.5 to 5")
         if self.regions < 1:
             raise ValueError(f"regions is {self.regions}; it must be at least 1")
         if not self.leak_ohms > 0:

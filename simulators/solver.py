@@ -27,7 +27,7 @@ DENSE_TOLERANCE_VOLTS = 1e-4
 KINK_CAUTION = 0.25
 _LARGEST_GROWTH, _LARGEST_SHRINK, _SAFETY = 12.0, 0.15, 0.85
 FIRST_MOVE_VOLTS = 0.3
-_LEAST_SHARE = 1e-15
+_LEAST_SECONDS = 1e-24
 # A stretch over which less than this part of the cell could switch is left unswitched.
 QUIET_FRACTION = 1e-12
 
@@ -166,7 +166,7 @@ class Solver:
         seconds = self._next_seconds
         dense_volts = DENSE_TOLERANCE_VOLTS * (KINK_CAUTION if previous is None else 1)
         flipped = False
-        while seconds > _LEAST_SHARE * ramp.seconds:
+        while seconds > _LEAST_SECONDS:
             # A sliver left over would cost a whole step.
             if seconds > 0.9 * ramp.seconds:
                 seconds = ramp.seconds

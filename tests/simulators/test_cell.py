@@ -81,7 +81,7 @@ def test_slope_of_the_rates_is_their_difference_quotient(alpha: float) -> None:
 
 
 def test_nothing_switches_without_a_voltage() -> None:
-    cell = Cell(CellDescription(alpha=0.3), seed=1)
+    cell = Cell(CellDescription(alpha=0.5), seed=1)
     rates, slopes = cell.rates_and_slopes((0.0, -1.0))
     assert not rates.any()
     assert not slopes.any()
@@ -173,11 +173,11 @@ MISTAKES = [
     ("area", 0.0, "must be above 0"),
     ("thickness", -1e-9, "must be above 0"),
     ("relative_permittivity", math.inf, "must be above 0"),
-    ("activation_volts", math.nan, "must be above 0"),
+    ("activation_volts", math.nan, "must be at least 0.5"),
     ("attempt_seconds", 0.0, "must be above 0"),
     ("remanent_polarization", -0.1, "must be 0 or more"),
     ("activation_spread", -1.0, "must be 0 or more"),
-    ("alpha", 0.2, "must be from 0.3 to 5"),
+    ("alpha", 0.2, "must be from 0.5 to 5"),
     ("regions", 0, "must be at least 1"),
     ("leak_ohms", 0.0, "must be above 0"),
     ("imprint_volts", math.inf, "must be finite"),
