@@ -1,4 +1,4 @@
-"""Serve the simulated bench: a generator, an oscilloscope and a control port over TCP."""
+"""Serve the simulated bench: a generator, an oscilloscope and a control port on loopback."""
 
 import argparse
 import asyncio
@@ -7,9 +7,10 @@ import os
 import signal
 import sys
 import threading
-from collections.abc import Callable, Sequence
-from contextlib import suppress
+from collections.abc import Awaitable, Callable, Sequence
+from contextlib import AsyncExitStack, suppress
 from dataclasses import asdict, dataclass, field, replace
+from typing import Protocol
 
 from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
 from pulsetally.simulators.circuit import Wiring
@@ -18,6 +19,7 @@ from pulsetally.simulators.control import BenchControl
 from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.families import FAMILIES
 from pulsetally.simulators.generator_model import GeneratorModel
+from pulsetally.simulators.scpi_device import ScpiDevice
 from pulsetally.simulators.server import LOOPBACK, DeviceServer
 from pulsetally.simulators.table import Table
 
@@ -29,6 +31,8 @@ class SimulationSettings:
     """What the simulated bench is made of.
 
     family: the language of generator and oscilloscope, a key of FAMILIES.
+    serial: generator and oscilloscope listen on pseudo-terminals, where the system has
+    them; the control port stays on TCP.
     seed: of everything random. *_port: 0 for any free one.
     exchange_seconds: virtual time that each program message takes.
     until_stdin_closes: end when standard input does, besides SIGTERM and SIGINT.
@@ -37,6 +41,7 @@ class SimulationSettings:
     cell: CellDescription = field(default_factory=CellDescription)
     wiring: Wiring = field(default_factory=Wiring)
     family: str = "scpi99"
+    serial: bool = False
     seed: int = 1
     generator_port: int = 0
     oscilloscope_port: int = 0
@@ -50,6 +55,8 @@ class SimulationSettings:
         for name in ("generator_port", "oscilloscope_port", "control_port"):
             if not 0 <= getattr(self, name) <= 65535:
                 raise ValueError(f"{name} must be from 0 to 65535, not {getattr(self, name)}")
+        if self.serial and (self.generator_port or self.oscilloscope_port):
+            raise ValueError("generator_port and oscilloscope_port are of no use with serial")
         if not 0 <= self.exchange_seconds <= 3600:
             raise ValueError(
                 f"exchange_seconds must be from 0 to 3600 s, not {self.exchange_seconds}"
@@ -116,27 +123,53 @@ async def serve_until(
     def pass_time() -> None:
         bench.clock.advance(settings.exchange_seconds)
 
-    servers = [
-        DeviceServer(device, after_message=pass_time)
-        for device in (bench.generator, bench.oscilloscope, bench.control)
-    ]
-    ports = (settings.generator_port, settings.oscilloscope_port, settings.control_port)
-    try:
-        names = [
-            f"TCPIP::{LOOPBACK}::{await server.start(port)}::SOCKET"
-            for server, port in zip(servers, ports, strict=True)
-        ]
-        announce(Addresses(generator=names[0], oscilloscope=names[1], control=names[2]))
+    listener = _terminal if settings.serial else _port
+    async with AsyncExitStack() as listening:
+
+        async def listen(start: _Listener, device: ScpiDevice, port: int) -> str:
+            server, address = await start(device, port, pass_time)
+            listening.push_async_callback(server.stop)
+            return address
+
+        announce(
+            Addresses(
+                generator=await listen(listener, bench.generator, settings.generator_port),
+                oscilloscope=await listen(listener, bench.oscilloscope, settings.oscilloscope_port),
+                control=await listen(_port, bench.control, settings.control_port),
+            )
+        )
         await stop.wait()
-    finally:
-        for server in servers:
-            await server.stop()
+
+
+class _Server(Protocol):
+    async def stop(self) -> None: ...
+
+
+_Listener = Callable[[ScpiDevice, int, Callable[[], None]], Awaitable[tuple[_Server, str]]]
+
+
+async def _port(
+    device: ScpiDevice, port: int, after_message: Callable[[], None]
+) -> tuple[_Server, str]:
+    server = DeviceServer(device, after_message=after_message)
+    return server, f"TCPIP::{LOOPBACK}::{await server.start(port)}::SOCKET"
+
+
+async def _terminal(
+    device: ScpiDevice, _: int, after_message: Callable[[], None]
+) -> tuple[_Server, str]:
+    try:
+        from pulsetally.simulators.pseudo_terminal import TerminalServer
+    except ImportError as error:
+        raise OSError(f"this system has no pseudo-terminals: {error}") from error
+    server = TerminalServer(device, after_message=after_message)
+    return server, f"ASRL{await server.start()}::INSTR"
 
 
 def serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
     """Serve the bench until SIGTERM, SIGINT or, when asked, the end of standard input.
 
-    announce: called once, when all three ports listen. To be called in the main thread.
+    announce: called once, when all three listen. To be called in the main thread.
     Raises OSError when a port is taken.
     """
     asyncio.run(_serve(settings, announce))
@@ -187,7 +220,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """Serve the bench from the command line; return the exit status."""
     parser = argparse.ArgumentParser(
         prog="python -m pulsetally.simulators.simulate",
-        description="Serve a simulated function generator and oscilloscope on loopback ports.",
+        description="Serve a simulated function generator and oscilloscope on this machine.",
     )
     parser.add_argument("--json", action="store_true", help="print the addresses as JSON")
     parser.add_argument(
@@ -195,6 +228,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
         choices=tuple(FAMILIES),
         default="scpi99",
         help="what generator and oscilloscope speak",
+    )
+    parser.add_argument(
+        "--serial", action="store_true", help="listen on pseudo-terminals instead of TCP ports"
     )
     parser.add_argument("--seed", type=int, default=1, help="seed of everything random")
     parser.add_argument(
@@ -215,6 +251,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         settings = SimulationSettings(
             cell=cell,
             family=given.family,
+            serial=given.serial,
             seed=given.seed,
             generator_port=given.generator_port,
             oscilloscope_port=given.oscilloscope_port,

@@ -1,82 +1,21 @@
 """The served bench over real sockets, with a client that knows nothing but sockets."""
 
-import asyncio
 import json
 import math
 import signal
 import socket
 import subprocess
 import sys
-import threading
 from collections.abc import Iterator
-from contextlib import contextmanager
 
 import numpy as np
 import pytest
 
 from pulsetally.simulators.cell import CellDescription
-from pulsetally.simulators.simulate import Addresses, SimulationSettings, main, serve_until
+from pulsetally.simulators.simulate import Addresses, SimulationSettings, main
+from tests.simulators.sockets import Client, served
 
 LINEAR = CellDescription(remanent_polarization=1e-9)
-
-
-class Client:
-    """A bare socket and its lines."""
-
-    def __init__(self, address: str) -> None:
-        _, host, port, _ = address.split("::")
-        self.socket = socket.create_connection((host, int(port)), timeout=10)
-        self._file = self.socket.makefile("rb")
-
-    def __enter__(self) -> "Client":
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.close()
-
-    def close(self) -> None:
-        self._file.close()
-        self.socket.close()
-
-    def write(self, text: str) -> None:
-        self.socket.sendall(text.encode() + b"\n")
-
-    def ask(self, text: str) -> str:
-        self.write(text)
-        return self._file.readline().decode().removesuffix("\n")
-
-    def ask_block(self, text: str) -> bytes:
-        self.write(text)
-        assert self._file.read(1) == b"#"
-        length = int(self._file.read(int(self._file.read(1))))
-        payload = self._file.read(length)
-        assert self._file.read(1) == b"\n"
-        return payload
-
-
-@contextmanager
-def served(settings: SimulationSettings) -> Iterator[Addresses]:
-    """Serve a bench in a thread of its own."""
-    loop = asyncio.new_event_loop()
-    stop = asyncio.Event()
-    ready = threading.Event()
-    announced: list[Addresses] = []
-
-    def announce(addresses: Addresses) -> None:
-        announced.append(addresses)
-        ready.set()
-
-    thread = threading.Thread(
-        target=lambda: loop.run_until_complete(serve_until(settings, announce, stop))
-    )
-    thread.start()
-    try:
-        assert ready.wait(10)
-        yield announced[0]
-    finally:
-        loop.call_soon_threadsafe(stop.set)
-        thread.join(10)
-        loop.close()
 
 
 @pytest.fixture(scope="module")

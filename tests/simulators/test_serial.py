@@ -1,0 +1,238 @@
+"""The bench on pseudo-terminals: with plain PyVISA, and byte by byte as the line carries it."""
+
+import os
+import select
+from collections.abc import Iterator
+from contextlib import closing
+
+import numpy as np
+import pytest
+import pyvisa
+from pyvisa.resources import SerialInstrument
+
+from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.families import FAMILIES
+from pulsetally.simulators.simulate import Addresses, SimulationSettings, main
+from tests.simulators.counting import COUNTS, ERROR_QUERIES, let_settle, wait_for
+from tests.simulators.sockets import Client, served
+
+LINEAR = CellDescription(remanent_polarization=1e-9)
+
+
+class VisaLine:
+    """One instrument through PyVISA and pyvisa-py, as any script would open it."""
+
+    def __init__(self, address: str) -> None:
+        # One resource manager serves the whole process, so that it is not closed here.
+        manager = pyvisa.ResourceManager("@py")
+        resource = manager.open_resource(
+            address, read_termination="\n", write_termination="\n", timeout=10_000
+        )
+        assert isinstance(resource, SerialInstrument)
+        self._resource = resource
+
+    def write(self, text: str) -> None:
+        self._resource.write(text)
+
+    def ask(self, text: str) -> str:
+        return self._resource.query(text)
+
+    def ask_block(self, text: str, *, before: bytes = b"", behind: bytes = b"\n") -> bytes:
+        self._resource.write(text)
+        assert self._resource.read_bytes(len(before) + 1) == before + b"#"
+        digits = int(self._resource.read_bytes(1))
+        payload = self._resource.read_bytes(int(self._resource.read_bytes(digits)))
+        assert not behind or self._resource.read_bytes(len(behind)) == behind
+        return payload
+
+    def close(self) -> None:
+        self._resource.close()
+
+
+class BareLine:
+    """The client's end of a pseudo-terminal, opened without any line setting."""
+
+    def __init__(self, address: str) -> None:
+        path = address.removeprefix("ASRL").removesuffix("::INSTR")
+        self._end = os.open(path, os.O_RDWR | os.O_NOCTTY)
+
+    def __enter__(self) -> "BareLine":
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        os.close(self._end)
+
+    def send(self, data: bytes) -> None:
+        assert os.write(self._end, data) == len(data)
+
+    def read_until(self, end: bytes) -> bytes:
+        """Return what arrives until it ends so."""
+        found = b""
+        while not found.endswith(end):
+            assert select.select([self._end], [], [], 10)[0], found
+            found += os.read(self._end, 65_536)
+        return found
+
+    def read_exactly(self, count: int) -> bytes:
+        found = b""
+        while len(found) < count:
+            assert select.select([self._end], [], [], 10)[0], found
+            found += os.read(self._end, count - len(found))
+        return found
+
+    def is_silent(self) -> bool:
+        return not select.select([self._end], [], [], 0)[0]
+
+
+@pytest.fixture(scope="module")
+def addresses() -> Iterator[Addresses]:
+    settings = SimulationSettings(cell=LINEAR, family="perdiv", serial=True)
+    with served(settings) as found:
+        yield found
+
+
+@pytest.fixture
+def control(addresses: Addresses) -> Iterator[Client]:
+    with Client(addresses.control) as client:
+        yield client
+
+
+def let_it_notice(control: Client) -> None:
+    """Return when the server has looked at everything that was there before the call."""
+    for _ in range(5):
+        control.ask("*OPC?")
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+def test_plain_visa_sets_up_arms_fires_and_fetches(family: str) -> None:
+    with (
+        served(SimulationSettings(family=family, serial=True)) as addresses,
+        closing(VisaLine(addresses.generator)) as generator,
+        closing(VisaLine(addresses.oscilloscope)) as oscilloscope,
+    ):
+        assert generator.ask("*IDN?").startswith("PULSETALLY,SIMULATED FUNCTION GENERATOR")
+        serial = COUNTS[family](generator, oscilloscope, 2)
+        query, nothing = ERROR_QUERIES[family]
+        assert generator.ask(query) == oscilloscope.ask(query) == nothing
+    with (
+        served(SimulationSettings(family=family)) as addresses,
+        Client(addresses.generator) as socket_generator,
+        Client(addresses.oscilloscope) as socket_oscilloscope,
+    ):
+        ethernet = COUNTS[family](socket_generator, socket_oscilloscope, 2)
+    # Not equal: how often a client asked moves the sample clock, and with it the noise.
+    assert serial == pytest.approx(ethernet, abs=0.03)
+    assert serial[1] > serial[0]
+
+
+def test_addresses_are_serial_and_the_control_port_is_not(addresses: Addresses) -> None:
+    assert addresses.generator.startswith("ASRL/dev/")
+    assert addresses.oscilloscope.startswith("ASRL/dev/")
+    assert addresses.generator != addresses.oscilloscope
+    assert addresses.control.startswith("TCPIP::127.0.0.1::")
+
+
+def test_an_answer_comes_alone_without_echo_or_carriage_return(addresses: Addresses) -> None:
+    with BareLine(addresses.generator) as line:
+        line.send(b"*CLS\nSOUR1:BURS:NCYC 12\nSOUR1:BURS:NCYC?\n")
+        assert line.read_until(b"\n") == b"12\n"
+        assert line.is_silent()
+
+
+def test_a_message_may_come_in_pieces(addresses: Addresses, control: Client) -> None:
+    with BareLine(addresses.generator) as line:
+        for piece in (b"SOUR1:BU", b"RS:NCYC 7;NC", b"YC?", b"\nSYST:", b"ERR?\n"):
+            line.send(piece)
+            let_it_notice(control)
+        assert line.read_until(b'"\n') == b'7\n+0,"No error"\n'
+
+
+def test_every_byte_passes(addresses: Addresses) -> None:
+    with (
+        closing(VisaLine(addresses.generator)) as generator,
+        closing(VisaLine(addresses.oscilloscope)) as oscilloscope,
+    ):
+        # A slow ramp over the whole screen gives every code from 0 to 255.
+        generator.write("*RST;:SOUR1:VOLT 10;:SOUR1:FREQ 50;:SOUR1:FUNC:PULS:WIDT 8E-3;TRAN 4E-3")
+        generator.write("SOUR1:BURS:STAT ON;:OUTP1 ON")
+        let_settle(generator)
+        oscilloscope.write("*RST;:CHAN1:SCAL 1;OFFS 0.5;:TIM:SCAL 1E-3;POS 2E-3;:ACQ:POIN 4000")
+        oscilloscope.write("TRIG:EDGE:SOUR EXT;:SING")
+        wait_for(oscilloscope, "ACQ:STAT?", "2")
+        generator.write("*TRG")
+        wait_for(oscilloscope, "ACQ:STAT?", "4")
+        fields = [float(field) for field in oscilloscope.ask("WAV:PRE?").split(",")]
+        codes = np.frombuffer(oscilloscope.ask_block("WAV:DATA?"), np.uint8).astype(float)
+        oscilloscope.write("WAV:FORM ASC")
+        volts = [float(text) for text in oscilloscope.ask("WAV:DATA?").split(",")]
+        assert set(codes) == set(range(256))
+        assert (codes - fields[9]) * fields[7] + fields[8] == pytest.approx(volts, abs=1e-6)
+
+
+def test_half_a_message_of_a_client_that_left_harms_nobody(
+    addresses: Addresses, control: Client
+) -> None:
+    with BareLine(addresses.generator) as line:
+        line.send(b"*RST;*CLS;*OPC?\n")
+        assert line.read_until(b"\n") == b"1\n"
+        line.send(b"SOUR1:BURS:NCYC 9;:TEXT 'never closed")
+    let_it_notice(control)
+    with BareLine(addresses.generator) as line:
+        line.send(b"SOUR1:BURS:NCYC?;:SYST:ERR?\n")
+        assert line.read_until(b"\n") == b'1;+0,"No error"\n'
+
+
+def test_a_whole_message_of_a_client_that_left_is_followed(
+    addresses: Addresses, control: Client
+) -> None:
+    with BareLine(addresses.generator) as line:
+        line.send(b"SOUR1:BURS:NCYC 5\n")
+    with BareLine(addresses.generator) as line:
+        line.send(b"SOUR1:BURS:NCYC?\n")
+        assert line.read_until(b"\n") == b"5\n"
+
+
+def test_answers_nobody_read_are_not_the_next_clients(
+    addresses: Addresses, control: Client
+) -> None:
+    with BareLine(addresses.generator) as line:
+        line.send(b"*OPC?\n")
+        assert line.read_until(b"\n") == b"1\n"
+        line.send(b"*IDN?\n*IDN?\n*IDN?\n")
+        let_it_notice(control)
+    let_it_notice(control)
+    with BareLine(addresses.generator) as line:
+        line.send(b"SOUR1:BURS:MODE?\n")
+        assert line.read_until(b"\n") == b"TRIG\n"
+
+
+def test_a_client_that_never_reads_stops_nobody(addresses: Addresses, control: Client) -> None:
+    with BareLine(addresses.oscilloscope) as line:
+        line.send(b"*RST;:ACQ:POIN 1000000;:TRIG:EDGE:SOUR EXT;:TIM:SCAL 0.01;POS 0.05;:SING\n")
+        line.send(b"ACQ:STAT?\n")
+        assert line.read_until(b"\n") == b"2\n"
+        with BareLine(addresses.generator) as generator:
+            generator.send(b"SOUR1:BURS:STAT ON;*TRG;*OPC?\n")
+            assert generator.read_until(b"\n") == b"1\n"
+        control.write(":CLOC:ADV 0.3")
+        line.send(b"ACQ:STAT?\n")
+        assert line.read_until(b"\n") == b"4\n"
+        # More than a pseudo-terminal holds, and more than the server keeps.
+        line.send(b"WAV:DATA?\n" * 3)
+        assert control.ask("*OPC?") == "1"
+        assert line.read_exactly(9) == b"#71000000"
+    let_it_notice(control)
+    assert control.ask("*OPC?") == "1"
+    with BareLine(addresses.oscilloscope) as line:
+        line.send(b"ACQ:STAT?\n")
+        assert line.read_until(b"\n") == b"4\n"
+
+
+def test_faulty_settings_are_refused(capsys: pytest.CaptureFixture[str]) -> None:
+    with pytest.raises(ValueError, match="generator_port"):
+        SimulationSettings(serial=True, generator_port=5025)
+    with pytest.raises(ValueError, match="scpi99, perdiv, stateword"):
+        SimulationSettings(family="latin")
+    with pytest.raises(SystemExit):
+        main(["--serial", "--oscilloscope-port", "5025"])
+    assert "oscilloscope_port" in capsys.readouterr().err
