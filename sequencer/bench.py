@@ -282,6 +282,9 @@ def parse_bench(text: str, *, file: str, folder: FilePath | None = None) -> Benc
     placed = load_yaml(text, file)
     if placed.mistakes:
         raise BenchError(placed.mistakes)
+    if isinstance(placed.data, dict) and "recipe" in placed.data and "bench" not in placed.data:
+        problem, remedy = "this is a recipe, not a bench file", "name a bench file here"
+        raise BenchError([placed.mistake((), problem, remedy)])
     model, mistakes = validate(BenchModel, placed, known=_known)
     if mistakes:
         raise BenchError(sorted(mistakes, key=lambda each: (each.line, each.column)))

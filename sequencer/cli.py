@@ -5,8 +5,9 @@ Heavy libraries are imported inside the commands that need them, so that help is
 
 import json
 import os
+import sys
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import closing, contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -26,7 +27,6 @@ app = typer.Typer(
     add_completion=True,
     no_args_is_help=True,
     pretty_exceptions_enable=False,
-    help="Calibrate ferroelectric counting cells: preset, step, read, and keep every waveform.",
     epilog="Begin with: pulsetally rehearse full_count",
 )
 
@@ -50,7 +50,24 @@ DomainsOption = Annotated[
     int | None,
     typer.Option(min=0, help="Domains of the cell: fewer scatter more; 0 for no scatter."),
 ]
-JsonOption = Annotated[bool, typer.Option("--json", help="Print one JSON object, for programs.")]
+JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON, for programs.")]
+
+
+def _version(asked: bool) -> None:
+    if asked:
+        from importlib.metadata import version
+
+        typer.echo(f"pulsetally {version('pulsetally')}")
+        raise typer.Exit
+
+
+@app.callback()
+def begin(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version.")
+    ] = False,
+) -> None:
+    """Calibrate ferroelectric counting cells: preset, step, read, and keep every waveform."""
 
 
 @app.command(epilog="Example: pulsetally check my_recipe.yaml --bench my_bench.yaml")
@@ -207,15 +224,14 @@ def _planned(recipe: str, bench: Path | None, overrides: list[str] | None) -> "t
     from pulsetally.sequencer.bench import load_bench
     from pulsetally.sequencer.errors import InputError
     from pulsetally.sequencer.plan import make_plan
-    from pulsetally.sequencer.recipe import load_recipe
-    from pulsetally.sequencer.rehearsal import recipe_path, shipped_bench
+    from pulsetally.sequencer.recipe import find_recipe
+    from pulsetally.sequencer.rehearsal import shipped_bench
 
     settings, mistakes = _overrides(overrides or [])
     found: Recipe | None = None
     table: Bench | None = None
     try:
-        with recipe_path(recipe) as path:
-            found = load_recipe(path, settings)
+        found = find_recipe(recipe, settings)
     except InputError as error:
         mistakes += error.mistakes
     try:
@@ -239,25 +255,43 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
 
     console, path = _console(), _logbook_path(logbook)
     book, stop = Logbook(path), StopSwitch()
-    progress = Progress(rounds=len(plan.rounds), seconds=plan.seconds, swept=plan.swept)
+    # How long a rehearsal takes depends on this machine, not on the plan.
+    seconds = plan.seconds if mode == "run" else None
+    progress = Progress(rounds=len(plan.rounds), seconds=seconds, swept=plan.swept)
     for warning in plan.warnings:
         say(console, f"Note: {warning}.")
+    broken = ""
     with signals(stop):
         recorder = book.begin_run(plan, bench, mode=mode)
-        follow(engine.run(plan, bench, recorder, stop), progress, console)
-    ended = progress.ended
-    show_result(console, run_result(book, recorder.run), rounds=False)
-    say(console, f"Everything is kept in {path} as run {recorder.run};"
-        f" see it with: pulsetally show {recorder.run}")  # fmt: skip
-    if ended is not None and ended.outputs_off:
-        say(console, "Outputs are off, and read back as off.")
-    if ended is None or ended.outputs_off is False:
-        _complain(ended.reason if ended else "the run did not end in order")
+        # Closed here and now, whatever happens: closing is what switches the output off.
+        with closing(engine.run(plan, bench, recorder, stop)) as events:
+            try:
+                follow(events, progress, console)
+            except OSError as error:
+                broken = f"the view could not be written ({error.strerror})"
+    if broken:
+        _silence_output()
+        _complain(f"the run was stopped, since {broken}; what it measured is kept in {path}")
+    else:
+        show_result(console, run_result(book, recorder.run), rounds=False)
+        option = "" if logbook is None else f" --logbook {path}"
+        say(console, f"Everything is kept in {path} as run {recorder.run};"
+            f" see it with: pulsetally show {recorder.run}{option}")  # fmt: skip
+    summary = run_result(book, recorder.run).summary
+    if summary.state != RunState.FINISHED.value:
+        _complain(f"the run {summary.state}: {summary.reason}")
+    if summary.outputs_off is False:
+        ended = progress.ended
+        _complain(ended.unconfirmed if ended else "OUTPUTS NOT CONFIRMED OFF: see above.")
         return OUTPUTS_UNKNOWN
-    if ended.state is RunState.FINISHED:
-        return DONE
-    _complain(f"the run {ended.state.value}: {ended.reason}")
-    return FAILED
+    if summary.outputs_off and not broken:
+        say(console, "Outputs are off, and read back as off.")
+    return DONE if summary.state == RunState.FINISHED.value else FAILED
+
+
+def _silence_output() -> None:
+    """Keep Python from failing once more on an output that can't be written."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _overrides(written: list[str]) -> "tuple[dict[str, str], list[Mistake]]":
@@ -300,18 +334,25 @@ def _complain(words: str) -> None:
     from pulsetally.sequencer.progress import printable
 
     for line in words.splitlines():
-        typer.echo(printable(line), err=True)
+        typer.echo(printable(line, 5000), err=True)
 
 
 @contextmanager
 def _told() -> Iterator[None]:
     """Turn our errors into sentences and exit statuses; there is no traceback for them."""
     from pulsetally.drivers.errors import PulsetallyError
-    from pulsetally.sequencer.errors import InputError, OutputsNotConfirmed, PlanError
+    from pulsetally.sequencer.errors import (
+        InputError,
+        LogbookError,
+        OutputsNotConfirmed,
+        PlanError,
+    )
 
     statuses: list[tuple[type[Exception], int]] = [
         (InputError, WRONG_INPUT),
         (PlanError, WRONG_INPUT),
+        # Once a run has begun, the engine itself takes care of a logbook that fails.
+        (LogbookError, WRONG_INPUT),
         (OutputsNotConfirmed, OUTPUTS_UNKNOWN),
         (PulsetallyError, FAILED),
     ]
@@ -321,6 +362,10 @@ def _told() -> Iterator[None]:
         _complain(str(error))
         status = next(code for kind, code in statuses if isinstance(error, kind))
         raise typer.Exit(status) from error
+    except OSError as error:
+        _silence_output()
+        _complain(f"the output can't be written ({error.strerror})")
+        raise typer.Exit(FAILED) from error
 
 
 def main() -> None:

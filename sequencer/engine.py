@@ -53,7 +53,9 @@ _BEFORE = 0.1
 _HEADROOM = 1.1
 
 
-def run(plan: Plan, bench: Bench, recorder: Recorder, stop: StopSwitch) -> Iterator[Event]:
+def run(
+    plan: Plan, bench: Bench, recorder: Recorder, stop: StopSwitch
+) -> Generator[Event, None, None]:
     """Carry out a plan; yield what happens. The last event is RunEnded, always recorded."""
     instruments: Instruments | None = None
     state, reason = RunState.FAILED, ""
@@ -89,8 +91,9 @@ def _end(instruments: Instruments | None, state: RunState, reason: str) -> RunEn
     try:
         instruments.quiet()
     except OutputsNotConfirmed as error:
-        reason = f"{reason} {error}".strip()
-        return RunEnded(state=RunState.FAILED, reason=reason, outputs_off=False)
+        return RunEnded(
+            state=RunState.FAILED, reason=reason, outputs_off=False, unconfirmed=str(error)
+        )
     finally:
         instruments.close()
     return RunEnded(state=state, reason=reason, outputs_off=True)
@@ -160,7 +163,7 @@ class _Conductor:
         return "; ".join(words)
 
     def _round(self, each: Round) -> Iterator[Event]:
-        order, stepped = 0, 0
+        order, stepped, first = 0, 0, True
         for action in each.actions:
             match action:
                 case Wait():
@@ -175,12 +178,13 @@ class _Conductor:
                         yield from self._pulse(each, order, Role.STEP, action.pulse)
                     stepped += action.count
                 case Read():
-                    order = yield from self._read(each, order, stepped, action)
+                    order = yield from self._read(each, order, stepped, first, action)
+                    first = False
         self._generator.raise_errors("")
         self._oscilloscope.raise_errors("")
 
     def _read(
-        self, each: Round, order: int, stepped: int, action: Read
+        self, each: Round, order: int, stepped: int, first: bool, action: Read
     ) -> Generator[Event, None, int]:
         rising = action.pulse.rising
         ends: list[float] = []
@@ -199,6 +203,8 @@ class _Conductor:
             crossing=count.crossing,
             reached=count.reached,
             stepped=stepped,
+            first=first,
+            settings=action.settings,
             end_voltages=tuple(ends),
         )
         return order

@@ -133,7 +133,11 @@ class WaitBegan:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ReadFinished:
-    """A read ended. count, crossing, reached: see ReadCount. end_voltages: volts."""
+    """A read ended. count, crossing, reached: see ReadCount. end_voltages: volts.
+
+    stepped: pulses of 'step' before it in its round. first: no other read went before it in its
+    round. settings: what was in force, in SI units.
+    """
 
     round: int
     pulse: str
@@ -142,6 +146,8 @@ class ReadFinished:
     crossing: float | None
     reached: bool
     stepped: int
+    first: bool = True
+    settings: dict[str, float] = field(default_factory=dict)
     end_voltages: tuple[float, ...] = field(default=())
 
 
@@ -172,11 +178,13 @@ class RunEnded:
     """The run is over. reason: a sentence, or empty.
 
     outputs_off: read back as off; None when the generator was never reached, nor touched.
+    unconfirmed: where they are not known to be off, what a person must do.
     """
 
     state: RunState
     reason: str
     outputs_off: bool | None
+    unconfirmed: str = ""
 
 
 Event = (

@@ -54,13 +54,17 @@ def _closing_live(progress: Progress, console: Console) -> Iterator[Live]:
 
 def draw(progress: Progress, height: int = 24) -> RenderableType:
     """Draw how a run stands; height: lines of the terminal."""
-    parts: list[RenderableType] = [_head(progress), Text()]
-    # What else is drawn takes about twelve lines; the pulses get what is left.
-    parts.append(_pulses(progress, max(3, min(14, height - 13))))
-    parts.append(Text())
-    parts.append(_counts(progress))
+    parts: list[RenderableType] = [_head(progress)]
     if progress.stopping and not progress.ended:
         parts.append(Text("Stopping after this round. Ctrl-C again stops at once.", style="bold"))
+    parts.append(_answer(progress))
+    # Beside pulses and histogram, the frame, the head, the answer and the last lines said take
+    # about ten lines. In a low window the answer matters more than pictures.
+    room = height - 10
+    if room >= 4:
+        bars = min(5, len(progress.counts), room // 3)
+        parts.append(_histogram(progress, bars))
+        parts.append(_pulses(progress, min(14, room - bars)))
     return Panel(Group(*parts), title="pulsetally", title_align="left")
 
 
@@ -76,10 +80,15 @@ def _head(progress: Progress) -> RenderableType:
     table.add_row(
         Text(words, style="bold"),
         ProgressBar(total=max(1, progress.rounds), completed=progress.done),
-        Text(f"{show_duration(progress.seconds_left)} left"),
+        Text(_left(progress)),
     )
     doing = progress.doing + (f", {progress.setting}" if progress.setting else "")
     return Group(table, Text(f"{printable(doing)}; {progress.pulses} pulses so far"))
+
+
+def _left(progress: Progress) -> str:
+    left = progress.seconds_left
+    return "" if left is None else f"{show_duration(left)} left"
 
 
 def _pulses(progress: Progress, rows: int) -> RenderableType:
@@ -125,19 +134,23 @@ class _MarkedBar:
         return table
 
 
-def _counts(progress: Progress) -> RenderableType:
+def _answer(progress: Progress) -> RenderableType:
     statistics = progress.statistics
     if statistics is None:
         return Text("no full count yet", style="dim")
     scatter = "" if statistics.sd is None else f", scatter {statistics.sd:.2f}"
     rounds = "1 round" if statistics.rounds == 1 else f"{statistics.rounds} rounds"
     where = f" at {progress.setting}" if progress.setting else ""
-    answer = f"full count{where}: {statistics.mean:.2f}{scatter} pulses ({rounds})"
-    words = Text(printable(answer), style="bold")
+    words = f"full count {statistics.mean:.2f}{scatter} pulses ({rounds}){where}"
+    return Text(printable(words), style="bold")
+
+
+def _histogram(progress: Progress, bars: int) -> RenderableType:
+    """Draw how many rounds were full after how many pulses."""
     table = Table.grid(padding=(0, 1))
     most = max(progress.counts.values(), default=1)
-    for count in sorted(progress.counts)[-5:]:
+    for count in sorted(progress.counts)[-bars:] if bars else ():
         seen = progress.counts[count]
         length = math.ceil(30 * seen / most) if most > 30 else seen
         table.add_row(Text(f"{count:>4}"), Text("■" * length), Text(str(seen)))
-    return Group(words, table)
+    return table

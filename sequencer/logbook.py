@@ -39,6 +39,8 @@ from pulsetally.sequencer.events import (
 from pulsetally.sequencer.plan import Plan
 
 LOGBOOK_VERSION = 1
+# Tells our files from other SQLite databases ('ptly' in ASCII).
+_MARK = 0x70746C79
 
 _tables = sa.MetaData()
 
@@ -165,6 +167,8 @@ reads = sa.Table(
     _real("crossing", optional=True),
     sa.Column("reached", sa.Boolean, nullable=False),
     _whole("stepped"),
+    sa.Column("first", sa.Boolean, nullable=False),
+    _text("settings"),
     _text("end_voltages"),
 )
 
@@ -182,7 +186,14 @@ class Logbook:
             )
         self._engine = _connect(path)
         with self._guarded("opened") as connection:
+            mark = connection.exec_driver_sql("PRAGMA application_id").scalar()
+            if mark != _MARK and sa.inspect(connection).get_table_names():
+                raise LogbookError(
+                    f"{path}: this database is not a logbook; nothing was changed in it. To fix it,"
+                    " name another file with --logbook."
+                )
             _tables.create_all(connection)
+            connection.exec_driver_sql(f"PRAGMA application_id={_MARK}")
             found = connection.execute(sa.select(about.c.version)).scalar()
             if found is None:
                 _insert(connection, about, version=LOGBOOK_VERSION, written_by=_software())
@@ -296,6 +307,8 @@ class Recorder:
                     crossing=event.crossing,
                     reached=event.reached,
                     stepped=event.stepped,
+                    first=event.first,
+                    settings=_json(event.settings),
                     end_voltages=json.dumps(event.end_voltages),
                 )
             case RoundFinished():
@@ -318,7 +331,7 @@ class Recorder:
             run=self.run,
             ended_at=_now(),
             state=event.state.value,
-            reason=event.reason,
+            reason=" ".join(each for each in (event.reason, event.unconfirmed) if each),
             outputs_off=event.outputs_off,
         )
 

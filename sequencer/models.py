@@ -95,10 +95,21 @@ def quantity(
         try:
             _checked(parse_quantity(parameters[written], kind), least, most, above, whole)
         except QuantityError as error:
-            raise fault(f"parameter {written!r} does not fit: {error.problem}", error.remedy) from (
-                error
-            )
-        return Name(written)
+            problem, remedy = error.problem, error.remedy
+        except PydanticCustomError as error:
+            told = error.context or {}
+            problem, remedy = told["problem"], told["remedy"]
+        else:
+            return Name(written)
+        raise PydanticCustomError(
+            "fault",
+            "{problem}",
+            {
+                "problem": f"parameter {written!r} does not fit: {problem}",
+                "remedy": remedy,
+                "parameter": written,
+            },
+        )
 
     return BeforeValidator(read)
 
@@ -143,6 +154,10 @@ def _mistake(
     path: Path = tuple(part for part in entry["loc"] if not is_tag(part))
     kind, context = entry["type"], entry.get("ctx", {})
     if kind == "fault":
+        given = ("parameters", context.get("parameter", ""))
+        if given in placed.origins:
+            # The value came from an option: that is the place to mend.
+            path = given
         return placed.mistake(path, context["problem"], context["remedy"])
     if kind == "extra_forbidden":
         names = known(entry["loc"][:-1])
@@ -178,4 +193,8 @@ def is_tag(part: str | int) -> bool:
 
 
 def _shown(found: object) -> str:
-    return "a blank" if found is None else f"{str(found)[:60]!r}"
+    if found is None:
+        return "a blank"
+    if isinstance(found, (dict, list)):
+        return "a list" if isinstance(found, list) else "a group of settings"
+    return f"{str(found)[:60]!r}"

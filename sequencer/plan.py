@@ -82,11 +82,15 @@ class Step:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Read:
-    """Deliver pulses until the end voltage passes the threshold, in volts."""
+    """Deliver pulses until the end voltage passes the threshold, in volts.
+
+    settings: what is in force at this read; a sweep may stand inside a round.
+    """
 
     pulse: Pulse
     threshold: float
     at_most: int
+    settings: dict[str, float]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -103,7 +107,8 @@ Action = Preset | Step | Read | Wait
 class Round:
     """The smallest piece of a run that starts from a known state and can be repeated.
 
-    number: from 1. settings: every pulse setting and parameter in force, in SI units.
+    number: from 1. settings: every pulse setting and parameter in force at its beginning, in SI
+    units.
     """
 
     number: int
@@ -173,7 +178,7 @@ def make_plan(recipe: Recipe, bench: Bench) -> Plan:
         seconds=sum(_seconds(action) for each in rounds for action in each.actions),
         disk_bytes=most * _BYTES_PER_SHOT + 100_000,
         volts=tuple(volts),
-        warnings=tuple(_warnings(rounds, bench)),
+        warnings=tuple(_warnings(rounds, volts, bench)),
     )
 
 
@@ -260,7 +265,8 @@ class _Builder:
                 " To fix it, choose a threshold between the two."
             )
         at_most = self._whole("at most", step.at_most, settings)
-        return Read(pulse=pulse, threshold=threshold, at_most=at_most)
+        in_force = _with_pulse(settings, pulse)
+        return Read(pulse=pulse, threshold=threshold, at_most=at_most, settings=in_force)
 
     def _value(self, value: float | Name, settings: dict[str, float]) -> float:
         return settings[value.word] if isinstance(value, Name) else value
@@ -316,12 +322,18 @@ def _written(written: object) -> float:
 
 
 def _round(number: int, settings: dict[str, float], actions: list[Action]) -> Round:
-    in_force = dict(settings)
+    in_force = settings
+    named: set[str] = set()
     for action in actions:
-        if not isinstance(action, Wait):
-            for setting in PULSE_KINDS:
-                in_force[f"{action.pulse.name}.{setting}"] = getattr(action.pulse, setting)
+        if not isinstance(action, Wait) and action.pulse.name not in named:
+            named.add(action.pulse.name)
+            in_force = _with_pulse(in_force, action.pulse)
     return Round(number=number, settings=in_force, actions=tuple(actions))
+
+
+def _with_pulse(settings: dict[str, float], pulse: Pulse) -> dict[str, float]:
+    """Return settings with those of a pulse, which may come from parameters."""
+    return settings | {f"{pulse.name}.{name}": getattr(pulse, name) for name in PULSE_KINDS}
 
 
 def _most_pulses(action: Action) -> int:
@@ -376,7 +388,14 @@ def _limit_problems(volts: list[PulseVolts], bench: Bench) -> list[str]:
     return problems
 
 
-def _warnings(rounds: tuple[Round, ...], bench: Bench) -> Iterator[str]:
+def _warnings(rounds: tuple[Round, ...], volts: list[PulseVolts], bench: Bench) -> Iterator[str]:
+    for each in volts:
+        if abs(each.cell) < 0.05 * abs(each.terminal):
+            sent, left = show_quantity(each.terminal, "V"), show_quantity(each.cell, "V")
+            yield (
+                f"pulse {each.name!r} hardly reaches the cell: of {sent} at the terminal {left}"
+                " are left; a series diode blocks one polarity"
+            )
     if rounds and not rounds[0].repeatable:
         yield "the recipe begins without a preset: the first round starts from an unknown state"
     if math.isfinite(bench.model.generator.load):

@@ -2,7 +2,7 @@
 
 import time
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 
 from pulsetally.sequencer.analysis.counting import CountStatistics, full_count
@@ -27,13 +27,13 @@ from pulsetally.sequencer.quantities import show_duration, show_quantity
 class Progress:
     """How a run stands.
 
-    rounds: planned; done: finished. round: the one that goes on. ends: end voltages of its
-    current read, volts. crossings: full counts so far at this setting, pulses. lines: what was
-    said, oldest first.
+    rounds: planned; done: finished. seconds: as planned, None where nobody knows. round: the
+    one that goes on. ends: end voltages of its current read, volts. crossings: full counts so
+    far at this setting, pulses. lines: what was said, oldest first.
     """
 
     rounds: int
-    seconds: float
+    seconds: float | None
     clock: Callable[[], float] = time.monotonic
     done: int = 0
     round: int = 0
@@ -63,13 +63,13 @@ class Progress:
         return full_count(self.crossings)
 
     @property
-    def seconds_left(self) -> float:
+    def seconds_left(self) -> float | None:
         """Estimate the time left, from the pace so far or, before there is one, the plan."""
         if self.ended:
             return 0.0
         elapsed = self.clock() - self._began
         if not self.done:
-            return max(0.0, self.seconds - elapsed)
+            return None if self.seconds is None else max(0.0, self.seconds - elapsed)
         return elapsed / self.done * (self.rounds - self.done)
 
     def take(self, event: Event) -> list[str]:
@@ -122,16 +122,21 @@ class Progress:
         self.round, self.attempt, self.stepped = event.round.number, event.attempt, 0
         self.ends.clear()
         self.threshold = None
+        self._set(event.round.settings)
+        again = f" again (attempt {event.attempt})" if event.attempt > 1 else ""
+        return [f"round {self.round} begins{again}"] if again else []
+
+    def _set(self, settings: Mapping[str, float]) -> None:
         setting = ", ".join(
-            f"{name} = {show_setting(name, event.round.settings[name])}" for name in self.swept
+            f"{name} = {show_setting(name, settings[name])}"
+            for name in self.swept
+            if name in settings
         )
         if setting != self.setting:
             # Counts at different settings have no common mean.
             self.setting = setting
             self.crossings.clear()
             self.counts.clear()
-        again = f" again (attempt {event.attempt})" if event.attempt > 1 else ""
-        return [f"round {self.round} begins{again}"] if again else []
 
     def _shot(self, event: ShotTaken) -> None:
         self.pulses += 1
@@ -143,17 +148,18 @@ class Progress:
             self.at_most = event.at_most or 0
 
     def _read(self, event: ReadFinished) -> str:
+        self._set(event.settings)
         begin = f"round {event.round} of {self.rounds}"
         if self.setting:
             begin += f" ({self.setting})"
         if not event.reached:
             return f"{begin}: {show_quantity(event.threshold, 'V')} not reached in {event.count}"
         count = "not to be interpolated" if event.crossing is None else f"{event.crossing:.2f}"
-        if event.stepped == 0:
+        if event.stepped == 0 and event.first:
             self.counts[event.count] += 1
             if event.crossing is not None:
                 self.crossings.append(event.crossing)
-            return f"{begin}: full count {event.count}, crossing {count}"
+            return f"{begin}: full after {event.count} pulses, crossing {count}"
         return f"{begin}: {event.stepped} stored, {event.count} remaining, crossing {count}"
 
 
@@ -165,11 +171,11 @@ def show_setting(name: str, value: float) -> str:
     return show_quantity(value, kind.unit if kind else "")
 
 
-def printable(text: str) -> str:
+def printable(text: str, most: int = 500) -> str:
     """Make a text from a file or an instrument harmless: no control character survives.
 
     Escape sequences, bells, line ends and marks that turn the direction of writing become
-    visible stand-ins; very long texts are cut.
+    visible stand-ins; texts over so many characters are cut.
     """
     shown = "".join(each if each.isprintable() else "\N{REPLACEMENT CHARACTER}" for each in text)
-    return shown if len(shown) <= 500 else shown[:499] + "…"
+    return shown if len(shown) <= most else shown[: most - 1] + "…"

@@ -7,6 +7,7 @@ place, and all mistakes of a file at once.
 import re
 from collections.abc import Mapping
 from dataclasses import dataclass
+from importlib.resources import files
 from pathlib import Path as FilePath
 from typing import Annotated, Any
 
@@ -211,12 +212,34 @@ class Recipe:
 
 def load_recipe(path: FilePath, overrides: Mapping[str, str] | None = None) -> Recipe:
     """Read a recipe file. Raises RecipeError with every mistake."""
-    text, mistakes = read_text(
-        path, "recipe", "name a recipe file, or one that ships with the program"
-    )
+    text, mistakes = read_text(path, "recipe", _other_name(path))
     if mistakes:
         raise RecipeError(mistakes)
     return parse_recipe(text, file=str(path), overrides=overrides)
+
+
+def _other_name(path: FilePath) -> str:
+    known = shipped_recipes()
+    return nearest(path.name.removesuffix(".yaml"), known, "name a file that is there, or")
+
+
+def shipped_recipes() -> list[str]:
+    """Return the names of the recipes that ship with the program."""
+    names = (each.name for each in files("pulsetally.recipes").iterdir())
+    return sorted(
+        name.removesuffix(".yaml")
+        for name in names
+        if name.endswith(".yaml") and not name.endswith("_bench.yaml")
+    )
+
+
+def find_recipe(written: str, overrides: Mapping[str, str] | None = None) -> Recipe:
+    """Read a recipe by the name of a shipped one, or by its path. Raises RecipeError."""
+    if written not in shipped_recipes():
+        return load_recipe(FilePath(written), overrides)
+    file = f"{written}.yaml"
+    text = (files("pulsetally.recipes") / file).read_text(encoding="utf-8")
+    return parse_recipe(text, file=file, overrides=overrides)
 
 
 def parse_recipe(text: str, *, file: str, overrides: Mapping[str, str] | None = None) -> Recipe:
@@ -224,12 +247,15 @@ def parse_recipe(text: str, *, file: str, overrides: Mapping[str, str] | None = 
     placed = load_yaml(text, file)
     if placed.mistakes:
         raise RecipeError(placed.mistakes)
+    if isinstance(placed.data, dict) and "bench" in placed.data and "recipe" not in placed.data:
+        problem, remedy = "this is a bench file, not a recipe", "name a recipe here"
+        raise RecipeError([placed.mistake((), problem, remedy)])
     mistakes = _apply_overrides(placed, overrides or {})
     declared = _declared(placed)
     mistakes += _check_parameters(placed, declared)
     model, found = validate(RecipeModel, placed, known=_known, context=declared)
     mistakes += found
-    mistakes += _check_sweeps(placed, declared)
+    mistakes += _check_sweeps(placed, declared, overrides or {})
     if mistakes:
         raise RecipeError(sorted(mistakes, key=lambda each: (each.line, each.column)))
     return Recipe(file=file, text=text, overrides=dict(overrides or {}), model=model)
@@ -310,7 +336,9 @@ def _check_parameters(placed: PlacedData, declared: Declared) -> list[Mistake]:
     return mistakes
 
 
-def _check_sweeps(placed: PlacedData, declared: Declared) -> list[Mistake]:
+def _check_sweeps(
+    placed: PlacedData, declared: Declared, overrides: Mapping[str, str]
+) -> list[Mistake]:
     mistakes: list[Mistake] = []
 
     def walk(steps: object, path: Path) -> None:
@@ -319,6 +347,10 @@ def _check_sweeps(placed: PlacedData, declared: Declared) -> list[Mistake]:
                 if isinstance(step.get("sweep"), dict):
                     for name, values in step["sweep"].items():
                         here = (*path, index, "sweep", name)
+                        if name in overrides:
+                            problem = f"{name!r} is swept here, so --set would change nothing"
+                            remedy = "change the sweep, or leave that --set out"
+                            mistakes.append(placed.mistake(here, problem, remedy, at_key=True))
                         mistakes.extend(_check_axis(placed, declared, name, values, here))
                 walk(step.get("steps"), (*path, index, "steps"))
 

@@ -11,8 +11,7 @@ import sys
 import tempfile
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
-from importlib.resources import as_file, files
-from pathlib import Path
+from importlib.resources import files
 from typing import IO
 
 from pulsetally.drivers.errors import PulsetallyError
@@ -23,26 +22,6 @@ _STOP_SECONDS = 10.0
 
 class RehearsalError(PulsetallyError):
     """The simulated bench did not start."""
-
-
-def shipped_names() -> list[str]:
-    """Return the names of the recipes that ship with the program."""
-    names = (each.name for each in files("pulsetally.recipes").iterdir())
-    return sorted(
-        name.removesuffix(".yaml")
-        for name in names
-        if name.endswith(".yaml") and not name.endswith("_bench.yaml")
-    )
-
-
-@contextmanager
-def recipe_path(written: str) -> Iterator[Path]:
-    """Find a recipe by the name of a shipped one, or by its path."""
-    if written in shipped_names():
-        with as_file(files("pulsetally.recipes") / f"{written}.yaml") as path:
-            yield path
-    else:
-        yield Path(written)
 
 
 def shipped_bench() -> Bench:

@@ -45,13 +45,16 @@ class RunSummary:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ReadResult:
-    """One read. end_voltages: volts, one a pulse; other fields as in ReadCount."""
+    """One read. end_voltages: volts, one a pulse; other fields as in ReadFinished."""
 
     pulse: str
     threshold: float
     count: int
     crossing: float | None
     reached: bool
+    stepped: int
+    first: bool
+    settings: dict[str, float]
     end_voltages: tuple[float, ...]
 
 
@@ -70,10 +73,12 @@ class RoundResult:
     reads: tuple[ReadResult, ...]
 
     @property
-    def full_crossing(self) -> float | None:
-        """Return the crossing if this round measured a full count, else None."""
-        counts = self.complete and not self.spoiled and self.preset and self.stepped == 0
-        return self.reads[0].crossing if counts and self.reads else None
+    def full_read(self) -> ReadResult | None:
+        """Return the read that measured a full count, if one did."""
+        if not (self.complete and not self.spoiled and self.preset and self.reads):
+            return None
+        read = self.reads[0]
+        return read if read.first and read.stepped == 0 and read.crossing is not None else None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -148,11 +153,12 @@ def run_result(logbook: Logbook, run: int) -> RunResult:
     summary = _summary(logbook.select(_summaries().where(runs.c.id == run))[0])
     swept = json.loads(logbook.select(sa.select(runs.c.swept).where(runs.c.id == run))[0][0])
     found = _rounds(logbook, run, going=summary.state == RunState.RUNNING)
-    crossings = [(each, each.full_crossing) for each in found]
-    counted = [(each, crossing) for each, crossing in crossings if crossing is not None]
+    counted = [read for each in found if (read := each.full_read) is not None]
     groups: dict[tuple[float, ...], list[float]] = {}
-    for each, crossing in counted:
-        groups.setdefault(tuple(each.settings[name] for name in swept), []).append(crossing)
+    for read in counted:
+        if read.crossing is not None:
+            place = tuple(read.settings[name] for name in swept)
+            groups.setdefault(place, []).append(read.crossing)
     by_setting = [
         SettingCount(settings=dict(zip(swept, values, strict=True)), count=statistics)
         for values, group in groups.items()
@@ -163,7 +169,7 @@ def run_result(logbook: Logbook, run: int) -> RunResult:
         identities=_identities(logbook, run),
         swept=tuple(swept),
         rounds=tuple(found),
-        full_count=full_count([crossing for _, crossing in counted]),
+        full_count=full_count([each for group in groups.values() for each in group]),
         by_setting=tuple(by_setting),
     )
 
@@ -275,6 +281,9 @@ def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
                 count=row._mapping["count"],
                 crossing=row.crossing,
                 reached=row.reached,
+                stepped=row.stepped,
+                first=row.first,
+                settings=json.loads(row.settings),
                 end_voltages=tuple(json.loads(row.end_voltages)),
             )
         )
@@ -316,6 +325,8 @@ def _round_object(each: RoundResult) -> dict[str, Any]:
                 "count": read.count,
                 "crossing": read.crossing,
                 "reached": read.reached,
+                "stepped": read.stepped,
+                "settings": read.settings,
                 "end_voltages": list(read.end_voltages),
             }
             for read in each.reads

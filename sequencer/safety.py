@@ -61,12 +61,13 @@ _NAMES = {
     signal.SIGINT: "Ctrl-C",
     signal.SIGTERM: "the system asked it to end (SIGTERM)",
     signal.SIGHUP: "the terminal was closed (SIGHUP)",
+    signal.SIGQUIT: "somebody asked it to quit (SIGQUIT)",
 }
 
 
 @contextlib.contextmanager
 def signals(stop: StopSwitch) -> Iterator[None]:
-    """Turn Ctrl-C, SIGTERM and SIGHUP into presses of the switch while the block runs."""
+    """Turn Ctrl-C, SIGTERM, SIGHUP and SIGQUIT into presses of the switch while the block runs."""
 
     def handle(number: int, frame: FrameType | None) -> None:
         reason = _NAMES[signal.Signals(number)]

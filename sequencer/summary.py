@@ -16,7 +16,7 @@ _MOST_ROWS = 60
 
 def say(console: Console, words: str, style: str = "") -> None:
     """Print one sentence that may hold text from a file or an instrument."""
-    console.print(Text(printable(words), style=style), soft_wrap=True)
+    console.print(Text(printable(words, 5000), style=style), soft_wrap=True)
 
 
 def show_plan(console: Console, plan: Plan, bench: Bench) -> None:
@@ -25,7 +25,8 @@ def show_plan(console: Console, plan: Plan, bench: Bench) -> None:
     if plan.recipe.model.purpose:
         say(console, plan.recipe.model.purpose)
     reading = f"at most {plan.most_pulses} pulses"
-    say(console, f"{len(plan.rounds)} rounds, {reading}, at most about"
+    rounds = "1 round" if len(plan.rounds) == 1 else f"{len(plan.rounds)} rounds"
+    say(console, f"{rounds}, {reading}, at most about"
         f" {show_duration(plan.seconds)} and {show_bytes(plan.disk_bytes)} of logbook")  # fmt: skip
     table = Table("pulse", "at the panel", "at the terminal", "across the cell", title="Voltages")
     for each in plan.volts:
@@ -65,11 +66,13 @@ def plan_object(plan: Plan) -> dict[str, object]:
 
 def show_runs(console: Console, found: list[RunSummary]) -> None:
     """Print one line for each run."""
-    table = Table("run", "began (UTC)", "recipe", "kind", "state", "rounds", "shots")
+    table = Table("run")
+    for name in ("began (UTC)", "recipe", "kind", "state", "rounds", "shots"):
+        table.add_column(name, no_wrap=name != "recipe")
     for each in found:
         table.add_row(
             str(each.run),
-            each.began_at[:19].replace("T", " "),
+            each.began_at[5:16].replace("T", " "),
             Text(printable(each.title)),
             each.mode,
             each.state,
@@ -86,7 +89,7 @@ def show_result(console: Console, result: RunResult, *, rounds: bool = True) -> 
     """Print what a run found."""
     summary = result.summary
     say(console, f"Run {summary.run}: {summary.title} ({summary.mode}, {summary.state})", "bold")
-    if summary.reason and summary.state != "finished":
+    if rounds and summary.reason and summary.state != "finished":
         say(console, summary.reason)
     if rounds:
         for role, identity in result.identities.items():
@@ -103,11 +106,11 @@ def show_result(console: Console, result: RunResult, *, rounds: bool = True) -> 
 def show_answer(console: Console, result: RunResult) -> None:
     """Print the full count, for each combination of what was swept."""
     if result.full_count is None:
-        say(console, "No round gave a full count.")
+        say(console, _why_no_answer(result))
         return
-    # With stored counts swept, only the round with none stored is a full count.
-    if len(result.by_setting) > 1:
-        table = Table(*result.swept, "full count", "scatter", "rounds", title="Full count")
+    # One row says at which setting, also where a sweep was cut short.
+    if result.by_setting:
+        table = Table(*result.swept, "full count", "scatter", "rounds", title="Full count, pulses")
         for each in result.by_setting:
             values = [show_setting(name, value) for name, value in each.settings.items()]
             table.add_row(
@@ -116,6 +119,18 @@ def show_answer(console: Console, result: RunResult) -> None:
         console.print(table)
         return
     say(console, f"Full count: {spell_count(result.full_count)}", style="bold")
+
+
+def _why_no_answer(result: RunResult) -> str:
+    reads = [read for each in result.rounds for read in each.reads]
+    if not reads:
+        return "No read was finished, so there is no full count."
+    if any(not read.reached for read in reads):
+        return "No full count: the threshold was not reached; see 'at most' and the threshold."
+    return (
+        "No full count with a fraction: the first pulse already passed the threshold, or pulses"
+        " were stepped before each read."
+    )
 
 
 def spell_count(count: CountStatistics) -> str:
@@ -145,19 +160,20 @@ def _scatter(count: CountStatistics) -> str:
 def _round_table(result: RunResult) -> Table:
     table = Table("round", *result.swept, "stepped", "remaining", "crossing", "sum", "note")
     for each in result.rounds[-_MOST_ROWS:]:
-        swept = [show_setting(name, each.settings[name]) for name in result.swept]
-        for read in each.reads or (None,):
-            if read is None:
-                table.add_row(str(each.round), *swept, str(each.stepped), "", "", "", _note(each))
-                continue
+        if not each.reads:
+            swept = [show_setting(name, each.settings[name]) for name in result.swept]
+            table.add_row(str(each.round), *swept, str(each.stepped), "", "", "", _note(each))
+        for read in each.reads:
+            swept = [show_setting(name, read.settings[name]) for name in result.swept]
+            remaining = str(read.count) if read.reached else f"> {read.count}"
             crossing = "" if read.crossing is None else f"{read.crossing:.2f}"
-            total = "" if read.crossing is None else f"{each.stepped + read.crossing:.2f}"
+            total = "" if read.crossing is None else f"{read.stepped + read.crossing:.2f}"
             if read.reached and read.crossing is None:
                 # The first pulse passed: the crossing lies somewhere within it.
-                total = f"{each.stepped} to {each.stepped + 1}"
+                total = f"{read.stepped} to {read.stepped + 1}"
             note = _note(each) or ("" if read.reached else "threshold not reached")
             table.add_row(
-                str(each.round), *swept, str(each.stepped), str(read.count), crossing, total, note
+                str(each.round), *swept, str(read.stepped), remaining, crossing, total, note
             )
     return table
 

@@ -4,6 +4,7 @@ import json
 import os
 import signal
 import socket
+import sqlite3
 import subprocess
 import sys
 import time
@@ -66,7 +67,7 @@ def ask(address: str, command: str) -> str:
 def test_a_rehearsal_says_what_it_found_and_where_it_is_kept(tmp_path: Path) -> None:
     done = pulsetally("rehearse", "full_count", "--set", "rounds=3", cwd=tmp_path)
     assert done.returncode == 0, done.stderr
-    assert "round 3 of 3: full count" in done.stdout
+    assert "round 3 of 3: full after" in done.stdout
     assert "Full count: " in done.stdout
     assert "logbook.db as run 1" in done.stdout
     assert "Outputs are off, and read back as off." in done.stdout
@@ -264,10 +265,10 @@ def test_a_rehearsal_leaves_no_process_behind(tmp_path: Path) -> None:
 @pytest.mark.parametrize(
     ("arguments", "status", "words"),
     [
-        (("show",), 1, "there is no logbook here"),
+        (("show",), 2, "there is no logbook here"),
         (("rehearse", "nothing_such"), 2, "can't be read: No such file"),
         (("rehearse", "full_count", "--set", "rounds"), 2, "this is not NAME=VALUE"),
-        (("rehearse", "full_count", "--logbook", "/proc/x.db"), 1, "the logbook can't be"),
+        (("rehearse", "full_count", "--logbook", "/proc/x.db"), 2, "the logbook can't be"),
         (("run", "full_count", "--bench", "nothing.yaml"), 2, "the bench file can't be read"),
     ],
 )
@@ -284,7 +285,7 @@ def test_a_file_that_is_no_logbook_is_left_alone(tmp_path: Path) -> None:
     path = tmp_path / "notes.txt"
     path.write_text("these are my notes, not a logbook\n" * 100)
     done = pulsetally("rehearse", "full_count", "--logbook", "notes.txt", cwd=tmp_path)
-    assert done.returncode == 1
+    assert done.returncode == 2
     assert "that it is a logbook" in done.stderr
     assert path.read_text().startswith("these are my notes")
 
@@ -304,3 +305,83 @@ def test_help_is_quick_and_names_every_command(tmp_path: Path) -> None:
         [sys.executable, "-c", code], capture_output=True, text=True, cwd=tmp_path, check=True
     )
     assert probed.stderr.strip() == "[]"
+
+
+def test_a_view_that_can_not_be_written_ends_the_run_in_order(tmp_path: Path) -> None:
+    with running_bench(tmp_path) as addresses:
+        with Path("/dev/full").open("w") as full:
+            done = subprocess.run(
+                [PROGRAM, "run", "full_count", "--bench", "bench.yaml"],
+                cwd=tmp_path,
+                stdout=full,
+                stderr=subprocess.PIPE,
+                text=True,
+                timeout=60,
+                check=False,
+            )
+        assert ask(addresses["generator"], ":OUTPut1:STATe?") == "0"
+    assert done.returncode == 1
+    assert "the view could not be written (No space left on device)" in done.stderr
+    assert "Traceback" not in done.stderr
+    found = shown(tmp_path)
+    assert (found["state"], found["outputs_off"]) == ("stopped", True)
+
+
+def test_outputs_that_are_not_known_to_be_off_are_the_last_word(tmp_path: Path) -> None:
+    with subprocess.Popen(
+        [PROGRAM, "simulate", "--json", "--write-bench", "bench.yaml"],
+        cwd=tmp_path,
+        stdout=subprocess.PIPE,
+        text=True,
+    ) as doomed:
+        assert doomed.stdout is not None
+        doomed.stdout.readline()
+        with subprocess.Popen(
+            [PROGRAM, "run", "full_count", "--bench", "bench.yaml", "--set", "rounds=5000"],
+            cwd=tmp_path,
+            stdout=subprocess.PIPE,
+            stderr=subprocess.PIPE,
+            text=True,
+        ) as process:
+            assert process.stdout is not None
+            while "round 1 of" not in process.stdout.readline():
+                assert process.poll() is None
+            doomed.kill()
+            _, complaints = process.communicate(timeout=40)
+    assert process.returncode == 3
+    last = complaints.splitlines()[-1]
+    assert last.startswith("OUTPUTS NOT CONFIRMED OFF: the function generator at TCPIP::127.0.0.1")
+    assert last.endswith("Switch its output off by hand before you touch the cell.")
+
+
+def test_another_database_is_left_alone(tmp_path: Path) -> None:
+    path = tmp_path / "theirs.db"
+    with sqlite3.connect(path) as theirs:
+        theirs.execute("create table runs (distance real)")
+    theirs.close()
+    before = path.read_bytes()
+    done = pulsetally("rehearse", "full_count", "--logbook", "theirs.db", cwd=tmp_path)
+    assert done.returncode == 2
+    assert "is not a logbook; nothing was changed" in done.stderr
+    assert path.read_bytes()[100:] == before[100:]
+
+
+@pytest.mark.parametrize(
+    ("arguments", "words"),
+    [
+        (("check", "ful_count"), "or 'full_count'"),
+        (("rehearse", "width_sweep", "--set", "up.width=80us"), "'up.width' is swept here"),
+        (("rehearse", "full_count", "--set", "rounds=-2"), "--set rounds=-2"),
+        (("rehearse", "bench.yaml"), "this is a bench file, not a recipe"),
+        (("run", "full_count", "--bench", "recipe.yaml"), "this is a recipe, not a bench file"),
+    ],
+)
+def test_hurried_mistakes_are_understood(
+    tmp_path: Path, arguments: tuple[str, ...], words: str
+) -> None:
+    bench_at(tmp_path, "TCPIP::127.0.0.1::1::SOCKET", "TCPIP::127.0.0.1::2::SOCKET")
+    (tmp_path / "recipe.yaml").write_text("recipe: one\nsteps: [{preset: down}]\n")
+    done = pulsetally(*arguments, cwd=tmp_path)
+    assert done.returncode == 2
+    assert words in done.stderr
+    assert len(done.stderr.splitlines()) == 1

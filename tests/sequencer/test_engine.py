@@ -28,8 +28,7 @@ from pulsetally.sequencer.events import (
 )
 from pulsetally.sequencer.logbook import Logbook
 from pulsetally.sequencer.plan import make_plan
-from pulsetally.sequencer.recipe import load_recipe, parse_recipe
-from pulsetally.sequencer.rehearsal import recipe_path
+from pulsetally.sequencer.recipe import find_recipe, parse_recipe
 from pulsetally.sequencer.results import list_runs, run_result, run_shots
 from pulsetally.sequencer.safety import StopSwitch
 from pulsetally.simulators.cell import CellDescription
@@ -59,9 +58,7 @@ def begin(
     overrides: dict[str, str] | None = None,
     stop: StopSwitch | None = None,
 ) -> Iterator[Event]:
-    with recipe_path(name) as path:
-        recipe = load_recipe(path, overrides)
-    plan = make_plan(recipe, bench)
+    plan = make_plan(find_recipe(name, overrides), bench)
     recorder = logbook.begin_run(plan, bench, mode="run")
     return engine.run(plan, bench, recorder, stop or StopSwitch())
 
@@ -297,5 +294,26 @@ def test_a_pulse_beyond_the_limits_is_never_sent(table: Simulated) -> None:
         assert float(link.ask(":SOURce1:VOLTage:LEVel:IMMediate:HIGH?")) < 6.0
     finally:
         link.close()
-    with pytest.raises(PlanError, match="beyond the source limit"), recipe_path("full_count") as at:
-        make_plan(load_recipe(at, {"up.level": "11 V"}), table.bench)
+    with pytest.raises(PlanError, match="beyond the source limit"):
+        make_plan(find_recipe("full_count", {"up.level": "11 V"}), table.bench)
+
+
+def test_a_read_knows_what_was_in_force_when_a_sweep_stands_inside_a_round(
+    table: Simulated, logbook: Logbook
+) -> None:
+    recipe = parse_recipe(
+        "recipe: sweep inside\npulses:\n  down: {level: -5 V, width: 2 ms}\n"
+        "  up: {level: 4 V, width: 100 us}\nsteps:\n  - preset: down\n"
+        "  - sweep: {up.level: [3.8 V, 4 V]}\n    steps:\n      - {step: up, count: 2}\n"
+        "      - {read: up, until: 2.4 V, at most: 40}\n",
+        file="r.yaml",
+    )
+    plan = make_plan(recipe, table.bench)
+    recorder = logbook.begin_run(plan, table.bench, mode="run")
+    list(engine.run(plan, table.bench, recorder, StopSwitch()))
+    (only,) = run_result(logbook, 1).rounds
+    assert [(each.settings["up.level"], each.stepped) for each in only.reads] == [
+        (3.8, 2),
+        (4.0, 4),
+    ]
+    assert only.full_read is None

@@ -28,8 +28,8 @@ from pulsetally.sequencer.events import (
 )
 from pulsetally.sequencer.logbook import LOGBOOK_VERSION, Logbook, Recorder, unpack
 from pulsetally.sequencer.plan import Plan, make_plan
-from pulsetally.sequencer.recipe import load_recipe
-from pulsetally.sequencer.rehearsal import recipe_path, shipped_bench
+from pulsetally.sequencer.recipe import find_recipe
+from pulsetally.sequencer.rehearsal import shipped_bench
 from pulsetally.sequencer.results import find_run, list_runs, run_result, run_shots
 
 
@@ -46,8 +46,7 @@ def logbook(path: Path) -> Iterator[Logbook]:
 
 
 def plan() -> Plan:
-    with recipe_path("full_count") as at:
-        return make_plan(load_recipe(at), shipped_bench())
+    return make_plan(find_recipe("full_count"), shipped_bench())
 
 
 def invented_shot(first: int = 0) -> Shot:

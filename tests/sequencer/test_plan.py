@@ -5,8 +5,8 @@ import pytest
 from pulsetally.sequencer.bench import parse_bench
 from pulsetally.sequencer.errors import PlanError
 from pulsetally.sequencer.plan import Plan, Preset, Read, Step, Wait, make_plan
-from pulsetally.sequencer.recipe import parse_recipe
-from pulsetally.sequencer.rehearsal import recipe_path, shipped_bench, shipped_names
+from pulsetally.sequencer.recipe import find_recipe, parse_recipe, shipped_recipes
+from pulsetally.sequencer.rehearsal import shipped_bench
 
 HEAD = """\
 recipe: test
@@ -113,15 +113,12 @@ SHIPPED = {
 
 
 def test_every_shipped_recipe_is_listed_here() -> None:
-    assert shipped_names() == sorted(SHIPPED)
+    assert shipped_recipes() == sorted(SHIPPED)
 
 
 @pytest.mark.parametrize("name", sorted(SHIPPED))
 def test_shipped_recipes_plan_on_the_shipped_bench(name: str) -> None:
-    from pulsetally.sequencer.recipe import load_recipe
-
-    with recipe_path(name) as path:
-        plan = make_plan(load_recipe(path), shipped_bench())
+    plan = make_plan(find_recipe(name), shipped_bench())
     assert (len(plan.rounds), plan.swept) == SHIPPED[name]
     assert all(each.repeatable for each in plan.rounds)
     assert plan.recipe.model.purpose

@@ -125,8 +125,8 @@ def test_a_step_with_two_mistakes_tells_both() -> None:
 
 
 def test_overrides_reach_pulses_and_parameters() -> None:
-    recipe = parse_recipe(GOOD, file="r.yaml", overrides={"up.width": "80us", "stored": "3"})
-    assert recipe.model.pulses["up"].width == pytest.approx(80e-6)
+    recipe = parse_recipe(GOOD, file="r.yaml", overrides={"down.width": "1ms", "stored": "3"})
+    assert recipe.model.pulses["down"].width == pytest.approx(1e-3)
     assert recipe.model.parameters["stored"] == 3
 
 
@@ -136,9 +136,13 @@ def test_a_wrong_override_is_told_as_one() -> None:
         "--set up.widht=80us: this recipe has no parameter or pulse setting 'up.widht'."
         " To fix it, write 'up.width'."
     ]
-    (told_unit,) = mistakes_of(GOOD, {"up.width": "80 V"})
-    assert told_unit.file == "--set up.width=80 V"
+    (told_unit,) = mistakes_of(GOOD, {"down.width": "80 V"})
+    assert told_unit.file == "--set down.width=80 V"
     assert "not a time" in told_unit.problem
+    (told_use,) = mistakes_of(GOOD, {"stored": "-2"})
+    assert told_use.file == "--set stored=-2"
+    (told_swept,) = mistakes_of(GOOD, {"up.width": "80 us"})
+    assert "would change nothing" in told_swept.problem
 
 
 def test_a_missing_file_is_a_mistake_and_no_traceback(tmp_path: Path) -> None:

@@ -76,7 +76,7 @@ def test_ctrl_c_asks_first_for_the_end_of_the_round_and_then_for_now() -> None:
     assert signal.getsignal(signal.SIGINT) is before
 
 
-@pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGHUP])
+@pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGHUP, signal.SIGQUIT])
 def test_other_signals_ask_for_an_end_now(number: signal.Signals) -> None:
     stop = StopSwitch()
     with signals(stop):
