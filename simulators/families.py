@@ -4,10 +4,11 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from pulsetally.simulators import speak_perdiv, speak_scpi99, speak_stateword
-from pulsetally.simulators.digitizer import Converter, Digitizer, ScopeSettings
+from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.function_generator import FunctionGenerator
 from pulsetally.simulators.generator_model import GeneratorModel
 from pulsetally.simulators.oscilloscope import Oscilloscope
+from pulsetally.simulators.scope_settings import Converter, ScopeSettings
 from pulsetally.simulators.scpi_device import SCPI99, Manner
 
 

@@ -2,13 +2,13 @@
 
 from dataclasses import replace
 
-from pulsetally.simulators.digitizer import (
+from pulsetally.simulators.digitizer import Digitizer
+from pulsetally.simulators.scope_settings import (
     DIVISIONS,
     FEWEST_POINTS,
     LARGEST_DELAY_SECONDS,
     LARGEST_OFFSET_VOLTS,
     MOST_POINTS,
-    Digitizer,
     ScopeSettings,
     ScopeState,
     TriggerInput,

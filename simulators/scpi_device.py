@@ -99,6 +99,7 @@ class ScpiDevice:
         self.status = Status()
         self._completion_wanted = False
         self.table: HeaderTable[Command] = HeaderTable()
+        self.commands: list[Command] = []
         self.declare(common_commands(self))
         self.declare(self.manner.system(self))
 
@@ -106,6 +107,7 @@ class ScpiDevice:
         """Add rows to the command table."""
         for command in commands:
             self.table.declare(command.pattern, command)
+            self.commands.append(command)
 
     # What an instrument overrides.
 

@@ -5,19 +5,7 @@ The oscilloscope has 8 bits and a screen of 8 by 10 divisions.
 
 import numpy as np
 
-from pulsetally.simulators.digitizer import (
-    DIVISIONS,
-    LARGEST_INTERVAL_SECONDS,
-    LARGEST_RANGE_VOLTS,
-    SMALLEST_INTERVAL_SECONDS,
-    SMALLEST_RANGE_VOLTS,
-    Converter,
-    Digitizer,
-    ScopeSettings,
-    ScopeState,
-    TriggerInput,
-    next_step,
-)
+from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.function_generator import (
     COUNT,
     EDGE,
@@ -35,6 +23,18 @@ from pulsetally.simulators.generator_model import (
     GeneratorModel,
 )
 from pulsetally.simulators.oscilloscope import DELAY, LEVEL, OFFSET, POINTS, Oscilloscope
+from pulsetally.simulators.scope_settings import (
+    DIVISIONS,
+    LARGEST_INTERVAL_SECONDS,
+    LARGEST_RANGE_VOLTS,
+    SMALLEST_INTERVAL_SECONDS,
+    SMALLEST_RANGE_VOLTS,
+    Converter,
+    ScopeSettings,
+    ScopeState,
+    TriggerInput,
+    next_step,
+)
 from pulsetally.simulators.scpi_blocks import definite_block
 from pulsetally.simulators.scpi_device import Answer, Call, Command, Manner, ScpiDevice
 from pulsetally.simulators.scpi_errors import ScpiError

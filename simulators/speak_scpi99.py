@@ -3,16 +3,7 @@
 SCPI-99 has no node OUTPut:LOAD; it is here because bench generators have it.
 """
 
-from pulsetally.simulators.digitizer import (
-    LARGEST_INTERVAL_SECONDS,
-    LARGEST_RANGE_VOLTS,
-    SMALLEST_INTERVAL_SECONDS,
-    SMALLEST_RANGE_VOLTS,
-    Converter,
-    Digitizer,
-    ScopeSettings,
-    TriggerInput,
-)
+from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.function_generator import (
     COUNT,
     EDGE,
@@ -24,6 +15,15 @@ from pulsetally.simulators.function_generator import (
 )
 from pulsetally.simulators.generator_model import FireSource, GeneratorModel
 from pulsetally.simulators.oscilloscope import LEVEL, OFFSET, POINTS, Oscilloscope
+from pulsetally.simulators.scope_settings import (
+    LARGEST_INTERVAL_SECONDS,
+    LARGEST_RANGE_VOLTS,
+    SMALLEST_INTERVAL_SECONDS,
+    SMALLEST_RANGE_VOLTS,
+    Converter,
+    ScopeSettings,
+    TriggerInput,
+)
 from pulsetally.simulators.scpi_blocks import definite_block
 from pulsetally.simulators.scpi_device import SCPI99, Answer, Call, Command
 from pulsetally.simulators.scpi_errors import ScpiError

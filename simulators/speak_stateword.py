@@ -6,17 +6,7 @@ byte first, and no newline follows their block.
 
 import math
 
-from pulsetally.simulators.digitizer import (
-    LARGEST_INTERVAL_SECONDS,
-    LARGEST_RANGE_VOLTS,
-    SMALLEST_INTERVAL_SECONDS,
-    SMALLEST_RANGE_VOLTS,
-    Converter,
-    Digitizer,
-    ScopeSettings,
-    ScopeState,
-    TriggerInput,
-)
+from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.function_generator import (
     COUNT,
     EDGE,
@@ -28,6 +18,16 @@ from pulsetally.simulators.function_generator import (
 )
 from pulsetally.simulators.generator_model import FireSource, GeneratorModel
 from pulsetally.simulators.oscilloscope import DELAY, LEVEL, OFFSET, POINTS, Oscilloscope
+from pulsetally.simulators.scope_settings import (
+    LARGEST_INTERVAL_SECONDS,
+    LARGEST_RANGE_VOLTS,
+    SMALLEST_INTERVAL_SECONDS,
+    SMALLEST_RANGE_VOLTS,
+    Converter,
+    ScopeSettings,
+    ScopeState,
+    TriggerInput,
+)
 from pulsetally.simulators.scpi_blocks import definite_block
 from pulsetally.simulators.scpi_device import Answer, Call, Command, Manner, ScpiDevice
 from pulsetally.simulators.scpi_errors import ScpiError

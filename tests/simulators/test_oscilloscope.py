@@ -8,7 +8,8 @@ import pytest
 from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import CellDescription
-from pulsetally.simulators.digitizer import first_crossing, next_step
+from pulsetally.simulators.digitizer import first_crossing
+from pulsetally.simulators.scope_settings import next_step
 from pulsetally.simulators.scpi_engine import ScpiEngine
 from pulsetally.simulators.simulate import Bench, SimulationSettings
 
