@@ -1,7 +1,10 @@
 """The bench on pseudo-terminals: with plain PyVISA, and byte by byte as the line carries it."""
 
+import json
 import os
 import select
+import subprocess
+import sys
 from collections.abc import Iterator
 from contextlib import closing
 
@@ -236,3 +239,22 @@ def test_faulty_settings_are_refused(capsys: pytest.CaptureFixture[str]) -> None
     with pytest.raises(SystemExit):
         main(["--serial", "--oscilloscope-port", "5025"])
     assert "oscilloscope_port" in capsys.readouterr().err
+
+
+def test_the_program_serves_a_family_on_serial_lines() -> None:
+    command = [sys.executable, "-m", "pulsetally.simulators.simulate", "--json", "--serial"]
+    with subprocess.Popen(
+        [*command, "--family", "stateword", "--until-stdin-closes"],
+        stdin=subprocess.PIPE,
+        stdout=subprocess.PIPE,
+    ) as process:
+        assert process.stdin is not None
+        assert process.stdout is not None
+        addresses = json.loads(process.stdout.readline())
+        with BareLine(addresses["oscilloscope"]) as line:
+            line.send(b"*IDN?\nERROR?\n")
+            assert line.read_until(b"No error\n") == (
+                b"PULSETALLY,SIMULATED OSCILLOSCOPE STATEWORD,1,1\nERROR 0,No error\n"
+            )
+        process.stdin.close()
+        assert process.wait(10) == 0
