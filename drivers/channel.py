@@ -141,22 +141,26 @@ class VisaChannel:
         self._resource = resource
         # An answer that is an exact multiple of the chunk size times out on VXI-11.
         resource.chunk_size = 1 << 20 | 1
-        if str(getattr(resource, "resource_name", "")).upper().startswith("ASRL"):
+        name = str(getattr(resource, "resource_name", "")).upper()
+        self._serial = name.startswith("ASRL")
+        if self._serial:
             from pyvisa import constants
 
-            # XON and XOFF are bytes of a block, and so is every would-be end of input.
+            # XON and XOFF are bytes of a block too.
             resource.flow_control = constants.ControlFlow.none
-            resource.end_input = constants.SerialTermination.none
             resource.flush(constants.BufferOperation.discard_read_buffer)
 
     def _prepare(self, deadline: float, *, line: bool) -> None:
         resource = self._resource
         resource.timeout = max(1, int(_left(deadline) * 1000))
         # With the termination character on, a block is read byte by byte at every 0x0A in it.
-        if line:
-            resource.read_termination = "\n"
-        else:
-            resource.read_termination = None
+        resource.read_termination = "\n" if line else None
+        if self._serial:
+            from pyvisa import constants
+
+            # A serial line has a second notion of where input ends.
+            ends = constants.SerialTermination
+            resource.end_input = ends.termination_char if line else ends.none
 
     def _translate(self, error: Exception) -> Exception:
         from pyvisa import constants, errors

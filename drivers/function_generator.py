@@ -3,7 +3,7 @@
 import math
 from dataclasses import dataclass
 
-from pulsetally.drivers.dialect import GeneratorDialect, understand
+from pulsetally.drivers.dialect import GeneratorDialect, fill, understand
 from pulsetally.drivers.errors import LimitError, SettingRefused
 from pulsetally.drivers.instrument import Instrument
 from pulsetally.drivers.link import Link
@@ -147,7 +147,8 @@ class FunctionGenerator(Instrument):
 
     def is_idle(self) -> bool:
         """Say whether no pulse is being sent; True where the instrument can't tell."""
-        return self._dialect.idle is None or self.says_yes(self._dialect.idle)
+        idle = self._dialect.idle
+        return idle is None or self.says_yes(idle, self._channel)
 
     def switch(self, *, on: bool) -> None:
         """Connect or disconnect the output, and read back that it happened."""
@@ -165,8 +166,7 @@ class FunctionGenerator(Instrument):
     def output_is_on(self) -> bool:
         """Read back whether the output is connected. An answer that is neither raises."""
         output = self._dialect.output
-        query = output.ask.replace("{channel}", str(self._channel))
-        answer = self.ask(query)
+        answer = self.ask(fill(output.ask, channel=self._channel))
         word = understand(answer, output.words)
         if word is None:
             raise SettingRefused(

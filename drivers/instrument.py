@@ -154,13 +154,14 @@ class Instrument:
             )
         return value
 
-    def says_yes(self, predicate: Predicate) -> bool:
+    def says_yes(self, predicate: Predicate, channel: int = 1) -> bool:
         """Ask a predicate's question. Raises BadReply when the answer makes no sense."""
-        answer = self.ask(predicate.ask)
+        query = fill(predicate.ask, channel=channel)
+        answer = self.ask(query)
         try:
             return says_yes(predicate, answer)
         except NumberError as error:
-            raise BadReply(self.address, predicate.ask, str(error), OTHER_DIALECT) from error
+            raise BadReply(self.address, query, str(error), OTHER_DIALECT) from error
 
     def _send(self, templates: Sequence[str], channel: int = 1) -> None:
         for template in templates:

@@ -24,14 +24,14 @@ class AcquisitionSetting:
     """State how the next records are taken.
 
     sample_interval: seconds. points: samples a record. before: share of the record, 0 to 1,
-    that lies before the trigger. spans: largest peak-to-peak volts, centred on 0, by channel.
+    that lies before the trigger. ranges: lowest and highest volts to be seen, by channel.
     trigger_channel, trigger_volts, rising: the edge that triggers.
     """
 
     sample_interval: float
     points: int
     before: float
-    spans: dict[int, float]
+    ranges: dict[int, tuple[float, float]]
     trigger_channel: int
     trigger_volts: float
     rising: bool
@@ -128,8 +128,13 @@ class Oscilloscope(Instrument):
         found: dict[str, float] = {}
         self.abort()
         each_channel = [each for each in self._dialect.settings if each.name in CHANNEL_SETTINGS]
-        for channel, span in setting.spans.items():
-            wanted = {"span": span, "volts per division": span / high, "centre": 0.0}
+        for channel, (lowest, highest) in setting.ranges.items():
+            span = highest - lowest
+            wanted = {
+                "span": span,
+                "volts per division": span / high,
+                "centre": (lowest + highest) / 2,
+            }
             self.apply(each_channel, wanted, channel)
             numbers = self.read_back(each_channel, wanted, channel)
             found |= {f"channel {channel} {name}": value for name, value in numbers.items()}

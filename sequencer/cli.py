@@ -182,6 +182,10 @@ def simulate(
     generator_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
     oscilloscope_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
     control_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
+    dialect: Annotated[str, typer.Option(help="scpi99, perdiv or stateword.")] = "scpi99",
+    serial: Annotated[
+        bool, typer.Option("--serial", help="On pseudo-terminals instead of TCP ports.")
+    ] = False,
     write_bench: Annotated[
         Path | None, typer.Option(metavar="FILE", help="Write a bench file with the addresses.")
     ] = None,
@@ -200,23 +204,103 @@ def simulate(
     def announce(addresses: Addresses) -> None:
         if write_bench is not None:
             text = addressed_bench_text(
-                addresses.generator, addresses.oscilloscope, addresses.control
+                addresses.generator, addresses.oscilloscope, addresses.control, dialect
             )
             write_bench.write_text(text, encoding="utf-8")
         tell(addresses, as_json=as_json)
 
-    settings = SimulationSettings(
-        cell=cell_with(DEFAULT_DOMAINS if domains is None else domains),
-        seed=seed,
-        generator_port=generator_port,
-        oscilloscope_port=oscilloscope_port,
-        control_port=control_port,
-    )
+    try:
+        settings = SimulationSettings(
+            cell=cell_with(DEFAULT_DOMAINS if domains is None else domains),
+            seed=seed,
+            family=dialect,
+            serial=serial,
+            generator_port=generator_port,
+            oscilloscope_port=oscilloscope_port,
+            control_port=control_port,
+        )
+    except ValueError as error:
+        _complain(f"the simulated bench can't be made: {error}.")
+        raise typer.Exit(WRONG_INPUT) from error
     try:
         serve(settings, announce)
     except OSError as error:
         _complain(f"the simulated bench can't listen: {error.strerror}. To fix it, use port 0.")
         raise typer.Exit(FAILED) from error
+
+
+bench_app = typer.Typer(no_args_is_help=True, help="Look at a bench: list, probe, quiet.")
+app.add_typer(bench_app, name="bench")
+
+
+@bench_app.command("list", epilog="Example: pulsetally bench list my_bench.yaml")
+def bench_list(
+    benches: Annotated[
+        list[Path] | None, typer.Argument(metavar="[BENCH]...", help="Bench files to look at too.")
+    ] = None,
+    serial: Annotated[bool, typer.Option("--serial", help="Ask serial ports as well.")] = False,
+    search: Annotated[
+        bool, typer.Option(help="Search this machine's ports and, by broadcast, the network.")
+    ] = True,
+    as_json: JsonOption = False,
+) -> None:
+    """List the addresses that can be found, with who answers; two seconds at most."""
+    from dataclasses import asdict
+
+    from pulsetally.sequencer.bench import load_bench
+    from pulsetally.sequencer.discovery import identify_all, visible_addresses
+    from pulsetally.sequencer.summary import show_found
+
+    with _told():
+        models = [load_bench(each).model for each in benches or []]
+        addresses = visible_addresses() if search else []
+        for model in models:
+            addresses += [model.generator.address, model.oscilloscope.address]
+        found = identify_all(addresses, serial_too=serial)
+        if as_json:
+            _print_json([asdict(each) for each in found])
+        else:
+            show_found(_console(), found)
+
+
+@bench_app.command("probe", epilog="Example: pulsetally bench probe my_bench.yaml")
+def bench_probe(
+    bench: Annotated[Path, typer.Argument(help="The bench file.")], as_json: JsonOption = False
+) -> None:
+    """Try each command that a run would use, with the outputs off; fires nothing."""
+    from dataclasses import asdict
+
+    from pulsetally.sequencer.bench import load_bench
+    from pulsetally.sequencer.instruments import open_links
+    from pulsetally.sequencer.probe import probe
+    from pulsetally.sequencer.summary import show_checks
+
+    with _told():
+        table = load_bench(bench)
+        with open_links(table) as (generator, oscilloscope):
+            checks = list(probe(table, generator, oscilloscope))
+        if as_json:
+            _print_json([asdict(each) for each in checks])
+        else:
+            show_checks(_console(), checks)
+        if any(each.holds is False for each in checks):
+            raise typer.Exit(FAILED)
+
+
+@bench_app.command("quiet", epilog="Example: pulsetally bench quiet my_bench.yaml")
+def bench_quiet(bench: Annotated[Path, typer.Argument(help="The bench file.")]) -> None:
+    """Switch the outputs off and read that back, whatever state things are in."""
+    from pulsetally.sequencer.bench import load_bench
+    from pulsetally.sequencer.instruments import quiet_bench
+    from pulsetally.sequencer.summary import say
+
+    with _told():
+        table = load_bench(bench)
+        quiet_bench(table)
+        say(
+            _console(),
+            f"{table.model.generator.address}: the output is off, and reads back as off.",
+        )
 
 
 def _planned(recipe: str, bench: Path | None, overrides: list[str] | None) -> "tuple[Plan, Bench]":

@@ -49,8 +49,8 @@ _DONE_SECONDS = 3.0
 _POLL_SECONDS = 0.002
 # The share of a record that lies before the trigger.
 _BEFORE = 0.1
-# The digitizer's range, against the largest voltage that is expected.
-_HEADROOM = 1.1
+# The digitizer's range, against the swing that is expected.
+_HEADROOM = 1.2
 
 
 def run(
@@ -290,9 +290,9 @@ class _Conductor:
             sample_interval=self._oscilloscope.interval_for(span, points),
             points=points,
             before=_BEFORE,
-            spans={
-                int(oscilloscope.source_channel): _span(source),
-                int(oscilloscope.node_channel): _span(node),
+            ranges={
+                int(oscilloscope.source_channel): _range(source),
+                int(oscilloscope.node_channel): _range(node),
             },
             trigger_channel=int(oscilloscope.source_channel),
             trigger_volts=sum(source) / 2,
@@ -342,8 +342,11 @@ class _Conductor:
         return False
 
 
-def _span(levels: list[float]) -> float:
-    return 2 * _HEADROOM * max(abs(volts) for volts in levels)
+def _range(levels: list[float]) -> tuple[float, float]:
+    # Around the pulse and not around zero: a pulse goes one way only, and an 8-bit digitizer
+    # has no codes to give away.
+    middle, half = sum(levels) / 2, abs(levels[1] - levels[0]) / 2
+    return middle - _HEADROOM * half, middle + _HEADROOM * half
 
 
 def _waveform(trace: Trace) -> Waveform:

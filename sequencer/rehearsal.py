@@ -31,10 +31,12 @@ def shipped_bench() -> Bench:
     return parse_bench(text, file=name)
 
 
-def addressed_bench_text(generator: str, oscilloscope: str, clock: str) -> str:
-    """Write the shipped bench file anew, with the addresses of running instruments."""
+def addressed_bench_text(
+    generator: str, oscilloscope: str, clock: str, dialect: str = "scpi99"
+) -> str:
+    """Write the shipped bench file anew, with addresses and dialect of running instruments."""
     bench = shipped_bench()
-    text = bench.text
+    text = bench.text.replace("dialect: scpi99", f"dialect: {dialect}")
     for was, now in (
         (bench.model.generator.address, generator),
         (bench.model.oscilloscope.address, oscilloscope),

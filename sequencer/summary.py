@@ -6,7 +6,9 @@ from rich.text import Text
 
 from pulsetally.sequencer.analysis.counting import CountStatistics
 from pulsetally.sequencer.bench import Bench
+from pulsetally.sequencer.discovery import Found
 from pulsetally.sequencer.plan import Plan
+from pulsetally.sequencer.probe import Check
 from pulsetally.sequencer.progress import printable, show_setting
 from pulsetally.sequencer.quantities import show_duration, show_quantity
 from pulsetally.sequencer.results import RoundResult, RunResult, RunSummary
@@ -142,6 +144,34 @@ def spell_count(count: CountStatistics) -> str:
         f" (standard deviation of {count.rounds} rounds; mean known to"
         f" {count.mean_uncertainty:.2g})"
     )
+
+
+def show_found(console: Console, found: list[Found]) -> None:
+    """Print what was found at each address."""
+    if not found:
+        say(console, "No address was found. Name bench files to ask the addresses in them.")
+        return
+    table = Table("address", "who answers")
+    for each in found:
+        words = each.identity or f"nobody: {each.note}"
+        table.add_row(Text(printable(each.address)), Text(printable(words)))
+    console.print(table)
+
+
+def show_checks(console: Console, checks: list[Check]) -> None:
+    """Print what holds and what doesn't, with the exchange of each failure."""
+    table = Table("instrument", "check", "holds", "found")
+    for each in checks:
+        word = {True: "yes", False: "NO", None: "not tried"}[each.holds]
+        table.add_row(each.instrument, each.name, word, Text(printable(each.detail)))
+    console.print(table)
+    for each in checks:
+        if each.holds is False:
+            say(console, f"{each.instrument}, {each.name}: what went over the line:", "bold")
+            for line in each.exchange:
+                say(console, f"    {line}")
+    failed = sum(each.holds is False for each in checks)
+    say(console, f"{failed} of {len(checks)} checks failed." if failed else "Everything holds.")
 
 
 def show_bytes(count: float) -> str:

@@ -8,8 +8,8 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 
 from pulsetally.drivers.dialect import GeneratorDialect
-from pulsetally.sequencer.bench import Bench
-from pulsetally.sequencer.rehearsal import shipped_bench
+from pulsetally.sequencer.bench import Bench, parse_bench
+from pulsetally.sequencer.rehearsal import addressed_bench_text, shipped_bench
 from pulsetally.simulators.simulate import Addresses, SimulationSettings, serve_until
 
 
@@ -81,11 +81,13 @@ def simulated(settings: SimulationSettings | None = None) -> Iterator[Simulated]
     try:
         assert listening.wait(20)
         (addresses,) = found
-        bench = shipped_bench().with_addresses(
-            generator=addresses.generator,
-            oscilloscope=addresses.oscilloscope,
-            clock=addresses.control,
+        text = addressed_bench_text(
+            addresses.generator,
+            addresses.oscilloscope,
+            addresses.control,
+            (settings or SimulationSettings()).family,
         )
+        bench = parse_bench(text, file="bench.yaml")
         yield Simulated(addresses=addresses, bench=bench)
     finally:
         loop.call_soon_threadsafe(stop.set)
