@@ -172,14 +172,14 @@ class GeneratorDialect(Speech):
 class OscilloscopeDialect(Speech):
     """How an oscilloscope is spoken to.
 
-    divisions: of the screen, high and wide. record_now: takes a record without a trigger.
+    divisions: of the screen, high and wide. force: triggers an armed acquisition at once.
     """
 
     divisions: tuple[int, int]
     arm: tuple[str, ...]
     armed: Predicate
     done: Predicate
-    record_now: tuple[str, ...]
+    force: tuple[str, ...]
     waveform: WaveformForm
 
 

@@ -149,9 +149,9 @@ class Oscilloscope(Instrument):
         """Begin one acquisition. It is armed only once is_armed says so."""
         self._send(self._dialect.arm)
 
-    def record_now(self) -> None:
-        """Take one record without waiting for a trigger."""
-        self._send(self._dialect.record_now)
+    def force(self) -> None:
+        """Trigger an armed acquisition at once; without arming first it is lost."""
+        self._send(self._dialect.force)
 
     def is_armed(self) -> bool:
         """Say whether the record before the trigger is full and a trigger would be taken."""

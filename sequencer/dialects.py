@@ -309,7 +309,7 @@ class OscilloscopeSection(_SpeechSection):
     arm: Annotated[Commands, Field(min_length=1)]
     armed: PredicateSection
     done: PredicateSection
-    record_now: Annotated[Commands, Field(alias="record now")] = Field(default_factory=list)
+    force: Annotated[Commands, Field(alias="force trigger")] = Field(default_factory=list)
     waveform: WaveformSection
 
     @model_validator(mode="after")
@@ -340,7 +340,7 @@ class OscilloscopeSection(_SpeechSection):
             arm=tuple(self.arm),
             armed=self.armed.build(),
             done=self.done.build(),
-            record_now=tuple(self.record_now),
+            force=tuple(self.force),
             waveform=self.waveform.build(),
         )
 

@@ -249,14 +249,16 @@ def _probe_oscilloscope(bench: Bench, link: VisaLink) -> Iterator[Check]:
         return f"armed after {seconds * 1e3:.0f} ms, and not any more when ended"
 
     yield prober.check("armed", armed)
-    if not dialect.record_now:
-        detail = "the dialect has no 'record now', so no block was fetched"
+    if not dialect.force:
+        detail = "the dialect has no 'force trigger', so no block was fetched"
         yield Check(instrument=prober.name, name="record", holds=None, detail=detail)
         return
 
     def record() -> str:
         oscilloscope.set_acquisition(setting)
-        oscilloscope.record_now()
+        oscilloscope.arm()
+        _wait_for(oscilloscope.is_armed, "armed")
+        oscilloscope.force()
         _wait_for(oscilloscope.is_done, "done")
         parts = []
         for channel in channels:

@@ -108,6 +108,13 @@ class Digitizer:
             raise ScpiError(-211)
         self._trigger_at(acquisition, self._seen_seconds)
 
+    def force(self) -> None:
+        """Trigger now, whatever the source; -211 unless armed."""
+        acquisition = self._acquisition
+        if acquisition is None or not self._is_armed():
+            raise ScpiError(-211)
+        self._trigger_at(acquisition, self._seen_seconds)
+
     def initiate(self) -> None:
         """Begin an acquisition, the record before being lost; -213 during another."""
         if self._acquisition is not None:

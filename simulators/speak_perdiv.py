@@ -244,6 +244,7 @@ class PerdivOscilloscope(Oscilloscope):
             choice(f"{edge}:SLOPe", slopes, self.set_rising, self.rising),
             action(":SINGle", single),
             action(":STOP", self.model.abort),
+            action(":FORCe", self.model.force),
             question(":ACQuire:STATe", lambda: str(_STATES[self.model.state])),
         ]
 

@@ -167,6 +167,7 @@ class Scpi99Oscilloscope(Oscilloscope):
             quantity(f"{trigger}:LEVel", LEVEL, self.set_level, self.level_volts),
             choice(f"{trigger}:SLOPe", slopes, self.set_rising, self.rising),
             action(":INITiate[:IMMediate]", self.model.initiate),
+            action(":TRIGger[:SEQuence][:IMMediate]", self.model.force),
             action(":ABORt", self.model.abort),
         ]
 

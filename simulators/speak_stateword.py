@@ -220,6 +220,7 @@ class StatewordOscilloscope(Oscilloscope):
                 set_mode,
                 lambda: self.model.is_acquiring,
             ),
+            action(":TRIG:FORCE", self.model.force),
             question(":TRIG:STATE", lambda: _STATES[self.model.state]),
         ]
 

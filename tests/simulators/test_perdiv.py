@@ -82,6 +82,7 @@ DEEDS = {
     ":ABORt": "ABOR",
     ":SINGle": "SING",
     ":STOP": "STOP",
+    ":FORCe": "FORC",
     ":ACQuire:STATe": "ACQ:STAT?",
     ":WAVeform:PREamble": "WAV:PRE?",
     ":WAVeform:DATA": "WAV:DATA?",
@@ -136,8 +137,10 @@ def test_what_is_no_setting_is_known_by_its_long_and_short_form(
     long = pattern.removeprefix(":").replace("<1>", "1") + "?" * short.endswith("?")
     for message in (long, short, short.lower()):
         line.say(message)
-        # Without a record there is nothing to fetch, but the header is known.
-        assert error(line) == (-230 if "WAV" in short else 0)
+        # Without a record there is nothing to fetch, and without arming nothing to trigger,
+        # but the header is known.
+        refusal = -230 if "WAV" in short else -211 if "FORC" in short else 0
+        assert error(line) == refusal
 
 
 def test_reset_restores_everything(talk: Talk) -> None:
@@ -438,3 +441,15 @@ def test_text_tells_what_the_bytes_do(talk: Talk) -> None:
     assert preamble(talk.oscilloscope)[0] == 1
     told = [float(text) for text in talk.oscilloscope.say("WAV:DATA?").split(",")]
     assert told == pytest.approx(volts.tolist(), abs=1e-6)
+
+
+def test_a_forced_trigger_is_taken_only_when_armed(talk: Talk) -> None:
+    say = talk.oscilloscope.say
+    say("TIM:SCAL 1E-3;POS 0;:ACQ:POIN 1000;:TRIG:EDGE:SOUR EXT;:SING;:FORC")
+    assert error(talk.oscilloscope) == -211
+    assert say("ACQ:STAT?") == "1"
+    talk.advance(0.006)
+    say("FORC")
+    talk.advance(0.006)
+    assert say("ACQ:STAT?") == "4"
+    assert error(talk.oscilloscope) == 0

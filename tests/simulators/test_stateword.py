@@ -68,6 +68,7 @@ DEEDS = {
     ":CH<1>:STATE",
     ":CH<1>:STOP",
     ":TRIG:STATE",
+    ":TRIG:FORCE",
     ":DATA:GAIN",
     ":DATA:ZERO",
     ":DATA:STEP",
@@ -362,3 +363,15 @@ def test_a_record_never_ends_before_its_trigger(talk: Talk) -> None:
 def test_it_clips_at_both_ends(talk: Talk, position: float, code: int) -> None:
     shoot(talk, f"CH2:RANGE 0.8;POSITION {position};:HOR:DELAY -1.9E-4;:DATA:SOURCE CH2")
     assert set(codes(talk.oscilloscope)) == {code}
+
+
+def test_a_forced_trigger_is_taken_only_when_armed(talk: Talk) -> None:
+    say = talk.oscilloscope.say
+    say("HOR:RATE 1E5;LENGTH 1001;DELAY -5E-3;:TRIG:CHANNEL EXT;:TRIG:MODE SINGLE;:TRIG:FORCE")
+    assert error(talk.oscilloscope) == -211
+    assert say("TRIG:STATE?") == "TRIG:STATE PREFILL"
+    talk.advance(0.006)
+    say("TRIG:FORCE")
+    talk.advance(0.006)
+    assert say("TRIG:STATE?") == "TRIG:STATE DONE"
+    assert error(talk.oscilloscope) == 0
