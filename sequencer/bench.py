@@ -29,6 +29,7 @@ from pulsetally.sequencer.quantities import (
 )
 from pulsetally.sequencer.yaml_places import Path, load_yaml, nearest, read_text
 
+VACUUM_PERMITTIVITY = 8.8541878128e-12
 # Boltzmann constant over elementary charge, exact in the SI of 2019, at 27 degrees Celsius.
 _THERMAL_VOLTS = 1.380649e-23 / 1.602176634e-19 * 300.15
 
@@ -145,6 +146,9 @@ class CellSection(Model):
     name: str = "unnamed"
     area: Annotated[float, quantity(AREA, above=0)]
     thickness: Annotated[float, quantity(LENGTH, above=0)]
+    relative_permittivity: Annotated[
+        float | None, Field(alias="relative permittivity"), quantity(NUMBER, least=1, most=1e5)
+    ] = None
 
 
 def _title(written: object) -> object:
@@ -234,6 +238,24 @@ class Bench:
         if wiring.clamp is not None:
             volts = math.copysign(min(abs(volts), wiring.clamp.breakdown), volts)
         return volts
+
+    def probe_tau(self) -> float:
+        """Return the node's time constant without a cell, in seconds."""
+        return self._tau(self.model.wiring.probe.capacitance)
+
+    def cell_tau(self) -> float | None:
+        """Return the node's time constant with the cell, in seconds; None if it isn't known."""
+        cell = self.model.cell
+        if cell.relative_permittivity is None:
+            return None
+        farads = VACUUM_PERMITTIVITY * cell.relative_permittivity * cell.area / cell.thickness
+        return self._tau(farads + self.model.wiring.probe.capacitance)
+
+    def _tau(self, farads: float) -> float:
+        wiring = self.model.wiring
+        loop = wiring.source_resistance + wiring.series_resistance
+        # Seen from the node, the probe lies across the loop.
+        return farads * loop * wiring.probe.resistance / (loop + wiring.probe.resistance)
 
     def panel_limit(self) -> float:
         """Return the largest panel voltage, either sign, that keeps both limits, in volts."""

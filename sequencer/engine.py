@@ -6,20 +6,24 @@ it and before the next pulse goes out; however it ends, the output is off and re
 
 from collections.abc import Callable, Generator, Iterator
 from dataclasses import replace
+from typing import NamedTuple
 
 from pulsetally.drivers.errors import InstrumentError, PulsetallyError
 from pulsetally.drivers.function_generator import PulseSetting
 from pulsetally.drivers.oscilloscope import AcquisitionSetting, Trace
+from pulsetally.sequencer.analysis.contact import ContactUnclear, Verdict, judge_contact
 from pulsetally.sequencer.analysis.counting import count_read, passes
 from pulsetally.sequencer.analysis.pulses import EndVoltage, PulseUnreadable, end_voltage
 from pulsetally.sequencer.bench import Bench
 from pulsetally.sequencer.errors import (
+    ContactLost,
     LogbookError,
     OutputsNotConfirmed,
     ShotMissing,
     StopRequested,
 )
 from pulsetally.sequencer.events import (
+    ContactChecked,
     Event,
     PulseArmed,
     PulseSetUp,
@@ -39,7 +43,17 @@ from pulsetally.sequencer.events import (
 )
 from pulsetally.sequencer.instruments import Instruments, open_instruments
 from pulsetally.sequencer.logbook import Recorder
-from pulsetally.sequencer.plan import Plan, Preset, Pulse, Read, Round, Step, Wait, window_points
+from pulsetally.sequencer.plan import (
+    Contact,
+    Plan,
+    Preset,
+    Pulse,
+    Read,
+    Round,
+    Step,
+    Wait,
+    window_points,
+)
 from pulsetally.sequencer.safety import StopSwitch
 
 # A round that lost a pulse starts again; one that loses it again and again has a cause.
@@ -142,7 +156,7 @@ class _Conductor:
                 if not each.repeatable or attempt == MOST_ATTEMPTS:
                     raise ShotMissing(error.order, reason) from error
                 continue
-            except (InstrumentError, StopRequested) as error:
+            except (InstrumentError, StopRequested, ContactLost) as error:
                 yield RoundSpoiled(round=each.number, reason=self._cut(error))
                 raise
             yield RoundFinished(round=each.number)
@@ -172,6 +186,9 @@ class _Conductor:
                 case Preset():
                     order += 1
                     yield from self._pulse(each, order, Role.PRESET, action.pulse)
+                case Contact():
+                    order += 1
+                    yield from self._contact(each, order, action.pulse)
                 case Step():
                     for _ in range(action.count):
                         order += 1
@@ -191,8 +208,8 @@ class _Conductor:
         while len(ends) < action.at_most:
             order += 1
             taken = yield from self._pulse(each, order, Role.READ, action.pulse, action)
-            ends.append(taken.volts)
-            if passes(taken.volts, action.threshold, rising=rising):
+            ends.append(taken.end.volts)
+            if passes(taken.end.volts, action.threshold, rising=rising):
                 break
         count = count_read(ends, action.threshold, rising=rising)
         yield ReadFinished(
@@ -211,7 +228,7 @@ class _Conductor:
 
     def _pulse(
         self, each: Round, order: int, role: Role, pulse: Pulse, read: Read | None = None
-    ) -> Generator[Event, None, EndVoltage]:
+    ) -> Generator[Event, None, "_Taken"]:
         """Deliver one pulse and record it: arm, know that it is armed, fire, fetch."""
         if self._stop.after_round and not self._stop_announced:
             self._stop_announced = True
@@ -251,7 +268,34 @@ class _Conductor:
         )
         if end is None:
             raise ShotMissing(order, f"the record of pulse {order} can't be used: {problem}")
-        return end
+        return _Taken(shot, end)
+
+    def _contact(self, each: Round, order: int, pulse: Pulse) -> Generator[Event, None, None]:
+        shot = (yield from self._pulse(each, order, Role.CONTACT, pulse)).shot
+        bench = self._bench
+        try:
+            result = judge_contact(
+                shot.times,
+                shot.source.volts,
+                shot.node.volts,
+                base=bench.terminal_volts(pulse.base),
+                level=bench.terminal_volts(pulse.level),
+                ramp=pulse.ramp,
+                reached_volts=bench.cell_volts(pulse.level),
+                probe_tau=bench.probe_tau(),
+                expected_tau=bench.cell_tau(),
+            )
+        except ContactUnclear as error:
+            raise ContactLost(
+                f"contact can't be judged: {error}. To fix it, use a longer pulse."
+            ) from error
+        yield ContactChecked(round=each.number, pulse=pulse.name, result=result)
+        if result.verdict is not Verdict.GOOD:
+            raise ContactLost(
+                f"the cell looks {result.verdict}: the node goes to {result.final_volts:.3g} V with"
+                f" a time constant of {result.tau:.3g} s. To fix it, look at probes, socket and"
+                " cell, then start again."
+            )
 
     def _set_up(self, pulse: Pulse) -> Iterator[Event]:
         if pulse == self._ready_for:
@@ -340,6 +384,13 @@ class _Conductor:
             if condition():
                 return True
         return False
+
+
+class _Taken(NamedTuple):
+    """A pulse's record, and its end voltage."""
+
+    shot: Shot
+    end: EndVoltage
 
 
 def _range(levels: list[float]) -> tuple[float, float]:

@@ -69,6 +69,10 @@ class ShotMissing(PulsetallyError):  # noqa: N818 - it says what happened
         self.order, self.problem = order, problem
 
 
+class ContactLost(PulsetallyError):  # noqa: N818 - it says what happened
+    """No cell is there, or it is a short: what would be measured means nothing."""
+
+
 class StopRequested(PulsetallyError):  # noqa: N818 - it says what happened
     """A person or the system asked the run to stop now."""
 

@@ -10,6 +10,7 @@ from enum import StrEnum
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsetally.sequencer.analysis.contact import ContactResult
 from pulsetally.sequencer.analysis.pulses import EndVoltage
 from pulsetally.sequencer.plan import Round
 
@@ -20,6 +21,7 @@ class Role(StrEnum):
     PRESET = "preset"
     STEP = "step"
     READ = "read"
+    CONTACT = "contact"
 
 
 class RunState(StrEnum):
@@ -152,6 +154,15 @@ class ReadFinished:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class ContactChecked:
+    """A small pulse found the cell good, open or short."""
+
+    round: int
+    pulse: str
+    result: ContactResult
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class RoundFinished:
     """A round is complete."""
 
@@ -195,6 +206,7 @@ Event = (
     | ShotTaken
     | WaitBegan
     | ReadFinished
+    | ContactChecked
     | RoundFinished
     | RoundSpoiled
     | StopAsked

@@ -24,6 +24,7 @@ from sqlalchemy.exc import SQLAlchemyError
 from pulsetally.sequencer.bench import Bench
 from pulsetally.sequencer.errors import LogbookError
 from pulsetally.sequencer.events import (
+    ContactChecked,
     Event,
     PulseArmed,
     PulseSetUp,
@@ -173,6 +174,19 @@ reads = sa.Table(
 )
 
 
+contacts = sa.Table(
+    "contacts",
+    _tables,
+    _key(),
+    _to("round", "rounds"),
+    _text("pulse"),
+    _text("verdict"),
+    _real("final_volts"),
+    _real("tau"),
+    _real("expected_tau", optional=True),
+)
+
+
 class Logbook:
     """Open a logbook; begin runs in it and look runs up."""
 
@@ -310,6 +324,16 @@ class Recorder:
                     first=event.first,
                     settings=_json(event.settings),
                     end_voltages=json.dumps(event.end_voltages),
+                )
+            case ContactChecked():
+                self._enter(
+                    contacts,
+                    round=self._round,
+                    pulse=event.pulse,
+                    verdict=event.result.verdict.value,
+                    final_volts=event.result.final_volts,
+                    tau=event.result.tau,
+                    expected_tau=event.result.expected_tau,
                 )
             case RoundFinished():
                 self._enter(

@@ -15,6 +15,7 @@ from pulsetally.sequencer.models import Name, kind_of
 from pulsetally.sequencer.quantities import parse_quantity, show_quantity
 from pulsetally.sequencer.recipe import (
     PULSE_KINDS,
+    ContactStep,
     PresetStep,
     ReadStep,
     Recipe,
@@ -100,7 +101,14 @@ class Wait:
     seconds: float
 
 
-Action = Preset | Step | Read | Wait
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Contact:
+    """Look with a small pulse whether a cell is there."""
+
+    pulse: Pulse
+
+
+Action = Preset | Step | Read | Wait | Contact
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -118,7 +126,9 @@ class Round:
     @property
     def repeatable(self) -> bool:
         """Say whether it begins with a preset, so that it can start again."""
-        return bool(self.actions) and isinstance(self.actions[0], Preset)
+        # What comes before the preset must leave the cell as it is.
+        harmless = itertools.dropwhile(lambda each: isinstance(each, Contact | Wait), self.actions)
+        return isinstance(next(harmless, None), Preset)
 
     @property
     def most_pulses(self) -> int:
@@ -178,7 +188,7 @@ def make_plan(recipe: Recipe, bench: Bench) -> Plan:
         seconds=sum(_seconds(action) for each in rounds for action in each.actions),
         disk_bytes=most * _BYTES_PER_SHOT + 100_000,
         volts=tuple(volts),
-        warnings=tuple(_warnings(rounds, volts, bench)),
+        warnings=(*_warnings(rounds, volts, bench), *_contact_warnings(rounds, bench)),
     )
 
 
@@ -212,7 +222,7 @@ class _Builder:
         pending: list[Action] = []
         settings: dict[str, float] = {}
         for action, in_force in self._walk(self._recipe.model.steps, self._settings):
-            if isinstance(action, Preset) and pending:
+            if isinstance(action, Preset) and not _only_looks(pending):
                 finished.append(_round(len(finished) + 1, settings, pending))
                 pending = []
                 if len(finished) >= MOST_ROUNDS:
@@ -247,6 +257,8 @@ class _Builder:
                     yield Wait(seconds=self._value(step.wait, settings)), settings
                 case PresetStep():
                     yield Preset(pulse=self._pulse(step.preset, settings)), settings
+                case ContactStep():
+                    yield Contact(pulse=self._pulse(step.contact, settings)), settings
                 case StepStep():
                     count = self._whole("count", step.count, settings)
                     yield Step(pulse=self._pulse(step.step, settings), count=count), settings
@@ -336,9 +348,14 @@ def _with_pulse(settings: dict[str, float], pulse: Pulse) -> dict[str, float]:
     return settings | {f"{pulse.name}.{name}": getattr(pulse, name) for name in PULSE_KINDS}
 
 
+def _only_looks(actions: list[Action]) -> bool:
+    """Say whether these actions leave the cell as it is, so that a preset may follow them."""
+    return all(isinstance(each, Contact | Wait) for each in actions)
+
+
 def _most_pulses(action: Action) -> int:
     match action:
-        case Preset():
+        case Preset() | Contact():
             return 1
         case Step():
             return action.count
@@ -386,6 +403,26 @@ def _limit_problems(volts: list[PulseVolts], bench: Bench) -> list[str]:
                     " or raise the limit if the cell bears it."
                 )
     return problems
+
+
+# Half of the smallest coercive field of common films, 40 kV/cm (a handbook value for PZT films,
+# from memory): a contact pulse shall switch nothing.
+_HARMLESS_VOLTS_PER_METRE = 2e6
+
+
+def _contact_warnings(rounds: tuple[Round, ...], bench: Bench) -> Iterator[str]:
+    pulses = {
+        each.pulse: None for one in rounds for each in one.actions if isinstance(each, Contact)
+    }
+    for pulse in pulses:
+        volts = abs(bench.cell_volts(pulse.level))
+        if volts / bench.model.cell.thickness > _HARMLESS_VOLTS_PER_METRE:
+            yield (
+                f"contact pulse {pulse.name!r} puts {show_quantity(volts, 'V')} across"
+                f" {show_quantity(bench.model.cell.thickness, 'm')}, which may switch something"
+            )
+    if pulses and bench.model.wiring.series_diode is not None:
+        yield "behind a series diode a small pulse hardly conducts, so contact can't be judged well"
 
 
 def _warnings(rounds: tuple[Round, ...], volts: list[PulseVolts], bench: Bench) -> Iterator[str]:

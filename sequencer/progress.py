@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 
 from pulsetally.sequencer.analysis.counting import CountStatistics, full_count
 from pulsetally.sequencer.events import (
+    ContactChecked,
     Event,
     PulseArmed,
     ReadFinished,
@@ -90,6 +91,7 @@ class Progress:
                     Role.PRESET: "presetting",
                     Role.STEP: "stepping",
                     Role.READ: "reading",
+                    Role.CONTACT: "looking for contact",
                 }[event.role]
                 if event.role is not Role.READ:
                     self.ends.clear()
@@ -102,6 +104,8 @@ class Progress:
                 return [f"round {event.round}: {self.doing}"] if event.seconds >= 60 else []
             case ReadFinished():
                 return [self._read(event)]
+            case ContactChecked():
+                return _contact_lines(event)
             case RoundFinished():
                 self.done += 1
             case RoundSpoiled():
@@ -161,6 +165,19 @@ class Progress:
                 self.crossings.append(event.crossing)
             return f"{begin}: full after {event.count} pulses, crossing {count}"
         return f"{begin}: {event.stepped} stored, {event.count} remaining, crossing {count}"
+
+
+def _contact_lines(event: ContactChecked) -> list[str]:
+    result = event.result
+    tau = (
+        f"time constant {show_quantity(result.tau, 's', 3)}"
+        if result.tau
+        else f"time constant below {show_quantity(result.resolution, 's', 3)}"
+    )
+    if result.expected_tau is not None:
+        tau += f", expected {show_quantity(result.expected_tau, 's', 3)}"
+    lines = [f"round {event.round}: contact {result.verdict}, {tau}"]
+    return [*lines, f"round {event.round}: {result.note}"] if result.note else lines
 
 
 def show_setting(name: str, value: float) -> str:

@@ -106,6 +106,12 @@ class WaitStep(Model):
     wait: Annotated[Value, quantity(TIME, least=0, names=True)]
 
 
+class ContactStep(Model):
+    """Look with a small pulse whether a cell is there; the run ends if it is open or short."""
+
+    contact: PulseName
+
+
 class RepeatStep(Model):
     """Do the steps a stated number of times."""
 
@@ -133,6 +139,7 @@ STEP_MODELS: dict[str, type[Model]] = {
     "step": StepStep,
     "read": ReadStep,
     "wait": WaitStep,
+    "contact": ContactStep,
     "repeat": RepeatStep,
     "sweep": SweepStep,
 }
@@ -164,6 +171,7 @@ Step = Annotated[
     | Annotated[StepStep, Tag("<step>")]
     | Annotated[ReadStep, Tag("<read>")]
     | Annotated[WaitStep, Tag("<wait>")]
+    | Annotated[ContactStep, Tag("<contact>")]
     | Annotated[RepeatStep, Tag("<repeat>")]
     | Annotated[SweepStep, Tag("<sweep>")],
     Discriminator(_verb),

@@ -14,6 +14,7 @@ from pulsetally.sequencer.errors import LogbookError
 from pulsetally.sequencer.events import Role, RunState, Shot
 from pulsetally.sequencer.logbook import (
     Logbook,
+    contacts,
     pulses,
     reads,
     round_ends,
@@ -60,7 +61,11 @@ class ReadResult:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RoundResult:
-    """One attempt at a round. stepped: pulses of 'step' that were recorded in it."""
+    """One attempt at a round.
+
+    stepped: pulses of 'step' that were recorded in it. contacts: what each contact pulse found:
+    pulse, verdict, final_volts, tau and expected_tau (seconds).
+    """
 
     round: int
     attempt: int
@@ -71,6 +76,7 @@ class RoundResult:
     preset: bool
     stepped: int
     reads: tuple[ReadResult, ...]
+    contacts: tuple[dict[str, Any], ...] = ()
 
     @property
     def full_read(self) -> ReadResult | None:
@@ -287,6 +293,15 @@ def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
                 end_voltages=tuple(json.loads(row.end_voltages)),
             )
         )
+    looked: dict[int, list[dict[str, Any]]] = {}
+    for row in logbook.select(
+        sa.select(contacts)
+        .join(rounds, contacts.c.round == rounds.c.id)
+        .where(rounds.c.run == run)
+        .order_by(contacts.c.id)
+    ):
+        names = ("pulse", "verdict", "final_volts", "tau", "expected_tau")
+        looked.setdefault(row.round, []).append({name: row._mapping[name] for name in names})
     query = (
         sa.select(rounds, round_ends.c.spoiled, round_ends.c.reason)
         .outerjoin(round_ends, round_ends.c.round == rounds.c.id)
@@ -302,12 +317,18 @@ def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
             # A round without an end was cut, unless it is the one that is going on.
             spoiled=not going if row.spoiled is None else row.spoiled,
             reason=("still going" if going else "cut off") if row.reason is None else row.reason,
-            preset=sent.get(row.id, [""])[0] == Role.PRESET.value,
+            preset=_first_change(sent.get(row.id, [])) == Role.PRESET.value,
             stepped=sent.get(row.id, []).count(Role.STEP.value),
             reads=tuple(read.get(row.id, [])),
+            contacts=tuple(looked.get(row.id, [])),
         )
         for row in logbook.select(query)
     ]
+
+
+def _first_change(roles: list[str]) -> str:
+    """Return the role of the first pulse that can have changed the cell."""
+    return next((each for each in roles if each != Role.CONTACT.value), "")
 
 
 def _round_object(each: RoundResult) -> dict[str, Any]:
@@ -318,6 +339,7 @@ def _round_object(each: RoundResult) -> dict[str, Any]:
         "spoiled": each.spoiled,
         "reason": each.reason,
         "stepped": each.stepped,
+        "contacts": list(each.contacts),
         "reads": [
             {
                 "pulse": read.pulse,
