@@ -61,6 +61,8 @@ MOST_ATTEMPTS = 3
 _ARM_SECONDS = 5.0
 _DONE_SECONDS = 3.0
 _POLL_SECONDS = 0.002
+# While a run waits, the lines are used so often, and at most so many times.
+_IDLE_SECONDS, _MOST_SLICES = 30.0, 1000
 # The share of a record that lies before the trigger.
 _BEFORE = 0.1
 # The digitizer's range, against the swing that is expected.
@@ -182,7 +184,7 @@ class _Conductor:
             match action:
                 case Wait():
                     yield WaitBegan(round=each.number, seconds=action.seconds)
-                    self._pause(action.seconds)
+                    self._wait(action.seconds)
                 case Preset():
                     order += 1
                     yield from self._pulse(each, order, Role.PRESET, action.pulse)
@@ -368,6 +370,19 @@ class _Conductor:
             ), ""
         except PulseUnreadable as error:
             return None, str(error)
+
+    def _wait(self, seconds: float) -> None:
+        """Leave the cell alone, and ask the instruments something now and then.
+
+        Routers and instruments drop a line that is idle for long; a dropped one is better
+        noticed now than when the cell is due.
+        """
+        slices = max(1, min(_MOST_SLICES, round(seconds / _IDLE_SECONDS)))
+        for number in range(slices):
+            self._pause(seconds / slices)
+            if number + 1 < slices:
+                self._generator.output_is_on()
+                self._oscilloscope.identify()
 
     def _pause(self, seconds: float) -> None:
         if seconds > 0:

@@ -147,7 +147,9 @@ def test_a_wait_passes_on_the_bench_and_not_on_the_wall(table: Simulated, logboo
         ended = list(engine.run(plan, table.bench, recorder, StopSwitch()))[-1]
         assert isinstance(ended, RunEnded)
         assert ended.state is RunState.FINISHED
-        assert float(client.ask(":CLOCk:TIME?")) - before >= 8 * 3600
+        passed = float(client.ask(":CLOCk:TIME?")) - before
+        # The lines are used now and then meanwhile, which takes time of its own.
+        assert 8 * 3600 <= passed < 8 * 3600 + 60
 
 
 # How a run can end before its time; in each case the output must be off and the rest kept.
