@@ -13,6 +13,8 @@ from statistics import NormalDist
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsetally.simulators.wear import Incubation
+
 FARADS_PER_METRE = 8.8541878128e-12
 
 # With this many domains the full count of the default cell, counted with the default
@@ -52,6 +54,7 @@ class CellDescription:
     imprint_volts: voltage at which neither direction is driven, V.
     domains: finite number of domains dealt over the regions anew after each full preset;
     None for infinitely many (no scatter).
+    incubation: None for switching from the first instant on.
     """
 
     area: float = 1e-8
@@ -66,6 +69,7 @@ class CellDescription:
     leak_ohms: float = math.inf
     imprint_volts: float = 0.0
     domains: int | None = None
+    incubation: Incubation | None = None
 
     def __post_init__(self) -> None:
         for name in (
@@ -120,10 +124,17 @@ class Cell:
     """The state of one cell: which part of each region is up.
 
     up: part of each region that is up, 0 to 1. weights: share of each region, sum 1.
+    frozen: nothing switches now, whatever the voltage.
+    imprint_volts: at which neither direction is driven, V. remanent_polarization: C/m2, and
+    switchable_coulombs, C: of what is not worn out. They begin as described.
     """
 
     def __init__(self, description: CellDescription, *, seed: int) -> None:
         self.description = description
+        self.frozen = False
+        self.imprint_volts = description.imprint_volts
+        self.remanent_polarization = description.remanent_polarization
+        self.switchable_coulombs = description.switchable_coulombs
         self.activations = description.activations()
         self.up: Array = np.zeros(description.regions)
         self.weights: Array = np.full(description.regions, 1 / description.regions)
@@ -142,7 +153,7 @@ class Cell:
     @property
     def polarization(self) -> float:
         """Polarization, C/m2; -P_r when fully down."""
-        return self.description.remanent_polarization * (2 * self.up_fraction - 1)
+        return self.remanent_polarization * (2 * self.up_fraction - 1)
 
     def rates_and_slopes(self, driving_volts: Sequence[float]) -> tuple[Array, Array]:
         """Evaluate the activation law at distances from the imprint voltage, V.
@@ -175,10 +186,14 @@ class Cell:
 
     def remaining(self, side: int) -> Array:
         """Return the part of each region that can still go up (side 1) or down (side -1)."""
+        if self.frozen:
+            return np.zeros_like(self.up)
         return 1 - self.up if side > 0 else self.up.copy()
 
     def switch(self, side: int, kept: Array) -> None:
         """Keep this part of what each region can still switch to a side; switch the rest."""
+        if self.frozen:
+            return
         self.up = 1 - (1 - self.up) * kept if side > 0 else self.up * kept
 
     def settle(self) -> bool:

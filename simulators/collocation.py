@@ -90,10 +90,10 @@ def point_at(
 ) -> Point:
     """Evaluate the equations at an instant; emf_slope is de/dt, V/s."""
     open_shares = cell.weights * cell.remaining(side)
-    distance = side * (node_volts - cell.description.imprint_volts)
+    distance = side * (node_volts - cell.imprint_volts)
     rates, slopes = cell.rates_and_slopes((distance,))
     current = circuit.node_current(emf_volts, node_volts)
-    coulombs = cell.description.switchable_coulombs
+    coulombs = cell.switchable_coulombs
     return _point(
         node_volts, side, open_shares, rates[0], slopes[0], current, emf_slope, coulombs, circuit
     )
@@ -135,8 +135,8 @@ def try_step(
     emf_volts, emf_slope: EMF at the step's begin, V, and its rise, V/s. guess_volts:
     first guess of the node at NODES.
     """
-    side, coulombs, farads = begin.side, cell.description.switchable_coulombs, circuit.farads
-    origin_volts = side * cell.description.imprint_volts
+    side, coulombs, farads = begin.side, cell.switchable_coulombs, circuit.farads
+    origin_volts = side * cell.imprint_volts
     open_total = float(begin.open_shares.sum())
     signed = side * coulombs
     ones = np.ones(len(begin.open_shares))

@@ -104,16 +104,24 @@ class Solver:
             more_times[-1] = done_seconds
             times.append(more_times)
             volts.append(more_volts)
+            if self._stops_here():
+                break
         return np.concatenate(times), np.concatenate(volts)
+
+    def _stops_here(self) -> bool:
+        """Tell whether to return before the ramp's end; for those who watch the node."""
+        return False
 
     def _is_quiet(self, ramp: Ramp, begin: Point | None) -> bool:
         """Tell whether the cell switches nothing, wherever a linear node can get to."""
+        if self.cell.frozen:
+            return True
         if begin is not None and begin.moving * ramp.seconds > QUIET_FRACTION:
             return False
         gain = self.circuit.gain
         reach = (self.node_volts, gain * ramp.begin_volts, gain * ramp.at(ramp.seconds))
         cell = self.cell
-        imprint_volts = cell.description.imprint_volts
+        imprint_volts = cell.imprint_volts
         up_volts, down_volts = max(reach) - imprint_volts, imprint_volts - min(reach)
         # Cheap, and enough in most idle times: not even the softest region moves.
         if cell.softest_rate(max(up_volts, down_volts)) * ramp.seconds < QUIET_FRACTION:
@@ -139,7 +147,7 @@ class Solver:
         return times, volts
 
     def _begin(self, ramp: Ramp) -> Point:
-        distance = self.node_volts - self.cell.description.imprint_volts
+        distance = self.node_volts - self.cell.imprint_volts
         if distance != 0:
             self._side = 1 if distance > 0 else -1
         return self._point(ramp)
@@ -207,7 +215,7 @@ class Solver:
 
     def _is_one_sided(self, begin: Point, trial: Trial) -> bool:
         """Tell whether the step neglects no switching to the other side."""
-        imprint_volts = self.cell.description.imprint_volts
+        imprint_volts = self.cell.imprint_volts
         other = max(begin.side * (imprint_volts - volts) for volts in trial.volts)
         if other <= 0 or self.cell.softest_rate(other) * trial.seconds < QUIET_FRACTION:
             return True
@@ -216,7 +224,7 @@ class Solver:
 
     def _crossing(self, begin: Point, trial: Trial) -> float:
         """Return the part of a step after which the node comes to the imprint voltage."""
-        imprint_volts = self.cell.description.imprint_volts
+        imprint_volts = self.cell.imprint_volts
         before, place = begin.volts - imprint_volts, 0.0
         for node, volts in zip(NODES, trial.volts, strict=True):
             after = volts - imprint_volts

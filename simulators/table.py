@@ -9,7 +9,8 @@ from numpy.typing import NDArray
 from pulsetally.simulators.cell import Cell, CellDescription
 from pulsetally.simulators.circuit import Circuit, Wiring
 from pulsetally.simulators.drive import PulseTrain, Rest
-from pulsetally.simulators.solver import Ramp, Solver
+from pulsetally.simulators.incubation import solver_of
+from pulsetally.simulators.solver import Ramp
 
 Array = NDArray[np.float64]
 
@@ -39,7 +40,7 @@ class Table:
         self.delivered = 0
         self._cell = Cell(cell, seed=seed)
         self._circuit = Circuit(cell, wiring)
-        self._solver = Solver(self._cell, self._circuit)
+        self._solver = solver_of(self._cell, self._circuit)
         self._drive: PulseTrain | Rest = Rest()
         self._observers: list[Observer] = []
         # Pulses of the present train that are settled: delivered, or missed.
