@@ -4,15 +4,14 @@ A block is '#', one digit d, d digits of length, then that many bytes; or '#0' a
 to the end of the message (IEEE Std 488.2-1992, 8.7.9 and 8.7.10).
 """
 
-from dataclasses import dataclass
+from typing import NamedTuple
 
 
 class BlockError(ValueError):
     """The bytes are not the beginning of a block, or announce more than is allowed."""
 
 
-@dataclass(frozen=True, slots=True)
-class BlockHeader:
+class BlockHeader(NamedTuple):
     """Say how long a block is.
 
     header_bytes: length of the header itself.

@@ -1,5 +1,7 @@
 """Name what can go wrong with an instrument, by what a person can do about it."""
 
+import re
+
 
 class PulsetallyError(Exception):
     """Base of every error that this program raises on purpose."""
@@ -68,3 +70,72 @@ class SettingRefused(InstrumentError):  # noqa: N818 - it says what happened
 
 class LimitError(InstrumentError):
     """A number about to be sent lies beyond a limit; nothing was sent."""
+
+
+CHECK_LINE = "check that the instrument is on, connected and not in use by another program"
+_CHECK_DIALECT = "check that the dialect fits this instrument"
+
+# The first row that fits decides. A class is given by name, since not every library is there
+# on every machine; an exception fits by its own class or any base. Words: a pattern that the
+# text must contain. Last: what a person can do.
+CAUSES: tuple[tuple[str, str, type[LinkError] | type[BadReply], str], ...] = (
+    ("ChannelTimeout", "", NoAnswer, CHECK_LINE),
+    ("ChannelOverrun", "", BadReply, _CHECK_DIALECT),
+    ("BlockError", "", BadReply, _CHECK_DIALECT),
+    ("ChannelClosed", "", LinkClosed, CHECK_LINE),
+    ("ValueError", r"Please install (.+?) to use", LinkError, r"install \1"),
+    ("ValueError", "No class registered", LinkError, "use a TCPIP, ASRL, USB or GPIB address"),
+    ("VisaIOError", "VI_ERROR_TMO", NoAnswer, CHECK_LINE),
+    ("TimeoutError", "", NoAnswer, CHECK_LINE),
+    ("SerialTimeoutException", "", NoAnswer, CHECK_LINE),
+    ("PermissionError", "", LinkError, "give this user the right to use the port"),
+    ("FileNotFoundError", "", LinkError, "check the name of the port, and its cable"),
+    ("OSError", "could not open port.*Permission", LinkError, "give this user the right to use it"),
+    ("OSError", "could not open port", LinkError, "check the name of the port, and its cable"),
+    ("gaierror", "", LinkError, "check the name of the host"),
+    ("Exception", "Name or service not known", LinkError, "check the name of the host"),
+    ("MemoryError", "", BadReply, _CHECK_DIALECT),
+    # Broken pipes, resets, termios, serial, struct and bare errors of the backend: all the
+    # same to a person.
+    ("Exception", "", LinkClosed, CHECK_LINE),
+)
+
+
+def from_library(
+    error: Exception, address: str, command: str, *, opening: bool = False
+) -> LinkError | BadReply:
+    """Return what any exception of a line's libraries means, as one of ours.
+
+    opening: the line never was open, so that it can't have been closed.
+    """
+    names = {each.__name__ for each in type(error).__mro__}
+    text = " ".join(str(error).split())[:300]
+    name, kind, remedy, found = next(
+        (name, kind, remedy, found)
+        for name, words, kind, remedy in CAUSES
+        if name in names and (found := re.search(words, text))
+    )
+    if opening:
+        problem = f"it can't be opened ({_cause(error) or text or type(error).__name__})"
+        kind = LinkError
+    elif kind is NoAnswer:
+        problem = text if name == "ChannelTimeout" and text else f"no answer ({text or name})"
+    elif kind is BadReply:
+        problem = f"the answer is not one: {text or type(error).__name__}"
+        if name == "BlockError":
+            problem = f"the answer is not a block: {text}"
+    else:
+        said = text if name == "ChannelClosed" else f"{type(error).__name__}: {text}"
+        problem = f"the line is gone ({said})"
+    return kind(address, command, problem, found.expand(remedy))
+
+
+def _cause(error: BaseException) -> str:
+    """Return what the system said beneath a backend's error that says less."""
+    if type(error).__name__ == "VisaIOError":
+        beneath = error.__cause__ or error.__context__
+        while beneath is not None:
+            if isinstance(beneath, OSError):
+                return str(beneath)
+            beneath = beneath.__cause__ or beneath.__context__
+    return ""

@@ -5,27 +5,39 @@ in time is tainted, because the answer may still arrive and would be taken for t
 it refuses to work until it has been reopened.
 """
 
+import contextlib
 import functools
 import os
 import socket
+import threading
 import time
-from typing import Any, Protocol
+from collections.abc import Callable
+from typing import Any, Protocol, TypeVar
 
 from pulsetally.drivers.blocks import BlockError, parse_header
 from pulsetally.drivers.channel import (
     Channel,
-    ChannelClosed,
     ChannelOverrun,
-    ChannelTimeout,
+    Pace,
     SocketChannel,
     VisaChannel,
 )
-from pulsetally.drivers.errors import BadReply, LinkClosed, LinkError, NoAnswer
+from pulsetally.drivers.errors import (
+    CHECK_LINE,
+    BadReply,
+    InstrumentError,
+    LinkError,
+    from_library,
+)
 from pulsetally.drivers.lock import AddressLock
 
 _LINE_LIMIT = 65_536
 _BLOCK_LIMIT = 1 << 28
-_CHECK_LINE = "check that the instrument is on, connected and not in use by another program"
+_OPEN_MILLISECONDS = 3000
+_FIRST_PAUSE_SECONDS, _LONGEST_PAUSE_SECONDS = 0.1, 5.0
+
+T = TypeVar("T")
+Opener = Callable[[str, bool], Channel]
 
 
 class Link(Protocol):
@@ -48,9 +60,14 @@ class Link(Protocol):
 class VisaLink:
     """Speak with one instrument over PyVISA.
 
-    seconds: how long a whole exchange may take. ending: what ends a message that is sent.
-    gap_seconds: least pause between two messages. public: use PyVISA's public interface even
-    where the session shows its socket. exclusive: refuse an address that another process has.
+    seconds: how long a whole exchange may take; a block may take longer by its announced
+    length over the channel's slowest rate. idle_seconds: longest silence inside an answer, at
+    most seconds. ending: what ends a message that is sent. gap_seconds: least pause between
+    two messages. public: use PyVISA's public interface even where the session shows its
+    socket. exclusive: refuse an address that another process has.
+
+    Threads may share a link: one exchange waits for the other, so that each gets its own
+    answer. now, sleep, opener: the clock in seconds, and what opens an address.
     """
 
     def __init__(
@@ -58,18 +75,25 @@ class VisaLink:
         address: str,
         *,
         seconds: float = 5.0,
+        idle_seconds: float = 3.0,
         ending: str = "\n",
         gap_seconds: float = 0.0,
         public: bool = False,
         exclusive: bool = True,
+        now: Callable[[], float] = time.monotonic,
+        sleep: Callable[[float], None] = time.sleep,
+        opener: "Opener | None" = None,
     ) -> None:
         self._address, self._seconds, self._public = address, seconds, public
+        self._idle_seconds = min(idle_seconds, seconds)
         self._ending, self._gap, self._free_at = ending.encode("ascii"), gap_seconds, 0.0
-        self._lock = AddressLock(address) if exclusive else None
+        self._now, self._sleep, self._opener = now, sleep, opener or open_channel
+        self._exclusive, self._lock = exclusive, AddressLock(address) if exclusive else None
+        self._turn = threading.Lock()
         self._channel: Channel | None = None
         self._tainted_by = ""
         try:
-            self._channel = _open_channel(address, public=public)
+            self._open()
         finally:
             if self._channel is None:
                 self.close()
@@ -86,39 +110,73 @@ class VisaLink:
 
     def close(self) -> None:
         """Give the line back; closing twice is harmless."""
-        self._drop()
-        if self._lock is not None:
-            self._lock.release()
+        # Not for ever: whoever closes wants it closed.
+        mine = self._turn.acquire(timeout=self._seconds)
+        try:
+            self._drop()
+            if self._lock is not None:
+                self._lock.release()
+                self._lock = None
+        finally:
+            if mine:
+                self._turn.release()
 
     def _drop(self) -> None:
         if self._channel is not None:
             self._channel.close()
             self._channel = None
 
-    def reopen(self) -> None:
-        """Open the line anew and clear what the instrument kept of the old one."""
+    def _open(self) -> None:
+        try:
+            self._channel = self._opener(self._address, self._public)
+        except InstrumentError:
+            raise
+        except Exception as error:
+            raise from_library(error, self._address, "", opening=True) from error
+
+    def reopen(self, patience_seconds: float = 0.0) -> None:
+        """Open the line anew and clear what the instrument kept of the old one.
+
+        patience_seconds: how long to try again, after pauses that double from 0.1 to 5 s; the
+        last attempt begins no later. Raises what the last attempt raised: LinkError or
+        BadReply, and the link stays tainted.
+        """
+        self._take_turn("reopening")
+        try:
+            end, pause = self._now() + patience_seconds, _FIRST_PAUSE_SECONDS
+            while True:
+                try:
+                    return self._reopen_once()
+                except (LinkError, BadReply):
+                    left = end - self._now()
+                    if left <= 0:
+                        raise
+                self._sleep(min(pause, left))
+                pause = min(2 * pause, _LONGEST_PAUSE_SECONDS)
+        finally:
+            self._turn.release()
+
+    def _reopen_once(self) -> None:
         self._drop()
-        self._channel, self._tainted_by = _open_channel(self._address, public=self._public), ""
+        if self._exclusive and self._lock is None:
+            self._lock = AddressLock(self._address)
+        self._open()
+        self._tainted_by = ""
         # A server may hold half a message from the connection before; the line feed ends it.
-        self.write("")
-        self.ask("*IDN?")
-        self.write("*CLS")
+        self._exchange("", _nothing)
+        self._exchange("*IDN?", self._read_text)
+        self._exchange("*CLS", _nothing)
 
     def write(self, command: str) -> None:
         """Send one program message. Raises LinkError."""
-        self._send(command, time.monotonic() + self._seconds)
+        self._run(command, _nothing)
 
     def ask(self, command: str) -> str:
         """Send one query; return its answer without the line end.
 
         Raises NoAnswer, LinkClosed or BadReply; after each of them the link is tainted.
         """
-        deadline = time.monotonic() + self._seconds
-        channel = self._send(command, deadline)
-        try:
-            return self._as_text(channel.read_line(_LINE_LIMIT, deadline), command)
-        except (ChannelTimeout, ChannelClosed, ChannelOverrun) as error:
-            raise self._taint(error, command) from error
+        return self._run(command, self._read_text)
 
     def ask_block(self, command: str, *, line_end: bool = True, header: bool = False) -> bytes:
         """Send one query; return the payload of the block that answers it.
@@ -126,46 +184,31 @@ class VisaLink:
         The block is read by exact count. line_end: a line feed follows it, and is read too.
         header: the answer begins with the query's header and a space. Raises as ask.
         """
-        deadline = time.monotonic() + self._seconds
-        channel = self._send(command, deadline)
-        try:
+
+        def read(channel: Channel, pace: Pace) -> bytes:
             if header:
-                self._skip_header(channel, command, deadline)
-            start = channel.read_exactly(2, deadline)
-            found = parse_header(start, limit=_BLOCK_LIMIT)
-            if found is None:
-                start += channel.read_exactly(int(start[1:2]), deadline)
-                found = parse_header(start, limit=_BLOCK_LIMIT)
-            if found is None or found.payload_bytes is None:
-                return channel.read_line(_BLOCK_LIMIT, deadline)
-            payload = channel.read_exactly(found.payload_bytes, deadline)
-            if not line_end:
-                return payload
-            after = channel.read_line(_LINE_LIMIT, deadline)
-            if after not in (b"", b"\r"):
-                raise BlockError(f"{len(after)} bytes follow the block: {after[:16]!r}")
-            return payload
-        except BlockError as error:
-            self._tainted_by = command
-            raise BadReply(
+                _skip_header(channel, command, pace)
+            return _read_block(channel, pace, line_end=line_end)
+
+        return self._run(command, read)
+
+    def _take_turn(self, command: str) -> None:
+        if not (self._turn.acquire(blocking=False) or self._turn.acquire(timeout=self._seconds)):
+            raise LinkError(
                 self._address,
                 command,
-                f"the answer is not a block: {error}",
-                "check that the dialect fits this instrument",
-            ) from error
-        except (ChannelTimeout, ChannelClosed, ChannelOverrun) as error:
-            raise self._taint(error, command) from error
+                f"another thread has used this link for more than {self._seconds:g} s",
+                "let one thread speak with one instrument",
+            )
 
-    def _skip_header(self, channel: Channel, command: str, deadline: float) -> None:
-        header = command.removesuffix("?").lstrip(":").encode("ascii") + b" "
-        found = channel.read_exactly(1, deadline)
-        if found == b":":
-            found = channel.read_exactly(1, deadline)
-        found += channel.read_exactly(len(header) - 1, deadline)
-        if found.upper() != header.upper():
-            raise BlockError(f"it begins with {found!r} instead of {header!r}")
+    def _run(self, command: str, read: Callable[[Channel, Pace], T]) -> T:
+        self._take_turn(command)
+        try:
+            return self._exchange(command, read)
+        finally:
+            self._turn.release()
 
-    def _send(self, command: str, deadline: float) -> Channel:
+    def _exchange(self, command: str, read: Callable[[Channel, Pace], T]) -> T:
         channel = self._channel
         if channel is None or self._tainted_by:
             raise LinkError(
@@ -180,40 +223,68 @@ class VisaLink:
             raise LinkError(
                 self._address, command, "a command is plain ASCII", "mend the dialect"
             ) from error
+        # Until the end, whatever comes between: an interrupt leaves an answer on the line too.
+        self._tainted_by = command or "a line end"
         try:
             if channel.waiting():
-                raise ChannelOverrun("bytes came that nobody asked for")
+                raise _unasked(channel)
             if self._gap:
-                time.sleep(max(0.0, self._free_at - time.monotonic()))
-            channel.send(data, deadline)
-            self._free_at = time.monotonic() + self._gap
-        except (ChannelTimeout, ChannelClosed, ChannelOverrun) as error:
-            raise self._taint(error, command) from error
-        return channel
+                self._sleep(max(0.0, self._free_at - self._now()))
+            pace = Pace(self._seconds, self._idle_seconds)
+            channel.send(data, pace)
+            if self._gap:
+                self._free_at = self._now() + self._gap
+            result = read(channel, pace)
+        except Exception as error:
+            raise from_library(error, self._address, command) from error
+        self._tainted_by = ""
+        return result
 
-    def _taint(self, error: Exception, command: str) -> LinkError | BadReply:
-        self._tainted_by = command or "a line end"
-        if isinstance(error, ChannelTimeout):
-            return NoAnswer(
-                self._address, command, f"no answer within {self._seconds:g} s", _CHECK_LINE
-            )
-        if isinstance(error, ChannelClosed):
-            return LinkClosed(self._address, command, f"the line is gone ({error})", _CHECK_LINE)
-        return BadReply(
-            self._address, command, str(error), "check that the dialect fits this instrument"
-        )
+    def _read_text(self, channel: Channel, pace: Pace) -> str:
+        line = channel.read_line(_LINE_LIMIT, pace)
+        if not line.isascii():
+            raise ChannelOverrun(f"{line[:40]!r} is not plain text")
+        return line.decode("ascii").removesuffix("\r")
 
-    def _as_text(self, line: bytes, command: str) -> str:
-        try:
-            return line.decode("ascii").removesuffix("\r")
-        except UnicodeDecodeError as error:
-            self._tainted_by = command
-            raise BadReply(
-                self._address,
-                command,
-                f"the answer {line[:40]!r} is not plain text",
-                "check that a SCPI instrument is at this address",
-            ) from error
+
+def _nothing(channel: Channel, pace: Pace) -> None:
+    """Read nothing: a command has no answer."""
+
+
+def _unasked(channel: Channel) -> Exception:
+    """Say whether bytes wait that nobody asked for, or the other side is gone."""
+    try:
+        channel.read_exactly(1, Pace(0.001, 0.001))
+    except Exception as error:
+        return error
+    return ChannelOverrun("bytes came that nobody asked for")
+
+
+def _read_block(channel: Channel, pace: Pace, *, line_end: bool) -> bytes:
+    start = channel.read_exactly(2, pace)
+    if start[:1] == b"#" and start[1:].isdigit():
+        start += channel.read_exactly(int(start[1:]), pace)
+    found = parse_header(start, limit=_BLOCK_LIMIT)
+    if found is None or found.payload_bytes is None:
+        return channel.read_message(_BLOCK_LIMIT, pace)
+    pace.allow(found.payload_bytes / channel.slowest)
+    payload = channel.read_exactly(found.payload_bytes, pace)
+    if not line_end:
+        return payload
+    after = channel.read_line(_LINE_LIMIT, pace)
+    if after not in (b"", b"\r"):
+        raise BlockError(f"{len(after)} bytes follow the block: {after[:16]!r}")
+    return payload
+
+
+def _skip_header(channel: Channel, command: str, pace: Pace) -> None:
+    header = command.removesuffix("?").lstrip(":").encode("ascii") + b" "
+    found = channel.read_exactly(1, pace)
+    if found == b":":
+        found = channel.read_exactly(1, pace)
+    found += channel.read_exactly(len(header) - 1, pace)
+    if found.upper() != header.upper():
+        raise BlockError(f"it begins with {found!r} instead of {header!r}")
 
 
 @functools.cache
@@ -227,7 +298,11 @@ def manager() -> Any:
     return pyvisa.ResourceManager("@py")
 
 
-def _open_channel(address: str, *, public: bool) -> Channel:
+def open_channel(address: str, public: bool) -> Channel:
+    """Open any VISA address: raw socket, serial line, HiSLIP, VXI-11 or USB.
+
+    Raises LinkError for what is no address or doesn't answer, and whatever the backend raises.
+    """
     from pyvisa import rname
 
     try:
@@ -239,25 +314,23 @@ def _open_channel(address: str, *, public: bool) -> Channel:
             "this is not a VISA address",
             "write one such as TCPIP::192.0.2.10::5025::SOCKET or ASRL/dev/ttyUSB0::INSTR",
         ) from error
+    resource = manager().open_resource(address, open_timeout=_OPEN_MILLISECONDS)
     try:
-        resource = manager().open_resource(address, open_timeout=3000)
-    except Exception as error:
-        # The backend raises its own errors, its libraries' and bare Exception. A word such as
-        # 'No module named usb' among them says what a kind of line needs.
-        reason = " ".join(str(error).split())[:300] or type(error).__name__
-        raise LinkError(address, "", f"it can't be opened ({reason})", _CHECK_LINE) from error
-    connection = _own_socket(resource)
-    if connection is None:
-        return VisaChannel(resource)
-    # The backend takes a refused connection for an open one.
-    failure = connection.getsockopt(socket.SOL_SOCKET, socket.SO_ERROR)
-    if failure:
-        resource.close()
-        reason = f"nobody answers there ({os.strerror(failure)})"
-        raise LinkError(address, "", reason, _CHECK_LINE)
-    if public:
-        return VisaChannel(resource)
-    return SocketChannel(connection, resource.close)
+        connection = _own_socket(resource)
+        if connection is None:
+            return VisaChannel(resource)
+        # The backend takes a refused connection for an open one.
+        failure = connection.getsockopt(socket.SOL_SOCKET, socket.SO_ERROR)
+        if failure:
+            reason = f"nobody answers there ({os.strerror(failure)})"
+            raise LinkError(address, "", reason, CHECK_LINE)
+        if public:
+            return VisaChannel(resource)
+        return SocketChannel(connection, resource.close)
+    except BaseException:
+        with contextlib.suppress(Exception):
+            resource.close()
+        raise
 
 
 def _own_socket(resource: Any) -> socket.socket | None:

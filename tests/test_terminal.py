@@ -73,7 +73,7 @@ def test_the_view_shows_progress_pulses_and_counts(
     screen = terminal.wait_for("threshold 2.5 V")
     assert "round " in screen
     assert "of 2000" in screen
-    assert " left" in screen
+    assert " left" in terminal.wait_for("s left")
     assert "pulses so far" in screen
     assert max(len(line) for line in screen.splitlines()) <= columns
     terminal.resize(columns + 10, rows + 3)
