@@ -13,7 +13,14 @@ from statistics import NormalDist
 import numpy as np
 from numpy.typing import NDArray
 
-from pulsetally.simulators.wear import Incubation
+from pulsetally.simulators.wear import (
+    Breakdown,
+    Fatigue,
+    ImprintGrowth,
+    Incubation,
+    Retention,
+    Thermal,
+)
 
 FARADS_PER_METRE = 8.8541878128e-12
 
@@ -54,7 +61,8 @@ class CellDescription:
     imprint_volts: voltage at which neither direction is driven, V.
     domains: finite number of domains dealt over the regions anew after each full preset;
     None for infinitely many (no scatter).
-    incubation: None for switching from the first instant on.
+    incubation, imprint_growth, fatigue, retention, thermal, breakdown: what else happens to
+    the cell; None where it does not.
     """
 
     area: float = 1e-8
@@ -70,6 +78,11 @@ class CellDescription:
     imprint_volts: float = 0.0
     domains: int | None = None
     incubation: Incubation | None = None
+    imprint_growth: ImprintGrowth | None = None
+    fatigue: Fatigue | None = None
+    retention: Retention | None = None
+    thermal: Thermal | None = None
+    breakdown: Breakdown | None = None
 
     def __post_init__(self) -> None:
         for name in (
@@ -195,6 +208,21 @@ class Cell:
         if self.frozen:
             return
         self.up = 1 - (1 - self.up) * kept if side > 0 else self.up * kept
+
+    def lose(self, side: int, kept: float) -> None:
+        """Keep this part of what each region has up (side 1) or down (side -1)."""
+        self.up = self.up * kept if side > 0 else 1 - (1 - self.up) * kept
+
+    def weaken(self, kept: float) -> None:
+        """Pin all but this part of the described polarization, whichever way it points."""
+        self.remanent_polarization = kept * self.description.remanent_polarization
+        self.switchable_coulombs = kept * self.description.switchable_coulombs
+
+    def scale_activations(self, factor: float) -> None:
+        """Multiply the described activation voltages by a factor."""
+        self.activations = self.description.activations() * factor
+        self._negative_activations = -self.activations
+        self._softest_volts = float(self.activations[0])
 
     def settle(self) -> bool:
         """Deal new domains when the cell has become fully down; tell whether that was so."""

@@ -82,6 +82,10 @@ class Circuit:
         self._branch_siemens = 1 / wiring.branch_ohms
         self._shunt_siemens = 1 / cell.leak_ohms + 1 / wiring.probe_ohms
 
+    def short_through(self, ohms: float) -> None:
+        """Put a resistance across the cell, for good."""
+        self._shunt_siemens += 1 / ohms
+
     @property
     def is_linear(self) -> bool:
         """Whether the node follows the EMF through resistances alone."""

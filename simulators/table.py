@@ -1,11 +1,13 @@
 """The table of the simulated bench: one cell, its wiring, the drive and virtual time."""
 
 import math
+from dataclasses import replace
 from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsetally.simulators.ageing import Ageing, Tally
 from pulsetally.simulators.cell import Cell, CellDescription
 from pulsetally.simulators.circuit import Circuit, Wiring
 from pulsetally.simulators.drive import PulseTrain, Rest
@@ -13,6 +15,11 @@ from pulsetally.simulators.incubation import solver_of
 from pulsetally.simulators.solver import Ramp
 
 Array = NDArray[np.float64]
+
+# Pairs of pulses are integrated until two in a row agree in cycles and mean state to this,
+# or until so many have been.
+ALIKE = 1e-4
+MOST_SETTLING_PAIRS = 100
 
 
 class Observer(Protocol):
@@ -40,6 +47,7 @@ class Table:
         self.delivered = 0
         self._cell = Cell(cell, seed=seed)
         self._circuit = Circuit(cell, wiring)
+        self._ageing = Ageing(self._cell, self._circuit, seed=seed)
         self._solver = solver_of(self._cell, self._circuit)
         self._drive: PulseTrain | Rest = Rest()
         self._observers: list[Observer] = []
@@ -55,6 +63,40 @@ class Table:
     def up_fraction(self) -> float:
         """Part of the cell that is up, 0 to 1."""
         return self._cell.up_fraction
+
+    @property
+    def remanent_polarization(self) -> float:
+        """Remanent polarization that is not worn out, C/m2."""
+        return self._cell.remanent_polarization
+
+    @property
+    def imprint_volts(self) -> float:
+        """Voltage at which the cell is driven neither up nor down now, V."""
+        return self._cell.imprint_volts
+
+    @property
+    def cycles(self) -> float:
+        """Switching cycles so far: the whole cell up and down again is one."""
+        return self._ageing.tally.cycles
+
+    @property
+    def broken(self) -> bool:
+        """Whether the cell has become a short."""
+        return self._ageing.broken
+
+    @property
+    def breakdown_cycles(self) -> float:
+        """Cycles after which the cell becomes a short; inf where it never does."""
+        return self._ageing.last_cycles
+
+    @property
+    def kelvin(self) -> float | None:
+        """Temperature of the cell, K; None when it knows none."""
+        return self._ageing.kelvin
+
+    def set_kelvin(self, kelvin: float) -> None:
+        """Bring the cell to a temperature, K, at once; ValueError when it knows none."""
+        self._ageing.set_kelvin(kelvin)
 
     @property
     def node_volts(self) -> float:
@@ -103,6 +145,7 @@ class Table:
         while self.now < end_seconds:
             stretch = self._drive.stretch_at(self.now)
             stop_seconds = min(stretch.end_seconds, end_seconds)
+            stop_seconds = self._up_to_date_until(stop_seconds)
             slope = 0.0
             if stretch.begin_volts != stretch.end_volts:
                 slope = (stretch.end_volts - stretch.begin_volts) / (stretch.end_seconds - self.now)
@@ -116,8 +159,69 @@ class Table:
             )
             self._count_pulses()
 
+    def cycle(self, down: PulseTrain, up: PulseTrain, *, pairs: int) -> None:
+        """Deliver pairs of pulses, down then up, from now on, and let their time pass.
+
+        Each train is one pulse (a count of 1); its period is how long it takes, and its
+        start is not looked at. Some pairs are integrated: the first until they repeat, the
+        last, and some between where wear or imprint change what a pair does. All others are
+        added to cycles, wear, breakdown, delivered and time in closed form; observers see
+        them as one stretch at rest. A breakdown falls on a whole pair.
+        Raises ValueError for a train of several pulses and for less than one pair.
+        """
+        for name, train in (("down", down), ("up", up)):
+            if train.count != 1:
+                raise ValueError(f"{name} has a count of {train.count}; a pair has one of each")
+        if pairs < 1:
+            raise ValueError(f"pairs is {pairs}; it must be at least 1")
+        before: Tally | None = None
+        integrated = 0
+        while pairs > 0:
+            begin = self._ageing.tally
+            for train in (down, up):
+                self.play(replace(train, start_seconds=self.now))
+                self.advance(train.period_seconds)
+            pairs -= 1
+            integrated += 1
+            pair = self._ageing.tally.since(begin)
+            repeats = before is not None and _is_alike(before, pair)
+            before = pair
+            if pairs > 1 and (repeats or integrated >= MOST_SETTLING_PAIRS):
+                many = int(max(1, min(pairs - 1, self._ageing.most_repeats(pair))))
+                many = self._ageing.most_held(pair, many)
+                self._repeat(down, up, pair, many)
+                pairs -= many
+                integrated = 0
+
+    def _repeat(self, down: PulseTrain, up: PulseTrain, pair: Tally, repeats: int) -> None:
+        self._ageing.repeat(pair, repeats)
+        begin_seconds = self.now
+        self.now += repeats * (down.period_seconds + up.period_seconds)
+        if self._circuit.relay_on:
+            pulses = sum(train.level_volts != train.base_volts for train in (down, up))
+            self.delivered += repeats * pulses
+        volts = np.full(2, self.node_volts)
+        terminal_volts = np.full(2, self.terminal_volts)
+        for observer in self._observers:
+            observer.saw(np.array([begin_seconds, self.now]), terminal_volts, volts)
+
+    def _up_to_date_until(self, stop_seconds: float) -> float:
+        seconds = stop_seconds - self.now
+        longest = self._ageing.longest_seconds(seconds)
+        if longest == seconds:
+            return stop_seconds
+        # The clock is coarse late in virtual time, but it must go on.
+        return max(self.now + longest, math.nextafter(self.now, math.inf))
+
     def _pass(self, ramp: Ramp, stop_seconds: float) -> None:
+        up_before, volts_before = self.up_fraction, self.node_volts
         times, node_volts = self._solver.run(ramp, sampled=bool(self._observers))
+        self._ageing.add(
+            ramp.seconds,
+            up_before=up_before,
+            volts_before=volts_before,
+            volts_after=self.node_volts,
+        )
         begin_seconds, self.now = self.now, stop_seconds
         if not self._observers:
             return
@@ -141,3 +245,11 @@ class Table:
             if self._circuit.relay_on and train.level_volts != train.base_volts:
                 self.delivered += ended - self._settled_pulses
             self._settled_pulses = ended
+
+
+def _is_alike(one: Tally, other: Tally) -> bool:
+    return (
+        abs(one.cycles - other.cycles) < ALIKE
+        and one.recoveries == other.recoveries
+        and abs(one.state_seconds / one.seconds - other.state_seconds / other.seconds) < ALIKE
+    )

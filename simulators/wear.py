@@ -77,14 +77,14 @@ class Fatigue:
         """Return the part of the remanent polarization left after this many cycles."""
         return math.exp(-((cycles / self.scale_cycles) ** self.exponent))
 
+    def cycles_at(self, kept: float) -> float:
+        """Return the cycles after which this part, above 0 to 1, is left."""
+        return float(self.scale_cycles * (-math.log(kept)) ** (1 / self.exponent))
+
     def recovered(self, cycles: float) -> float:
         """Return the number of cycles that tells the wear after one strong preset."""
-        loss = (1 - self.recovered_share) * -math.expm1(
-            -((cycles / self.scale_cycles) ** self.exponent)
-        )
-        if loss >= 1:
-            return cycles
-        return float(self.scale_cycles * (-math.log1p(-loss)) ** (1 / self.exponent))
+        loss = (1 - self.recovered_share) * (1 - self.kept(cycles))
+        return cycles if loss >= 1 else self.cycles_at(1 - loss)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
