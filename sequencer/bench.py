@@ -257,6 +257,16 @@ class Bench:
         # Seen from the node, the probe lies across the loop.
         return farads * loop * wiring.probe.resistance / (loop + wiring.probe.resistance)
 
+    def notes(self) -> list[str]:
+        """Return what a person should know about this bench before any recipe."""
+        load = self.model.generator.load
+        if math.isinf(load):
+            return []
+        return [
+            f"the generator is told a load of {load:g} ohm; into the high resistance of this wiring"
+            f" it delivers {self.terminal_volts(1.0):.3g} times what its panel shows"
+        ]
+
     def panel_limit(self) -> float:
         """Return the largest panel voltage, either sign, that keeps both limits, in volts."""
         limits, wiring = self.model.limits, self.model.wiring

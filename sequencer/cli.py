@@ -86,10 +86,12 @@ def check(
     with _told():
         if is_bench_file(Path(file)):
             found = load_bench(Path(file))
-            limit = found.panel_limit()
+            limit, notes = found.panel_limit(), found.notes()
             if as_json:
-                _print_json({"bench": found.model.bench, "panel_limit": limit})
+                _print_json({"bench": found.model.bench, "panel_limit": limit, "notes": notes})
             else:
+                for note in notes:
+                    say(_console(), f"Note: {note}.")
                 say(_console(), f"{found.model.bench}: well written; at most {limit:.4g} V"
                     " at the panel keep its limits")  # fmt: skip
             return

@@ -4,7 +4,6 @@ Everything here happens before power: a plan that stands keeps every limit.
 """
 
 import itertools
-import math
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 from typing import Any
@@ -435,9 +434,4 @@ def _warnings(rounds: tuple[Round, ...], volts: list[PulseVolts], bench: Bench) 
             )
     if rounds and not rounds[0].repeatable:
         yield "the recipe begins without a preset: the first round starts from an unknown state"
-    if math.isfinite(bench.model.generator.load):
-        yield (
-            "the generator is told a load of"
-            f" {show_quantity(bench.model.generator.load, 'ohm')}; behind the series resistance"
-            f" the terminal gets {bench.terminal_volts(1.0):.3g} times what the panel shows"
-        )
+    yield from bench.notes()

@@ -98,3 +98,9 @@ def test_the_panel_limit_keeps_both_limits() -> None:
         assert (
             bench.terminal_volts(beyond) > limits.source or bench.cell_volts(beyond) > limits.node
         )
+
+
+def test_a_panel_that_shows_half_of_what_it_delivers_is_mentioned() -> None:
+    assert shipped_bench().notes() == []
+    (note,) = changed(("load: high-z", "load: 50 ohm")).notes()
+    assert "delivers 2 times what its panel shows" in note
