@@ -27,17 +27,22 @@ class ChannelOverrun(Exception):  # noqa: N818 - it says what happened
     """Other bytes came than were allowed: more, or fewer before their message ended."""
 
 
+# How long a read may wait in the system before it looks at its own deadlines.
+SLICE_SECONDS = 0.05
+
+
 class Pace:
     """Say how much longer to wait: two deadlines on the monotonic clock.
 
     seconds: the total, also for the first byte. idle_seconds: the longest silence after a byte
     has come, so that a transfer that died is noticed long before the total of a large one.
+    began: where the total starts, in seconds of time.monotonic; now if not given.
     """
 
     __slots__ = ("_end", "_idle", "_quiet_end", "_seconds")
 
-    def __init__(self, seconds: float, idle_seconds: float) -> None:
-        self._end = self._quiet_end = time.monotonic() + seconds
+    def __init__(self, seconds: float, idle_seconds: float, began: float | None = None) -> None:
+        self._end = self._quiet_end = (time.monotonic() if began is None else began) + seconds
         self._seconds, self._idle = seconds, idle_seconds
 
     def allow(self, seconds: float) -> None:
@@ -158,7 +163,7 @@ class _Buffered:
             if self._stop > self._start and self._bytes[self._stop - 1] == 0x0A:
                 wait = Pace(_QUIET_SECONDS, _QUIET_SECONDS)
             try:
-                self._fetch(limit + 2 - (self._stop - self._start), wait)
+                self._fetch(limit + 2 - (self._stop - self._start), wait, line=True)
             except ChannelTimeout:
                 if wait is pace:
                     raise
@@ -171,16 +176,17 @@ class _Buffered:
     def read_exactly(self, count: int, pace: Pace) -> bytes:
         """Read count bytes, whatever they are."""
         while (missing := count - (self._stop - self._start)) > 0:
+            if count > len(self._bytes) - self._start:
+                self._free(count)
             self._fetch(missing, pace)
         return self._cut(count)
 
 
-# How long a read may wait in the system before it looks at its own deadlines.
-_SLICE_SECONDS = 0.05
 _NOT_WAITING = getattr(socket, "MSG_DONTWAIT", 0)
-# Enough for a header and a short block, and little to copy where a long one follows.
-_FIRST_FETCH = 4096
-_LARGE = 32_768
+_WAIT_FOR_ALL = getattr(socket, "MSG_WAITALL", 0)
+# A first read of no more, since whoever reads while the other side writes slows both down.
+_FIRST_BYTES = 4096
+_LARGE = 1 << 14
 
 
 class SocketChannel(_Buffered):
@@ -193,7 +199,6 @@ class SocketChannel(_Buffered):
     def __init__(self, connection: socket.socket, close: Callable[[], object]) -> None:
         super().__init__()
         self._socket, self._close = connection, close
-        self._first = self._room[:_FIRST_FETCH]
         # Without it, a command followed by a query waits 40 ms for the other side's receipt.
         connection.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         # Routers drop idle connections, some after five minutes; a night has pauses.
@@ -205,10 +210,40 @@ class SocketChannel(_Buffered):
         self._waits_inside = sys.platform == "linux"
         connection.setblocking(self._waits_inside)
         if self._waits_inside:
-            wait = struct.pack("@ll", 0, round(_SLICE_SECONDS * 1e6))
+            wait = struct.pack("@ll", 0, round(SLICE_SECONDS * 1e6))
             connection.setsockopt(socket.SOL_SOCKET, socket.SO_RCVTIMEO, wait)
-        self._readable = _waiter(connection, for_writing=False)
+        self._readable = self._poll = _waiter(connection, for_writing=False)
         self._writable = _waiter(connection, for_writing=True)
+
+    def begin(self, data: bytes, expected: int = 0) -> bytes | None:
+        """Send data and return what comes first within one slice, without looking at a clock.
+
+        expected: length of the whole answer, if that is known; then all of it is waited for.
+        Most exchanges end with that. Returns None if nothing was done, since bytes wait that
+        nobody asked for or no more can be sent; no bytes if nothing came.
+        """
+        if self._start != self._stop or not self._waits_inside or self._poll(0):
+            return None
+        try:
+            sent = self._socket.send(data, _NOT_WAITING)
+        except BlockingIOError:
+            return None
+        if sent < len(data):
+            raise ChannelTimeout("the other side takes no more bytes")
+        try:
+            if expected > _FIRST_BYTES:
+                first = self._socket.recv(expected, _WAIT_FOR_ALL)
+            else:
+                first = self._socket.recv(_FIRST_BYTES)
+        except BlockingIOError:
+            return b""
+        if not first:
+            raise ChannelClosed("the other side closed the connection")
+        return first
+
+    def put_back(self, data: bytes) -> None:
+        """Keep bytes that begin returned for the next read."""
+        self._take_in(data)
 
     def send(self, data: bytes, pace: Pace) -> None:
         """Send all of data."""
@@ -222,15 +257,14 @@ class SocketChannel(_Buffered):
                     sent += self._socket.send(data[sent:], _NOT_WAITING)
 
     def _fetch(self, most: int, pace: Pace, *, line: bool = False) -> None:
-        if self._start == self._stop:
-            self._start = self._stop = 0
-            room = self._first if most <= _FIRST_FETCH else self._room
-        else:
-            room = self._free(_FIRST_FETCH)
+        # More than was asked for, since a header's block may have arrived along with it.
+        room = self._free(4096)
         count = -1
-        if self._waits_inside and pace.left() > _SLICE_SECONDS:
-            with contextlib.suppress(BlockingIOError):
+        if self._waits_inside and pace.left() > SLICE_SECONDS:
+            try:
                 count = self._socket.recv_into(room)
+            except BlockingIOError:
+                count = -1
         while count < 0:
             if self._readable(pace.left()):
                 with contextlib.suppress(BlockingIOError):
@@ -255,10 +289,12 @@ class SocketChannel(_Buffered):
 
     def _receive(self, most: int, pace: Pace) -> bytes:
         part: bytes | None = None
-        if self._waits_inside and pace.left() > _SLICE_SECONDS:
-            with contextlib.suppress(BlockingIOError):
+        if self._waits_inside and pace.left() > SLICE_SECONDS:
+            try:
                 # The system collects until all is there, or the slice is over.
-                part = self._socket.recv(most, socket.MSG_WAITALL)
+                part = self._socket.recv(most, _WAIT_FOR_ALL)
+            except BlockingIOError:
+                part = None
         while part is None:
             if self._readable(pace.left()):
                 with contextlib.suppress(BlockingIOError):
