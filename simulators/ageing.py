@@ -21,8 +21,10 @@ Array = NDArray[np.float64]
 IMPRINT_STEP_VOLTS = 5e-3
 
 # Many pairs of pulses at once: until the remanent polarization has lost this part (unless
-# each pair switches the whole cell anyhow), or imprint has moved by so much, V.
-FATIGUE_STEP = 0.03
+# each pair switches the whole cell anyhow, or next to nothing is left), or imprint has moved
+# by so much, V.
+FATIGUE_STEP = 0.1
+NEGLIGIBLE_KEPT = 0.01
 FULL_CYCLES = 0.999
 IMPRINT_JUMP_VOLTS = 0.03
 _MOST_RECOVERIES = 100_000
@@ -176,8 +178,10 @@ class Ageing:
         """Return how often a pair may be repeated before its own effect changes."""
         repeats = math.inf
         fatigue = self._options.fatigue
-        if fatigue is not None and not pair.recoveries and 0 < pair.cycles < FULL_CYCLES:
-            worn = fatigue.cycles_at(fatigue.kept(self._worn_cycles) * (1 - FATIGUE_STEP))
+        kept = 0.0 if fatigue is None else fatigue.kept(self._worn_cycles)
+        partly = 0 < pair.cycles < FULL_CYCLES and not pair.recoveries
+        if fatigue is not None and partly and kept > NEGLIGIBLE_KEPT:
+            worn = fatigue.cycles_at(kept * (1 - FATIGUE_STEP))
             repeats = (worn - self._worn_cycles) / pair.cycles
         if self.last_cycles < math.inf and not self.broken and pair.cycles > 0:
             repeats = min(repeats, math.ceil((self.last_cycles - self.tally.cycles) / pair.cycles))
@@ -249,12 +253,15 @@ class Ageing:
         return True
 
     def _alternate(self, cycles: float, repeats: int) -> None:
-        """Wear and recover in turn, until both balance."""
+        """Wear and recover in turn, until both balance.
+
+        A pair goes down first: half of its cycles come before the recovery.
+        """
         fatigue = self._options.fatigue
         if fatigue is None:
             return
         for _ in range(min(repeats, _MOST_RECOVERIES)):
-            worn = fatigue.recovered(self._worn_cycles + cycles)
+            worn = fatigue.recovered(self._worn_cycles + cycles / 2) + cycles / 2
             if abs(worn - self._worn_cycles) < 1e-12 * worn:
                 break
             self._worn_cycles = worn

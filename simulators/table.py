@@ -7,7 +7,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from pulsetally.simulators.ageing import Ageing, Tally
+from pulsetally.simulators.ageing import FULL_CYCLES, Ageing, Tally
 from pulsetally.simulators.cell import Cell, CellDescription
 from pulsetally.simulators.circuit import Circuit, Wiring
 from pulsetally.simulators.drive import PulseTrain, Rest
@@ -16,10 +16,11 @@ from pulsetally.simulators.solver import Ramp
 
 Array = NDArray[np.float64]
 
-# Pairs of pulses are integrated until two in a row agree in cycles and mean state to this,
-# or until so many have been.
-ALIKE = 1e-4
-MOST_SETTLING_PAIRS = 100
+# Pairs of pulses are integrated until two in a row agree in cycles and mean state to the
+# first, or until as many as the second have been; at the start, and after each leap.
+SETTLED_AT_START = (3e-4, 30)
+SETTLED_AGAIN = (1e-3, 8)
+LAST_PAIRS = 5
 
 
 class Observer(Protocol):
@@ -164,9 +165,10 @@ class Table:
 
         Each train is one pulse (a count of 1); its period is how long it takes, and its
         start is not looked at. Some pairs are integrated: the first until they repeat, the
-        last, and some between where wear or imprint change what a pair does. All others are
-        added to cycles, wear, breakdown, delivered and time in closed form; observers see
-        them as one stretch at rest. A breakdown falls on a whole pair.
+        last, and some between where wear or imprint change what a pair does (none where
+        each pair switches the whole cell). All others are added to cycles, wear, breakdown,
+        delivered and time in closed form; observers see them as one stretch at rest. A
+        breakdown falls on a whole pair.
         Raises ValueError for a train of several pulses and for less than one pair.
         """
         for name, train in (("down", down), ("up", up)):
@@ -176,6 +178,7 @@ class Table:
             raise ValueError(f"pairs is {pairs}; it must be at least 1")
         before: Tally | None = None
         integrated = 0
+        alike, most_pairs = SETTLED_AT_START
         while pairs > 0:
             begin = self._ageing.tally
             for train in (down, up):
@@ -184,14 +187,17 @@ class Table:
             pairs -= 1
             integrated += 1
             pair = self._ageing.tally.since(begin)
-            repeats = before is not None and _is_alike(before, pair)
+            settled = before is not None and _differ(before, pair) < alike
             before = pair
-            if pairs > 1 and (repeats or integrated >= MOST_SETTLING_PAIRS):
-                many = int(max(1, min(pairs - 1, self._ageing.most_repeats(pair))))
+            # Where a pair leaves traces of the one before, the last ones are integrated too.
+            last = 1 if pair.cycles > FULL_CYCLES else LAST_PAIRS
+            if pairs > last and (settled or integrated >= most_pairs):
+                many = int(max(1, min(pairs - last, self._ageing.most_repeats(pair))))
                 many = self._ageing.most_held(pair, many)
                 self._repeat(down, up, pair, many)
                 pairs -= many
-                integrated = 0
+                before, integrated = None, 0
+                alike, most_pairs = SETTLED_AGAIN
 
     def _repeat(self, down: PulseTrain, up: PulseTrain, pair: Tally, repeats: int) -> None:
         self._ageing.repeat(pair, repeats)
@@ -247,9 +253,11 @@ class Table:
             self._settled_pulses = ended
 
 
-def _is_alike(one: Tally, other: Tally) -> bool:
-    return (
-        abs(one.cycles - other.cycles) < ALIKE
-        and one.recoveries == other.recoveries
-        and abs(one.state_seconds / one.seconds - other.state_seconds / other.seconds) < ALIKE
+def _differ(one: Tally, other: Tally) -> float:
+    """Return by how much two pairs differ, in cycles or in the mean state."""
+    if one.recoveries != other.recoveries:
+        return math.inf
+    return max(
+        abs(one.cycles - other.cycles),
+        abs(one.state_seconds / one.seconds - other.state_seconds / other.seconds),
     )
