@@ -199,8 +199,6 @@ class SocketChannel(_Buffered):
     def __init__(self, connection: socket.socket, close: Callable[[], object]) -> None:
         super().__init__()
         self._socket, self._close = connection, close
-        # Without it, a command followed by a query waits 40 ms for the other side's receipt.
-        connection.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         # Routers drop idle connections, some after five minutes; a night has pauses.
         connection.setsockopt(socket.SOL_SOCKET, socket.SO_KEEPALIVE, 1)
         for option in ("TCP_KEEPIDLE", "TCP_KEEPINTVL"):
@@ -432,8 +430,10 @@ class VisaChannel(_Buffered):
             # asks again and again, while real silence costs next to no processor time.
             if self._raw and wall > 0.01 and work > 0.2 * wall:
                 raise ChannelClosed("the other side closed the connection")
-        quick = wall < self._slice_seconds / 4
-        self._size = min(self._size * 4 | 1, self._largest_read) if quick else self._first
+        if wall > self._slice_seconds / 4:
+            self._size = self._first
+        elif len(data) == self._size:
+            self._size = min(self._size * 4 | 1, self._largest_read)
         self._take_in(data)
         pace.moved()
 

@@ -220,7 +220,7 @@ class VisaLink:
             )
 
     def _run(self, command: str, read: Read[T], glance: "Glance[T] | None" = None) -> T:
-        if not self._turn.acquire(blocking=False):
+        if not self._turn.acquire(False):
             self._take_turn(command)
         try:
             return self._exchange(command, read, glance)
@@ -376,6 +376,8 @@ def open_channel(address: str, public: bool) -> Channel:
         if failure:
             reason = f"nobody answers there ({os.strerror(failure)})"
             raise LinkError(address, "", reason, CHECK_LINE)
+        # No VISA attribute sets it in this backend; without it, 40 ms for every two messages.
+        connection.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         if public:
             return VisaChannel(resource)
         return SocketChannel(connection, resource.close)

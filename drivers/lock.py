@@ -49,13 +49,23 @@ def _base(argument: str) -> str:
     return Path(argument).name
 
 
+def _canonical(address: str) -> str:
+    """Return one spelling for every way to write an address, such as TCPIP and TCPIP0."""
+    from pyvisa import rname
+
+    try:
+        return str(rname.ResourceName.from_string(address)).upper()
+    except rname.InvalidResourceName:
+        return address.upper()
+
+
 def _open(address: str) -> IO[str]:
     folder = Path(tempfile.gettempdir()) / "pulsetally-locks"
     with contextlib.suppress(FileExistsError):
         folder.mkdir()
         # Benches are shared, and so are their locks; the sticky bit as on the folder above.
         folder.chmod(0o1777)
-    name = hashlib.sha256(address.upper().encode()).hexdigest()[:24]
+    name = hashlib.sha256(_canonical(address).encode()).hexdigest()[:24]
     path = folder / name
     try:
         descriptor = os.open(path, os.O_RDWR | os.O_CREAT, 0o666)

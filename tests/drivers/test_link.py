@@ -2,24 +2,32 @@
 
 import socket
 import time
-from collections.abc import Iterator
-from contextlib import contextmanager
+from collections.abc import Callable, Iterator
+from contextlib import AbstractContextManager, contextmanager
 
 import pytest
 
 from pulsetally.drivers.errors import BadReply, LinkClosed, LinkError, NoAnswer
-from pulsetally.drivers.link import VisaLink
+from pulsetally.drivers.link import VisaLink, manager
 from tests.drivers.misbehaving import Answer, server
 
+Linked = Callable[..., AbstractContextManager[VisaLink]]
 
-@contextmanager
-def linked(answer: Answer, *, seconds: float = 5.0) -> Iterator[VisaLink]:
-    with server(answer) as address:
-        link = VisaLink(address, seconds=seconds)
-        try:
-            yield link
-        finally:
-            link.close()
+
+@pytest.fixture(params=[False, True], ids=["socket", "public"])
+def linked(request: pytest.FixtureRequest) -> Linked:
+    """Return what links to a server, over its socket or over PyVISA's public interface."""
+
+    @contextmanager
+    def link_to(answer: Answer, *, seconds: float = 5.0) -> Iterator[VisaLink]:
+        with server(answer) as address:
+            link = VisaLink(address, seconds=seconds, public=request.param)
+            try:
+                yield link
+            finally:
+                link.close()
+
+    return link_to
 
 
 def echo(connection: socket.socket, line: bytes) -> None:
@@ -27,7 +35,7 @@ def echo(connection: socket.socket, line: bytes) -> None:
         connection.sendall(line[:-1] + b"\n")
 
 
-def test_answers_come_in_order() -> None:
+def test_answers_come_in_order(linked: Linked) -> None:
     with linked(echo) as link:
         link.write("SET 1")
         assert [link.ask(f"A{number}?") for number in range(50)] == [
@@ -36,7 +44,7 @@ def test_answers_come_in_order() -> None:
 
 
 @pytest.mark.parametrize("size", [0, 1, 9, 10, 4096, 65_535, 65_536, 1_000_000])
-def test_a_block_full_of_line_feeds_comes_whole(size: int) -> None:
+def test_a_block_full_of_line_feeds_comes_whole(linked: Linked, size: int) -> None:
     data = b"\n" * size
 
     def answer(connection: socket.socket, line: bytes) -> None:
@@ -51,7 +59,7 @@ def test_a_block_full_of_line_feeds_comes_whole(size: int) -> None:
         assert link.ask("AFTER?") == "AFTER"
 
 
-def test_a_block_in_single_bytes_comes_whole() -> None:
+def test_a_block_in_single_bytes_comes_whole(linked: Linked) -> None:
     def answer(connection: socket.socket, line: bytes) -> None:
         for byte in b"#212hello\nworld!\n":
             connection.sendall(bytes([byte]))
@@ -61,12 +69,54 @@ def test_a_block_in_single_bytes_comes_whole() -> None:
         assert link.ask_block("DATA?") == b"hello\nworld!"
 
 
-def test_an_indefinite_block_ends_with_its_line() -> None:
+def test_an_indefinite_block_ends_with_its_line(linked: Linked) -> None:
     with linked(lambda connection, line: connection.sendall(b"#0abc\n")) as link:
         assert link.ask_block("DATA?") == b"abc"
 
 
-def test_a_late_answer_taints_the_link_until_it_is_reopened() -> None:
+def test_an_indefinite_block_may_hold_line_feeds(linked: Linked) -> None:
+    def answer(connection: socket.socket, line: bytes) -> None:
+        connection.sendall(b"#0" + b"a\nb\n\n" * 5_000 + b"\n")
+
+    with linked(answer) as link:
+        assert link.ask_block("DATA?") == b"a\nb\n\n" * 5_000
+
+
+def test_blocks_of_changing_lengths_come_whole(linked: Linked) -> None:
+    # A length that came twice is expected a third time; the next one may differ all the same.
+    lengths = [5_000, 5_000, 5_000, 300, 5_000, 5_000, 70_000, 70_000, 70_000, 5_001, 4_999, 1]
+    left = list(lengths)
+
+    def answer(connection: socket.socket, line: bytes) -> None:
+        size = left.pop(0)
+        connection.sendall(b"#9%09d" % size + b"\n" * size + b"\n")
+
+    with linked(answer) as link:
+        assert [len(link.ask_block("DATA?")) for _ in lengths] == lengths
+
+
+def test_a_steady_block_that_is_cut_is_still_an_error(linked: Linked) -> None:
+    sizes = [9_000, 9_000, 9_000, 4_000]
+
+    def answer(connection: socket.socket, line: bytes) -> None:
+        connection.sendall(b"#49000" + bytes(sizes.pop(0)) + (b"\n" if sizes else b""))
+
+    with linked(answer, seconds=0.4) as link:
+        for _ in range(3):
+            assert link.ask_block("DATA?") == bytes(9_000)
+        with pytest.raises(NoAnswer):
+            link.ask_block("DATA?")
+
+
+def test_closing_one_link_leaves_the_others_open(linked: Linked) -> None:
+    assert manager() is manager()
+    with linked(echo) as kept:
+        with linked(echo) as closed:
+            assert closed.ask("A?") == "A"
+        assert kept.ask("B?") == "B"
+
+
+def test_a_late_answer_taints_the_link_until_it_is_reopened(linked: Linked) -> None:
     def answer(connection: socket.socket, line: bytes) -> None:
         if line == b"SLOW?":
             time.sleep(0.3)
@@ -84,7 +134,7 @@ def test_a_late_answer_taints_the_link_until_it_is_reopened() -> None:
         assert link.ask("NEXT?") == "NEXT"
 
 
-def test_a_closed_connection_is_noticed_at_once() -> None:
+def test_a_closed_connection_is_noticed_at_once(linked: Linked) -> None:
     def answer(connection: socket.socket, line: bytes) -> None:
         connection.shutdown(socket.SHUT_RDWR)
 
@@ -95,7 +145,7 @@ def test_a_closed_connection_is_noticed_at_once() -> None:
         assert time.monotonic() - began < 5
 
 
-def test_a_cut_block_is_an_error_and_not_a_short_record() -> None:
+def test_a_cut_block_is_an_error_and_not_a_short_record(linked: Linked) -> None:
     def answer(connection: socket.socket, line: bytes) -> None:
         connection.sendall(b"#3100" + b"x" * 40)
         connection.shutdown(socket.SHUT_RDWR)
@@ -108,14 +158,14 @@ def test_a_cut_block_is_an_error_and_not_a_short_record() -> None:
     "reply",
     [b"garbage\n", b"#x\n", b"#9999999999", b"#15ABCDEFGH\n", b"#3abc\n"],
 )
-def test_garbage_instead_of_a_block_is_a_bad_reply(reply: bytes) -> None:
+def test_garbage_instead_of_a_block_is_a_bad_reply(linked: Linked, reply: bytes) -> None:
     with linked(lambda connection, line: connection.sendall(reply)) as link:
         with pytest.raises(BadReply, match="not a block"):
             link.ask_block("DATA?")
         assert link.tainted
 
 
-def test_bytes_that_nobody_asked_for_are_not_taken_for_an_answer() -> None:
+def test_bytes_that_nobody_asked_for_are_not_taken_for_an_answer(linked: Linked) -> None:
     def answer(connection: socket.socket, line: bytes) -> None:
         connection.sendall(b"first\nsecond\n")
 
@@ -125,7 +175,7 @@ def test_bytes_that_nobody_asked_for_are_not_taken_for_an_answer() -> None:
             link.ask("B?")
 
 
-def test_an_endless_line_is_refused() -> None:
+def test_an_endless_line_is_refused(linked: Linked) -> None:
     def answer(connection: socket.socket, line: bytes) -> None:
         for _ in range(50):
             connection.sendall(b"x" * 10_000)
@@ -134,7 +184,7 @@ def test_an_endless_line_is_refused() -> None:
         link.ask("A?")
 
 
-def test_an_answer_that_is_not_text_is_a_bad_reply() -> None:
+def test_an_answer_that_is_not_text_is_a_bad_reply(linked: Linked) -> None:
     with (
         linked(lambda connection, line: connection.sendall(b"\xff\xfe\x00\n")) as link,
         pytest.raises(BadReply, match="not plain text"),
@@ -154,7 +204,7 @@ def test_what_is_no_address_is_refused_with_an_example() -> None:
         VisaLink("the oscilloscope on the left")
 
 
-def test_small_messages_do_not_wait_for_each_other() -> None:
+def test_small_messages_do_not_wait_for_each_other(linked: Linked) -> None:
     # Measured without the no-delay option: 40 ms for each write that a query follows.
     with linked(echo) as link:
         began = time.monotonic()
