@@ -210,8 +210,19 @@ class SocketChannel(_Buffered):
         if self._waits_inside:
             wait = struct.pack("@ll", 0, round(SLICE_SECONDS * 1e6))
             connection.setsockopt(socket.SOL_SOCKET, socket.SO_RCVTIMEO, wait)
-        self._readable = self._poll = _waiter(connection, for_writing=False)
+        self._readable = _waiter(connection, for_writing=False)
+        # The quickest look there is; a call more or less shows in the time of an exchange.
+        self._poll: Callable[[float], object] = self._readable
+        if sys.platform != "win32":
+            poll = select.poll()
+            poll.register(connection, select.POLLIN)
+            self._poll = poll.poll
         self._writable = _waiter(connection, for_writing=True)
+
+    @property
+    def can_begin(self) -> bool:
+        """Say whether begin can wait inside the system, with a limit."""
+        return self._waits_inside
 
     def begin(self, data: bytes, expected: int = 0) -> bytes | None:
         """Send data and return what comes first within one slice, without looking at a clock.
@@ -220,7 +231,7 @@ class SocketChannel(_Buffered):
         Most exchanges end with that. Returns None if nothing was done, since bytes wait that
         nobody asked for or no more can be sent; no bytes if nothing came.
         """
-        if self._start != self._stop or not self._waits_inside or self._poll(0):
+        if self._start != self._stop or self._poll(0):
             return None
         try:
             sent = self._socket.send(data, _NOT_WAITING)

@@ -144,7 +144,9 @@ class VisaLink:
             raise from_library(error, self._address, "", opening=True) from error
         self._channel = channel
         roomy = self._idle_seconds > 2 * SLICE_SECONDS and not self._gap
-        self._quick = channel if isinstance(channel, SocketChannel) and roomy else None
+        self._quick = None
+        if isinstance(channel, SocketChannel) and channel.can_begin and roomy:
+            self._quick = channel
 
     def reopen(self, patience_seconds: float = 0.0) -> None:
         """Open the line anew and clear what the instrument kept of the old one.
