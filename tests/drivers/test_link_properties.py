@@ -15,7 +15,7 @@ from pulsetally.drivers.link import VisaLink
 from tests.drivers.misbehaving import server
 
 FEW = settings(
-    max_examples=25,
+    max_examples=16,
     deadline=None,
     derandomize=True,
     suppress_health_check=[HealthCheck.function_scoped_fixture],
