@@ -4,6 +4,7 @@ import gc
 import logging
 import os
 import re
+import threading
 import time
 import warnings
 from collections.abc import Callable, Iterator
@@ -95,12 +96,17 @@ def test_serial_bytes_that_nobody_asked_for_are_noticed() -> None:
 
 
 def test_what_waits_on_a_serial_line_when_it_is_opened_is_flushed() -> None:
+    said = threading.Event()
+
     def late(near: int, line: bytes) -> None:
         os.write(near, b"late\n" if line == b"SLOW?" else answers(line))
+        said.set()
 
     with serial_line(late) as address, open_link(address) as link:
         link.write("SLOW?")
-        time.sleep(0.05)
+        assert said.wait(5)
+        # The system hands a terminal's bytes on a little after they are written.
+        time.sleep(0.1)
         with pytest.raises(BadReply, match="nobody asked for"):
             link.ask("NEXT?")
         link.reopen()
