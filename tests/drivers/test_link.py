@@ -108,6 +108,26 @@ def test_a_steady_block_that_is_cut_is_still_an_error(linked: Linked) -> None:
             link.ask_block("DATA?")
 
 
+def test_a_line_end_that_nobody_expects_after_a_block_does_not_shift_the_answers(
+    linked: Linked,
+) -> None:
+    def answer(connection: socket.socket, line: bytes) -> None:
+        connection.sendall(b"#13abc\n" if line == b"DATA?" else line[:-1] + b"\n")
+
+    with linked(answer) as link:
+        assert link.ask_block("DATA?", line_end=False) == b"abc"
+        with pytest.raises(BadReply, match="nobody asked for"):
+            link.ask("A?")
+
+
+def test_a_line_end_that_is_missing_after_a_block_is_noticed(linked: Linked) -> None:
+    with (
+        linked(lambda connection, line: connection.sendall(b"#13abc"), seconds=0.1) as link,
+        pytest.raises(NoAnswer, match=r"DATA\?"),
+    ):
+        link.ask_block("DATA?")
+
+
 def test_closing_one_link_leaves_the_others_open(linked: Linked) -> None:
     assert manager() is manager()
     with linked(echo) as kept:
