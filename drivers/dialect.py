@@ -10,7 +10,7 @@ import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
-from pulsetally.drivers.numbers import NumberError, parse_number
+from pulsetally.drivers.numbers import NumberError, parse_finite, parse_number, parse_whole
 
 # What a generator can be told about a pulse; its driver computes each from base, level and
 # times, so a dialect names those that its instrument has.
@@ -225,7 +225,7 @@ def says_yes(predicate: Predicate, answer: str) -> bool:
     """Judge the answer to a predicate's question. Raises NumberError where bits were due."""
     if predicate.words:
         return understand(answer, {"yes": predicate.words}) == "yes"
-    bits = int(parse_number(answer))
+    bits = parse_whole(answer)
     return bits & predicate.bits_set == predicate.bits_set and not bits & predicate.bits_clear
 
 
@@ -235,14 +235,14 @@ _DIMENSION = re.compile(r"DIMension=([A-Z])\(([^()]*)\)", re.IGNORECASE)
 def read_preamble(query: PreambleQuery, answer: str) -> dict[str, float]:
     """Take the fields out of one preamble answer. Raises NumberError or ValueError."""
     if query.form == "number":
-        return {name: parse_number(answer) for name in query.fields}
+        return {name: parse_finite(answer) for name in query.fields}
     if query.form == "list":
         parts = answer.split(",")
         found = {}
         for name, place in query.fields.items():
             if int(place) > len(parts):
                 raise ValueError(f"it has {len(parts)} fields, and {name} should be no. {place}")
-            found[name] = parse_number(parts[int(place) - 1])
+            found[name] = parse_finite(parts[int(place) - 1])
         return found
     axes = {}
     for axis, body in _DIMENSION.findall(answer):
@@ -257,5 +257,5 @@ def read_preamble(query: PreambleQuery, answer: str) -> dict[str, float]:
         value = axes.get(f"{axis} {word[:4]}".upper())
         if value is None:
             raise ValueError(f"it lacks {place}")
-        found[name] = parse_number(value)
+        found[name] = parse_finite(value)
     return found

@@ -128,7 +128,11 @@ class FunctionGenerator(Instrument):
         fixed = self._dialect.fixed_edge
         lacks = [
             ("count", pulse.count > 1 and not self._dialect.setting("count"), "1 pulse a trigger"),
-            ("edge", fixed is not None and pulse.edge < fixed, f"edges of {fixed} s"),
+            (
+                "edge",
+                fixed is not None and abs(pulse.edge - fixed) > 0.1 * fixed,
+                f"edges of {fixed} s",
+            ),
             (
                 "polarity",
                 pulse.level < pulse.base and not self._dialect.setting("polarity"),

@@ -77,6 +77,15 @@ class Trace:
         return self.codes.astype(np.float64) * self.volts_per_code + self.volts_at_zero
 
     @property
+    def range_volts(self) -> tuple[float, float]:
+        """Return the voltages at which the digitizer clips, lowest first."""
+        ends = [
+            code * self.volts_per_code + self.volts_at_zero
+            for code in (self.lowest_code, self.highest_code)
+        ]
+        return min(ends), max(ends)
+
+    @property
     def clipped(self) -> bool:
         """Say whether any sample reached an end of the digitizer's range."""
         return bool(

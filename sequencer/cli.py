@@ -84,7 +84,8 @@ def check(
     from pulsetally.sequencer.summary import plan_object, say, show_plan
 
     with _told():
-        if is_bench_file(Path(file)):
+        # A pipe can be read once only, and is taken for a recipe.
+        if Path(file).is_file() and is_bench_file(Path(file)):
             found = load_bench(Path(file))
             limit, notes = found.panel_limit(), found.notes()
             if as_json:
@@ -208,7 +209,11 @@ def simulate(
             text = addressed_bench_text(
                 addresses.generator, addresses.oscilloscope, addresses.control, dialect
             )
-            write_bench.write_text(text, encoding="utf-8")
+            try:
+                write_bench.write_text(text, encoding="utf-8")
+            except OSError as error:
+                _complain(f"{write_bench}: the bench file can't be written: {error.strerror}")
+                raise typer.Exit(WRONG_INPUT) from error
         tell(addresses, as_json=as_json)
 
     try:
@@ -331,6 +336,7 @@ def _planned(recipe: str, bench: Path | None, overrides: list[str] | None) -> "t
 
 def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str) -> int:
     from pulsetally.sequencer import engine
+    from pulsetally.sequencer.errors import LogbookError
     from pulsetally.sequencer.events import RunState
     from pulsetally.sequencer.live import follow
     from pulsetally.sequencer.logbook import Logbook
@@ -355,24 +361,27 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
                 follow(events, progress, console)
             except OSError as error:
                 broken = f"the view could not be written ({error.strerror})"
+    # What the run says of its end counts, not what could be written into the logbook.
+    ended = recorder.ended
     if broken:
         _silence_output()
         _complain(f"the run was stopped, since {broken}; what it measured is kept in {path}")
     else:
-        show_result(console, run_result(book, recorder.run), rounds=False)
+        try:
+            show_result(console, run_result(book, recorder.run), rounds=False)
+        except LogbookError as error:
+            _complain(str(error))
         option = "" if logbook is None else f" --logbook {path}"
         say(console, f"Everything is kept in {path} as run {recorder.run};"
             f" see it with: pulsetally show {recorder.run}{option}")  # fmt: skip
-    summary = run_result(book, recorder.run).summary
-    if summary.state != RunState.FINISHED.value:
-        _complain(f"the run {summary.state}: {summary.reason}")
-    if summary.outputs_off is False:
-        ended = progress.ended
-        _complain(ended.unconfirmed if ended else "OUTPUTS NOT CONFIRMED OFF: see above.")
+    if ended is None or ended.state is not RunState.FINISHED:
+        _complain(f"the run {ended.state}: {ended.reason}" if ended else "the run has no end")
+    if ended is None or ended.outputs_off is False:
+        _complain(ended.unconfirmed if ended else "OUTPUTS NOT CONFIRMED OFF: look at them.")
         return OUTPUTS_UNKNOWN
-    if summary.outputs_off and not broken:
+    if ended.outputs_off and not broken:
         say(console, "Outputs are off, and read back as off.")
-    return DONE if summary.state == RunState.FINISHED.value else FAILED
+    return DONE if ended.state is RunState.FINISHED else FAILED
 
 
 def _silence_output() -> None:

@@ -41,7 +41,7 @@ from pulsetally.sequencer.events import (
     WaitBegan,
     Waveform,
 )
-from pulsetally.sequencer.instruments import Instruments, open_instruments
+from pulsetally.sequencer.instruments import Instruments
 from pulsetally.sequencer.logbook import Recorder
 from pulsetally.sequencer.plan import (
     Contact,
@@ -73,10 +73,10 @@ def run(
     plan: Plan, bench: Bench, recorder: Recorder, stop: StopSwitch
 ) -> Generator[Event, None, None]:
     """Carry out a plan; yield what happens. The last event is RunEnded, always recorded."""
-    instruments: Instruments | None = None
+    instruments = Instruments(bench)
     state, reason = RunState.FAILED, ""
     try:
-        instruments = open_instruments(bench)
+        instruments.open()
         for event in _Conductor(plan, bench, instruments, stop).events():
             recorder.record(event)
             yield event
@@ -97,13 +97,14 @@ def run(
             recorder.close(ended)
         except LogbookError as error:
             # The end is told even where it can't be kept, as on a full disk.
-            ended = replace(ended, state=RunState.FAILED, reason=f"{reason} {error}".strip())
+            reason = " ".join(each for each in (ended.reason, str(error)) if each)
+            ended = replace(ended, state=RunState.FAILED, reason=reason)
+            recorder.ended = ended
     yield ended
 
 
-def _end(instruments: Instruments | None, state: RunState, reason: str) -> RunEnded:
-    if instruments is None:
-        return RunEnded(state=state, reason=reason, outputs_off=None)
+def _end(instruments: Instruments, state: RunState, reason: str) -> RunEnded:
+    outputs_off = True if instruments.reached else None
     try:
         instruments.quiet()
     except OutputsNotConfirmed as error:
@@ -112,7 +113,7 @@ def _end(instruments: Instruments | None, state: RunState, reason: str) -> RunEn
         )
     finally:
         instruments.close()
-    return RunEnded(state=state, reason=reason, outputs_off=True)
+    return RunEnded(state=state, reason=reason, outputs_off=outputs_off)
 
 
 class _Conductor:
@@ -127,6 +128,7 @@ class _Conductor:
         self._ready_for: Pulse | None = None
         self._next_at = 0.0
         self._stop_announced = False
+        self._record_seconds = 0.0
 
     def events(self) -> Iterator[Event]:
         identities = {
@@ -143,9 +145,10 @@ class _Conductor:
             identities=identities,
         )
         for each in self._plan.rounds:
-            yield from self._attempts(each)
-            if self._stop.after_round and each is not self._plan.rounds[-1]:
+            # Also before the first: somebody may have asked while the lines were opened.
+            if self._stop.after_round:
                 raise StopRequested(self._stop.reason)
+            yield from self._attempts(each)
 
     def _attempts(self, each: Round) -> Iterator[Event]:
         for attempt in range(1, MOST_ATTEMPTS + 1):
@@ -235,16 +238,18 @@ class _Conductor:
         if self._stop.after_round and not self._stop_announced:
             self._stop_announced = True
             yield StopAsked(at_once=self._stop.at_once)
-        yield from self._set_up(pulse)
+        # The rest is spent at the base of the pulse before; only then comes the next one's.
         self._pause(self._next_at - self._clock.now())
+        yield from self._set_up(pulse)
         if self._stop.at_once:
             raise StopRequested(self._stop.reason)
         self._oscilloscope.arm()
-        if not self._until(self._oscilloscope.is_armed, _ARM_SECONDS):
+        patience = _ARM_SECONDS + 2 * _BEFORE * self._record_seconds
+        if not self._until(self._oscilloscope.is_armed, patience):
             raise InstrumentError(
                 self._oscilloscope.address,
                 "",
-                f"it did not arm within {_ARM_SECONDS:g} s, so nothing was fired",
+                f"it did not arm within {patience:.3g} s, so nothing was fired",
                 "look whether its screen waits for a person",
             )
         threshold = read.threshold if read else None
@@ -252,12 +257,12 @@ class _Conductor:
             round=each.number, order=order, role=role, pulse=pulse.name, threshold=threshold
         )
         self._generator.fire()
-        if not self._until(self._oscilloscope.is_done, _DONE_SECONDS + 3 * pulse.duration):
+        if not self._until(self._oscilloscope.is_done, _DONE_SECONDS + self._record_seconds):
             self._oscilloscope.abort()
             raise ShotMissing(order, f"pulse {order} was fired and the oscilloscope saw no trigger")
-        shot = self._fetch()
+        shot, node = self._fetch()
         self._next_at = shot.bench_seconds + pulse.rest
-        end, problem = self._reduce(shot, pulse)
+        end, problem = self._reduce(shot, node, pulse)
         yield ShotTaken(
             round=each.number,
             order=order,
@@ -282,6 +287,7 @@ class _Conductor:
                 shot.node.volts,
                 base=bench.terminal_volts(pulse.base),
                 level=bench.terminal_volts(pulse.level),
+                node_base=bench.cell_volts(pulse.base),
                 ramp=pulse.ramp,
                 reached_volts=bench.cell_volts(pulse.level),
                 probe_tau=bench.probe_tau(),
@@ -309,10 +315,13 @@ class _Conductor:
                 level=pulse.level,
                 width=pulse.width,
                 edge=pulse.edge,
-                period=pulse.duration + max(pulse.rest, pulse.duration),
+                # Each pulse is triggered by itself, so that the rest is no business of it.
+                period=2 * pulse.duration,
             )
         )
-        acquired = self._oscilloscope.set_acquisition(self._acquisition(pulse))
+        acquisition = self._acquisition(pulse)
+        acquired = self._oscilloscope.set_acquisition(acquisition)
+        self._record_seconds = acquisition.points * acquisition.sample_interval
         self._generator.switch(on=True)
         self._clock.sleep(self._generator.settle_seconds)
         self._ready_for = pulse
@@ -345,11 +354,11 @@ class _Conductor:
             rising=pulse.rising,
         )
 
-    def _fetch(self) -> Shot:
+    def _fetch(self) -> tuple[Shot, Trace]:
         oscilloscope = self._bench.model.oscilloscope
         source = self._oscilloscope.fetch(int(oscilloscope.source_channel))
         node = self._oscilloscope.fetch(int(oscilloscope.node_channel))
-        return Shot(
+        shot = Shot(
             source=_waveform(source),
             node=_waveform(node),
             sample_interval=source.sample_interval,
@@ -357,8 +366,9 @@ class _Conductor:
             clipped=source.clipped or node.clipped,
             bench_seconds=self._clock.now(),
         )
+        return shot, node
 
-    def _reduce(self, shot: Shot, pulse: Pulse) -> tuple[EndVoltage | None, str]:
+    def _reduce(self, shot: Shot, node: Trace, pulse: Pulse) -> tuple[EndVoltage | None, str]:
         try:
             return end_voltage(
                 shot.times,
@@ -367,6 +377,7 @@ class _Conductor:
                 base=self._bench.terminal_volts(pulse.base),
                 level=self._bench.terminal_volts(pulse.level),
                 ramp=pulse.ramp,
+                seen=node.range_volts,
             ), ""
         except PulseUnreadable as error:
             return None, str(error)

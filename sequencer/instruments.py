@@ -2,11 +2,10 @@
 
 import contextlib
 from collections.abc import Iterator
-from dataclasses import dataclass
 
 from pulsetally.drivers.errors import PulsetallyError
 from pulsetally.drivers.function_generator import FunctionGenerator
-from pulsetally.drivers.link import VisaLink
+from pulsetally.drivers.link import Link, VisaLink
 from pulsetally.drivers.oscilloscope import Oscilloscope
 from pulsetally.sequencer.bench import Bench
 from pulsetally.sequencer.clock import BenchClock, Clock, WallClock
@@ -14,68 +13,87 @@ from pulsetally.sequencer.errors import OutputsNotConfirmed
 from pulsetally.sequencer.safety import quiet
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
 class Instruments:
-    """Hold an open bench.
+    """The open lines, drivers and clock of a bench.
 
-    generator_link is needed to go quiet over a fresh link; opened closes all of them.
+    They are opened one after the other; once the generator has answered it can be made quiet,
+    also when something after it can't be opened.
     """
 
     generator: FunctionGenerator
-    generator_link: VisaLink
     oscilloscope: Oscilloscope
     clock: Clock
-    opened: contextlib.ExitStack
+
+    def __init__(self, bench: Bench) -> None:
+        """Remember the bench; open does the rest."""
+        self._bench = bench
+        self._opened = contextlib.ExitStack()
+        self._generator_link: VisaLink | None = None
+
+    @property
+    def reached(self) -> bool:
+        """Say whether the generator has answered, so that its output is our business."""
+        return self._generator_link is not None
+
+    def open(self) -> None:
+        """Open all lines; nothing is set and nothing is switched.
+
+        Raises LinkError or BadReply for the first instrument that is not there or no SCPI
+        instrument.
+        """
+        bench = self._bench
+        link = self._opened.enter_context(contextlib.closing(_generator_link(bench)))
+        self.generator = generator_of(bench, link)
+        self.generator.identify()
+        self._generator_link = link
+        other = self._opened.enter_context(_oscilloscope_link(bench, link))
+        self.oscilloscope = Oscilloscope(other, bench.oscilloscope_dialect)
+        self.oscilloscope.identify()
+        self.clock = WallClock()
+        if bench.model.clock is not None:
+            own = self._opened.enter_context(contextlib.closing(VisaLink(bench.model.clock)))
+            self.clock = BenchClock(own)
+            self.clock.now()
 
     def quiet(self) -> None:
         """Switch the output off and verify it. Raises OutputsNotConfirmed."""
-        quiet(self.generator, self.generator_link)
+        if self._generator_link is not None:
+            quiet(self.generator, self._generator_link)
 
     def close(self) -> None:
         """Give all lines back."""
-        self.opened.close()
+        self._opened.close()
 
 
-def open_instruments(bench: Bench) -> Instruments:
-    """Open all links of a bench; nothing is set and nothing is switched.
-
-    Raises LinkError or BadReply for the first instrument that is not there or no SCPI
-    instrument; what was open before it is closed again.
-    """
-    model = bench.model
-    with contextlib.ExitStack() as on_failure:
-        link, other = on_failure.enter_context(open_links(bench))
-        generator = _generator(bench, link)
-        oscilloscope = Oscilloscope(other, bench.oscilloscope_dialect)
-        generator.identify()
-        oscilloscope.identify()
-        clock: Clock = WallClock()
-        if model.clock is not None:
-            own = on_failure.enter_context(contextlib.closing(VisaLink(model.clock)))
-            clock = BenchClock(own)
-        return Instruments(
-            generator=generator,
-            generator_link=link,
-            oscilloscope=oscilloscope,
-            clock=clock,
-            opened=on_failure.pop_all(),
-        )
+@contextlib.contextmanager
+def open_instruments(bench: Bench) -> Iterator[Instruments]:
+    """Open all lines of a bench for as long as the block runs."""
+    instruments = Instruments(bench)
+    with contextlib.closing(instruments):
+        instruments.open()
+        yield instruments
 
 
 @contextlib.contextmanager
 def open_links(bench: Bench) -> Iterator[tuple[VisaLink, VisaLink]]:
-    """Open the lines to generator and oscilloscope for as long as the block runs.
+    """Open the lines to generator and oscilloscope for as long as the block runs."""
+    with (
+        contextlib.closing(_generator_link(bench)) as generator,
+        _oscilloscope_link(bench, generator) as oscilloscope,
+    ):
+        yield generator, oscilloscope
 
-    Some oscilloscopes have a generator built in: then both are the same line.
-    """
-    with contextlib.ExitStack() as opened:
-        generator = opened.enter_context(contextlib.closing(_generator_link(bench)))
-        address, line = bench.model.oscilloscope.address, bench.oscilloscope_dialect.line
-        if address == generator.address:
-            yield generator, generator
-            return
-        oscilloscope = VisaLink(address, ending=line.ending, gap_seconds=line.gap_seconds)
-        yield generator, opened.enter_context(contextlib.closing(oscilloscope))
+
+@contextlib.contextmanager
+def _oscilloscope_link(bench: Bench, generator: VisaLink) -> Iterator[VisaLink]:
+    address, line = bench.model.oscilloscope.address, bench.oscilloscope_dialect.line
+    if address == generator.address:
+        # Some oscilloscopes have a generator built in: one instrument, one line.
+        yield generator
+        return
+    link = VisaLink(address, ending=line.ending, gap_seconds=line.gap_seconds)
+    with contextlib.closing(link):
+        yield link
 
 
 def quiet_bench(bench: Bench) -> None:
@@ -89,7 +107,7 @@ def quiet_bench(bench: Bench) -> None:
     except PulsetallyError as error:
         raise OutputsNotConfirmed(bench.model.generator.address, str(error)) from error
     with contextlib.closing(link):
-        quiet(_generator(bench, link), link)
+        quiet(generator_of(bench, link), link)
 
 
 def _generator_link(bench: Bench, *, exclusive: bool = True) -> VisaLink:
@@ -102,7 +120,8 @@ def _generator_link(bench: Bench, *, exclusive: bool = True) -> VisaLink:
     )
 
 
-def _generator(bench: Bench, link: VisaLink) -> FunctionGenerator:
+def generator_of(bench: Bench, link: Link) -> FunctionGenerator:
+    """Return the driver of a bench's generator on a line: its channel, load and limit."""
     section = bench.model.generator
     return FunctionGenerator(
         link,

@@ -9,12 +9,14 @@ import json
 import os
 import platform
 import socket
+import sqlite3
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
+from urllib.parse import quote
 
 import numpy as np
 import sqlalchemy as sa
@@ -35,6 +37,7 @@ from pulsetally.sequencer.events import (
     RunBegan,
     RunEnded,
     ShotTaken,
+    WaitBegan,
     Waveform,
 )
 from pulsetally.sequencer.plan import Plan
@@ -174,6 +177,9 @@ reads = sa.Table(
 )
 
 
+waits = sa.Table(
+    "waits", _tables, _key(), _to("round", "rounds"), _real("seconds"), _text("began_at")
+)
 contacts = sa.Table(
     "contacts",
     _tables,
@@ -198,7 +204,10 @@ class Logbook:
                 f"{path}: there is no logbook here. To fix it, name one with --logbook, or make"
                 " one with 'pulsetally rehearse full_count'."
             )
-        self._engine = _connect(path)
+        self._engine = _connect(path, read_only=not create)
+        if not create:
+            self._check_version()
+            return
         with self._guarded("opened") as connection:
             mark = connection.exec_driver_sql("PRAGMA application_id").scalar()
             if mark != _MARK and sa.inspect(connection).get_table_names():
@@ -208,15 +217,19 @@ class Logbook:
                 )
             _tables.create_all(connection)
             connection.exec_driver_sql(f"PRAGMA application_id={_MARK}")
-            found = connection.execute(sa.select(about.c.version)).scalar()
-            if found is None:
+            if connection.execute(sa.select(about.c.version)).scalar() is None:
                 _insert(connection, about, version=LOGBOOK_VERSION, written_by=_software())
-            elif found > LOGBOOK_VERSION:
-                raise LogbookError(
-                    f"{path}: this logbook was written by a newer version of the program (its"
-                    f" version is {found}, this program knows {LOGBOOK_VERSION}). To fix it,"
-                    " upgrade the program."
-                )
+        self._check_version()
+
+    def _check_version(self) -> None:
+        with self._guarded("read") as connection:
+            found = connection.execute(sa.select(about.c.version)).scalar() or 0
+        if found > LOGBOOK_VERSION:
+            raise LogbookError(
+                f"{self.path}: this logbook was written by a newer version of the program (its"
+                f" version is {found}, this program knows {LOGBOOK_VERSION}). To fix it,"
+                " upgrade the program."
+            )
 
     def close(self) -> None:
         """Give the file back."""
@@ -272,6 +285,7 @@ class Recorder:
 
     def __init__(self, logbook: Logbook, run: int) -> None:
         self.run, self._logbook = run, logbook
+        self.ended: RunEnded | None = None
         self._round = self._pulse = 0
         self._setups: dict[str, int] = {}
 
@@ -325,6 +339,8 @@ class Recorder:
                     settings=_json(event.settings),
                     end_voltages=json.dumps(event.end_voltages),
                 )
+            case WaitBegan():
+                self._enter(waits, round=self._round, seconds=event.seconds, began_at=_now())
             case ContactChecked():
                 self._enter(
                     contacts,
@@ -349,7 +365,11 @@ class Recorder:
                 )
 
     def close(self, event: RunEnded) -> None:
-        """Enter how the run ended. Raises LogbookError when it can't be kept."""
+        """Enter how the run ended. Raises LogbookError when it can't be kept.
+
+        ended holds it all the same, for whoever has to tell it.
+        """
+        self.ended = event
         self._enter(
             run_ends,
             run=self.run,
@@ -414,7 +434,16 @@ def _software() -> str:
     return f"pulsetally {version('pulsetally')}, Python {platform.python_version()}"
 
 
-def _connect(path: Path) -> Engine:
+def _connect(path: Path, *, read_only: bool) -> Engine:
+    if read_only:
+        # A logbook that is archived, or on a full disk, must still be readable.
+        fixed = "" if os.access(path.parent, os.W_OK) else "&immutable=1"
+        place = f"file:{quote(str(path.absolute()))}?mode=ro{fixed}"
+        return sa.create_engine(
+            "sqlite://",
+            creator=lambda: sqlite3.connect(place, uri=True, check_same_thread=False),
+            poolclass=sa.pool.StaticPool,
+        )
     engine = sa.create_engine(sa.URL.create("sqlite", database=str(path)))
 
     @sa.event.listens_for(engine, "connect")

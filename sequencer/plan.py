@@ -26,6 +26,9 @@ from pulsetally.sequencer.recipe import (
 
 # A night has room for some ten thousand rounds; a million is a mistake in a sweep.
 MOST_ROUNDS = 100_000
+_MOST_ACTIONS = 1_000_000
+# Ten years: nobody waits longer, and a sweep that says so has lost its unit.
+_LONGEST_WAIT = 3.2e8
 # The share of a ramp that lies between 10 % and 90 %.
 _RAMP_SHARE = 0.8
 _POINTS = 2000
@@ -165,7 +168,7 @@ class Plan:
 
 def make_plan(recipe: Recipe, bench: Bench) -> Plan:
     """Turn a recipe into rounds for a bench. Raises PlanError with every reason against it."""
-    builder = _Builder(recipe)
+    builder = _Builder(recipe, bench)
     rounds = builder.rounds()
     problems = list(dict.fromkeys(builder.problems))
     pulses = {
@@ -176,6 +179,7 @@ def make_plan(recipe: Recipe, bench: Bench) -> Plan:
     }
     volts = _volts(list(pulses), bench)
     problems += _limit_problems(volts, bench)
+    problems += _panel_problems(list(pulses), bench)
     if problems:
         raise PlanError(problems)
     most = sum(each.most_pulses for each in rounds)
@@ -199,8 +203,9 @@ def window_points() -> int:
 class _Builder:
     """Walk a recipe's steps and cut them into rounds at each preset."""
 
-    def __init__(self, recipe: Recipe) -> None:
-        self._recipe = recipe
+    def __init__(self, recipe: Recipe, bench: Bench) -> None:
+        self._recipe, self._bench = recipe, bench
+        self._actions = 0
         self._settings: dict[str, float] = {}
         self._names: dict[str, Name] = {}
         self.problems: list[str] = []
@@ -222,7 +227,13 @@ class _Builder:
         settings: dict[str, float] = {}
         for action, in_force in self._walk(self._recipe.model.steps, self._settings):
             if isinstance(action, Preset) and not _only_looks(pending):
-                finished.append(_round(len(finished) + 1, settings, pending))
+                finished.append(
+                    Round(
+                        number=len(finished) + 1,
+                        settings=self._all(settings),
+                        actions=tuple(pending),
+                    )
+                )
                 pending = []
                 if len(finished) >= MOST_ROUNDS:
                     self.problems.append(
@@ -230,11 +241,22 @@ class _Builder:
                         " To fix it, sweep fewer values or repeat less often."
                     )
                     break
+            self._actions += 1
+            if self._actions > _MOST_ACTIONS:
+                self.problems.append(
+                    f"{self._recipe.file}: the recipe has over {_MOST_ACTIONS} steps when its"
+                    " repeats are written out. To fix it, repeat less often."
+                )
+                break
             if not pending:
                 settings = in_force
             pending.append(action)
         if pending:
-            finished.append(_round(len(finished) + 1, settings, pending))
+            finished.append(
+                Round(
+                    number=len(finished) + 1, settings=self._all(settings), actions=tuple(pending)
+                )
+            )
         return tuple(finished)
 
     def _walk(
@@ -243,7 +265,7 @@ class _Builder:
         for step in steps:
             match step:
                 case RepeatStep():
-                    for _ in range(int(self._value(step.repeat, settings))):
+                    for _ in range(self._whole("repeat", step.repeat, settings, least=1)):
                         yield from self._walk(step.steps, settings)
                 case SweepStep():
                     names = list(step.sweep)
@@ -253,13 +275,19 @@ class _Builder:
                         changed = settings | dict(zip(names, values, strict=True))
                         yield from self._walk(step.steps, changed)
                 case WaitStep():
-                    yield Wait(seconds=self._value(step.wait, settings)), settings
+                    seconds = self._value(step.wait, settings)
+                    if not 0 <= seconds <= _LONGEST_WAIT:
+                        self.problems.append(
+                            f"{self._recipe.file}: a wait of {seconds:g} s is swept. To fix it,"
+                            f" sweep waits from 0 s to {_LONGEST_WAIT:g} s."
+                        )
+                    yield Wait(seconds=seconds), settings
                 case PresetStep():
                     yield Preset(pulse=self._pulse(step.preset, settings)), settings
                 case ContactStep():
                     yield Contact(pulse=self._pulse(step.contact, settings)), settings
                 case StepStep():
-                    count = self._whole("count", step.count, settings)
+                    count = self._whole("count", step.count, settings, least=0)
                     yield Step(pulse=self._pulse(step.step, settings), count=count), settings
                 case ReadStep():
                     yield self._read(step, settings), settings
@@ -267,27 +295,34 @@ class _Builder:
     def _read(self, step: ReadStep, settings: dict[str, float]) -> Read:
         pulse = self._pulse(step.read, settings)
         threshold = self._value(step.until, settings)
-        low, high = sorted((pulse.base, pulse.level))
+        # What counts is where the node can get, not what the panel shows.
+        base, level = (self._bench.cell_volts(volts) for volts in (pulse.base, pulse.level))
+        low, high = sorted((base, level))
         if not low < threshold < high:
             self.problems.append(
                 f"{self._recipe.file}: reading with pulse {pulse.name!r} until"
-                f" {show_quantity(threshold, 'V')} can't end, since the pulse goes from"
-                f" {show_quantity(pulse.base, 'V')} to {show_quantity(pulse.level, 'V')}."
+                f" {show_quantity(threshold, 'V')} can't end, since the cell goes from"
+                f" {show_quantity(base, 'V')} to {show_quantity(level, 'V')} at most."
                 " To fix it, choose a threshold between the two."
             )
-        at_most = self._whole("at most", step.at_most, settings)
-        in_force = _with_pulse(settings, pulse)
-        return Read(pulse=pulse, threshold=threshold, at_most=at_most, settings=in_force)
+        at_most = self._whole("at most", step.at_most, settings, least=1)
+        return Read(pulse=pulse, threshold=threshold, at_most=at_most, settings=self._all(settings))
+
+    def _all(self, settings: dict[str, float]) -> dict[str, float]:
+        """Return settings with those that are declared as parameters resolved."""
+        return {key: settings[name.word] for key, name in self._names.items()} | settings
 
     def _value(self, value: float | Name, settings: dict[str, float]) -> float:
         return settings[value.word] if isinstance(value, Name) else value
 
-    def _whole(self, what: str, value: float | Name, settings: dict[str, float]) -> int:
+    def _whole(
+        self, what: str, value: float | Name, settings: dict[str, float], *, least: int
+    ) -> int:
         number = self._value(value, settings)
-        if number != int(number) or number < 0:
+        if not least <= number <= _MOST_ACTIONS or number != int(number):
             self.problems.append(
                 f"{self._recipe.file}: {what} is {number:g} in a sweep."
-                " To fix it, sweep it over whole numbers."
+                f" To fix it, sweep it over whole numbers from {least} to {_MOST_ACTIONS}."
             )
             return 0
         return int(number)
@@ -309,8 +344,13 @@ class _Builder:
         reasons = []
         if pulse.level == pulse.base:
             reasons.append(("its level is its base", "make them differ"))
-        if not pulse.width > 0 or not pulse.edge > 0 or pulse.rest < 0:
-            reasons.append(("a time in it is not above 0", "write times above 0"))
+        if not 0 < pulse.width <= 1000 or not 0 < pulse.edge <= 100 or pulse.rest < 0:
+            reasons.append(
+                (
+                    "a time in it is out of bounds",
+                    "use widths to 1000 s, edges to 100 s, and rests of 0 s or more",
+                )
+            )
         elif pulse.width < pulse.ramp:
             reasons.append(
                 (
@@ -330,21 +370,6 @@ def _written(written: object) -> float:
     if kind is None:
         raise ValueError(f"{written!r} passed as a quantity")
     return parse_quantity(written, kind)
-
-
-def _round(number: int, settings: dict[str, float], actions: list[Action]) -> Round:
-    in_force = settings
-    named: set[str] = set()
-    for action in actions:
-        if not isinstance(action, Wait) and action.pulse.name not in named:
-            named.add(action.pulse.name)
-            in_force = _with_pulse(in_force, action.pulse)
-    return Round(number=number, settings=in_force, actions=tuple(actions))
-
-
-def _with_pulse(settings: dict[str, float], pulse: Pulse) -> dict[str, float]:
-    """Return settings with those of a pulse, which may come from parameters."""
-    return settings | {f"{pulse.name}.{name}": getattr(pulse, name) for name in PULSE_KINDS}
 
 
 def _only_looks(actions: list[Action]) -> bool:
@@ -367,7 +392,8 @@ def _most_pulses(action: Action) -> int:
 def _seconds(action: Action) -> float:
     if isinstance(action, Wait):
         return action.seconds
-    each = action.pulse.duration + action.pulse.rest + _SECONDS_PER_SHOT
+    # A record takes up to five times its pulse, since time bases go in steps of 1, 2 and 5.
+    each = 4 * action.pulse.duration + action.pulse.rest + _SECONDS_PER_SHOT
     return _SECONDS_PER_SETUP + each * _most_pulses(action)
 
 
@@ -402,6 +428,21 @@ def _limit_problems(volts: list[PulseVolts], bench: Bench) -> list[str]:
                     " or raise the limit if the cell bears it."
                 )
     return problems
+
+
+def _panel_problems(pulses: list[Pulse], bench: Bench) -> list[str]:
+    """Check base and level of every pulse as the driver will, so that it never has to refuse."""
+    limit, told = bench.panel_limit(), []
+    for pulse in pulses:
+        for name, volts in (("base", pulse.base), ("level", pulse.level)):
+            if not abs(volts) <= limit:
+                told.append(
+                    f"the {name} of pulse {pulse.name!r} is {show_quantity(volts, 'V')}, beyond"
+                    f" {show_quantity(limit, 'V')} at the panel, which is what keeps both limits of"
+                    f" {bench.file} whatever a diode does. To fix it, lower the pulse, or raise the"
+                    " limits if the cell bears it."
+                )
+    return list(dict.fromkeys(told))
 
 
 # Half of the smallest coercive field of common films, 40 kV/cm (a handbook value for PZT films,

@@ -12,11 +12,12 @@ from dataclasses import dataclass, field
 
 from pulsetally.drivers.dialect import CHANNEL_SETTINGS, Setting
 from pulsetally.drivers.errors import PulsetallyError
-from pulsetally.drivers.function_generator import FunctionGenerator, PulseSetting
+from pulsetally.drivers.function_generator import PulseSetting
 from pulsetally.drivers.instrument import Instrument, Wanted
 from pulsetally.drivers.link import VisaLink
 from pulsetally.drivers.oscilloscope import AcquisitionSetting, Oscilloscope
 from pulsetally.sequencer.bench import Bench
+from pulsetally.sequencer.instruments import generator_of
 from pulsetally.sequencer.safety import quiet
 
 # Small against every coercive voltage, and nothing is fired anyway.
@@ -158,25 +159,17 @@ class _Prober:
 
 def probe(bench: Bench, generator_link: VisaLink, oscilloscope_link: VisaLink) -> Iterator[Check]:
     """Try both instruments of a bench. Raises OutputsNotConfirmed when that is in doubt."""
-    yield from _probe_generator(bench, generator_link)
-    yield from _probe_oscilloscope(bench, oscilloscope_link)
-    generator = FunctionGenerator(
-        generator_link, bench.generator_dialect, limit_volts=bench.panel_limit()
-    )
-    quiet(generator, generator_link)
+    try:
+        yield from _probe_generator(bench, generator_link)
+        yield from _probe_oscilloscope(bench, oscilloscope_link)
+    finally:
+        quiet(generator_of(bench, generator_link), generator_link)
 
 
 def _probe_generator(bench: Bench, link: VisaLink) -> Iterator[Check]:
     prober = _Prober("function generator", link)
-    section, dialect = bench.model.generator, bench.generator_dialect
-    channel = int(section.channel)
-    generator = FunctionGenerator(
-        prober.link,
-        dialect,
-        channel=channel,
-        load=section.load,
-        limit_volts=bench.panel_limit(),
-    )
+    dialect, channel = bench.generator_dialect, int(bench.model.generator.channel)
+    generator = generator_of(bench, prober.link)
     quiet(generator, link)
     yield from prober.shared(generator)
 

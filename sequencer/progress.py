@@ -54,6 +54,8 @@ class Progress:
     ended: RunEnded | None = None
     lines: list[str] = field(default_factory=list)
     _began: float = 0.0
+    _preset: bool = False
+    _pending: ReadFinished | None = None
 
     def __post_init__(self) -> None:
         self._began = self.clock()
@@ -108,7 +110,14 @@ class Progress:
                 return _contact_lines(event)
             case RoundFinished():
                 self.done += 1
+                if self._pending is not None:
+                    # Only now is it known that the round counts.
+                    self.counts[self._pending.count] += 1
+                    if self._pending.crossing is not None:
+                        self.crossings.append(self._pending.crossing)
+                self._pending = None
             case RoundSpoiled():
+                self._pending = None
                 return [f"round {event.round} is spoiled: {event.reason}"]
             case StopAsked():
                 self.stopping = True
@@ -127,6 +136,7 @@ class Progress:
         self.ends.clear()
         self.threshold = None
         self._set(event.round.settings)
+        self._preset, self._pending = event.round.repeatable, None
         again = f" again (attempt {event.attempt})" if event.attempt > 1 else ""
         return [f"round {self.round} begins{again}"] if again else []
 
@@ -160,9 +170,8 @@ class Progress:
             return f"{begin}: {show_quantity(event.threshold, 'V')} not reached in {event.count}"
         count = "not to be interpolated" if event.crossing is None else f"{event.crossing:.2f}"
         if event.stepped == 0 and event.first:
-            self.counts[event.count] += 1
-            if event.crossing is not None:
-                self.crossings.append(event.crossing)
+            if self._preset and event.reached:
+                self._pending = event
             return f"{begin}: full after {event.count} pulses, crossing {count}"
         return f"{begin}: {event.stepped} stored, {event.count} remaining, crossing {count}"
 

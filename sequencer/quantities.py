@@ -80,8 +80,9 @@ def parse_quantity(written: object, kind: Kind) -> float:
     if isinstance(written, bool) or not isinstance(written, (str, int, float)):
         raise _wrong(written, kind, "is not")
     if isinstance(written, (int, float)):
-        if not math.isfinite(written):
-            raise QuantityError(f"{written} is not a finite number", f"write {_example(kind)}")
+        if abs(written) > 1e300 or not math.isfinite(written):
+            shown = f"{written}"[:40]
+            raise QuantityError(f"{shown} is not a finite number", f"write {_example(kind)}")
         if not kind.unit or written == 0:
             return float(written)
         raise QuantityError(

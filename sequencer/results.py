@@ -1,7 +1,9 @@
 """Look up what runs found: logbook -> results, for people and for programs."""
 
 import json
+import math
 import os
+import re
 import socket
 from collections.abc import Iterable
 from dataclasses import dataclass
@@ -79,12 +81,18 @@ class RoundResult:
     contacts: tuple[dict[str, Any], ...] = ()
 
     @property
-    def full_read(self) -> ReadResult | None:
-        """Return the read that measured a full count, if one did."""
+    def fill(self) -> ReadResult | None:
+        """Return the read that filled the cell from fully down, if there was one."""
         if not (self.complete and not self.spoiled and self.preset and self.reads):
             return None
         read = self.reads[0]
-        return read if read.first and read.stepped == 0 and read.crossing is not None else None
+        return read if read.first and read.stepped == 0 else None
+
+    @property
+    def full_read(self) -> ReadResult | None:
+        """Return the read that measured a full count, if one did."""
+        read = self.fill
+        return read if read is not None and read.crossing is not None else None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -96,6 +104,18 @@ class SettingCount:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class LeftOut:
+    """Count the rounds that a full count can't use, though they are complete.
+
+    not_reached: the threshold was not passed within 'at most'. first_pulse: the very first pulse
+    passed it, so that nothing lies below. Both kinds would lie at the ends of the scatter.
+    """
+
+    not_reached: int
+    first_pulse: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class RunResult:
     """All that a run found."""
 
@@ -104,6 +124,7 @@ class RunResult:
     swept: tuple[str, ...]
     rounds: tuple[RoundResult, ...]
     full_count: CountStatistics | None
+    left_out: LeftOut
     by_setting: tuple[SettingCount, ...]
 
     def as_object(self) -> dict[str, Any]:
@@ -124,6 +145,10 @@ class RunResult:
             "swept": list(self.swept),
             "rounds": [_round_object(each) for each in self.rounds],
             "full_count": _statistics_object(self.full_count),
+            "left_out": {
+                "not_reached": self.left_out.not_reached,
+                "first_pulse": self.left_out.first_pulse,
+            },
             "full_count_by_setting": [
                 {"settings": each.settings, **(_statistics_object(each.count) or {})}
                 for each in self.by_setting
@@ -146,10 +171,12 @@ def find_run(logbook: Logbook, which: str) -> int:
         )
     if which == "latest":
         return int(latest)
-    if which.isdigit() and logbook.select(sa.select(runs.c.id).where(runs.c.id == int(which))):
-        return int(which)
+    if re.fullmatch("[0-9]{1,9}", which):
+        found = logbook.select(sa.select(runs.c.id).where(runs.c.id == int(which)))
+        if found:
+            return int(which)
     raise LogbookError(
-        f"{logbook.path}: there is no run {which!r}. To fix it, write 'latest' or a number"
+        f"{logbook.path}: there is no run {which[:40]!r}. To fix it, write 'latest' or a number"
         f" from 'pulsetally runs' (the last is {latest})."
     )
 
@@ -163,7 +190,7 @@ def run_result(logbook: Logbook, run: int) -> RunResult:
     groups: dict[tuple[float, ...], list[float]] = {}
     for read in counted:
         if read.crossing is not None:
-            place = tuple(read.settings[name] for name in swept)
+            place = tuple(read.settings.get(name, math.nan) for name in swept)
             groups.setdefault(place, []).append(read.crossing)
     by_setting = [
         SettingCount(settings=dict(zip(swept, values, strict=True)), count=statistics)
@@ -175,6 +202,7 @@ def run_result(logbook: Logbook, run: int) -> RunResult:
         identities=_identities(logbook, run),
         swept=tuple(swept),
         rounds=tuple(found),
+        left_out=_left_out(found),
         full_count=full_count([each for group in groups.values() for each in group]),
         by_setting=tuple(by_setting),
     )
@@ -324,6 +352,12 @@ def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
         )
         for row in logbook.select(query)
     ]
+
+
+def _left_out(found: list[RoundResult]) -> LeftOut:
+    fills = [read for each in found if (read := each.fill) is not None and read.crossing is None]
+    not_reached = sum(not read.reached for read in fills)
+    return LeftOut(not_reached=not_reached, first_pulse=len(fills) - not_reached)
 
 
 def _first_change(roles: list[str]) -> str:

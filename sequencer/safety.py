@@ -76,7 +76,9 @@ def signals(stop: StopSwitch) -> Iterator[None]:
         else:
             stop.press_hard(reason)
 
-    before = {number: signal.signal(number, handle) for number in _NAMES}
+    # A signal that is ignored stays so: whoever started us with nohup wants it that way.
+    ours = [number for number in _NAMES if signal.getsignal(number) is not signal.SIG_IGN]
+    before = {number: signal.signal(number, handle) for number in ours}
     try:
         yield
     finally:

@@ -1,6 +1,7 @@
 """Write plans and results for people: tables and sentences, for a terminal or a pipe."""
 
 from rich.console import Console
+from rich.markup import escape
 from rich.table import Table
 from rich.text import Text
 
@@ -74,10 +75,10 @@ def show_runs(console: Console, found: list[RunSummary]) -> None:
     for each in found:
         table.add_row(
             str(each.run),
-            each.began_at[5:16].replace("T", " "),
+            Text(printable(each.began_at[5:16].replace("T", " "))),
             Text(printable(each.title)),
-            each.mode,
-            each.state,
+            Text(printable(each.mode)),
+            Text(printable(each.state)),
             f"{each.rounds} of {each.planned_rounds}",
             str(each.shots),
         )
@@ -106,13 +107,34 @@ def show_result(console: Console, result: RunResult, *, rounds: bool = True) -> 
 
 
 def show_answer(console: Console, result: RunResult) -> None:
-    """Print the full count, for each combination of what was swept."""
+    """Print the full count, for each combination of what was swept, and what it leaves out."""
+    _show_counts(console, result)
+    left = result.left_out
+    reasons = [
+        f"{count} {words}"
+        for count, words in (
+            (left.not_reached, "did not reach the threshold"),
+            (left.first_pulse, "passed it with the first pulse"),
+        )
+        if count
+    ]
+    if result.full_count is not None and reasons:
+        say(
+            console,
+            f"Left out of it: rounds of which {' and '.join(reasons)}. Mean and scatter are"
+            " those of the others only, and the true scatter is larger.",
+        )
+
+
+def _show_counts(console: Console, result: RunResult) -> None:
     if result.full_count is None:
         say(console, _why_no_answer(result))
         return
     # One row says at which setting, also where a sweep was cut short.
     if result.by_setting:
-        table = Table(*result.swept, "full count", "scatter", "rounds", title="Full count, pulses")
+        table = Table(
+            *_names(result), "full count", "scatter", "rounds", title="Full count, pulses"
+        )
         for each in result.by_setting:
             values = [show_setting(name, value) for name, value in each.settings.items()]
             table.add_row(
@@ -183,18 +205,26 @@ def show_bytes(count: float) -> str:
     return f"{count:.3g} GB"
 
 
+def _names(result: RunResult) -> list[str]:
+    return [escape(printable(name)) for name in result.swept]
+
+
+def _swept(name: str, settings: dict[str, float]) -> str:
+    return show_setting(name, settings[name]) if name in settings else ""
+
+
 def _scatter(count: CountStatistics) -> str:
     return "" if count.sd is None else f"{count.sd:.2f}"
 
 
 def _round_table(result: RunResult) -> Table:
-    table = Table("round", *result.swept, "stepped", "remaining", "crossing", "sum", "note")
+    table = Table("round", *_names(result), "stepped", "remaining", "crossing", "sum", "note")
     for each in result.rounds[-_MOST_ROWS:]:
         if not each.reads:
-            swept = [show_setting(name, each.settings[name]) for name in result.swept]
+            swept = [_swept(name, each.settings) for name in result.swept]
             table.add_row(str(each.round), *swept, str(each.stepped), "", "", "", _note(each))
         for read in each.reads:
-            swept = [show_setting(name, read.settings[name]) for name in result.swept]
+            swept = [_swept(name, read.settings) for name in result.swept]
             remaining = str(read.count) if read.reached else f"> {read.count}"
             crossing = "" if read.crossing is None else f"{read.crossing:.2f}"
             total = "" if read.crossing is None else f"{read.stepped + read.crossing:.2f}"

@@ -2,6 +2,7 @@
 
 import json
 import os
+import resource
 import signal
 import socket
 import sqlite3
@@ -385,3 +386,39 @@ def test_hurried_mistakes_are_understood(
     assert done.returncode == 2
     assert words in done.stderr
     assert len(done.stderr.splitlines()) == 1
+
+
+def test_a_disk_that_fills_up_ends_the_run_safely_and_says_why(tmp_path: Path) -> None:
+    def limit() -> None:
+        # No file may grow beyond this: what a full disk looks like to the logbook.
+        resource.setrlimit(resource.RLIMIT_FSIZE, (800_000, 800_000))
+
+    with running_bench(tmp_path) as addresses:
+        done = subprocess.run(
+            [PROGRAM, "run", "full_count", "--bench", "bench.yaml"],
+            cwd=tmp_path,
+            capture_output=True,
+            text=True,
+            timeout=60,
+            preexec_fn=limit,
+            check=False,
+        )
+        assert ask(addresses["generator"], ":OUTPut1:STATe?") == "0"
+    assert done.returncode == 1
+    assert "the run failed: " in done.stderr
+    assert "the logbook can't be written" in done.stderr
+    assert "Outputs are off, and read back as off." in done.stdout
+    assert "Traceback" not in done.stderr
+    # What was committed before is there.
+    assert shown(tmp_path)["shots"] > 5
+
+
+def test_a_number_without_end_is_a_mistake_and_no_traceback(tmp_path: Path) -> None:
+    (tmp_path / "r.yaml").write_text(
+        "recipe: r\npulses: {down: {level: -5 V, width: 2 ms}}\n"
+        f"steps:\n  - {{repeat: {'9' * 400}, steps: [{{preset: down}}]}}\n"
+    )
+    done = pulsetally("check", "r.yaml", cwd=tmp_path)
+    assert done.returncode == 2
+    assert "not a finite number" in done.stderr
+    assert "Traceback" not in done.stderr

@@ -69,6 +69,7 @@ def judge_contact(
     *,
     base: float,
     level: float,
+    node_base: float,
     ramp: float,
     reached_volts: float,
     probe_tau: float,
@@ -76,23 +77,24 @@ def judge_contact(
 ) -> ContactResult:
     """Judge a pulse that is too small to switch anything.
 
-    base, level: volts of the source. ramp: seconds of one whole edge. reached_volts: what the
-    node reaches with a cell that doesn't conduct. probe_tau: time constant of wiring and probe
-    alone, seconds. The exponential is fitted by least squares in its end value, exactly, and
-    its time constant, by search. Raises ContactUnclear or PulseUnreadable.
+    base, level: volts of the source. ramp: seconds of one whole edge. node_base: where the node
+    is before the pulse; reached_volts: where it goes with a cell that doesn't conduct.
+    probe_tau: time constant of wiring and probe alone, seconds. The exponential is fitted by
+    least squares: its end value exactly, its time constant by search. Raises ContactUnclear or
+    PulseUnreadable.
     """
     begin, end = half_crossings(times, source, base, level)
     inside = (times > begin + ramp / 2) & (times < end - ramp / 2)
-    elapsed, volts = times[inside] - begin, node[inside] - base
+    elapsed, volts = times[inside] - begin, node[inside] - node_base
     if elapsed.size < _LEAST_SAMPLES:
         raise ContactUnclear(f"only {elapsed.size} samples lie on the pulse")
     interval = float(times[1] - times[0])
     resolution = max(2 * interval, ramp)
     tail = float(np.mean(volts[-max(5, elapsed.size // 10) :]))
-    if abs(tail) < _SHORT_SHARE * abs(reached_volts - base):
+    if abs(tail) < _SHORT_SHARE * abs(reached_volts - node_base):
         return ContactResult(
             verdict=Verdict.SHORT,
-            final_volts=base + tail,
+            final_volts=node_base + tail,
             tau=0.0,
             expected_tau=expected_tau,
             resolution=resolution,
@@ -101,7 +103,7 @@ def judge_contact(
     is_open = tau <= max(_OPEN_FACTOR * probe_tau, resolution)
     return ContactResult(
         verdict=Verdict.OPEN if is_open else Verdict.GOOD,
-        final_volts=base + final,
+        final_volts=node_base + final,
         tau=0.0 if tau <= resolution else tau,
         expected_tau=expected_tau,
         resolution=resolution,

@@ -62,11 +62,19 @@ def half_crossings(
 
 
 def end_voltage(
-    times: Samples, source: Samples, node: Samples, *, base: float, level: float, ramp: float
+    times: Samples,
+    source: Samples,
+    node: Samples,
+    *,
+    base: float,
+    level: float,
+    ramp: float,
+    seen: tuple[float, float] = (-math.inf, math.inf),
 ) -> EndVoltage:
     """Estimate the node's voltage at the end of the flat top.
 
     base, level: volts of the source before and on the pulse. ramp: seconds of one whole edge.
+    seen: lowest and highest volts that the digitizer can tell of the node.
     A parabola is fitted by least squares to the last fifth of the flat top. Raises
     PulseUnreadable when the pulse isn't there or has too few samples.
     """
@@ -79,11 +87,17 @@ def end_voltage(
         raise PulseUnreadable(
             f"{count} samples lie on the last fifth of the flat top; {_LEAST_SAMPLES} are needed"
         )
+    fitted = node[left:right]
+    if not (np.isfinite(fitted).all() and seen[0] < fitted.min() and fitted.max() < seen[1]):
+        raise PulseUnreadable(
+            "the node leaves the digitizer's range; compare probe, series resistance and clamp in"
+            " the bench file with the table"
+        )
     # The variable runs from -1 at the window's start to 0 at its end, where the value is wanted.
     position = (times[left:right] - end) / (end - start)
     design = np.column_stack([np.ones(count), position, position**2])
-    solution, _, _, _ = np.linalg.lstsq(design, node[left:right], rcond=None)
-    residual = node[left:right] - design @ solution
+    solution, _, _, _ = np.linalg.lstsq(design, fitted, rcond=None)
+    residual = fitted - design @ solution
     variance = float(residual @ residual) / (count - 3)
     share = float(np.linalg.inv(design.T @ design)[0, 0])
     return EndVoltage(

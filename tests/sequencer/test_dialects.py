@@ -7,8 +7,16 @@ from pathlib import Path
 
 import pytest
 
-from pulsetally.drivers.dialect import Line, fill, says_yes, understand
+from pulsetally.drivers.dialect import (
+    Line,
+    Predicate,
+    fill,
+    read_preamble,
+    says_yes,
+    understand,
+)
 from pulsetally.drivers.errors import SettingRefused
+from pulsetally.drivers.numbers import NumberError
 from pulsetally.drivers.oscilloscope import AcquisitionSetting
 from pulsetally.sequencer import engine
 from pulsetally.sequencer.dialects import (
@@ -78,8 +86,7 @@ def test_stored_counts_come_back_in_every_dialect(table: Simulated, tmp_path: Pa
 
 def test_a_rounded_setting_is_caught_before_a_pulse_is_fired(table: Simulated) -> None:
     before = table.truth("DELivered")
-    instruments = open_instruments(table.bench)
-    try:
+    with open_instruments(table.bench) as instruments:
         instruments.oscilloscope.prepare()
         good = AcquisitionSetting(
             sample_interval=instruments.oscilloscope.interval_for(2e-4, 2000),
@@ -95,8 +102,6 @@ def test_a_rounded_setting_is_caught_before_a_pulse_is_fired(table: Simulated) -
         # 3 is no step of a 1-2-5 time base: the instrument takes 5 without a word.
         with pytest.raises(SettingRefused, match="reads back as"):
             instruments.oscilloscope.set_acquisition(replace(good, sample_interval=3e-7))
-    finally:
-        instruments.close()
     assert table.truth("DELivered") == before
 
 
@@ -179,3 +184,18 @@ def test_predicates_by_bits_and_by_words() -> None:
     assert dialect is not None
     assert [says_yes(dialect.armed, each) for each in ("48", "16", "0")] == [True, False, False]
     assert [says_yes(dialect.done, each) for each in ("48", "16", "0")] == [False, False, True]
+
+
+def test_an_infinite_number_in_a_preamble_is_no_number() -> None:
+    dialect = find_dialect("stateword", Path()).oscilloscope
+    assert dialect is not None
+    with pytest.raises(NumberError, match="infinity"):
+        read_preamble(dialect.waveform.preamble[1], "9.9E37")
+    with pytest.raises(NumberError):
+        says_yes(find_predicate(), "9.9E37")
+
+
+def find_predicate() -> Predicate:
+    dialect = find_dialect("scpi99", Path()).oscilloscope
+    assert dialect is not None
+    return dialect.armed

@@ -18,6 +18,7 @@ from pulsetally.sequencer.errors import PlanError
 from pulsetally.sequencer.events import (
     Event,
     PulseArmed,
+    PulseSetUp,
     ReadFinished,
     Role,
     RoundFinished,
@@ -319,3 +320,97 @@ def test_a_read_knows_what_was_in_force_when_a_sweep_stands_inside_a_round(
         (4.0, 4),
     ]
     assert only.full_read is None
+
+
+def test_a_stop_asked_while_connecting_fires_nothing(table: Simulated, logbook: Logbook) -> None:
+    before = table.truth("DELivered")
+    stop = StopSwitch()
+    stop.press("Ctrl-C")
+    *_, ended = begin("full_count", table.bench, logbook, stop=stop)
+    assert isinstance(ended, RunEnded)
+    assert (ended.state, ended.outputs_off) == (RunState.STOPPED, True)
+    assert table.truth("DELivered") == before
+
+
+def test_an_output_that_was_left_on_is_switched_off_though_the_oscilloscope_is_missing(
+    table: Simulated, logbook: Logbook
+) -> None:
+    with table.client(table.addresses.generator) as client:
+        client.ask(":OUTPut1:STATe ON;:OUTPut1:STATe?")
+    assert table.truth("OUTPut") == 1
+    bench = table.bench.with_addresses(
+        generator=table.addresses.generator,
+        oscilloscope="TCPIP::127.0.0.1::1::SOCKET",
+        clock=None,
+    )
+    (ended,) = begin("full_count", bench, logbook)
+    assert isinstance(ended, RunEnded)
+    assert (ended.state, ended.outputs_off) == (RunState.FAILED, True)
+    assert table.truth("OUTPut") == 0
+
+
+def test_the_rest_is_spent_at_the_base_of_its_own_pulse(table: Simulated, logbook: Logbook) -> None:
+    recipe = parse_recipe(
+        "recipe: rest\npulses:\n  a: {level: -5 V, width: 2 ms, base: 0.5 V, rest: 10 s}\n"
+        "  b: {level: 1 V, width: 100 us}\nsteps:\n  - preset: a\n  - step: b\n",
+        file="r.yaml",
+    )
+    plan = make_plan(recipe, table.bench)
+    recorder = logbook.begin_run(plan, table.bench, mode="run")
+    with table.client(table.addresses.control) as client:
+        times = []
+        for event in engine.run(plan, table.bench, recorder, StopSwitch()):
+            if isinstance(event, PulseSetUp | ShotTaken):
+                times.append((type(event).__name__, float(client.ask(":CLOCk:TIME?"))))
+    names = [name for name, _ in times]
+    assert names == ["PulseSetUp", "ShotTaken", "PulseSetUp", "ShotTaken"]
+    assert times[2][1] - times[1][1] >= 10
+
+
+@pytest.mark.parametrize("width", ["1.9 s", "20 s", "2 us"])
+def test_long_and_short_pulses_are_recorded(table: Simulated, logbook: Logbook, width: str) -> None:
+    recipe = parse_recipe(
+        f"recipe: one\npulses:\n  a: {{level: -5 V, width: {width}, rest: 3 h}}\n"
+        "steps:\n  - preset: a\n",
+        file="r.yaml",
+    )
+    plan = make_plan(recipe, table.bench)
+    recorder = logbook.begin_run(plan, table.bench, mode="run")
+    events = list(engine.run(plan, table.bench, recorder, StopSwitch()))
+    assert len(of_kind(events, ShotTaken)) == 1
+    assert [each.state for each in of_kind(events, RunEnded)] == [RunState.FINISHED]
+
+
+def test_a_node_beyond_the_range_is_no_end_voltage(table: Simulated, logbook: Logbook) -> None:
+    from pulsetally.sequencer.bench import parse_bench
+
+    # The bench file says that the probe halves the voltage; the table knows better.
+    text = table.bench.text.replace("resistance: 10 Mohm", "resistance: 100 kohm")
+    bench = parse_bench(text, file="b.yaml")
+    events = list(begin("full_count", bench, logbook, {"threshold": "1.2 V", "rounds": "1"}))
+    (ended,) = of_kind(events, RunEnded)
+    assert ended.state is RunState.FAILED
+    assert "leaves the digitizer's range" in ended.reason
+    # What was seen is kept all the same.
+    assert of_kind(events, ShotTaken)
+    assert of_kind(events, ReadFinished) == []
+
+
+def test_rounds_that_a_full_count_leaves_out_are_counted(
+    table: Simulated, logbook: Logbook
+) -> None:
+    recipe = parse_recipe(
+        "recipe: r\nparameters: {most: 20}\npulses:\n  down: {level: -5 V, width: 2 ms}\n"
+        "  up: {level: 4 V, width: 100 us}\nsteps:\n  - sweep: {most: [20, 5]}\n    steps:\n"
+        "      - preset: down\n      - {read: up, until: 2.5 V, at most: most}\n"
+        "  - preset: down\n  - {read: up, until: 1 V, at most: 5}\n",
+        file="r.yaml",
+    )
+    plan = make_plan(recipe, table.bench)
+    recorder = logbook.begin_run(plan, table.bench, mode="run")
+    list(engine.run(plan, table.bench, recorder, StopSwitch()))
+    result = run_result(logbook, 1)
+    assert result.full_count is not None
+    assert result.full_count.rounds == 1
+    assert (result.left_out.not_reached, result.left_out.first_pulse) == (1, 1)
+    assert result.as_object()["left_out"] == {"not_reached": 1, "first_pulse": 1}

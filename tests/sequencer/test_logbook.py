@@ -26,7 +26,7 @@ from pulsetally.sequencer.events import (
     ShotTaken,
     Waveform,
 )
-from pulsetally.sequencer.logbook import LOGBOOK_VERSION, Logbook, Recorder, unpack
+from pulsetally.sequencer.logbook import LOGBOOK_VERSION, Logbook, Recorder, _pack, unpack
 from pulsetally.sequencer.plan import Plan, make_plan
 from pulsetally.sequencer.recipe import find_recipe
 from pulsetally.sequencer.rehearsal import shipped_bench
@@ -153,8 +153,9 @@ def test_a_run_comes_back_as_it_was_entered(path: Path, logbook: Logbook) -> Non
 
 @given(arrays.arrays(np.int16, st.integers(0, 50)))
 def test_samples_survive_bit_for_bit(codes: "np.ndarray[tuple[int], np.dtype[np.int16]]") -> None:
-    packed = codes.astype("<i2").tobytes()
+    packed = _pack(Waveform(codes=codes, scale=1.0, offset=0.0))
     assert np.array_equal(unpack(packed, 1.0, 0.0).codes, codes)
+    assert len(packed) == 2 * codes.size
 
 
 def test_a_logbook_of_a_newer_version_is_refused(path: Path, logbook: Logbook) -> None:
@@ -184,3 +185,22 @@ def test_a_run_without_an_end_whose_process_lives_is_running(logbook: Logbook) -
     assert summary.state == "running"
     (only,) = run_result(logbook, 1).rounds
     assert (only.complete, only.spoiled, only.reason) == (False, False, "still going")
+
+
+def test_an_archived_logbook_is_read_and_not_written(path: Path, logbook: Logbook) -> None:
+    logbook.begin_run(plan(), shipped_bench(), mode="run")
+    logbook.close()
+    before = path.read_bytes()
+    again = Logbook(path, create=False)
+    assert len(list_runs(again)) == 1
+    with pytest.raises(LogbookError, match="readonly"):
+        again.begin_run(plan(), shipped_bench(), mode="run")
+    again.close()
+    assert path.read_bytes() == before
+
+
+@pytest.mark.parametrize("which", ["²", "9" * 30, "-1", "one"])
+def test_what_is_no_run_number_is_refused(logbook: Logbook, which: str) -> None:
+    logbook.begin_run(plan(), shipped_bench(), mode="run")
+    with pytest.raises(LogbookError, match="there is no run"):
+        find_run(logbook, which)

@@ -70,7 +70,7 @@ def test_a_round_without_a_preset_is_not_repeatable_and_is_mentioned() -> None:
         ({"down.level": "-12 V"}, "'down' of -12 V .* at the terminal, beyond the source limit"),
         ({"up.edge": "90 us"}, "leave no flat top"),
         ({"up.level": "0 V"}, "its level is its base"),
-        ({"up.level": "2 V"}, "can't end, since the pulse goes from 0 V to 2 V"),
+        ({"up.level": "2 V"}, "can't end, since the cell goes from 0 V to 1.957 V at most"),
     ],
 )
 def test_what_must_not_run_is_refused_before_power(overrides: dict[str, str], words: str) -> None:
@@ -122,3 +122,55 @@ def test_shipped_recipes_plan_on_the_shipped_bench(name: str) -> None:
     assert (len(plan.rounds), plan.swept) == SHIPPED[name]
     assert all(each.repeatable for each in plan.rounds)
     assert plan.recipe.model.purpose
+
+
+def test_a_threshold_is_compared_with_what_the_node_can_reach() -> None:
+    recipe = parse_recipe(
+        HEAD + "  - preset: down\n  - {read: up, until: 2.5 V, at most: 9}\n",
+        file="r.yaml",
+        overrides={"up.level": "2.2 V", "down.level": "-2.5 V"},
+    )
+    text = shipped_bench().text
+    told_50 = parse_bench(text.replace("high-z", "50 ohm"), file="b.yaml")
+    assert len(make_plan(recipe, told_50).rounds) == 1
+    clamped = parse_bench(text.replace("clamp: none", "clamp: {breakdown: 2 V}"), file="b.yaml")
+    with pytest.raises(PlanError, match="can't end, since the cell goes from 0 V to 2 V at most"):
+        make_plan(
+            parse_recipe(HEAD + "  - {read: up, until: 2.5 V, at most: 9}\n", file="r.yaml"),
+            clamped,
+        )
+
+
+def test_what_the_driver_would_refuse_is_refused_in_the_plan() -> None:
+    text = shipped_bench().text.replace("node: 6 V", "node: 4 V")
+    text = text.replace("series diode: none", "series diode: {saturation current: 1e-12 A}")
+    recipe = parse_recipe(HEAD + "  - preset: down\n", file="r.yaml")
+    with pytest.raises(PlanError, match="the level of pulse 'down' is -5 V, beyond"):
+        make_plan(recipe, parse_bench(text, file="b.yaml"))
+
+
+@pytest.mark.parametrize(
+    ("steps", "words"),
+    [
+        ("  - sweep: {stored: [-3]}\n    steps: [{repeat: stored, steps: [{preset: down}]}]\n",
+         "repeat is -3"),
+        ("  - sweep: {stored: [2.9]}\n    steps: [{repeat: stored, steps: [{preset: down}]}]\n",
+         r"repeat is 2\.9"),
+        ("  - sweep: {hold: [-3600 s]}\n    steps: [{preset: down}, {wait: hold}]\n",
+         "wait of -3600 s"),
+        ("  - sweep: {up.width: [2000 s]}\n    steps: [{preset: down}, {step: up}]\n",
+         "out of bounds"),
+        ("  - {repeat: 1000000, steps: [{repeat: 1000000, steps: [{wait: hold}]}]}\n",
+         "over 1000000 steps"),
+    ],
+)  # fmt: skip
+def test_swept_values_keep_the_bounds(steps: str, words: str) -> None:
+    with pytest.raises(PlanError, match=words):
+        plan_of(steps)
+
+
+def test_settings_declared_as_parameters_are_known_in_every_round() -> None:
+    plan = plan_of(
+        "  - sweep: {up.width: [80 us]}\n    steps: [{preset: down}]\n  - preset: down\n"
+    )
+    assert [each.settings["up.width"] for each in plan.rounds] == [80e-6, 100e-6]

@@ -65,26 +65,19 @@ def test_what_does_not_hold_comes_with_the_exact_exchange(tmp_path: Path) -> Non
 
 
 def test_quiet_works_while_somebody_else_holds_the_bench() -> None:
-    with simulated() as table:
-        instruments = open_instruments(table.bench)
-        try:
-            instruments.generator.prepare()
-            instruments.generator.switch(on=True)
-            assert table.truth("OUTPut") == 1
-            quiet_bench(table.bench)
-            assert table.truth("OUTPut") == 0
-        finally:
-            instruments.close()
+    with simulated() as table, open_instruments(table.bench) as instruments:
+        instruments.generator.prepare()
+        instruments.generator.switch(on=True)
+        assert table.truth("OUTPut") == 1
+        quiet_bench(table.bench)
+        assert table.truth("OUTPut") == 0
 
 
 def test_a_bench_in_use_is_refused_naming_who_has_it(tmp_path: Path) -> None:
     with simulated() as table:
         (tmp_path / "bench.yaml").write_text(table.bench.text)
-        instruments = open_instruments(table.bench)
-        try:
+        with open_instruments(table.bench):
             done = pulsetally("run", "full_count", "--bench", "bench.yaml", cwd=tmp_path)
-        finally:
-            instruments.close()
     assert done.returncode == 1
     assert "it is in use by process" in done.stderr
 

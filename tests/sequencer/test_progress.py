@@ -24,7 +24,7 @@ from pulsetally.sequencer.events import (
     WaitBegan,
 )
 from pulsetally.sequencer.live import draw, follow
-from pulsetally.sequencer.plan import Round
+from pulsetally.sequencer.plan import Preset, Pulse, Round
 from pulsetally.sequencer.progress import Progress, printable
 from tests.sequencer.test_logbook import invented_shot
 
@@ -60,7 +60,8 @@ def finished(number: int, crossing: float) -> ReadFinished:
 
 
 def one_round(number: int = 1) -> Round:
-    return Round(number=number, settings={"up.width": 1e-4}, actions=())
+    down = Pulse(name="down", level=-5.0, width=2e-3, base=0.0, edge=1e-7, rest=1e-3)
+    return Round(number=number, settings={"up.width": 1e-4}, actions=(Preset(pulse=down),))
 
 
 def test_progress_counts_and_estimates() -> None:
@@ -82,6 +83,20 @@ def test_progress_counts_and_estimates() -> None:
     assert progress.statistics.rounds == 1
 
 
+def test_a_spoiled_round_does_not_count() -> None:
+    progress = Progress(rounds=2, seconds=None)
+    for event in (
+        RoundBegan(round=one_round(), attempt=1),
+        finished(1, 5.0),
+        RoundSpoiled(round=1, reason="a pulse was lost"),
+        RoundBegan(round=one_round(), attempt=2),
+        finished(1, 8.0),
+        RoundFinished(round=1),
+    ):
+        progress.take(event)
+    assert progress.crossings == [8.0]
+
+
 @pytest.mark.parametrize("height", [10, 24, 60])
 @pytest.mark.parametrize("width", [40, 80, 200])
 def test_the_drawing_fits_the_terminal(width: int, height: int) -> None:
@@ -89,7 +104,8 @@ def test_the_drawing_fits_the_terminal(width: int, height: int) -> None:
     events: list[Event] = [RoundBegan(round=one_round(), attempt=2)]
     for order in range(1, 40):
         events += read_pulse(order, order / 14)
-    events += [finished(number, 8.0 + number / 10) for number in range(1, 9)]
+    for number in range(1, 9):
+        events += [finished(number, 8.0 + number / 10), RoundFinished(round=number)]
     events += read_pulse(1, 1.0)
     for event in events:
         progress.take(event)

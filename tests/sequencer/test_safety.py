@@ -83,3 +83,15 @@ def test_other_signals_ask_for_an_end_now(number: signal.Signals) -> None:
         os.kill(os.getpid(), number)
         assert stop.at_once
         assert number.name in stop.reason
+
+
+def test_a_signal_that_is_ignored_stays_ignored() -> None:
+    before = signal.signal(signal.SIGHUP, signal.SIG_IGN)
+    try:
+        stop = StopSwitch()
+        with signals(stop):
+            os.kill(os.getpid(), signal.SIGHUP)
+            assert not stop.after_round
+        assert signal.getsignal(signal.SIGHUP) is signal.SIG_IGN
+    finally:
+        signal.signal(signal.SIGHUP, before)

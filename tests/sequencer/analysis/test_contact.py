@@ -24,6 +24,7 @@ def judge(
     found = judge_contact(
         *record(final, tau),
         base=0.0,
+        node_base=0.0,
         level=LEVEL,
         ramp=RAMP,
         reached_volts=0.196,
@@ -60,6 +61,7 @@ def test_a_record_with_too_few_samples_is_unclear() -> None:
             source[::100],
             node[::100],
             base=0.0,
+            node_base=0.0,
             level=LEVEL,
             ramp=RAMP,
             reached_volts=0.196,
