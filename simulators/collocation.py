@@ -32,11 +32,11 @@ def _integrals_of_lagrange_polynomials() -> Array:
 
 MATRIX = _integrals_of_lagrange_polynomials()
 # Lagrange polynomials of the nodes, evaluated at the step's begin.
-_AT_BEGIN = np.linalg.inv(np.vander(np.array(NODES), 3, increasing=True))[0]
-_A0, _A1, _A2 = (float(weight) for weight in _AT_BEGIN)
+AT_BEGIN = np.linalg.inv(np.vander(np.array(NODES), 3, increasing=True))[0]
+_A0, _A1, _A2 = (float(weight) for weight in AT_BEGIN)
 # The embedded formula of order 3 gives the begin of the step this weight: the real
 # eigenvalue of MATRIX, so that its error is filtered with a factor that is at hand.
-_EMBEDDED = 1 / (3 + 3 ** (2 / 3) - 3 ** (1 / 3))
+EMBEDDED = 1 / (3 + 3 ** (2 / 3) - 3 ** (1 / 3))
 
 # Newton's method doubles the right digits: below this correction the next one is noise.
 NEWTON_TOLERANCE_VOLTS = 5e-5
@@ -205,9 +205,9 @@ def try_step(
         circuit,
     )
     # Both quadratures differ by what the nodes extrapolate to at the begin, and miss.
-    missed_rates = begin.rates - _AT_BEGIN @ rates
+    missed_rates = begin.rates - AT_BEGIN @ rates
     missed_amperes = begin.amperes - (_A0 * i1 + _A1 * i2 + _A2 * i3)
-    weight = _EMBEDDED * seconds
+    weight = EMBEDDED * seconds
     missed = weight * (missed_amperes - signed * float(open_shares @ missed_rates))
     stiffness = farads + weight * (coulombs * float(open_shares @ slopes[2]) - d3)
     moved = open_total - float(open_shares.sum())
