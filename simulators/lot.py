@@ -321,16 +321,19 @@ class _Step:
             driving = self._side[:, None] * (volts - self._imprint[:, None])
             inverses = 1 / np.maximum(driving, _LEAST_DRIVING_VOLTS)
             folds = -(inverses ** self._alpha[:, None])
+            # Slopes of the rates are steepness times these; it is put in after the sums.
             slopes = folds[:, :, None].astype(np.float32) * self._barriers[:, None, :]
-            rates = np.exp(slopes + logs32)
+            steepness = -self._alpha[:, None] * inverses
+            rates = slopes + logs32
+            np.exp(rates, out=rates)
             slopes *= rates
-            slopes *= (-self._alpha[:, None] * inverses)[:, :, None].astype(np.float32)
-            exponents = np.matmul(scaled32, rates)
-            np.minimum(exponents, 0.0, out=exponents)
-            shares = np.exp(exponents)
+            shares = np.matmul(scaled32, rates)
+            np.minimum(shares, 0.0, out=shares)
+            last_exponents = shares[:, 2, :].copy()
+            np.exp(shares, out=shares)
             shares *= self._open[:, None, :]
             gone = self._open_total[:, None] - shares.sum(axis=2)
-            growth = np.matmul(shares, slopes.transpose(0, 2, 1))
+            growth = np.matmul(shares, slopes.transpose(0, 2, 1)) * steepness[:, None, :]
             jacobian = diagonal - scaled * (coulombs * growth + siemens)
             missing = (
                 farads * (volts - self.begin_volts[:, None])
@@ -346,19 +349,19 @@ class _Step:
                 break
         solved: Mask = largest < NEWTON_TOLERANCE_VOLTS
         # The last correction goes into the exposures too, or charge would be lost.
-        turns = (-self._side[:, None] * scaled[:, 2, :] * change).astype(np.float32)
-        last = exponents[:, 2, :] + np.matmul(turns[:, None, :], slopes)[:, 0, :]
+        turns = -self._side[:, None] * scaled[:, 2, :] * change * steepness
+        last = np.matmul(turns[:, None, :].astype(np.float32), slopes)[:, 0, :]
+        last += last_exponents
         np.minimum(last, 0.0, out=last)
-        self._kept = np.exp(last)
+        self._kept = np.exp(last, out=last)
         remaining = self._open * self._kept
         self.volts, self.moved = volts, self._open_total - remaining.sum(axis=1)
         missed_rates = self._begin_rates - np.matmul(AT_BEGIN.astype(np.float32), rates)
         missed_amperes = self._amperes - amperes @ AT_BEGIN
         weight = EMBEDDED * seconds
         missed = weight * (missed_amperes - signed * (remaining * missed_rates).sum(axis=1))
-        stiffness = self._farads + weight * (
-            self._coulombs * (remaining * slopes[:, 2, :]).sum(axis=1) + self._siemens
-        )
+        growth_at_end = (remaining * slopes[:, 2, :]).sum(axis=1) * steepness[:, 2]
+        stiffness = self._farads + weight * (self._coulombs * growth_at_end + self._siemens)
         return solved, np.abs(missed) / stiffness
 
     def is_two_sided(self, seconds: Array) -> Mask:
