@@ -17,8 +17,10 @@ from pulsetally.simulators.wear import ImprintGrowth
 
 Array = NDArray[np.float64]
 
-# The imprint voltage may move by this much while the cell is integrated with the old one, V.
+# The imprint voltage may move by this much, V, or by what a fifth of a decade moves it, while
+# the cell is integrated with the old one.
 IMPRINT_STEP_VOLTS = 5e-3
+IMPRINT_STEP_DECADES = 0.2
 
 # Many pairs of pulses at once: until the remanent polarization has lost this part (unless
 # each pair switches the whole cell anyhow, or next to nothing is left), or imprint has moved
@@ -142,10 +144,12 @@ class Ageing:
 
     def longest_seconds(self, seconds: float) -> float:
         """Return how much of seconds may pass before the cell must be brought up to date."""
-        if self._traps is None:
+        growth = self._options.imprint_growth
+        if self._traps is None or growth is None:
             return seconds
         state, faster = self._state(), self._imprint_speed()
-        while self._traps.movement_volts(faster * seconds, state) > IMPRINT_STEP_VOLTS:
+        most_volts = max(IMPRINT_STEP_VOLTS, IMPRINT_STEP_DECADES * growth.volts_per_decade)
+        while self._traps.movement_volts(faster * seconds, state) > most_volts:
             seconds /= 4
         return seconds
 

@@ -237,6 +237,7 @@ class Table:
         # Late in virtual time the clock is coarser than the solver's shortest steps.
         rising = np.concatenate(([True], np.diff(times) > 0))
         rising[:-1] &= times[:-1] < stop_seconds
+        rising[-1] = True
         times, emf_volts, node_volts = times[rising], emf_volts[rising], node_volts[rising]
         terminal_volts = self._circuit.terminal_volts(emf_volts, node_volts)
         for observer in self._observers:

@@ -442,6 +442,18 @@ def test_late_in_virtual_time_samples_still_rise() -> None:
     assert table.delivered == 2
 
 
+def test_late_in_virtual_time_no_stretch_ends_early() -> None:
+    # The last samples of a stretch may fall on one and the same instant there.
+    table = connected(wiring=Wiring(series_ohms=1000.0, clamp_volts=3.0))
+    table.advance(5.7e7)
+    record = Record()
+    table.observe(record)
+    for step in range(12):
+        pulse(table, 6.0, 1.3e-6 + 1e-7 * step, rest_seconds=1.7e-6)
+    for before, after in zip(record.stretches, record.stretches[1:], strict=False):
+        assert after[0][0] == before[0][-1]
+
+
 def test_only_whole_pulses_of_some_amplitude_are_delivered() -> None:
     table = Table(CellDescription(), Wiring())
     train = PulseTrain(level_volts=1, width_seconds=1e-5, period_seconds=1e-4, count=10)
