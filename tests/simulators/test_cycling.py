@@ -54,7 +54,7 @@ WEAR = Fatigue(scale_cycles=400.0)
 RECOVERING = replace(WEAR, recovered_share=0.01, recovery_volts=6.0)
 AGREEMENTS: dict[str, tuple[dict[str, Any], float, float, int, float]] = {
     "wear, fully switched": ({"fatigue": WEAR}, -8.0, 8.0, 20, 1e-5),
-    "wear, partly switched": ({"fatigue": WEAR}, -4.0, 2.6, 70, 1e-2),
+    "wear, partly switched": ({"fatigue": WEAR}, -4.0, 2.6, 45, 1e-2),
     "wear and recovery": ({"fatigue": RECOVERING}, -8.0, 8.0, 20, 1e-5),
     "imprint and retention": (
         {
@@ -63,7 +63,7 @@ AGREEMENTS: dict[str, tuple[dict[str, Any], float, float, int, float]] = {
         },
         -4.0,
         2.6,
-        60,
+        45,
         1e-2,
     ),
     "incubation": ({"incubation": Incubation(seconds=20e-6), "fatigue": WEAR}, -6.0, 6.0, 20, 1e-3),
