@@ -199,3 +199,19 @@ def find_predicate() -> Predicate:
     dialect = find_dialect("scpi99", Path()).oscilloscope
     assert dialect is not None
     return dialect.armed
+
+
+@pytest.mark.parametrize("name", shipped_dialects())
+def test_every_command_begins_at_the_root(name: str) -> None:
+    # 'FORM INT,16;BORD SWAP' is an error on instruments that keep to SCPI-99, since a header
+    # without a colon continues where the last one stood; commands are joined by semicolons.
+    dialect = find_dialect(name, Path())
+    generator, oscilloscope = dialect.generator, dialect.oscilloscope
+    assert generator is not None
+    assert oscilloscope is not None
+    settings = [*generator.settings, generator.output, generator.load, *oscilloscope.settings]
+    commands = [text for each in settings if each for text in (each.send, each.ask) if text]
+    assert len(commands) > 20
+    for message in (*commands, *generator.fire, *oscilloscope.arm, *oscilloscope.force):
+        for command in message.split(";"):
+            assert command[0] in ":*", command
