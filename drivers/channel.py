@@ -15,15 +15,15 @@ from collections.abc import Callable
 from typing import Any, Protocol
 
 
-class ChannelTimeout(Exception):  # noqa: N818 - it says what happened
+class ChannelTimeout(Exception):
     """Nothing came, or nothing could be sent, before the deadline."""
 
 
-class ChannelClosed(Exception):  # noqa: N818 - it says what happened
+class ChannelClosed(Exception):
     """The other side is gone."""
 
 
-class ChannelOverrun(Exception):  # noqa: N818 - it says what happened
+class ChannelOverrun(Exception):
     """Other bytes came than were allowed: more, or fewer before their message ended."""
 
 

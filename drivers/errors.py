@@ -27,19 +27,19 @@ class LinkError(InstrumentError):
     """The line to an instrument doesn't work: check address, cable and power."""
 
 
-class NoAnswer(LinkError):  # noqa: N818 - it says what happened
+class NoAnswer(LinkError):
     """An answer did not come, or not whole, within its time."""
 
 
-class LinkClosed(LinkError):  # noqa: N818 - it says what happened
+class LinkClosed(LinkError):
     """The instrument, or something between, closed the connection."""
 
 
-class BadReply(InstrumentError):  # noqa: N818 - it says what happened
+class BadReply(InstrumentError):
     """An answer came that isn't one: another kind of instrument, or another dialect."""
 
 
-class InstrumentComplaint(InstrumentError):  # noqa: N818 - it says what happened
+class InstrumentComplaint(InstrumentError):
     """The instrument put an entry into its error queue.
 
     number: the entry's number; text: its words.
@@ -55,7 +55,7 @@ class InstrumentComplaint(InstrumentError):  # noqa: N818 - it says what happene
         self.number, self.text = number, text
 
 
-class SettingRefused(InstrumentError):  # noqa: N818 - it says what happened
+class SettingRefused(InstrumentError):
     """A setting read back differs from what was asked for.
 
     name: the setting; asked, found: in SI units.

@@ -16,7 +16,7 @@ from typing import IO
 from pulsetally.drivers.errors import LinkError
 
 
-class AddressBusy(LinkError):  # noqa: N818 - it says what happened
+class AddressBusy(LinkError):
     """Another process, or another part of this one, has the instrument."""
 
 

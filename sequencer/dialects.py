@@ -244,6 +244,19 @@ class _SpeechSection(Model):
     prepare: Commands = Field(default_factory=list)
     abort: Commands
     missing: list[Annotated[str, _one_of(_ABILITIES)]] = Field(default_factory=list)
+    settings: dict[str, SettingSection]
+
+    def shared(self) -> dict[str, Any]:
+        """Return what both instruments have, as the drivers take it."""
+        return {
+            "line": self.line.build(),
+            "reset": tuple(self.reset),
+            "error_query": self.errors,
+            "prepare": tuple(self.prepare),
+            "settings": tuple(each.build(name) for name, each in self.settings.items()),
+            "abort": tuple(self.abort),
+            "missing": tuple(self.missing),
+        }
 
 
 def _needs(settings: dict[str, SettingSection], *choices: str) -> None:
@@ -258,7 +271,6 @@ def _needs(settings: dict[str, SettingSection], *choices: str) -> None:
 class GeneratorSection(_SpeechSection):
     """How a function generator is spoken to."""
 
-    settings: dict[str, SettingSection]
     output: SettingSection
     output_settles_in: Annotated[
         float, Field(alias="output settles in"), quantity(TIME, least=0, most=10)
@@ -283,13 +295,7 @@ class GeneratorSection(_SpeechSection):
     def build(self) -> drivers.GeneratorDialect:
         """Return it as the drivers take it."""
         return drivers.GeneratorDialect(
-            line=self.line.build(),
-            reset=tuple(self.reset),
-            error_query=self.errors,
-            prepare=tuple(self.prepare),
-            settings=tuple(each.build(name) for name, each in self.settings.items()),
-            abort=tuple(self.abort),
-            missing=tuple(self.missing),
+            **self.shared(),
             output=self.output.build("output"),
             load=self.load.build("load") if self.load else None,
             fire=tuple(self.fire),
@@ -305,7 +311,6 @@ class OscilloscopeSection(_SpeechSection):
     divisions: Annotated[list[int], Field(min_length=2, max_length=2)] = Field(
         default_factory=lambda: [8, 10]
     )
-    settings: dict[str, SettingSection]
     arm: Annotated[Commands, Field(min_length=1)]
     armed: PredicateSection
     done: PredicateSection
@@ -329,13 +334,7 @@ class OscilloscopeSection(_SpeechSection):
     def build(self) -> drivers.OscilloscopeDialect:
         """Return it as the drivers take it."""
         return drivers.OscilloscopeDialect(
-            line=self.line.build(),
-            reset=tuple(self.reset),
-            error_query=self.errors,
-            prepare=tuple(self.prepare),
-            settings=tuple(each.build(name) for name, each in self.settings.items()),
-            abort=tuple(self.abort),
-            missing=tuple(self.missing),
+            **self.shared(),
             divisions=(self.divisions[0], self.divisions[1]),
             arm=tuple(self.arm),
             armed=self.armed.build(),

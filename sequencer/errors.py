@@ -58,7 +58,7 @@ class LogbookError(PulsetallyError):
     """The logbook can't be read or written."""
 
 
-class ShotMissing(PulsetallyError):  # noqa: N818 - it says what happened
+class ShotMissing(PulsetallyError):
     """A pulse was fired, or may have been, and no record of it came.
 
     order: which pulse of the round, from 1.
@@ -69,15 +69,15 @@ class ShotMissing(PulsetallyError):  # noqa: N818 - it says what happened
         self.order, self.problem = order, problem
 
 
-class ContactLost(PulsetallyError):  # noqa: N818 - it says what happened
+class ContactLost(PulsetallyError):
     """No cell is there, or it is a short: what would be measured means nothing."""
 
 
-class StopRequested(PulsetallyError):  # noqa: N818 - it says what happened
+class StopRequested(PulsetallyError):
     """A person or the system asked the run to stop now."""
 
 
-class OutputsNotConfirmed(PulsetallyError):  # noqa: N818 - it says what happened
+class OutputsNotConfirmed(PulsetallyError):
     """The outputs could not be read back as off.
 
     address: the VISA address of the instrument; problem: why.

@@ -20,7 +20,7 @@ _OPEN_FACTOR = 2.0
 _LEAST_SAMPLES = 20
 
 
-class ContactUnclear(ValueError):  # noqa: N818 - it says what happened
+class ContactUnclear(ValueError):
     """A record doesn't allow a judgement."""
 
 

@@ -19,7 +19,7 @@ _FITTED_SHARE = 0.2
 _LEAST_SAMPLES = 6
 
 
-class PulseUnreadable(ValueError):  # noqa: N818 - it says what happened
+class PulseUnreadable(ValueError):
     """A record doesn't show the pulse it should."""
 
 
