@@ -28,7 +28,7 @@ IMPRINT_STEP_DECADES = 0.2
 FATIGUE_STEP = 0.1
 NEGLIGIBLE_KEPT = 0.01
 FULL_CYCLES = 0.999
-IMPRINT_JUMP_VOLTS = 0.03
+IMPRINT_JUMP_VOLTS = 0.01
 _MOST_RECOVERIES = 100_000
 
 # Log of the traps' rates times the onset time: at these the trapezoid rule gives the

@@ -21,6 +21,7 @@ Array = NDArray[np.float64]
 SETTLED_AT_START = (3e-4, 30)
 SETTLED_AGAIN = (1e-3, 8)
 LAST_PAIRS = 5
+MOST_PAIRS_OF_DOMAINS = 3
 
 
 class Observer(Protocol):
@@ -191,6 +192,9 @@ class Table:
             before = pair
             # Where a pair leaves traces of the one before, the last ones are integrated too.
             last = 1 if pair.cycles > FULL_CYCLES else LAST_PAIRS
+            if self._cell.description.domains is not None:
+                # Domains are dealt anew in each pair, so that no two are alike.
+                most_pairs = MOST_PAIRS_OF_DOMAINS
             if pairs > last and (settled or integrated >= most_pairs):
                 many = int(max(1, min(pairs - last, self._ageing.most_repeats(pair))))
                 many = self._ageing.most_held(pair, many)

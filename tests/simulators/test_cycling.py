@@ -114,6 +114,15 @@ def test_a_cell_breaks_down_on_its_way() -> None:
     assert up(table) == pytest.approx(0.0, abs=0.03)
 
 
+def test_domains_are_cycled_at_once_too() -> None:
+    table = connected(CellDescription(regions=8, domains=100, fatigue=Fatigue()), FAST)
+    count = Count(table)
+    table.cycle(train(-8.0), train(8.0), pairs=10**6)
+    # A: a pair is some eight stretches; a handful of them at the begin and the end.
+    assert count.stretches < 100
+    assert table.cycles == pytest.approx(1e6, rel=1e-5)
+
+
 def test_a_cell_that_is_not_connected_only_waits() -> None:
     table = Table(CellDescription(fatigue=Fatigue()), FAST)
     table.cycle(train(-8.0), train(8.0), pairs=10**6)
