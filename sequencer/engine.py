@@ -187,7 +187,7 @@ class _Conductor:
             match action:
                 case Wait():
                     yield WaitBegan(round=each.number, seconds=action.seconds)
-                    self._wait(action.seconds)
+                    yield from self._wait(action.seconds)
                 case Preset():
                     order += 1
                     yield from self._pulse(each, order, Role.PRESET, action.pulse)
@@ -235,9 +235,8 @@ class _Conductor:
         self, each: Round, order: int, role: Role, pulse: Pulse, read: Read | None = None
     ) -> Generator[Event, None, "_Taken"]:
         """Deliver one pulse and record it: arm, know that it is armed, fire, fetch."""
-        if self._stop.after_round and not self._stop_announced:
-            self._stop_announced = True
-            yield StopAsked(at_once=self._stop.at_once)
+        if self._unannounced:
+            yield self._announce()
         # The rest is spent at the base of the pulse before; only then comes the next one's.
         self._pause(self._next_at - self._clock.now())
         yield from self._set_up(pulse)
@@ -293,7 +292,7 @@ class _Conductor:
                 probe_tau=bench.probe_tau(),
                 expected_tau=bench.cell_tau(),
             )
-        except ContactUnclear as error:
+        except (ContactUnclear, PulseUnreadable) as error:
             raise ContactLost(
                 f"contact can't be judged: {error}. To fix it, use a longer pulse."
             ) from error
@@ -382,18 +381,31 @@ class _Conductor:
         except PulseUnreadable as error:
             return None, str(error)
 
-    def _wait(self, seconds: float) -> None:
+    def _wait(self, seconds: float) -> Iterator[Event]:
         """Leave the cell alone, and ask the instruments something now and then.
 
         Routers and instruments drop a line that is idle for long; a dropped one is better
-        noticed now than when the cell is due.
+        noticed now than when the cell is due. Who asks for a stop meanwhile is answered at once.
         """
-        slices = max(1, min(_MOST_SLICES, round(seconds / _IDLE_SECONDS)))
-        for number in range(slices):
-            self._pause(seconds / slices)
-            if number + 1 < slices:
+        end = self._clock.now() + seconds
+        part = max(_IDLE_SECONDS, seconds / _MOST_SLICES)
+        while (left := end - self._clock.now()) > 0:
+            self._clock.sleep(min(left, part), lambda: self._stop.at_once or self._unannounced)
+            if self._stop.at_once:
+                raise StopRequested(self._stop.reason)
+            if self._unannounced:
+                yield self._announce()
+            elif left > part:
                 self._generator.output_is_on()
                 self._oscilloscope.identify()
+
+    @property
+    def _unannounced(self) -> bool:
+        return self._stop.after_round and not self._stop_announced
+
+    def _announce(self) -> StopAsked:
+        self._stop_announced = True
+        return StopAsked(at_once=self._stop.at_once)
 
     def _pause(self, seconds: float) -> None:
         if seconds > 0:

@@ -26,6 +26,8 @@ from pulsetally.sequencer.events import (
     RunEnded,
     RunState,
     ShotTaken,
+    StopAsked,
+    WaitBegan,
 )
 from pulsetally.sequencer.logbook import Logbook
 from pulsetally.sequencer.plan import make_plan
@@ -414,3 +416,31 @@ def test_rounds_that_a_full_count_leaves_out_are_counted(
     assert result.full_count.rounds == 1
     assert (result.left_out.not_reached, result.left_out.first_pulse) == (1, 1)
     assert result.as_object()["left_out"] == {"not_reached": 1, "first_pulse": 1}
+
+
+def test_a_stop_asked_during_a_long_wait_is_answered_at_once(
+    table: Simulated, logbook: Logbook
+) -> None:
+    recipe = parse_recipe(
+        "recipe: wait\npulses:\n  down: {level: -5 V, width: 2 ms}\n"
+        "steps:\n  - {repeat: 3, steps: [{preset: down}, {wait: 8 h}]}\n",
+        file="r.yaml",
+    )
+    plan = make_plan(recipe, table.bench)
+    stop = StopSwitch()
+    seen: list[Event] = []
+    recorder = logbook.begin_run(plan, table.bench, mode="run")
+    for event in engine.run(plan, table.bench, recorder, stop):
+        seen.append(event)
+        if isinstance(event, WaitBegan):
+            stop.press("Ctrl-C")
+        if isinstance(event, StopAsked):
+            assert not event.at_once
+            stop.press("Ctrl-C")
+    assert [type(each).__name__ for each in seen[-4:]] == [
+        "WaitBegan",
+        "StopAsked",
+        "RoundSpoiled",
+        "RunEnded",
+    ]
+    assert table.truth("OUTPut") == 0
