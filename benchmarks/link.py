@@ -28,7 +28,7 @@ SIZES = {"block_1kB": 1_000, "block_100kB": 100_000, "block_1MB": 1_000_000}
 SIZES["block_10MB"] = 10_000_000
 IDENTITY = "A MAKER,A MODEL,123456,1.0"
 # Small exchanges are timed in groups, since one lasts about as long as the clock is fine.
-GROUPS = {"idn": 50, "block_1kB": 30, "block_100kB": 5, "block_1MB": 2, "block_10MB": 1}
+GROUPS = {"idn": 300, "block_1kB": 300, "block_100kB": 20, "block_1MB": 2, "block_10MB": 1}
 PYVISA_REPEATS = {"idn": 500, "block_1kB": 21, "block_100kB": 3, "block_1MB": 1, "block_10MB": 1}
 LIMIT_SECONDS = 12.0
 WARM_UP = 2
