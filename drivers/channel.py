@@ -5,6 +5,7 @@ for every other kind of line. Both know line ends and exact counts, and nothing 
 library raises passes through them; errors.py says what it means.
 """
 
+import abc
 import contextlib
 import select
 import socket
@@ -99,7 +100,7 @@ _SLOWEST = 20_000.0
 _QUIET_SECONDS = 0.05
 
 
-class _Buffered:
+class _Buffered(abc.ABC):
     """Cut lines, messages and exact counts out of the bytes that _fetch takes in.
 
     They lie in one piece of memory that is used again and again: fresh memory for every
@@ -115,8 +116,9 @@ class _Buffered:
         # Whether the last fetch came to an end that the line itself marks, as only some do.
         self._ended = False
 
+    @abc.abstractmethod
     def _fetch(self, most: int, pace: Pace, *, line: bool = False) -> None:
-        raise NotImplementedError
+        """Take in what comes, at least one byte."""
 
     def _free(self, least: int) -> memoryview:
         """Return room behind the pending bytes."""

@@ -95,13 +95,16 @@ class Predicate:
     """A question whose answer means yes.
 
     Yes, if the answer's bits have all of bits_set and none of bits_clear; or, where words are
-    given, if the answer is one of them.
+    given, if the answer is one of them. poll_seconds: pause between two questions.
+    limit_seconds: how long a yes may take beyond what it has to.
     """
 
     ask: str
     words: tuple[str, ...] = ()
     bits_set: int = 0
     bits_clear: int = 0
+    poll_seconds: float = 2e-3
+    limit_seconds: float = 5.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -139,8 +142,9 @@ class WaveformForm:
 class Speech:
     """What generators and oscilloscopes share.
 
-    reset: brings the default state and empties the error queue. error_query: reads one entry.
-    prepare: sent once after the reset. missing: abilities that the instrument lacks.
+    reset: brings the default state and empties the error queue. error_query: reads one entry;
+    empty where there is no queue. prepare: sent once after the reset. What an instrument can't
+    set is left out of settings.
     """
 
     line: Line
@@ -149,7 +153,6 @@ class Speech:
     prepare: tuple[str, ...]
     settings: tuple[Setting, ...]
     abort: tuple[str, ...]
-    missing: tuple[str, ...] = ()
 
     def setting(self, name: str) -> Setting | None:
         """Return a setting by its name, or None where the instrument hasn't got it."""

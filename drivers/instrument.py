@@ -50,10 +50,17 @@ class Instrument:
         """Bring the instrument into its default state and empty its error queue."""
         self._send(self._speech.reset)
 
+    @property
+    def has_error_queue(self) -> bool:
+        """Say whether the dialect knows how to ask for errors."""
+        return bool(self._speech.error_query)
+
     def errors(self) -> list[tuple[int, str]]:
-        """Empty the error queue; return its entries, oldest first."""
+        """Empty the error queue; return its entries, oldest first. None where there is no queue."""
         entries: list[tuple[int, str]] = []
         command = self._speech.error_query
+        if not command:
+            return entries
         for _ in range(_MOST_ENTRIES):
             try:
                 number, text = parse_error_entry(self.ask(command))

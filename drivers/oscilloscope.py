@@ -10,6 +10,7 @@ from pulsetally.drivers.dialect import (
     CHANNEL_SETTINGS,
     SAMPLE_TYPES,
     OscilloscopeDialect,
+    Predicate,
     fill,
     read_preamble,
 )
@@ -153,6 +154,16 @@ class Oscilloscope(Instrument):
         found |= self.read_back(whole, values, setting.trigger_channel)
         self._points, self._interval = setting.points, setting.sample_interval
         return found
+
+    @property
+    def armed(self) -> Predicate:
+        """Return how to ask whether it is armed, how often and for how long."""
+        return self._dialect.armed
+
+    @property
+    def done(self) -> Predicate:
+        """Return how to ask whether the record is complete, how often and for how long."""
+        return self._dialect.done
 
     def arm(self) -> None:
         """Begin one acquisition. It is armed only once is_armed says so."""

@@ -19,7 +19,6 @@ from pulsetally.sequencer.quantities import NUMBER, TIME, parse_quantity
 from pulsetally.sequencer.yaml_places import Path, PlacedData, load_yaml, nearest, read_text
 
 _ENDINGS = {"line feed": "\n", "carriage return": "\r", "carriage return and line feed": "\r\n"}
-_ABILITIES = ("burst", "edges", "polarity", "read back", "error queue")
 _NAME = re.compile(r"[a-z][a-z0-9_-]*")
 
 
@@ -155,6 +154,11 @@ class PredicateSection(Model):
         float, Field(alias="none of bits"), quantity(NUMBER, least=0, whole=True)
     ] = 0.0
 
+    poll_every: Annotated[float, Field(alias="poll every"), quantity(TIME, above=0, most=10)] = 2e-3
+    time_limit: Annotated[float, Field(alias="time limit"), quantity(TIME, above=0, most=3600)] = (
+        5.0
+    )
+
     @model_validator(mode="after")
     def _asks_for_something(self) -> "PredicateSection":
         if bool(self.words) == bool(self.all_of_bits or self.none_of_bits):
@@ -170,6 +174,8 @@ class PredicateSection(Model):
             words=tuple(f"{each:g}" if isinstance(each, float) else each for each in self.words),
             bits_set=int(self.all_of_bits),
             bits_clear=int(self.none_of_bits),
+            poll_seconds=self.poll_every,
+            limit_seconds=self.time_limit,
         )
 
 
@@ -240,10 +246,9 @@ class WaveformSection(Model):
 class _SpeechSection(Model):
     line: LineSection = Field(default_factory=LineSection)
     reset: Commands = Field(default_factory=lambda: ["*RST;*CLS"])
-    errors: Query
+    errors: Query | None = None
     prepare: Commands = Field(default_factory=list)
     abort: Commands
-    missing: list[Annotated[str, _one_of(_ABILITIES)]] = Field(default_factory=list)
     settings: dict[str, SettingSection]
 
     def shared(self) -> dict[str, Any]:
@@ -251,11 +256,10 @@ class _SpeechSection(Model):
         return {
             "line": self.line.build(),
             "reset": tuple(self.reset),
-            "error_query": self.errors,
+            "error_query": self.errors or "",
             "prepare": tuple(self.prepare),
             "settings": tuple(each.build(name) for name, each in self.settings.items()),
             "abort": tuple(self.abort),
-            "missing": tuple(self.missing),
         }
 
 

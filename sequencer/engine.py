@@ -58,9 +58,6 @@ from pulsetally.sequencer.safety import StopSwitch
 
 # A round that lost a pulse starts again; one that loses it again and again has a cause.
 MOST_ATTEMPTS = 3
-_ARM_SECONDS = 5.0
-_DONE_SECONDS = 3.0
-_POLL_SECONDS = 0.002
 # While a run waits, the lines are used so often, and at most so many times.
 _IDLE_SECONDS, _MOST_SLICES = 30.0, 1000
 # The share of a record that lies before the trigger.
@@ -243,8 +240,9 @@ class _Conductor:
         if self._stop.at_once:
             raise StopRequested(self._stop.reason)
         self._oscilloscope.arm()
-        patience = _ARM_SECONDS + 2 * _BEFORE * self._record_seconds
-        if not self._until(self._oscilloscope.is_armed, patience):
+        armed, done = self._oscilloscope.armed, self._oscilloscope.done
+        patience = armed.limit_seconds + 2 * _BEFORE * self._record_seconds
+        if not self._until(self._oscilloscope.is_armed, patience, armed.poll_seconds):
             raise InstrumentError(
                 self._oscilloscope.address,
                 "",
@@ -256,7 +254,8 @@ class _Conductor:
             round=each.number, order=order, role=role, pulse=pulse.name, threshold=threshold
         )
         self._generator.fire()
-        if not self._until(self._oscilloscope.is_done, _DONE_SECONDS + self._record_seconds):
+        patience = done.limit_seconds + self._record_seconds
+        if not self._until(self._oscilloscope.is_done, patience, done.poll_seconds):
             self._oscilloscope.abort()
             raise ShotMissing(order, f"pulse {order} was fired and the oscilloscope saw no trigger")
         shot, node = self._fetch()
@@ -413,12 +412,12 @@ class _Conductor:
         if self._stop.at_once:
             raise StopRequested(self._stop.reason)
 
-    def _until(self, condition: Callable[[], bool], seconds: float) -> bool:
+    def _until(self, condition: Callable[[], bool], seconds: float, poll_seconds: float) -> bool:
         if condition():
             return True
         deadline = self._clock.now() + seconds
         while self._clock.now() < deadline:
-            self._clock.sleep(_POLL_SECONDS)
+            self._clock.sleep(poll_seconds)
             if condition():
                 return True
         return False

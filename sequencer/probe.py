@@ -126,6 +126,8 @@ class _Prober:
         def notices() -> str:
             self.link.write(_WRONG_COMMAND)
             entries = instrument.errors()
+            if not instrument.has_error_queue:
+                return "the dialect has no 'errors': a wrong command goes unnoticed"
             if not entries:
                 raise ValueError(f"{_WRONG_COMMAND!r} made no entry; errors will go unnoticed")
             return f"a wrong command makes the entry {entries[0][0]}, {entries[0][1]!r}"

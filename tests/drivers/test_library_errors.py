@@ -5,7 +5,7 @@ import termios
 from collections.abc import Callable
 
 import pytest
-import serial  # type: ignore[import-untyped]
+import serial  # type: ignore[import-untyped]  # it ships without types
 from pyvisa import constants, errors
 
 from pulsetally.drivers.channel import Channel, Pace

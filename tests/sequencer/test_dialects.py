@@ -16,9 +16,12 @@ from pulsetally.drivers.dialect import (
     understand,
 )
 from pulsetally.drivers.errors import SettingRefused
+from pulsetally.drivers.function_generator import FunctionGenerator
+from pulsetally.drivers.link import VisaLink
 from pulsetally.drivers.numbers import NumberError
 from pulsetally.drivers.oscilloscope import AcquisitionSetting
 from pulsetally.sequencer import engine
+from pulsetally.sequencer.bench import parse_bench
 from pulsetally.sequencer.dialects import (
     DialectError,
     find_dialect,
@@ -215,3 +218,52 @@ def test_every_command_begins_at_the_root(name: str) -> None:
     for message in (*commands, *generator.fire, *oscilloscope.arm, *oscilloscope.force):
         for command in message.split(";"):
             assert command[0] in ":*", command
+
+
+def test_an_instrument_without_an_error_queue_is_not_asked_for_errors() -> None:
+    text = shipped_text("scpi99").replace('  errors: ":SYSTem:ERRor:NEXT?"\n', "")
+    dialect = parse_dialect(text, file="d.yaml")
+    assert dialect.generator is not None
+    with simulated() as table:
+        link = VisaLink(table.addresses.generator)
+        try:
+            generator = FunctionGenerator(link, dialect.generator, limit_volts=5.0)
+            assert not generator.has_error_queue
+            link.write(":NOSUCH 1")
+            assert generator.errors() == []
+            # The instrument still has the entry: nobody asked for it.
+            assert link.ask(":SYSTem:ERRor:NEXT?").startswith("-113")
+        finally:
+            link.close()
+
+
+def test_how_often_and_how_long_is_asked_can_be_said() -> None:
+    text = shipped_text("perdiv").replace(
+        "words: [2]}", "words: [2], poll every: 10 ms, time limit: 30 s}"
+    )
+    dialect = parse_dialect(text, file="d.yaml").oscilloscope
+    assert dialect is not None
+    assert (dialect.armed.poll_seconds, dialect.armed.limit_seconds) == (10e-3, 30.0)
+    assert (dialect.done.poll_seconds, dialect.done.limit_seconds) == (2e-3, 5.0)
+
+
+def test_an_oscilloscope_that_does_not_arm_fires_nothing(tmp_path: Path) -> None:
+    # A wrong word: it never says what the dialect waits for.
+    text = shipped_text("perdiv").replace("words: [2]}", "words: [9], time limit: 1 s}")
+    (tmp_path / "mine.yaml").write_text(text)
+    with simulated(SimulationSettings(family="perdiv")) as table:
+        bench = parse_bench(
+            table.bench.text.replace("dialect: perdiv", "dialect: mine.yaml"),
+            file="b.yaml",
+            folder=tmp_path,
+        )
+        plan = make_plan(find_recipe("full_count"), bench)
+        logbook = Logbook(tmp_path / "logbook.db")
+        recorder = logbook.begin_run(plan, bench, mode="run")
+        *_, ended = engine.run(plan, bench, recorder, StopSwitch())
+        logbook.close()
+        assert isinstance(ended, RunEnded)
+        assert "did not arm within" in ended.reason
+        assert "nothing was fired" in ended.reason
+        assert table.truth("DELivered") == 0
+        assert table.truth("OUTPut") == 0

@@ -143,7 +143,7 @@ def test_an_up_cell_loses_polarization_as_a_stretched_exponential() -> None:
 
 def test_the_other_state_is_kept() -> None:
     for side, level_volts in ((1, -8.0), (-1, 8.0)):
-        table = connected(CellDescription(retention=Retention(side=side)))  # type: ignore[arg-type]
+        table = connected(CellDescription(retention=Retention(side=side)))  # type: ignore[arg-type]  # a plain int
         pulse(table, level_volts, 2e-3)
         before = table.polarization
         table.advance(1e8)

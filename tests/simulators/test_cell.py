@@ -188,4 +188,5 @@ MISTAKES = [
 @pytest.mark.parametrize(("name", "value", "message"), MISTAKES)
 def test_impossible_cells_are_refused(name: str, value: float, message: str) -> None:
     with pytest.raises(ValueError, match=f"{name} is {value}; it {message}"):
+        # The fields differ in type, which a dict of them can't say.
         CellDescription(**{name: value})  # type: ignore[arg-type]

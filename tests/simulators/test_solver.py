@@ -42,6 +42,7 @@ def one_region(**changes: float) -> CellDescription:
         "relative_permittivity": 1.0,
         "activation_spread": 0.0,
     }
+    # The fields differ in type, which a dict of them can't say.
     return CellDescription(**(regions | changes), regions=1)  # type: ignore[arg-type]
 
 

@@ -109,4 +109,5 @@ def test_impossible_options_are_refused(
     option: type[Option], changes: dict[str, object], message: str
 ) -> None:
     with pytest.raises(ValueError, match=message):
+        # The fields differ in type, which a dict of them can't say.
         option(**changes)  # type: ignore[arg-type]
