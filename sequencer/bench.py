@@ -14,7 +14,7 @@ from pydantic import BeforeValidator, Field
 
 from pulsetally.drivers.dialect import Dialect, GeneratorDialect, OscilloscopeDialect
 from pulsetally.sequencer.dialects import DialectError, find_dialect, shipped_dialects
-from pulsetally.sequencer.errors import BenchError
+from pulsetally.sequencer.errors import BenchError, Mistake
 from pulsetally.sequencer.models import Model, fault, field_names, quantity, validate
 from pulsetally.sequencer.quantities import (
     AREA,
@@ -27,8 +27,9 @@ from pulsetally.sequencer.quantities import (
     QuantityError,
     parse_quantity,
 )
-from pulsetally.sequencer.yaml_places import Path, load_yaml, nearest, read_text
+from pulsetally.sequencer.yaml_places import Path, PlacedData, load_yaml, nearest, read_text
 
+_FIRST_DIALECT = "scpi99"
 VACUUM_PERMITTIVITY = 8.8541878128e-12
 # Boltzmann constant over elementary charge, exact in the SI of 2019, at 27 degrees Celsius.
 _THERMAL_VOLTS = 1.380649e-23 / 1.602176634e-19 * 300.15
@@ -81,7 +82,7 @@ class GeneratorSection(Model):
     """Where the function generator is and what it is told about its load."""
 
     address: Address
-    dialect: DialectName = "scpi99"
+    dialect: DialectName = _FIRST_DIALECT
     channel: Annotated[float, _channel()] = 1.0
     load: Annotated[float, BeforeValidator(_load)] = math.inf
 
@@ -90,7 +91,7 @@ class OscilloscopeSection(Model):
     """Where the oscilloscope is and what its channels watch."""
 
     address: Address
-    dialect: DialectName = "scpi99"
+    dialect: DialectName = _FIRST_DIALECT
     source_channel: Annotated[float, Field(alias="source channel"), _channel()] = 1.0
     node_channel: Annotated[float, Field(alias="node channel"), _channel()] = 2.0
 
@@ -318,20 +319,34 @@ def parse_bench(text: str, *, file: str, folder: FilePath | None = None) -> Benc
         problem, remedy = "this is a recipe, not a bench file", "name a bench file here"
         raise BenchError([placed.mistake((), problem, remedy)])
     model, mistakes = validate(BenchModel, placed, known=_known)
-    if mistakes:
-        raise BenchError(sorted(mistakes, key=lambda each: (each.line, each.column)))
-    path: Path
-    if model.oscilloscope.source_channel == model.oscilloscope.node_channel:
-        path = ("oscilloscope", "node channel")
+    spoken, more = _dialects(placed, folder or FilePath())
+    mistakes += more
+    if model and model.oscilloscope.source_channel == model.oscilloscope.node_channel:
         problem = "both channels are the same; one watches the terminal, one the cell"
         remedy = "write the channel that watches the cell"
-        mistakes.append(placed.mistake(path, problem, remedy))
+        mistakes.append(placed.mistake(("oscilloscope", "node channel"), problem, remedy))
+    generator = spoken["generator"].generator if "generator" in spoken else None
+    oscilloscope = spoken["oscilloscope"].oscilloscope if "oscilloscope" in spoken else None
+    if mistakes or generator is None or oscilloscope is None:
+        raise BenchError(sorted(mistakes, key=lambda each: (each.file, each.line, each.column)))
+    return Bench(
+        file=file,
+        text=text,
+        model=model,
+        generator_dialect=generator,
+        oscilloscope_dialect=oscilloscope,
+    )
+
+
+def _dialects(placed: PlacedData, base: FilePath) -> tuple[dict[str, Dialect], list[Mistake]]:
+    """Find the dialects that a bench file names, whatever else is wrong with it."""
     spoken: dict[str, Dialect] = {}
-    base = folder or FilePath()
-    for section, name in (
-        ("generator", model.generator.dialect),
-        ("oscilloscope", model.oscilloscope.dialect),
-    ):
+    mistakes: list[Mistake] = []
+    for section in ("generator", "oscilloscope"):
+        group = placed.data.get(section) if isinstance(placed.data, dict) else None
+        name = group.get("dialect", _FIRST_DIALECT) if isinstance(group, dict) else None
+        if not isinstance(name, str) or not name.strip():
+            continue  # the model has told that
         path = (section, "dialect")
         if name not in shipped_dialects() and not (base / name).is_file():
             problem = f"there is no dialect {name!r}, shipped or as a file"
@@ -347,17 +362,7 @@ def parse_bench(text: str, *, file: str, folder: FilePath | None = None) -> Benc
             problem = f"the dialect {name!r} doesn't describe this instrument"
             remedy = f"name a dialect with a section {section!r}"
             mistakes.append(placed.mistake(path, problem, remedy))
-    generator = spoken["generator"].generator if "generator" in spoken else None
-    oscilloscope = spoken["oscilloscope"].oscilloscope if "oscilloscope" in spoken else None
-    if mistakes or generator is None or oscilloscope is None:
-        raise BenchError(mistakes)
-    return Bench(
-        file=file,
-        text=text,
-        model=model,
-        generator_dialect=generator,
-        oscilloscope_dialect=oscilloscope,
-    )
+    return spoken, mistakes
 
 
 def _known(path: Path) -> list[str]:

@@ -104,3 +104,12 @@ def test_a_panel_that_shows_half_of_what_it_delivers_is_mentioned() -> None:
     assert shipped_bench().notes() == []
     (note,) = changed(("load: high-z", "load: 50 ohm")).notes()
     assert "delivers 2 times what its panel shows" in note
+
+
+def test_a_dialect_that_is_not_there_is_told_along_with_every_other_mistake() -> None:
+    text = shipped_bench().text.replace("node: 6 V", "node: 6 s")
+    text = text.replace("dialect: scpi99", "dialect: scpi9", 1)
+    with pytest.raises(BenchError) as caught:
+        parse_bench(text, file="b.yaml")
+    assert [each.path for each in caught.value.mistakes] == ["generator.dialect", "limits.node"]
+    assert "'scpi99'" in caught.value.mistakes[0].remedy
