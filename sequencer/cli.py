@@ -221,7 +221,7 @@ def simulate(
             cell=cell_with(DEFAULT_DOMAINS if domains is None else domains),
             seed=seed,
             family=dialect,
-            serial=serial,
+            transport="serial" if serial else "tcp",
             generator_port=generator_port,
             oscilloscope_port=oscilloscope_port,
             control_port=control_port,

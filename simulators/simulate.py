@@ -24,6 +24,7 @@ from pulsetally.simulators.server import LOOPBACK, DeviceServer
 from pulsetally.simulators.table import Table
 
 VERSION = "1"
+TRANSPORTS = ("tcp", "serial")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -31,8 +32,8 @@ class SimulationSettings:
     """What the simulated bench is made of.
 
     family: the language of generator and oscilloscope, a key of FAMILIES.
-    serial: generator and oscilloscope listen on pseudo-terminals, where the system has
-    them; the control port stays on TCP.
+    transport: how generator and oscilloscope are reached, one of TRANSPORTS; pseudo-
+    terminals exist only where the system has them. The control port stays on plain TCP.
     seed: of everything random. *_port: 0 for any free one.
     exchange_seconds: virtual time that each program message takes.
     until_stdin_closes: end when standard input does, besides SIGTERM and SIGINT.
@@ -41,7 +42,7 @@ class SimulationSettings:
     cell: CellDescription = field(default_factory=CellDescription)
     wiring: Wiring = field(default_factory=Wiring)
     family: str = "scpi99"
-    serial: bool = False
+    transport: str = "tcp"
     seed: int = 1
     generator_port: int = 0
     oscilloscope_port: int = 0
@@ -55,7 +56,11 @@ class SimulationSettings:
         for name in ("generator_port", "oscilloscope_port", "control_port"):
             if not 0 <= getattr(self, name) <= 65535:
                 raise ValueError(f"{name} must be from 0 to 65535, not {getattr(self, name)}")
-        if self.serial and (self.generator_port or self.oscilloscope_port):
+        if self.transport not in TRANSPORTS:
+            raise ValueError(
+                f"transport must be one of {', '.join(TRANSPORTS)}, not {self.transport}"
+            )
+        if self.transport == "serial" and (self.generator_port or self.oscilloscope_port):
             raise ValueError("generator_port and oscilloscope_port are of no use with serial")
         if not 0 <= self.exchange_seconds <= 3600:
             raise ValueError(
@@ -123,7 +128,7 @@ async def serve_until(
     def pass_time() -> None:
         bench.clock.advance(settings.exchange_seconds)
 
-    listener = _terminal if settings.serial else _port
+    listener = _LISTENERS[settings.transport]
     async with AsyncExitStack() as listening:
 
         async def listen(start: _Listener, device: ScpiDevice, port: int) -> str:
@@ -164,6 +169,9 @@ async def _terminal(
         raise OSError(f"this system has no pseudo-terminals: {error}") from error
     server = TerminalServer(device, after_message=after_message)
     return server, f"ASRL{await server.start()}::INSTR"
+
+
+_LISTENERS: dict[str, _Listener] = {"tcp": _port, "serial": _terminal}
 
 
 def serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
@@ -229,8 +237,14 @@ def main(arguments: Sequence[str] | None = None) -> int:
         default="scpi99",
         help="what generator and oscilloscope speak",
     )
-    parser.add_argument(
-        "--serial", action="store_true", help="listen on pseudo-terminals instead of TCP ports"
+    transport = parser.add_mutually_exclusive_group()
+    transport.add_argument(
+        "--serial",
+        dest="transport",
+        action="store_const",
+        const="serial",
+        default="tcp",
+        help="listen on pseudo-terminals instead of TCP ports",
     )
     parser.add_argument("--seed", type=int, default=1, help="seed of everything random")
     parser.add_argument(
@@ -251,7 +265,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         settings = SimulationSettings(
             cell=cell,
             family=given.family,
-            serial=given.serial,
+            transport=given.transport,
             seed=given.seed,
             generator_port=given.generator_port,
             oscilloscope_port=given.oscilloscope_port,

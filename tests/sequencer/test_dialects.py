@@ -41,8 +41,8 @@ FAMILIES = [
     SimulationSettings(family="scpi99"),
     SimulationSettings(family="perdiv"),
     SimulationSettings(family="stateword"),
-    SimulationSettings(family="scpi99", serial=True),
-    SimulationSettings(family="stateword", serial=True),
+    SimulationSettings(family="scpi99", transport="serial"),
+    SimulationSettings(family="stateword", transport="serial"),
 ]
 # A threshold that the default cell crosses in the middle of a pulse, so that the few millivolts
 # of an 8-bit digitizer's noise can't move the count (regression value, without scatter).
@@ -52,7 +52,7 @@ THRESHOLD, CROSSING = {"threshold": "2.47 V"}, 8.43
 @pytest.fixture(
     scope="module",
     params=FAMILIES,
-    ids=lambda each: f"{each.family}{'-serial' if each.serial else ''}",
+    ids=lambda each: f"{each.family}-{each.transport}",
 )
 def table(request: pytest.FixtureRequest) -> Iterator[Simulated]:
     with simulated(request.param) as running:

@@ -89,7 +89,7 @@ class BareLine:
 
 @pytest.fixture(scope="module")
 def addresses() -> Iterator[Addresses]:
-    settings = SimulationSettings(cell=LINEAR, family="perdiv", serial=True)
+    settings = SimulationSettings(cell=LINEAR, family="perdiv", transport="serial")
     with served(settings) as found:
         yield found
 
@@ -109,7 +109,7 @@ def let_it_notice(control: Client) -> None:
 @pytest.mark.parametrize("family", FAMILIES)
 def test_plain_visa_sets_up_arms_fires_and_fetches(family: str) -> None:
     with (
-        served(SimulationSettings(family=family, serial=True)) as addresses,
+        served(SimulationSettings(family=family, transport="serial")) as addresses,
         closing(VisaLine(addresses.generator)) as generator,
         closing(VisaLine(addresses.oscilloscope)) as oscilloscope,
     ):
@@ -233,7 +233,7 @@ def test_a_client_that_never_reads_stops_nobody(addresses: Addresses, control: C
 
 def test_faulty_settings_are_refused(capsys: pytest.CaptureFixture[str]) -> None:
     with pytest.raises(ValueError, match="generator_port"):
-        SimulationSettings(serial=True, generator_port=5025)
+        SimulationSettings(transport="serial", generator_port=5025)
     with pytest.raises(ValueError, match="scpi99, perdiv, stateword"):
         SimulationSettings(family="latin")
     with pytest.raises(SystemExit):
