@@ -9,11 +9,10 @@ import sys
 import threading
 from collections.abc import Awaitable, Callable, Sequence
 from contextlib import AsyncExitStack, suppress
-from dataclasses import asdict, dataclass, field, replace
+from dataclasses import asdict, dataclass, replace
 from typing import Protocol
 
 from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
-from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.clock import VirtualClock
 from pulsetally.simulators.control import BenchControl
 from pulsetally.simulators.digitizer import Digitizer
@@ -21,51 +20,11 @@ from pulsetally.simulators.families import FAMILIES
 from pulsetally.simulators.generator_model import GeneratorModel
 from pulsetally.simulators.scpi_device import ScpiDevice
 from pulsetally.simulators.server import LOOPBACK, DeviceServer
+from pulsetally.simulators.settings import TRANSPORTS as TRANSPORTS
+from pulsetally.simulators.settings import SimulationSettings as SimulationSettings
 from pulsetally.simulators.table import Table
 
 VERSION = "1"
-TRANSPORTS = ("tcp", "serial")
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class SimulationSettings:
-    """What the simulated bench is made of.
-
-    family: the language of generator and oscilloscope, a key of FAMILIES.
-    transport: how generator and oscilloscope are reached, one of TRANSPORTS; pseudo-
-    terminals exist only where the system has them. The control port stays on plain TCP.
-    seed: of everything random. *_port: 0 for any free one.
-    exchange_seconds: virtual time that each program message takes.
-    until_stdin_closes: end when standard input does, besides SIGTERM and SIGINT.
-    """
-
-    cell: CellDescription = field(default_factory=CellDescription)
-    wiring: Wiring = field(default_factory=Wiring)
-    family: str = "scpi99"
-    transport: str = "tcp"
-    seed: int = 1
-    generator_port: int = 0
-    oscilloscope_port: int = 0
-    control_port: int = 0
-    exchange_seconds: float = 1e-3
-    until_stdin_closes: bool = False
-
-    def __post_init__(self) -> None:
-        if self.family not in FAMILIES:
-            raise ValueError(f"family must be one of {', '.join(FAMILIES)}, not {self.family}")
-        for name in ("generator_port", "oscilloscope_port", "control_port"):
-            if not 0 <= getattr(self, name) <= 65535:
-                raise ValueError(f"{name} must be from 0 to 65535, not {getattr(self, name)}")
-        if self.transport not in TRANSPORTS:
-            raise ValueError(
-                f"transport must be one of {', '.join(TRANSPORTS)}, not {self.transport}"
-            )
-        if self.transport == "serial" and (self.generator_port or self.oscilloscope_port):
-            raise ValueError("generator_port and oscilloscope_port are of no use with serial")
-        if not 0 <= self.exchange_seconds <= 3600:
-            raise ValueError(
-                f"exchange_seconds must be from 0 to 3600 s, not {self.exchange_seconds}"
-            )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
