@@ -6,6 +6,7 @@ C dv/dt = (e - v_diode - v)/(R_source + R_series) - A dP/dt
 
 import math
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -79,7 +80,6 @@ class Circuit:
         self.wiring = wiring
         self.farads = cell.farads + wiring.probe_farads
         self.relay_on = False
-        self._branch_siemens = 1 / wiring.branch_ohms
         self._shunt_siemens = 1 / cell.leak_ohms + 1 / wiring.probe_ohms
 
     def short_through(self, ohms: float) -> None:
@@ -102,24 +102,22 @@ class Circuit:
         """Part of a constant EMF that a linear circuit's node settles to."""
         return 1 / (self.wiring.branch_ohms * self.node_siemens) if self.relay_on else 0.0
 
-    def node_current(self, emf_volts: float, node_volts: float) -> tuple[float, float, float]:
-        """Return the current into the node's capacitance and its two slopes.
+    @property
+    def branches(self) -> "Branches":
+        """What carries current into the node now, as plain numbers."""
+        wiring = self.wiring
+        return Branches(
+            relay_on=self.relay_on,
+            branch_ohms=wiring.branch_ohms,
+            shunt_siemens=self._shunt_siemens,
+            saturation_amperes=wiring.diode_saturation_amperes or 0.0,
+            fold_volts=wiring.diode_emission * THERMAL_VOLTS,
+            clamp_volts=math.inf if wiring.clamp_volts is None else wiring.clamp_volts,
+        )
 
-        In A, A/V against node_volts and A/V against emf_volts; without the switching
-        current, which belongs to the cell.
-        """
-        amperes = -self._shunt_siemens * node_volts
-        siemens = -self._shunt_siemens
-        emf_siemens = 0.0
-        if self.relay_on:
-            branch, emf_siemens = self._branch_current(emf_volts - node_volts)
-            amperes += branch
-            siemens -= emf_siemens
-        if self.wiring.clamp_volts is not None:
-            clamp, slope = clamp_current(node_volts, self.wiring.clamp_volts)
-            amperes -= clamp
-            siemens -= slope
-        return amperes, siemens, emf_siemens
+    def node_current(self, emf_volts: float, node_volts: float) -> tuple[float, float, float]:
+        """Return the current into the node's capacitance and its two slopes, as node_current."""
+        return node_current(self.branches, emf_volts, node_volts)
 
     def terminal_volts(self, emf_volts: Array, node_volts: Array) -> Array:
         """Return the voltage at the generator's terminal for pairs of EMF and node, V."""
@@ -129,19 +127,60 @@ class Circuit:
         if wiring.diode_saturation_amperes is None:
             share = wiring.source_ohms / wiring.branch_ohms
             return emf_volts - share * (emf_volts - node_volts)
-        amperes = [self._branch_current(float(x))[0] for x in emf_volts - node_volts]
+        branches = self.branches
+        amperes = [branch_current(branches, float(x))[0] for x in emf_volts - node_volts]
         return emf_volts - wiring.source_ohms * np.array(amperes)
 
-    def _branch_current(self, across_volts: float) -> tuple[float, float]:
-        wiring = self.wiring
-        if wiring.diode_saturation_amperes is None:
-            return across_volts * self._branch_siemens, self._branch_siemens
-        return diode_branch_current(
-            across_volts,
-            wiring.branch_ohms,
-            wiring.diode_saturation_amperes,
-            wiring.diode_emission * THERMAL_VOLTS,
-        )
+
+# Below are functions of plain numbers alone: pulsetally.simulators.kernel compiles them as
+# they stand.
+
+
+class Branches(NamedTuple):
+    """What carries current into a cell's node.
+
+    relay_on: whether there is a branch to the EMF, of branch_ohms, with a diode of
+    saturation_amperes (0: none) that conducts e times more for each fold_volts.
+    shunt_siemens: conductance across the cell. clamp_volts: inf without a clamp.
+    """
+
+    relay_on: bool
+    branch_ohms: float
+    shunt_siemens: float
+    saturation_amperes: float
+    fold_volts: float
+    clamp_volts: float
+
+
+def node_current(
+    branches: Branches, emf_volts: float, node_volts: float
+) -> tuple[float, float, float]:
+    """Return the current into the node's capacitance and its two slopes.
+
+    In A, A/V against node_volts and A/V against emf_volts; without the switching
+    current, which belongs to the cell.
+    """
+    amperes = -branches.shunt_siemens * node_volts
+    siemens = -branches.shunt_siemens
+    emf_siemens = 0.0
+    if branches.relay_on:
+        branch_amperes, emf_siemens = branch_current(branches, emf_volts - node_volts)
+        amperes += branch_amperes
+        siemens -= emf_siemens
+    if branches.clamp_volts < math.inf:
+        clamp_amperes, clamp_siemens = clamp_current(node_volts, branches.clamp_volts)
+        amperes -= clamp_amperes
+        siemens -= clamp_siemens
+    return amperes, siemens, emf_siemens
+
+
+def branch_current(branches: Branches, across_volts: float) -> tuple[float, float]:
+    """Return the branch's current (A) and slope (S) at a voltage across all of it."""
+    if branches.saturation_amperes == 0:
+        return across_volts / branches.branch_ohms, 1 / branches.branch_ohms
+    return diode_branch_current(
+        across_volts, branches.branch_ohms, branches.saturation_amperes, branches.fold_volts
+    )
 
 
 def diode_drop(
