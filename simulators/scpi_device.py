@@ -144,6 +144,13 @@ class ScpiDevice:
             self._completion_wanted = False
             self.status.set_event_status(OPERATION_COMPLETE)
 
+    def lose_power(self) -> None:
+        """Go back to the state after power-on, with -500 in an otherwise empty queue."""
+        self._completion_wanted = False
+        self.reset()
+        self.status.power_on()
+        self.refresh()
+
     def want_completion(self, wanted: bool) -> None:
         """Set the OPC bit when all is done (*OPC), or no longer (*CLS, *RST)."""
         self._completion_wanted = wanted

@@ -2,8 +2,9 @@
 
 What IEEE Std 488.2 says and a byte stream can't show: an answer is sent as soon as its
 message ends, and the engine never learns whether anybody read it. So a query is never
-found interrupted (-410) or deadlocked (-430), and nobody can ask for an answer that was
-not made (-420). Only -440, a query behind an answer without an end of its own, is left.
+found interrupted (-410, which a transport that knows better can report) or deadlocked
+(-430), and nobody can ask for an answer that was not made (-420). Only -440, a query
+behind an answer without an end of its own, is left.
 """
 
 from collections.abc import Iterator
@@ -39,19 +40,33 @@ class ScpiEngine:
         """Take newly arrived bytes, however cut; return what the instrument answers."""
         return b"".join(self.answers(data))
 
-    def answers(self, data: bytes) -> Iterator[bytes]:
+    @property
+    def amid_message(self) -> bool:
+        """Whether a program message has begun and not ended."""
+        return self._reader.amid_message
+
+    def answers(self, data: bytes, *, end: bool = False) -> Iterator[bytes]:
         """Take newly arrived bytes; follow each message they complete when its turn comes.
 
         Yields one item a message, b"" for one without an answer, so that the caller can
-        send it and let time pass before the next message is looked at.
+        send it and let time pass before the next message is looked at. end: the transport
+        marked the last byte as the end of a message, with or without a newline.
         """
+        for message in self.messages(data, end=end):
+            yield self.follow(message)
+
+    def messages(self, data: bytes, *, end: bool = False) -> Iterator[bytes]:
+        """Take newly arrived bytes; yield each message they complete, not yet followed."""
         for message in self._reader.feed(data):
             if isinstance(message, ScpiError):
                 self._device.status.report(message)
             else:
-                yield self._follow(message)
+                yield message
+        if end and (rest := self._reader.end()) is not None:
+            yield rest
 
-    def _follow(self, message: bytes) -> bytes:
+    def follow(self, message: bytes) -> bytes:
+        """Follow one whole message; return its answer, b"" for none."""
         device = self._device
         device.refresh()
         device.begin_message()

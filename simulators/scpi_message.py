@@ -1,7 +1,8 @@
 """Cut a byte stream into program messages, units, headers and data elements.
 
 IEEE Std 488.2 section 7, as it works over a byte stream: a message ends at a newline
-that is neither inside a string nor inside a block.
+that is neither inside a string nor inside a block. A transport with messages of its own
+knows a second end, END, which ends whatever has come.
 """
 
 import re
@@ -102,6 +103,21 @@ class MessageReader:
             found.append(bytes(self._buffer[:end]))
             del self._buffer[: end + 1]
             self._scanned = 0
+
+    @property
+    def amid_message(self) -> bool:
+        """Whether a message has begun and not ended."""
+        return bool(self._buffer) or self._skipping
+
+    def end(self) -> bytes | None:
+        """End the message where it is; return what came of it, None when nothing is left.
+
+        A message that was given up as too long has been told of already.
+        """
+        message = None if self._skipping or not self._buffer else bytes(self._buffer)
+        self._buffer.clear()
+        self._scanned, self._skipping = 0, False
+        return message
 
     def _skip_line(self) -> bool:
         newline = self._buffer.find(b"\n")

@@ -83,6 +83,13 @@ class Status:
         self.questionable.clear()
         self._event_status = 0
 
+    def power_on(self) -> None:
+        """Forget everything, then say that power came: -500 and the PON bit."""
+        self.clear()
+        self.preset()
+        self.event_enable = self.service_enable = 0
+        self.report(ScpiError(-500))
+
     def preset(self) -> None:
         """Do what STATus:PRESet does; it leaves the 488.2 registers and the queue alone."""
         self.operation.preset()
