@@ -4,19 +4,10 @@ import math
 from dataclasses import replace
 
 from pulsetally.simulators.generator_model import (
-    EMF_SPAN_VOLTS,
-    LARGEST_EDGE_SECONDS,
     LARGEST_LOAD_OHMS,
-    LARGEST_PERIOD_SECONDS,
-    LARGEST_WIDTH_SECONDS,
-    MOST_PULSES,
-    SMALLEST_EDGE_SECONDS,
     SMALLEST_LOAD_OHMS,
-    SMALLEST_PERIOD_SECONDS,
-    SMALLEST_WIDTH_SECONDS,
     GeneratorModel,
     PulseSettings,
-    stepped,
 )
 from pulsetally.simulators.scpi_device import Manner, ScpiDevice
 from pulsetally.simulators.scpi_parameters import Limits, Number, number
@@ -27,11 +18,6 @@ WAITING_FOR_TRIGGER = 32
 
 POWER_ON = PulseSettings()
 
-WIDTH = number(SMALLEST_WIDTH_SECONDS, LARGEST_WIDTH_SECONDS, POWER_ON.width_seconds, unit="S")
-PERIOD = number(SMALLEST_PERIOD_SECONDS, LARGEST_PERIOD_SECONDS, POWER_ON.period_seconds, unit="S")
-EDGE = number(SMALLEST_EDGE_SECONDS, LARGEST_EDGE_SECONDS, POWER_ON.leading_seconds, unit="S")
-COUNT = number(1, MOST_PULSES, POWER_ON.count, whole=True)
-
 
 def load(infinity: str) -> Number:
     """Return the parameter for a load in ohms; infinity: the word for an open circuit."""
@@ -40,11 +26,33 @@ def load(infinity: str) -> Number:
 
 
 class FunctionGenerator(ScpiDevice):
-    """A generator model behind a SCPI engine; a family adds its commands."""
+    """A generator model behind a SCPI engine; a family adds its commands.
+
+    *_parameter: what the model accepts for a time, s.
+    """
 
     def __init__(self, identity: str, model: GeneratorModel, manner: Manner) -> None:
         super().__init__(identity, manner)
         self.model = model
+        source = model.source
+        self.width_parameter = number(
+            source.shortest_width_seconds,
+            source.longest_width_seconds,
+            POWER_ON.width_seconds,
+            unit="S",
+        )
+        self.period_parameter = number(
+            source.shortest_period_seconds,
+            source.longest_period_seconds,
+            POWER_ON.period_seconds,
+            unit="S",
+        )
+        self.edge_parameter = number(
+            source.shortest_edge_seconds,
+            source.longest_edge_seconds,
+            POWER_ON.leading_seconds,
+            unit="S",
+        )
         model.changed = self.refresh
 
     # Hooks of the engine.
@@ -88,10 +96,15 @@ class FunctionGenerator(ScpiDevice):
         factor = self.model.panel_factor
         return Limits(lowest * factor, highest * factor, default * factor)
 
+    def count_parameter(self, most: int) -> Number:
+        """Return the parameter for the pulses of a burst; most: what the family accepts."""
+        return number(1, min(most, self.model.source.most_pulses), POWER_ON.count, whole=True)
+
     def level(self, default_emf_volts: float) -> Number:
         """Return the parameter for one level on the panel."""
+        span_volts = self.model.source.span_volts
         return Number(
-            limits=lambda: self.level_limits(-EMF_SPAN_VOLTS, EMF_SPAN_VOLTS, default_emf_volts),
+            limits=lambda: self.level_limits(-span_volts, span_volts, default_emf_volts),
             unit="V",
         )
 
@@ -141,7 +154,7 @@ class FunctionGenerator(ScpiDevice):
 
     def set_width(self, seconds: float) -> None:
         """Want a width at 50 %."""
-        self._want(replace(self._wanted, width_seconds=stepped(seconds)))
+        self._want(replace(self._wanted, width_seconds=self.model.source.stepped(seconds)))
 
     def width(self) -> float:
         """Return the width, s."""
@@ -149,7 +162,7 @@ class FunctionGenerator(ScpiDevice):
 
     def set_period(self, seconds: float) -> None:
         """Want a period."""
-        self._want(replace(self._wanted, period_seconds=stepped(seconds)))
+        self._want(replace(self._wanted, period_seconds=self.model.source.stepped(seconds)))
 
     def period(self) -> float:
         """Return the period, s."""
@@ -178,6 +191,10 @@ class FunctionGenerator(ScpiDevice):
     def count(self) -> float:
         """Return the number of pulses in a burst."""
         return self._wanted.count
+
+    def sent_pulses(self) -> str:
+        """Return how many whole pulses the burst that runs or ran last has had so far."""
+        return str(self.model.sent_pulses)
 
     def set_load(self, ohms: float) -> None:
         """Have the panel show levels into this load."""

@@ -8,32 +8,22 @@ SCPI-99, which every family of instruments here reports.
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from enum import Enum, auto
+
+import numpy as np
 
 from pulsetally.simulators.clock import Appointment, VirtualClock
 from pulsetally.simulators.drive import PulseTrain
+from pulsetally.simulators.imperfections import SourceImperfections
 from pulsetally.simulators.scpi_errors import ScpiError
 from pulsetally.simulators.table import Table
 
-# The EMF is a 14-bit two's complement code over -10 V to +10 V.
-LEVEL_BITS = 14
-EMF_SPAN_VOLTS = 10.0
-VOLTS_PER_CODE = 2 * EMF_SPAN_VOLTS / (1 << LEVEL_BITS)
-_LARGEST_CODE = (1 << (LEVEL_BITS - 1)) - 1
-
-TIME_STEPS_PER_SECOND = 1e9
-SMALLEST_EDGE_SECONDS = 5e-9
-LARGEST_EDGE_SECONDS = 1.0
-SMALLEST_WIDTH_SECONDS = 20e-9
-LARGEST_WIDTH_SECONDS = 1000.0
-SMALLEST_PERIOD_SECONDS = 40e-9
-LARGEST_PERIOD_SECONDS = 2000.0
-MOST_PULSES = 10**9
 SMALLEST_LOAD_OHMS = 1.0
 LARGEST_LOAD_OHMS = 1e6
+# Near 1 V, and a code of a 14-bit converter.
+HIGH_AT_POWER_ON = 819 * SourceImperfections().volts_per_code
 
-RELAY_SECONDS = 0.010
 # A linear ramp goes from 10 % to 90 % in this part of its whole duration.
 RAMP_SHARE = 0.8
 
@@ -46,16 +36,6 @@ class FireSource(Enum):
     EXTERNAL = auto()
 
 
-def stepped(seconds: float) -> float:
-    """Return a time rounded to the generator's steps."""
-    return round(seconds * TIME_STEPS_PER_SECOND) / TIME_STEPS_PER_SECOND
-
-
-def _code(emf_volts: float) -> int:
-    # +10 V has no code of its own: the converter stops one step below.
-    return min(round(emf_volts / VOLTS_PER_CODE), _LARGEST_CODE)
-
-
 @dataclass(frozen=True, slots=True, kw_only=True)
 class PulseSettings:
     """What the generator is set to.
@@ -64,9 +44,11 @@ class PulseSettings:
     so that a level may be given as the sum of two settings and is rounded only once.
     load_ohms: the load that levels on the panel are meant for; inf for an open circuit.
     width_seconds at 50 %, edges from 10 % to 90 %.
+    source: what the generator can do; its errors don't show here.
     """
 
-    high_emf_volts: float = 819 * VOLTS_PER_CODE
+    source: SourceImperfections = field(default_factory=SourceImperfections)
+    high_emf_volts: float = HIGH_AT_POWER_ON
     low_emf_volts: float = 0.0
     load_ohms: float = math.inf
     inverted: bool = False
@@ -79,29 +61,29 @@ class PulseSettings:
     @property
     def high_volts(self) -> float:
         """EMF of the high level as the converter makes it."""
-        return VOLTS_PER_CODE * _code(self.high_emf_volts)
+        return self.source.coded_volts(self.high_emf_volts)
 
     @property
     def low_volts(self) -> float:
         """EMF of the low level as the converter makes it."""
-        return VOLTS_PER_CODE * _code(self.low_emf_volts)
+        return self.source.coded_volts(self.low_emf_volts)
 
     @property
     def base_volts(self) -> float:
-        """EMF at rest."""
+        """EMF at rest, as it is meant to be."""
         return self.high_volts if self.inverted else self.low_volts
 
     @property
     def level_volts(self) -> float:
-        """EMF on the flat top of a pulse."""
+        """EMF on the flat top of a pulse, as it is meant to be."""
         return self.low_volts if self.inverted else self.high_volts
 
     def conflict(self) -> str:
         """Return what about the settings can't go together; '' when all can."""
         half_ramps = (self.leading_seconds + self.trailing_seconds) / RAMP_SHARE / 2
-        slack = 0.1 / TIME_STEPS_PER_SECOND
+        slack = 0.1 * self.source.time_step_seconds
         largest_volts = max(abs(self.high_emf_volts), abs(self.low_emf_volts))
-        if largest_volts > EMF_SPAN_VOLTS * (1 + 1e-12):
+        if largest_volts > self.source.span_volts * (1 + 1e-12):
             return "a level is out of range"
         if self.high_volts <= self.low_volts:
             return "HIGH is not above LOW"
@@ -112,10 +94,18 @@ class PulseSettings:
         return ""
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Burst:
+    train: PulseTrain
+    end: Appointment
+    sync: Appointment
+
+
 class GeneratorModel:
     """The generator of the simulated bench.
 
     source_ohms: output resistance, which the panel's levels assume.
+    source: what it can do and how wrong it is. seed: of what is random in that.
     sync: called with the instant (s) at which a burst begins; the sync output.
     changed: called when something changed by itself as time passed.
     wanted: the settings as sent so far; they are taken over together (take_over).
@@ -127,21 +117,32 @@ class GeneratorModel:
         table: Table,
         clock: VirtualClock,
         source_ohms: float = 50.0,
+        source: SourceImperfections | None = None,
+        seed: int = 1,
         sync: Callable[[float], None] = lambda _: None,
     ) -> None:
         self._table, self._clock = table, clock
         self.source_ohms, self._sync = source_ohms, sync
         self.changed: Callable[[], None] = lambda: None
-        self._settings = self.wanted = PulseSettings()
+        self.source = source or SourceImperfections()
+        # A stream of its own: the cell and the noise are the same with and without jitter.
+        self._random = np.random.default_rng((seed, 2))
+        self._settings = self.wanted = self.power_on
         self._conflict = False
         self.fire_source = FireSource.COMMAND
         self._initiated = False
         self._relay_on = False
         self._closing: Appointment | None = None
         self._closed = False
-        self._burst: tuple[PulseTrain, Appointment] | None = None
+        self._burst: _Burst | None = None
+        self._sent_pulses = 0
         self._largest_emf_volts = 0.0
         self._rest()
+
+    @property
+    def power_on(self) -> PulseSettings:
+        """The settings that it starts with and is reset to."""
+        return PulseSettings(source=self.source)
 
     # What it is doing.
 
@@ -166,6 +167,13 @@ class GeneratorModel:
         return self._burst is not None
 
     @property
+    def sent_pulses(self) -> int:
+        """Whole pulses of the burst that runs or ran last, whether the output was on or not."""
+        if self._burst is None:
+            return self._sent_pulses
+        return self._burst.train.pulses_ended(self._clock.now)
+
+    @property
     def largest_emf_volts(self) -> float:
         """Largest EMF, without its sign, that was ever put on the closed output."""
         return self._largest_emf_volts
@@ -177,8 +185,9 @@ class GeneratorModel:
         self.switch_output(False)
         self._initiated = False
         self.fire_source = FireSource.COMMAND
-        self._settings = self.wanted = PulseSettings()
+        self._settings = self.wanted = self.power_on
         self._end_burst()
+        self._sent_pulses = 0
         self._rest()
 
     def forget_conflict(self) -> None:
@@ -234,7 +243,7 @@ class GeneratorModel:
         if self._initiated:
             raise ScpiError(-214)
         if self._burst is not None:
-            self._clock.advance_to(self._burst[0].end_seconds)
+            self._clock.advance_to(self._burst.train.end_seconds)
 
     def refuse_after_conflict(self) -> None:
         """Raise -221 where the settings meant for what comes now were put back."""
@@ -242,45 +251,61 @@ class GeneratorModel:
             raise ScpiError(-221, "the settings of this message were put back")
 
     def _fire(self) -> None:
-        settings = self._settings
+        settings, source = self._settings, self.source
+        delay_seconds = source.trigger_delay_seconds
+        if source.trigger_jitter_seconds:
+            delay_seconds += source.trigger_jitter_seconds * self._random.standard_normal()
         train = PulseTrain(
-            base_volts=settings.base_volts,
-            level_volts=settings.level_volts,
+            base_volts=source.made_volts(settings.base_volts),
+            level_volts=source.made_volts(settings.level_volts),
             width_seconds=settings.width_seconds,
             leading_seconds=settings.leading_seconds,
             trailing_seconds=settings.trailing_seconds,
             period_seconds=settings.period_seconds,
             count=settings.count,
-            start_seconds=self._clock.now,
+            start_seconds=self._clock.now + max(delay_seconds, 0.0),
         )
         self._initiated = False
         self._table.play(train)
         self._note_emf(train.base_volts, train.level_volts)
-        self._burst = (train, self._clock.call_at(train.end_seconds, self._burst_ended))
-        self._sync(train.start_seconds)
+        start_seconds = train.start_seconds
+        self._burst = _Burst(
+            train=train,
+            end=self._clock.call_at(train.end_seconds, self._burst_ended),
+            sync=self._clock.call_at(start_seconds, lambda: self._sync(start_seconds)),
+        )
+        if start_seconds == self._clock.now:
+            self._burst.sync.cancel()
+            self._sync(start_seconds)
 
     def _burst_ended(self) -> None:
+        if self._burst is not None:
+            self._sent_pulses = self._burst.train.count
         self._burst = None
         self.changed()
 
     def _end_burst(self) -> None:
         if self._burst is None:
             return
-        self._burst[1].cancel()
+        self._sent_pulses = self.sent_pulses
+        self._burst.end.cancel()
+        self._burst.sync.cancel()
         self._burst = None
         self._table.stop_drive()
 
     # The output.
 
     def switch_output(self, on: bool) -> None:
-        """Close the relay, which takes RELAY_SECONDS, or open it at once."""
+        """Close the relay, which takes relay_seconds of the source, or open it at once."""
         if on:
             self.refuse_after_conflict()
         if on == self._relay_on:
             return
         self._relay_on = on
         if on:
-            self._closing = self._clock.call_at(self._clock.now + RELAY_SECONDS, self._close)
+            self._closing = self._clock.call_at(
+                self._clock.now + self.source.relay_seconds, self._close
+            )
             return
         if self._closing is not None:
             self._closing.cancel()
@@ -293,14 +318,15 @@ class GeneratorModel:
         self._closing = None
         self._closed = True
         self._table.connect(True)
-        self._note_emf(self._settings.base_volts)
+        self._note_emf(self.source.made_volts(self._settings.base_volts))
         if self._burst is not None:
-            self._note_emf(self._burst[0].level_volts)
+            self._note_emf(self._burst.train.level_volts)
         self.changed()
 
     def _rest(self) -> None:
-        self._table.rest_at(self._settings.base_volts)
-        self._note_emf(self._settings.base_volts)
+        base_volts = self.source.made_volts(self._settings.base_volts)
+        self._table.rest_at(base_volts)
+        self._note_emf(base_volts)
 
     def _note_emf(self, *volts: float) -> None:
         if self._closed:

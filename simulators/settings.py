@@ -5,6 +5,7 @@ from dataclasses import dataclass, field
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.families import FAMILIES
+from pulsetally.simulators.imperfections import DigitizerImperfections, SourceImperfections
 
 TRANSPORTS = ("tcp", "serial")
 
@@ -14,15 +15,19 @@ class SimulationSettings:
     """What the simulated bench is made of.
 
     family: the language of generator and oscilloscope, a key of FAMILIES.
+    source, digitizer: what generator and oscilloscope can do, and how wrong they are.
     transport: how generator and oscilloscope are reached, one of TRANSPORTS; pseudo-
     terminals exist only where the system has them. The control port stays on plain TCP.
     seed: of everything random. *_port: 0 for any free one.
     exchange_seconds: virtual time that each program message takes.
+    real_time: virtual time follows the clock on the wall instead.
     until_stdin_closes: end when standard input does, besides SIGTERM and SIGINT.
     """
 
     cell: CellDescription = field(default_factory=CellDescription)
     wiring: Wiring = field(default_factory=Wiring)
+    source: SourceImperfections = field(default_factory=SourceImperfections)
+    digitizer: DigitizerImperfections = field(default_factory=DigitizerImperfections)
     family: str = "scpi99"
     transport: str = "tcp"
     seed: int = 1
@@ -30,11 +35,18 @@ class SimulationSettings:
     oscilloscope_port: int = 0
     control_port: int = 0
     exchange_seconds: float = 1e-3
+    real_time: bool = False
     until_stdin_closes: bool = False
 
     def __post_init__(self) -> None:
         if self.family not in FAMILIES:
             raise ValueError(f"family must be one of {', '.join(FAMILIES)}, not {self.family}")
+        family_bits = FAMILIES[self.family].converter.bits
+        if self.digitizer.bits is not None and self.digitizer.bits > family_bits:
+            raise ValueError(
+                f"the digitizer has {self.digitizer.bits} bits; {self.family} sends at most "
+                f"{family_bits}"
+            )
         for name in ("generator_port", "oscilloscope_port", "control_port"):
             if not 0 <= getattr(self, name) <= 65535:
                 raise ValueError(f"{name} must be from 0 to 65535, not {getattr(self, name)}")

@@ -55,6 +55,8 @@ class Bench:
             table=self.table,
             clock=self.clock,
             source_ohms=wiring.source_ohms,
+            source=settings.source,
+            seed=settings.seed,
             sync=self.digitizer.trigger_externally,
         )
         adds = family.manner.identity

@@ -7,18 +7,11 @@ import numpy as np
 
 from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.function_generator import (
-    COUNT,
-    EDGE,
     POWER_ON,
-    WIDTH,
     FunctionGenerator,
     load,
 )
 from pulsetally.simulators.generator_model import (
-    EMF_SPAN_VOLTS,
-    LARGEST_PERIOD_SECONDS,
-    SMALLEST_PERIOD_SECONDS,
-    VOLTS_PER_CODE,
     FireSource,
     GeneratorModel,
 )
@@ -52,6 +45,8 @@ from pulsetally.simulators.scpi_rows import (
 
 TIME_DIVISIONS = 10
 CONVERTER = Converter(bits=8, noise_codes=0.5)
+# Of one burst.
+MOST_PULSES = 10**12
 # Codes are sent without a sign; this one is the middle of the screen.
 MIDDLE_CODE = 128
 
@@ -108,15 +103,18 @@ class PerdivGenerator(FunctionGenerator):
 
     def _source_commands(self) -> list[Command]:
         source = ":SOURce<1>"
+        origin = self.model.source
         high, low = POWER_ON.high_volts, POWER_ON.low_volts
         amplitude = Number(
-            limits=lambda: self.level_limits(VOLTS_PER_CODE, 2 * EMF_SPAN_VOLTS, high - low),
+            limits=lambda: self.level_limits(
+                origin.volts_per_code, 2 * origin.span_volts, high - low
+            ),
             unit="V",
         )
         offset = self.level((high + low) / 2)
         frequency = number(
-            1 / LARGEST_PERIOD_SECONDS,
-            1 / SMALLEST_PERIOD_SECONDS,
+            1 / origin.longest_period_seconds,
+            1 / origin.shortest_period_seconds,
             1 / POWER_ON.period_seconds,
             unit="HZ",
         )
@@ -143,8 +141,12 @@ class PerdivGenerator(FunctionGenerator):
                 lambda: 1 / self.period(),
                 coupled=True,
             ),
-            quantity(f"{pulse}:WIDTh", WIDTH, self.set_width, self.width, coupled=True),
-            quantity(f"{pulse}:TRANsition", EDGE, set_edges, self.leading, coupled=True),
+            quantity(
+                f"{pulse}:WIDTh", self.width_parameter, self.set_width, self.width, coupled=True
+            ),
+            quantity(
+                f"{pulse}:TRANsition", self.edge_parameter, set_edges, self.leading, coupled=True
+            ),
         ]
 
     def _burst_commands(self) -> list[Command]:
@@ -164,8 +166,14 @@ class PerdivGenerator(FunctionGenerator):
             on_off(f"{burst}:STATe", set_bursts, lambda: self._bursts),
             choice(f"{burst}:MODE", {"TRIGgered": False, "GATed": True}, set_mode, lambda: False),
             quantity(
-                f"{burst}:NCYCles", COUNT, self.set_count, self.count, write=whole, coupled=True
+                f"{burst}:NCYCles",
+                self.count_parameter(MOST_PULSES),
+                self.set_count,
+                self.count,
+                write=whole,
+                coupled=True,
             ),
+            question(f"{burst}:COUNt", self.sent_pulses),
             question(f"{burst}:RUNNing", lambda: "1" if self.model.is_running else "0"),
             choice(":TRIGger<1>:SOURce", _FIRE_SOURCES, set_source, lambda: self.model.fire_source),
             action(":ABORt", self.model.abort),

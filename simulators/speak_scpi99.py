@@ -5,11 +5,7 @@ SCPI-99 has no node OUTPut:LOAD; it is here because bench generators have it.
 
 from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.function_generator import (
-    COUNT,
-    EDGE,
-    PERIOD,
     POWER_ON,
-    WIDTH,
     FunctionGenerator,
     load,
 )
@@ -41,6 +37,8 @@ from pulsetally.simulators.scpi_rows import (
 
 CONVERTER = Converter(bits=12, noise_codes=1.5)
 SCOPE_POWER_ON = ScopeSettings()
+# Of one burst.
+MOST_PULSES = 10**12
 
 _FIRE_SOURCES = {
     "BUS": FireSource.COMMAND,
@@ -84,13 +82,35 @@ class Scpi99Generator(FunctionGenerator):
             quantity(f"{voltage}:HIGH", high, self.set_high, self.high, coupled=True),
             quantity(f"{voltage}:LOW", low, self.set_low, self.low, coupled=True),
             choice(f"{pulse}:POLarity", polarities, self.set_inverted, self.inverted, coupled=True),
-            quantity(f"{pulse}:WIDTh", WIDTH, self.set_width, self.width, coupled=True),
-            quantity(f"{pulse}:PERiod", PERIOD, self.set_period, self.period, coupled=True),
             quantity(
-                f"{pulse}:COUNt", COUNT, self.set_count, self.count, write=whole, coupled=True
+                f"{pulse}:WIDTh", self.width_parameter, self.set_width, self.width, coupled=True
             ),
-            quantity(f"{edge}[:LEADing]", EDGE, self.set_leading, self.leading, coupled=True),
-            quantity(f"{edge}:TRAiling", EDGE, self.set_trailing, self.trailing, coupled=True),
+            quantity(
+                f"{pulse}:PERiod", self.period_parameter, self.set_period, self.period, coupled=True
+            ),
+            quantity(
+                f"{pulse}:COUNt",
+                self.count_parameter(MOST_PULSES),
+                self.set_count,
+                self.count,
+                write=whole,
+                coupled=True,
+            ),
+            question(f"{pulse}:COUNt:SENT", self.sent_pulses),
+            quantity(
+                f"{edge}[:LEADing]",
+                self.edge_parameter,
+                self.set_leading,
+                self.leading,
+                coupled=True,
+            ),
+            quantity(
+                f"{edge}:TRAiling",
+                self.edge_parameter,
+                self.set_trailing,
+                self.trailing,
+                coupled=True,
+            ),
         ]
 
     def _output_commands(self) -> list[Command]:

@@ -8,11 +8,7 @@ import math
 
 from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.function_generator import (
-    COUNT,
-    EDGE,
-    PERIOD,
     POWER_ON,
-    WIDTH,
     FunctionGenerator,
     load,
 )
@@ -46,6 +42,9 @@ from pulsetally.simulators.scpi_rows import (
 CONVERTER = Converter(bits=12, noise_codes=1.5)
 # A 12-bit code fills the upper bits of a 16-bit number.
 SENT_CODES_PER_CODE = 16
+
+# Of one burst: twelve digits.
+MOST_PULSES = 10**12 - 1
 
 SCOPE_POWER_ON = ScopeSettings(source=TriggerInput.CHANNEL1)
 
@@ -127,11 +126,11 @@ class StatewordGenerator(FunctionGenerator):
 
     def _time_commands(self) -> list[Command]:
         rows = (
-            ("PERIOD", PERIOD, self.set_period, self.period, real),
-            ("WIDTH", WIDTH, self.set_width, self.width, real),
-            ("RISE", EDGE, self.set_leading, self.leading, real),
-            ("FALL", EDGE, self.set_trailing, self.trailing, real),
-            ("CYCLES", COUNT, self.set_count, self.count, whole),
+            ("PERIOD", self.period_parameter, self.set_period, self.period, real),
+            ("WIDTH", self.width_parameter, self.set_width, self.width, real),
+            ("RISE", self.edge_parameter, self.set_leading, self.leading, real),
+            ("FALL", self.edge_parameter, self.set_trailing, self.trailing, real),
+            ("CYCLES", self.count_parameter(MOST_PULSES), self.set_count, self.count, whole),
         )
         return [
             quantity(f":CH<1>:{word}", parameter, put, get, write=write, coupled=True)
@@ -158,6 +157,7 @@ class StatewordGenerator(FunctionGenerator):
             action(":CH<1>:FIRE", self.model.fire),
             action(":CH<1>:STOP", self.model.abort),
             question(":CH<1>:STATE", state),
+            question(":CH<1>:SENT", self.sent_pulses),
         ]
 
 

@@ -5,9 +5,11 @@ import math
 import pytest
 
 from pulsetally.simulators.cell import CellDescription
-from pulsetally.simulators.generator_model import VOLTS_PER_CODE
+from pulsetally.simulators.imperfections import SourceImperfections
 from pulsetally.simulators.scpi_engine import ScpiEngine
 from pulsetally.simulators.simulate import Bench, SimulationSettings
+
+VOLTS_PER_CODE = SourceImperfections().volts_per_code
 
 # A cell that hardly switches is a linear capacitor, whose voltages have closed forms.
 LINEAR = CellDescription(remanent_polarization=1e-9)

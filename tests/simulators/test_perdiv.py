@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from pulsetally.simulators.generator_model import VOLTS_PER_CODE
+from pulsetally.simulators.imperfections import SourceImperfections
 from tests.simulators.talking import (
     Line,
     Setting,
@@ -15,6 +15,8 @@ from tests.simulators.talking import (
     falling_edge_seconds,
     patterns_of,
 )
+
+VOLTS_PER_CODE = SourceImperfections().volts_per_code
 
 # Written off the description of the family, not off its code. Levels have steps of 20 V
 # in 14 bits, so that amplitude and offset are known to one step (A).
@@ -79,6 +81,7 @@ OSCILLOSCOPE = [
 DEEDS = {
     ":SYSTem:ERRor": "SYST:ERR?",
     ":SOURce<1>:BURSt:RUNNing": "SOUR1:BURS:RUNN?",
+    ":SOURce<1>:BURSt:COUNt": "SOUR1:BURS:COUN?",
     ":ABORt": "ABOR",
     ":SINGle": "SING",
     ":STOP": "STOP",

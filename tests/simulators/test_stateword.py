@@ -66,6 +66,7 @@ DEEDS = {
     ":CH<1>:ARM",
     ":CH<1>:FIRE",
     ":CH<1>:STATE",
+    ":CH<1>:SENT",
     ":CH<1>:STOP",
     ":TRIG:STATE",
     ":TRIG:FORCE",
