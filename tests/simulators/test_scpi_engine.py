@@ -354,3 +354,15 @@ def test_no_bytes_break_the_engine(rubbish: bytes) -> None:
     engine.receive(b"\n" * 2)
     engine.receive(b"'\n" + b"x" * 300 + b"\n\n")
     assert engine.receive(b"*CLS;*OPC?\n") == b"1\n"
+
+
+def test_a_transport_that_knows_ends_needs_no_newline() -> None:
+    device = Notebook()
+    engine = ScpiEngine(device)
+    assert list(engine.answers(b":MEAS:VOLT?", end=True)) == [b"1\n"]
+    assert list(engine.answers(b":MEAS:VOLT?\n", end=True)) == [b"1\n"]
+    assert list(engine.answers(b":PLAIN 4;:DATA #15AB", end=True)) == [b""]
+    assert not engine.amid_message
+    assert device.notes == [(":PLAIN", (4.0,))]
+    assert device.status.errors.pop().number == -161
+    assert list(engine.answers(b":MEAS:CURR?\n")) == [b"2\n"]

@@ -207,3 +207,23 @@ def test_any_bytes_give_elements_or_a_standard_error(data: bytes) -> None:
         except ScpiError as error:
             numbers.append(error.number)
     assert set(numbers) <= set(range(-199, -99))
+
+
+# IEEE 488.2 section 7.5: END alone ends a message too, whatever is open in it.
+@pytest.mark.parametrize("left", [b":VOLT 5", b":TEXT 'late\n", b":DATA #15A\nC", b":TEXT 'a'"])
+def test_an_end_without_a_newline_ends_what_has_come(left: bytes) -> None:
+    reader = MessageReader()
+    assert reader.feed(b"*CLS\n" + left) == [b"*CLS"]
+    assert reader.amid_message
+    assert reader.end() == left
+    assert not reader.amid_message
+    assert reader.end() is None
+    assert reader.feed(b"*IDN?\n") == [b"*IDN?"]
+
+
+def test_an_end_ends_a_message_that_was_given_up_too() -> None:
+    reader = MessageReader(4)
+    (fault,) = reader.feed(b"*OPC;*OPC")
+    assert isinstance(fault, ScpiError)
+    assert reader.end() is None
+    assert reader.feed(b"*CL\n") == [b"*CL"]
