@@ -27,6 +27,9 @@ CLAMP_FOLD_VOLTS = 0.025
 # line: a solver's trial voltage must not overflow.
 _MOST_CLAMP_FOLDS = 20.0
 
+# What is left of a node without cell and probe: its voltage must have something to be on.
+STRAY_FARADS = 1e-13
+
 Array = NDArray[np.float64]
 
 
@@ -74,17 +77,26 @@ class Circuit:
     """The node of one cell in one wiring: its capacitance and the currents into it.
 
     farads: film and probe. relay_on: whether the source branch is connected.
+    cell_on: whether the cell is.
     """
 
     def __init__(self, cell: CellDescription, wiring: Wiring) -> None:
         self.wiring = wiring
         self.farads = cell.farads + wiring.probe_farads
         self.relay_on = False
+        self.cell_on = True
         self._shunt_siemens = 1 / cell.leak_ohms + 1 / wiring.probe_ohms
 
     def short_through(self, ohms: float) -> None:
-        """Put a resistance across the cell, for good."""
-        self._shunt_siemens += 1 / ohms
+        """Put a resistance across the cell, for good; the node sees it with the cell."""
+        if self.cell_on:
+            self._shunt_siemens += 1 / ohms
+
+    def disconnect_cell(self) -> None:
+        """Take the cell, and what lies across it, off the node for good; the probe stays."""
+        self.cell_on = False
+        self.farads = max(self.wiring.probe_farads, STRAY_FARADS)
+        self._shunt_siemens = 1 / self.wiring.probe_ohms
 
     @property
     def is_linear(self) -> bool:

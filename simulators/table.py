@@ -12,7 +12,7 @@ from pulsetally.simulators.cell import Cell, CellDescription
 from pulsetally.simulators.circuit import Circuit, Wiring
 from pulsetally.simulators.drive import PulseTrain, Rest
 from pulsetally.simulators.incubation import solver_of
-from pulsetally.simulators.solver import Ramp
+from pulsetally.simulators.solver import Ramp, Solver
 
 Array = NDArray[np.float64]
 
@@ -22,6 +22,8 @@ SETTLED_AT_START = (3e-4, 30)
 SETTLED_AGAIN = (1e-3, 8)
 LAST_PAIRS = 5
 MOST_PAIRS_OF_DOMAINS = 3
+# Of a cell whose electrodes touch.
+SHORT_OHMS = 5.0
 
 
 class Observer(Protocol):
@@ -41,12 +43,13 @@ class Table:
 
     Starts at 0 s, fully down, discharged, at rest at 0 V and with the output relay off.
     now: virtual time, s. delivered: whole pulses of an amplitude other than 0 that
-    reached the terminal, the relay being on from begin to end.
+    reached the terminal, the relay being on from begin to end. presets: those of them
+    that drive the cell down, that is with a level or a base below 0 V.
     """
 
     def __init__(self, cell: CellDescription, wiring: Wiring, *, seed: int = 1) -> None:
         self.now = 0.0
-        self.delivered = 0
+        self.delivered = self.presets = 0
         self._cell = Cell(cell, seed=seed)
         self._circuit = Circuit(cell, wiring)
         self._ageing = Ageing(self._cell, self._circuit, seed=seed)
@@ -85,6 +88,34 @@ class Table:
     def broken(self) -> bool:
         """Whether the cell has become a short."""
         return self._ageing.broken
+
+    @property
+    def connected_cell(self) -> bool:
+        """Whether the cell is connected to the node, as it is until it opens."""
+        return self._circuit.cell_on
+
+    def open_cell(self) -> None:
+        """Let the cell lose contact, for good: the node keeps its voltage and the probe.
+
+        The cell keeps its state, and ages as one at rest at 0 V.
+        """
+        if not self._circuit.cell_on:
+            return
+        self._circuit.disconnect_cell()
+        self._cell.frozen = True
+        # Not the cell's own solver, which may wait for an incubation to end.
+        self._solver = Solver(self._cell, self._circuit, node_volts=self.node_volts)
+
+    def short_cell(self, ohms: float = SHORT_OHMS) -> None:
+        """Let the cell become a short of so many ohms, above 0, for good; once at most.
+
+        One that is open already shows nothing of it.
+        """
+        if not 0 < ohms < math.inf:
+            raise ValueError(f"ohms is {ohms}; a short has more than 0 and not for ever many")
+        if not self._ageing.broken:
+            self._ageing.broken = True
+            self._circuit.short_through(ohms)
 
     @property
     def breakdown_cycles(self) -> float:
@@ -208,8 +239,8 @@ class Table:
         begin_seconds = self.now
         self.now += repeats * (down.period_seconds + up.period_seconds)
         if self._circuit.relay_on:
-            pulses = sum(train.level_volts != train.base_volts for train in (down, up))
-            self.delivered += repeats * pulses
+            for train in (down, up):
+                self._deliver(train, repeats)
         volts = np.full(2, self.node_volts)
         terminal_volts = np.full(2, self.terminal_volts)
         for observer in self._observers:
@@ -226,11 +257,13 @@ class Table:
     def _pass(self, ramp: Ramp, stop_seconds: float) -> None:
         up_before, volts_before = self.up_fraction, self.node_volts
         times, node_volts = self._solver.run(ramp, sampled=bool(self._observers))
+        # A cell that is open has nothing of the node's voltage.
+        share = 1.0 if self._circuit.cell_on else 0.0
         self._ageing.add(
             ramp.seconds,
             up_before=up_before,
-            volts_before=volts_before,
-            volts_after=self.node_volts,
+            volts_before=share * volts_before,
+            volts_after=share * self.node_volts,
         )
         begin_seconds, self.now = self.now, stop_seconds
         if not self._observers:
@@ -253,9 +286,16 @@ class Table:
             return
         ended = train.pulses_ended(self.now)
         if ended > self._settled_pulses:
-            if self._circuit.relay_on and train.level_volts != train.base_volts:
-                self.delivered += ended - self._settled_pulses
+            if self._circuit.relay_on:
+                self._deliver(train, ended - self._settled_pulses)
             self._settled_pulses = ended
+
+    def _deliver(self, train: PulseTrain, pulses: int) -> None:
+        if train.level_volts == train.base_volts:
+            return
+        self.delivered += pulses
+        if min(train.level_volts, train.base_volts) < 0:
+            self.presets += pulses
 
 
 def _differ(one: Tally, other: Tally) -> float:
