@@ -108,6 +108,8 @@ class GeneratorModel:
     source: what it can do and how wrong it is. seed: of what is random in that.
     sync: called with the instant (s) at which a burst begins; the sync output.
     changed: called when something changed by itself as time passed.
+    ignores_trigger: asked at each trigger; when so nothing happens, and a burst that waits
+    for one waits on.
     wanted: the settings as sent so far; they are taken over together (take_over).
     """
 
@@ -124,6 +126,7 @@ class GeneratorModel:
         self._table, self._clock = table, clock
         self.source_ohms, self._sync = source_ohms, sync
         self.changed: Callable[[], None] = lambda: None
+        self.ignores_trigger: Callable[[], bool] = lambda: False
         self.source = source or SourceImperfections()
         # A stream of its own: the cell and the noise are the same with and without jitter.
         self._random = np.random.default_rng((seed, 2))
@@ -222,16 +225,19 @@ class GeneratorModel:
         self.refuse_after_conflict()
         if self._initiated or self._burst is not None:
             raise ScpiError(-213)
-        self._initiated = True
         if self.fire_source is FireSource.AT_ONCE:
-            self._fire()
+            if not self.ignores_trigger():
+                self._fire()
+            return
+        self._initiated = True
 
     def fire(self) -> None:
         """Fire by command; -211 unless initiated with the command as source."""
         self.refuse_after_conflict()
         if not self._initiated or self.fire_source is not FireSource.COMMAND:
             raise ScpiError(-211)
-        self._fire()
+        if not self.ignores_trigger():
+            self._fire()
 
     def abort(self) -> None:
         """End a burst, or the waiting for one."""

@@ -98,8 +98,9 @@ class PerdivGenerator(FunctionGenerator):
         ready = self._bursts and self.model.fire_source is FireSource.COMMAND
         if not ready or self.model.is_running:
             raise ScpiError(-211)
-        self.model.initiate()
-        self.model.fire()
+        if not self.model.ignores_trigger():
+            self.model.initiate()
+            self.model.fire()
 
     def _source_commands(self) -> list[Command]:
         source = ":SOURce<1>"
