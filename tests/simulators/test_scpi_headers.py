@@ -4,18 +4,7 @@ import pytest
 
 from pulsetally.simulators.scpi_errors import ScpiError
 from pulsetally.simulators.scpi_headers import HeaderTable, read_pattern, short_form
-
-# Section 1.6 of the reference values: long form and short form, four public manuals.
-MNEMONICS = """
-VOLTage VOLT, FREQuency FREQ, POWer POW, IMMediate IMM, OUTPut OUTP, FORMat FORM, DELay DEL,
-CURRent CURR, IMPedance IMP, TRIGger TRIG, WAVeform WAV, CHANnel CHAN, TIMebase TIM, ACQuire ACQ,
-MEASure MEAS, SYSTem SYST, ERRor ERR, FUNCtion FUNC, BURSt BURS, PULSe PULS, WIDTh WIDT,
-PERiod PER, LEVel LEV, RANGe RANG, OFFSet OFFS, COUNt COUN, SOURce SOUR, AVERage AVER,
-PREamble PRE, POINts POIN, INITiate INIT, ABORt ABOR, SQUare SQU, SINusoid SIN, TRIangle TRI,
-EXTernal EXT, INTernal INT, INFinity INF, MINimum MIN, MAXimum MAX, DEFault DEF, ARBitrary ARB,
-NTRansition NTR, PTRansition PTR, AUTO AUTO, DATA DATA, LOAD LOAD
-"""
-PAIRS = [tuple(pair.split()) for pair in MNEMONICS.replace("\n", " ").split(",")]
+from tests.simulators.notebook import MNEMONIC_PAIRS
 
 
 def table(*patterns: str) -> HeaderTable[str]:
@@ -25,7 +14,7 @@ def table(*patterns: str) -> HeaderTable[str]:
     return made
 
 
-@pytest.mark.parametrize(("declared", "short"), PAIRS)
+@pytest.mark.parametrize(("declared", "short"), MNEMONIC_PAIRS)
 def test_only_the_exact_short_and_long_forms_match(declared: str, short: str) -> None:
     made = table(f":{declared}")
     assert short_form(declared) == short
