@@ -52,6 +52,7 @@ class Digitizer:
 
     seed: of the noise. power_on: the settings it starts with and is reset to.
     changed: called when something changed by itself, also for a moment, as time passed.
+    ignores_trigger: asked at each trigger that would be taken; when so nothing happens.
     """
 
     def __init__(
@@ -64,6 +65,7 @@ class Digitizer:
     ) -> None:
         self._clock, self._converter, self._power_on = clock, converter, power_on
         self.changed: Callable[[], None] = lambda: None
+        self.ignores_trigger: Callable[[], bool] = lambda: False
         self._random = np.random.default_rng(seed)
         self.settings = power_on
         self._acquisition: _Acquisition | None = None
@@ -106,14 +108,14 @@ class Digitizer:
             or not self._is_armed()
         ):
             raise ScpiError(-211)
-        self._trigger_at(acquisition, self._seen_seconds)
+        self._consider(acquisition, self._seen_seconds)
 
     def force(self) -> None:
         """Trigger now, whatever the source; -211 unless armed."""
         acquisition = self._acquisition
         if acquisition is None or not self._is_armed():
             raise ScpiError(-211)
-        self._trigger_at(acquisition, self._seen_seconds)
+        self._consider(acquisition, self._seen_seconds)
 
     def initiate(self) -> None:
         """Begin an acquisition, the record before being lost; -213 during another."""
@@ -164,7 +166,7 @@ class Digitizer:
             and acquisition.settings.source is TriggerInput.EXTERNAL
             and self._is_armed()
         ):
-            self._trigger_at(acquisition, at_seconds)
+            self._consider(acquisition, at_seconds)
 
     def saw(self, times: _Floats, terminal_volts: _Floats, node_volts: _Floats) -> None:
         """Take what the table did in one stretch of time (table.observe)."""
@@ -207,15 +209,23 @@ class Digitizer:
                 # A jump between two stretches is an edge like any other.
                 times = np.concatenate((before[0][-1:], times))
                 volts = np.concatenate((before[column][-1:], volts))
-            at_seconds = first_crossing(
-                times,
-                volts,
-                level_volts=settings.level_volts,
-                rising=settings.rising,
-                from_seconds=acquisition.armed_seconds,
-            )
-            if at_seconds is not None:
-                self._trigger_at(acquisition, at_seconds)
+            from_seconds = acquisition.armed_seconds
+            while acquisition.trigger_seconds is None:
+                at_seconds = first_crossing(
+                    times,
+                    volts,
+                    level_volts=settings.level_volts,
+                    rising=settings.rising,
+                    from_seconds=from_seconds,
+                )
+                if at_seconds is None:
+                    return
+                self._consider(acquisition, at_seconds)
+                from_seconds = math.nextafter(at_seconds, math.inf)
+
+    def _consider(self, acquisition: _Acquisition, at_seconds: float) -> None:
+        if not self.ignores_trigger():
+            self._trigger_at(acquisition, at_seconds)
 
     def _trigger_at(self, acquisition: _Acquisition, at_seconds: float) -> None:
         # The moment of waiting may have been short; the event register saw it all the same.
