@@ -5,7 +5,9 @@ has closed its end, and half a message, unread answers and changed line settings
 dropped. What can't be noticed: a client that closes while another still has the line open,
 or that closes and is followed by another within a few milliseconds (their bytes then follow
 one another as on a real line), two clients at once (they share the answers), a break, and
-the baud rate, which changes nothing here.
+the baud rate, which changes nothing here. There is no connection to be closed or reset:
+where a fault wants that, unread answers and half a message are lost, as behind an adapter
+that starts anew. An instrument without power hears nothing and says nothing.
 """
 
 import asyncio
@@ -15,8 +17,10 @@ import termios
 import tty
 from collections.abc import Callable
 
+from pulsetally.simulators.connection import Connection
+from pulsetally.simulators.deliveries import Outbox
+from pulsetally.simulators.mishaps import Mishaps
 from pulsetally.simulators.scpi_device import ScpiDevice
-from pulsetally.simulators.scpi_engine import ScpiEngine
 
 # How often an unopened line is looked at, in real time; a first message waits that long.
 LOOK_SECONDS = 0.01
@@ -29,11 +33,18 @@ class TerminalServer:
     """One instrument that listens on one pseudo-terminal.
 
     after_message: called each time a complete program message has been followed.
+    mishaps: the faults that happen to the instrument, if any.
     """
 
-    def __init__(self, device: ScpiDevice, *, after_message: Callable[[], None]) -> None:
-        self._device, self._after_message = device, after_message
-        self._engine = ScpiEngine(device)
+    def __init__(
+        self,
+        device: ScpiDevice,
+        *,
+        after_message: Callable[[], None],
+        mishaps: Mishaps | None = None,
+    ) -> None:
+        self._device, self._after_message, self._mishaps = device, after_message, mishaps
+        self._connection = Connection(device, mishaps)
         self._loop: asyncio.AbstractEventLoop | None = None
         self._look: asyncio.TimerHandle | None = None
         self._master = -1
@@ -44,6 +55,15 @@ class TerminalServer:
     async def start(self) -> str:
         """Open a pseudo-terminal; return the path of the end that a client opens."""
         self._loop = asyncio.get_running_loop()
+        self._outbox = Outbox(
+            send=self._send,
+            close=self._begin_anew,
+            reset=self._begin_anew,
+            later=self._loop.call_later,
+            emptied=self._read_on,
+        )
+        if self._mishaps is not None:
+            self._mishaps.power_changed.append(self._power_changed)
         self._master, client_end = os.openpty()
         self._path = os.ttyname(client_end)
         os.set_blocking(self._master, False)
@@ -56,6 +76,9 @@ class TerminalServer:
         """Hang up."""
         if self._master < 0:
             return
+        if self._mishaps is not None:
+            self._mishaps.power_changed.remove(self._power_changed)
+        self._outbox.drop()
         self._leave_loop()
         os.close(self._master)
         self._master = -1
@@ -90,10 +113,19 @@ class TerminalServer:
 
     def _hung_up(self) -> None:
         self._leave_loop()
-        self._unread.clear()
-        self._engine = ScpiEngine(self._device)
+        self._begin_anew()
         self._clean()
         self._wait_for_client()
+
+    def _begin_anew(self) -> None:
+        """Forget half a message and what nobody has read."""
+        self._unread.clear()
+        self._outbox.drop()
+        self._connection = Connection(self._device, self._mishaps)
+
+    def _power_changed(self, powered: bool) -> None:
+        del powered  # Neither what came before it went nor what came before it was back counts.
+        self._begin_anew()
 
     def _leave_loop(self) -> None:
         assert self._loop is not None
@@ -122,12 +154,13 @@ class TerminalServer:
         if not data:
             self._hung_up()
             return
-        engine = self._engine
-        for answer in engine.answers(data):
-            if engine is self._engine:
-                self._send(answer)
+        connection = self._connection
+        for deliveries in connection.receive(data):
+            if connection is self._connection:
+                self._outbox.put(deliveries)
             # The client has its answer and can work on it while time passes here.
             self._after_message()
+        self._read_on()
 
     def _send(self, answer: bytes) -> None:
         assert self._loop is not None
@@ -137,9 +170,19 @@ class TerminalServer:
             self._write()
             if self._unread:
                 self._loop.add_writer(self._master, self._write)
-        if len(self._unread) > MOST_UNREAD_BYTES and self._reading:
+
+    def _read_on(self) -> None:
+        """Read no more while too much waits to be read by the client; go on afterwards."""
+        if self._look is not None:
+            # Nobody has the line open.
+            return
+        assert self._loop is not None
+        is_full = len(self._unread) + self._outbox.held_bytes > MOST_UNREAD_BYTES
+        if is_full and self._reading:
             self._loop.remove_reader(self._master)
             self._reading = False
+        elif not is_full and not self._reading:
+            self._begin_reading()
 
     def _write(self) -> None:
         assert self._loop is not None
@@ -154,5 +197,4 @@ class TerminalServer:
         if self._unread:
             return
         self._loop.remove_writer(self._master)
-        if not self._reading:
-            self._begin_reading()
+        self._read_on()

@@ -5,6 +5,7 @@ from dataclasses import dataclass, field
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.families import FAMILIES
+from pulsetally.simulators.faults import Fault
 from pulsetally.simulators.imperfections import DigitizerImperfections, SourceImperfections
 
 TRANSPORTS = ("tcp", "serial")
@@ -18,6 +19,7 @@ class SimulationSettings:
     source, digitizer: what generator and oscilloscope can do, and how wrong they are.
     transport: how generator and oscilloscope are reached, one of TRANSPORTS; pseudo-
     terminals exist only where the system has them. The control port stays on plain TCP.
+    faults: what goes wrong and when.
     seed: of everything random. *_port: 0 for any free one.
     exchange_seconds: virtual time that each program message takes.
     real_time: virtual time follows the clock on the wall instead.
@@ -30,6 +32,7 @@ class SimulationSettings:
     digitizer: DigitizerImperfections = field(default_factory=DigitizerImperfections)
     family: str = "scpi99"
     transport: str = "tcp"
+    faults: tuple[Fault, ...] = ()
     seed: int = 1
     generator_port: int = 0
     oscilloscope_port: int = 0

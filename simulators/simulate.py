@@ -17,7 +17,9 @@ from pulsetally.simulators.clock import VirtualClock
 from pulsetally.simulators.control import BenchControl
 from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.families import FAMILIES
+from pulsetally.simulators.faults import FaultSchedule
 from pulsetally.simulators.generator_model import GeneratorModel
+from pulsetally.simulators.mishaps import Mishaps, break_cell_on_time
 from pulsetally.simulators.scpi_device import ScpiDevice
 from pulsetally.simulators.server import LOOPBACK, DeviceServer
 from pulsetally.simulators.settings import TRANSPORTS as TRANSPORTS
@@ -66,12 +68,24 @@ class Bench:
         self.generator = family.generator(
             _identity("FUNCTION GENERATOR", adds, settings), self.generator_model
         )
+        self.schedule = FaultSchedule(settings.faults, seed=settings.seed)
+        self.generator_mishaps, self.oscilloscope_mishaps = (
+            Mishaps(name, device, self.schedule, table=self.table, clock=self.clock)
+            for name, device in (
+                ("generator", self.generator),
+                ("oscilloscope", self.oscilloscope),
+            )
+        )
+        self.generator_model.ignores_trigger = self.generator_mishaps.ignores_trigger
+        self.digitizer.ignores_trigger = self.oscilloscope_mishaps.ignores_trigger
+        break_cell_on_time(settings.faults, self.schedule, table=self.table, clock=self.clock)
         self.control = BenchControl(
             _identity("BENCH CONTROL", "", settings),
             table=self.table,
             clock=self.clock,
             generator=self.generator_model,
             farads=cell.farads + wiring.probe_farads,
+            schedule=self.schedule,
         )
 
 
@@ -85,6 +99,8 @@ async def serve_until(
 ) -> None:
     """Serve the bench in the running event loop until stop is set."""
     bench = Bench(settings)
+    for mishaps in (bench.generator_mishaps, bench.oscilloscope_mishaps):
+        mishaps.later = asyncio.get_running_loop().call_later
 
     def pass_time() -> None:
         bench.clock.advance(settings.exchange_seconds)
@@ -92,15 +108,24 @@ async def serve_until(
     listener = _LISTENERS[settings.transport]
     async with AsyncExitStack() as listening:
 
-        async def listen(start: _Listener, device: ScpiDevice, port: int) -> str:
-            server, address = await start(device, port, pass_time)
+        async def listen(
+            start: _Listener, device: ScpiDevice, port: int, mishaps: Mishaps | None = None
+        ) -> str:
+            server, address = await start(device, port, pass_time, mishaps)
             listening.push_async_callback(server.stop)
             return address
 
         announce(
             Addresses(
-                generator=await listen(listener, bench.generator, settings.generator_port),
-                oscilloscope=await listen(listener, bench.oscilloscope, settings.oscilloscope_port),
+                generator=await listen(
+                    listener, bench.generator, settings.generator_port, bench.generator_mishaps
+                ),
+                oscilloscope=await listen(
+                    listener,
+                    bench.oscilloscope,
+                    settings.oscilloscope_port,
+                    bench.oscilloscope_mishaps,
+                ),
                 control=await listen(_port, bench.control, settings.control_port),
             )
         )
@@ -111,24 +136,26 @@ class _Server(Protocol):
     async def stop(self) -> None: ...
 
 
-_Listener = Callable[[ScpiDevice, int, Callable[[], None]], Awaitable[tuple[_Server, str]]]
+_Listener = Callable[
+    [ScpiDevice, int, Callable[[], None], Mishaps | None], Awaitable[tuple[_Server, str]]
+]
 
 
 async def _port(
-    device: ScpiDevice, port: int, after_message: Callable[[], None]
+    device: ScpiDevice, port: int, after_message: Callable[[], None], mishaps: Mishaps | None
 ) -> tuple[_Server, str]:
-    server = DeviceServer(device, after_message=after_message)
+    server = DeviceServer(device, after_message=after_message, mishaps=mishaps)
     return server, f"TCPIP::{LOOPBACK}::{await server.start(port)}::SOCKET"
 
 
 async def _terminal(
-    device: ScpiDevice, _: int, after_message: Callable[[], None]
+    device: ScpiDevice, _: int, after_message: Callable[[], None], mishaps: Mishaps | None
 ) -> tuple[_Server, str]:
     try:
         from pulsetally.simulators.pseudo_terminal import TerminalServer
     except ImportError as error:
         raise OSError(f"this system has no pseudo-terminals: {error}") from error
-    server = TerminalServer(device, after_message=after_message)
+    server = TerminalServer(device, after_message=after_message, mishaps=mishaps)
     return server, f"ASRL{await server.start()}::INSTR"
 
 
