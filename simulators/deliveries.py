@@ -8,9 +8,10 @@ from typing import Protocol
 
 @dataclass(frozen=True, slots=True)
 class Send:
-    """Send these bytes."""
+    """Send these bytes. whole: the answer ends with them, where a line can say so."""
 
     content: bytes
+    whole: bool = True
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,7 +87,7 @@ class Outbox:
         self._pause = None
         while self._waiting:
             match self._waiting.popleft():
-                case Send(content):
+                case Send(content=content):
                     self.held_bytes -= len(content)
                     self._send(content)
                 case Pause(seconds):

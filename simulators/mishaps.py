@@ -138,7 +138,7 @@ def _delivered(answer: bytes, fault: Fault | None) -> list[Delivery]:
             return [Pause(fault.seconds), Send(answer)]
         case "cut block":
             # Never all of it: the last byte at least is missing.
-            return [Send(answer[: int(fault.share * len(answer))])]
+            return [Send(answer[: int(fault.share * len(answer))], whole=False)]
         case "garbage":
             return [Send((fault.message or GARBAGE).encode("latin-1"))]
     raise AssertionError(f"{fault.kind} is no fault of a line")
