@@ -189,11 +189,17 @@ def simulate(
     serial: Annotated[
         bool, typer.Option("--serial", help="On pseudo-terminals instead of TCP ports.")
     ] = False,
+    hislip: Annotated[
+        bool, typer.Option("--hislip", help="HiSLIP on the TCP ports instead of plain text.")
+    ] = False,
     write_bench: Annotated[
         Path | None, typer.Option(metavar="FILE", help="Write a bench file with the addresses.")
     ] = None,
 ) -> None:
     """Start the simulated instruments and keep them until Ctrl-C."""
+    if serial and hislip:
+        _complain("--serial and --hislip can't be had together. To fix it, leave one out.")
+        raise typer.Exit(WRONG_INPUT)
     from pulsetally.sequencer.rehearsal import addressed_bench_text
     from pulsetally.simulators.cell import DEFAULT_DOMAINS
     from pulsetally.simulators.simulate import (
@@ -221,7 +227,7 @@ def simulate(
             cell=cell_with(DEFAULT_DOMAINS if domains is None else domains),
             seed=seed,
             family=dialect,
-            transport="serial" if serial else "tcp",
+            transport="serial" if serial else "hislip" if hislip else "tcp",
             generator_port=generator_port,
             oscilloscope_port=oscilloscope_port,
             control_port=control_port,

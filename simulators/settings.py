@@ -8,7 +8,7 @@ from pulsetally.simulators.families import FAMILIES
 from pulsetally.simulators.faults import Fault
 from pulsetally.simulators.imperfections import DigitizerImperfections, SourceImperfections
 
-TRANSPORTS = ("tcp", "serial")
+TRANSPORTS = ("tcp", "serial", "hislip")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

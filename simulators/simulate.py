@@ -19,6 +19,7 @@ from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.families import FAMILIES
 from pulsetally.simulators.faults import FaultSchedule
 from pulsetally.simulators.generator_model import GeneratorModel
+from pulsetally.simulators.hislip import SUB_ADDRESS, HislipServer
 from pulsetally.simulators.mishaps import Mishaps, break_cell_on_time
 from pulsetally.simulators.scpi_device import ScpiDevice
 from pulsetally.simulators.server import LOOPBACK, DeviceServer
@@ -159,7 +160,14 @@ async def _terminal(
     return server, f"ASRL{await server.start()}::INSTR"
 
 
-_LISTENERS: dict[str, _Listener] = {"tcp": _port, "serial": _terminal}
+async def _hislip(
+    device: ScpiDevice, port: int, after_message: Callable[[], None], mishaps: Mishaps | None
+) -> tuple[_Server, str]:
+    server = HislipServer(device, after_message=after_message, mishaps=mishaps)
+    return server, f"TCPIP::{LOOPBACK}::{SUB_ADDRESS},{await server.start(port)}::INSTR"
+
+
+_LISTENERS: dict[str, _Listener] = {"tcp": _port, "serial": _terminal, "hislip": _hislip}
 
 
 def serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
@@ -233,6 +241,13 @@ def main(arguments: Sequence[str] | None = None) -> int:
         const="serial",
         default="tcp",
         help="listen on pseudo-terminals instead of TCP ports",
+    )
+    transport.add_argument(
+        "--hislip",
+        dest="transport",
+        action="store_const",
+        const="hislip",
+        help="speak HiSLIP on the TCP ports instead of plain text",
     )
     parser.add_argument("--seed", type=int, default=1, help="seed of everything random")
     parser.add_argument(
