@@ -88,9 +88,11 @@ def test_a_published_row_holds(lines: Lines, row: Row) -> None:
 
 def test_what_ends_a_message_depends_on_the_line(lines: Lines) -> None:
     ends = Ends.MARKED if lines.transport in MARKED else Ends.NEWLINE
-    (row,) = (row for row in ROWS if row.ends is ends)
-    for line, query in lines.to(row.device):
-        follow(row, line, query)
+    rows = [row for row in ROWS if row.ends is ends]
+    assert rows
+    for row in rows:
+        for line, query in lines.to(row.device):
+            follow(row, line, query)
 
 
 @pytest.mark.parametrize(("number", "text"), [*PUBLISHED_ERRORS, (101, "Device-specific error")])

@@ -12,6 +12,10 @@ from collections.abc import Awaitable, Callable, Iterator
 from contextlib import contextmanager
 from typing import Protocol
 
+import pyvisa
+from pyvisa.resources import MessageBasedResource
+
+from pulsetally.simulators.hislip import SUB_ADDRESS, HislipServer
 from pulsetally.simulators.pseudo_terminal import TerminalServer
 from pulsetally.simulators.scpi_device import ScpiDevice
 from pulsetally.simulators.server import DeviceServer
@@ -109,8 +113,38 @@ class SerialLine(ByteLine):
         os.close(self._end)
 
 
+class HislipLine:
+    """A HiSLIP session of PyVISA and pyvisa-py; no newline ends what it sends."""
+
+    def __init__(self, address: str) -> None:
+        # One resource manager serves the whole process, so that it is not closed here.
+        resource = pyvisa.ResourceManager("@py").open_resource(
+            address, timeout=PATIENCE_SECONDS * 1000
+        )
+        assert isinstance(resource, MessageBasedResource)
+        self._resource = resource
+
+    def tell(self, message: bytes) -> None:
+        self._resource.write_raw(message)
+
+    def hear(self, length: int) -> bytes:
+        answer = self.hear_line()
+        assert len(answer) == length, answer
+        return answer
+
+    def hear_line(self) -> bytes:
+        answer = self._resource.read_raw()
+        assert answer[-1:] == b"\n", answer
+        return answer[:-1]
+
+    def close(self) -> None:
+        self._resource.close()
+
+
 def open_line(address: str) -> Line:
     """Open the line that a VISA resource name stands for."""
+    if SUB_ADDRESS in address:
+        return HislipLine(address)
     if address.startswith("ASRL"):
         return SerialLine(address)
     return TcpLine(address)
@@ -132,9 +166,15 @@ async def _serve_serial(device: ScpiDevice) -> tuple[Server, str]:
     return server, f"ASRL{await server.start()}::INSTR"
 
 
+async def _serve_hislip(device: ScpiDevice) -> tuple[Server, str]:
+    server = HislipServer(device, after_message=lambda: None)
+    return server, f"TCPIP::127.0.0.1::{SUB_ADDRESS},{await server.start()}::INSTR"
+
+
 SERVERS: dict[str, Callable[[ScpiDevice], Awaitable[tuple[Server, str]]]] = {
     "tcp": _serve_tcp,
     "serial": _serve_serial,
+    "hislip": _serve_hislip,
 }
 # Lines that mark the end of each message themselves.
 MARKED = ("hislip",)
