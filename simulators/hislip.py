@@ -79,6 +79,17 @@ class _Link(asyncio.Protocol):
         if self._parting is not None:
             return
         self.cutter.feed(data)
+        if self.client is None or self.channel is Channel.SYNCHRONOUS:
+            self._look()
+        else:
+            # What the client sent before on the other channel is there, and is read in
+            # the next turn of the loop: whoever asks for the status finds it followed.
+            loop = asyncio.get_running_loop()
+            loop.call_soon(loop.call_soon, self._look)
+
+    def _look(self) -> None:
+        if self._parting is not None:
+            return
         try:
             self._go_on()
         except BadPrologueError as problem:
@@ -95,7 +106,7 @@ class _Link(asyncio.Protocol):
 
     def wake(self) -> None:
         """Look again at what had to wait, in a turn of its own."""
-        asyncio.get_running_loop().call_soon(self.data_received, b"")
+        asyncio.get_running_loop().call_soon(self._look)
 
     def pause_writing(self) -> None:
         self.is_full = True
