@@ -199,7 +199,6 @@ class Session:
                 self._lock(message)
             case MessageType.ASYNC_LOCK:
                 self._answer_lock(self._locks.release(self))
-                self._wire.locks_changed()
             case MessageType.ASYNC_LOCK_INFO:
                 self._answer(
                     MessageType.ASYNC_LOCK_INFO_RESPONSE,
@@ -282,6 +281,8 @@ class Session:
 
     def _answer_lock(self, answer: LockAnswer) -> None:
         self._answer(MessageType.ASYNC_LOCK_RESPONSE, control=answer)
+        if answer in (LockAnswer.SUCCESS, LockAnswer.SHARED_RELEASED):
+            self._wire.locks_changed()
 
     def leave(self) -> None:
         """Give back what the client holds: it has gone."""
