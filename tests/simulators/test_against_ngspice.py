@@ -230,7 +230,7 @@ def switching(cell: CellDescription) -> list[str]:
 
 
 def activations(cell: CellDescription) -> list[float]:
-    """Return mid-probability quantiles of the normal distribution; from printed tables.
+    """Return mid-probability quantiles of the normal distribution; from memory.
 
     The quartile is at 0.6744898 standard deviations, the outer and inner mid-points of four
     equal parts at 1.1503494 and 0.3186394.
@@ -300,8 +300,8 @@ def test_course_agrees_with_a_circuit_simulator(name: str, tmp_path: Path) -> No
     full_scale = float(np.abs(spice_node).max())
     assert full_scale > 1
     bound = FULL_SCALE_SHARE * full_scale
-    assert np.interp(spice_times, times, node) == pytest.approx(spice_node, abs=bound)
-    assert np.interp(spice_times, times, terminal) == pytest.approx(spice_terminal, abs=bound)
+    assert np.abs(np.interp(spice_times, times, node) - spice_node).max() < bound
+    assert np.abs(np.interp(spice_times, times, terminal) - spice_terminal).max() < bound
 
 
 # Regression numbers of ngspice 39 from another deck of the same circuit, no closed form: after
@@ -324,7 +324,7 @@ def test_peak_detector_holds_its_peak_and_droops(tmp_path: Path) -> None:
     times, _, node = on_the_table(case)
     spice_times, _, spice_node = course_in_ngspice(tmp_path, case)
     bound = FULL_SCALE_SHARE * float(spice_node.max())
-    assert np.interp(spice_times, times, node) == pytest.approx(spice_node, abs=bound)
+    assert np.abs(np.interp(spice_times, times, node) - spice_node).max() < bound
     for at_seconds, volts in PEAKS:
         assert np.interp(at_seconds, times, node) == pytest.approx(volts, abs=1e-4)
     # A: the diode is closed, so the droop is exp(-t/RC) with 1 MOhm and 10 nF.
