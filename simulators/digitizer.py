@@ -1,20 +1,24 @@
 """What a two-channel oscilloscope does, whatever language it is spoken to in.
 
 Channel 1 sees the generator's terminal, channel 2 the cell's node. A converter with noise,
-clipping at both ends, ranges and intervals that become the next 1-2-5 step without a
-word, and a pre-trigger that must fill before a trigger counts. Bandwidth and offset errors
-are not simulated. Refusals are the numbered errors of SCPI-99.
+clipping at both ends, a bandwidth, errors of offset and gain, ranges and intervals that
+become the next 1-2-5 step without a word, and a pre-trigger that must fill before a trigger
+counts. How large all that is, is said by DigitizerImperfections. Refusals are the numbered
+errors of SCPI-99.
 """
 
 import math
 from collections import deque
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsetally.simulators.bandwidth import knot_values, last_values, values_at
 from pulsetally.simulators.clock import VirtualClock
+from pulsetally.simulators.imperfections import DigitizerImperfections
 from pulsetally.simulators.scope_settings import (
     CHANNELS,
     Converter,
@@ -26,13 +30,23 @@ from pulsetally.simulators.scope_settings import (
 from pulsetally.simulators.scpi_errors import ScpiError
 
 _Floats = NDArray[np.float64]
+_PORTION = 1 << 16
+
+
+class _Stretch(NamedTuple):
+    """A piece of the table's course, and what the bandwidth had made of the one before."""
+
+    times: _Floats
+    terminal_volts: _Floats
+    node_volts: _Floats
+    begin_volts: _Floats
 
 
 @dataclass(slots=True, kw_only=True)
 class _Acquisition:
     settings: ScopeSettings
     began_seconds: float
-    stretches: deque[tuple[_Floats, _Floats, _Floats]] = field(default_factory=deque)
+    stretches: deque["_Stretch"] = field(default_factory=deque)
     trigger_seconds: float | None = None
     first_seconds: float = math.inf
 
@@ -50,7 +64,8 @@ class _Acquisition:
 class Digitizer:
     """The oscilloscope of the simulated bench; it observes the table.
 
-    seed: of the noise. power_on: the settings it starts with and is reset to.
+    imperfections: what it can do and how wrong it is. seed: of what is random in that.
+    power_on: the settings it starts with and is reset to.
     changed: called when something changed by itself, also for a moment, as time passed.
     ignores_trigger: asked at each trigger that would be taken; when so nothing happens.
     """
@@ -61,12 +76,18 @@ class Digitizer:
         clock: VirtualClock,
         converter: Converter,
         power_on: ScopeSettings,
+        imperfections: DigitizerImperfections | None = None,
         seed: int = 1,
     ) -> None:
+        self.imperfections = imperfections or DigitizerImperfections()
+        power_on = replace(power_on, digitizer=self.imperfections)
         self._clock, self._converter, self._power_on = clock, converter, power_on
         self.changed: Callable[[], None] = lambda: None
         self.ignores_trigger: Callable[[], bool] = lambda: False
         self._random = np.random.default_rng(seed)
+        # A stream of its own: the noise is the same with and without jitter.
+        self._jitter = np.random.default_rng((seed, 3))
+        self._lagging_volts: _Floats | None = None
         self.settings = power_on
         self._acquisition: _Acquisition | None = None
         self._record: Record | None = None
@@ -86,6 +107,11 @@ class Digitizer:
     def is_acquiring(self) -> bool:
         """Whether an acquisition is under way, from filling to its last sample."""
         return self._acquisition is not None
+
+    @property
+    def needs_detail(self) -> bool:
+        """Whether each pulse of the course goes into a record that is under way."""
+        return self.state in (ScopeState.FILLING, ScopeState.ACQUIRING)
 
     @property
     def kept_stretches(self) -> int:
@@ -171,11 +197,12 @@ class Digitizer:
     def saw(self, times: _Floats, terminal_volts: _Floats, node_volts: _Floats) -> None:
         """Take what the table did in one stretch of time (table.observe)."""
         self._seen_seconds = float(times[-1])
+        begin_volts = self._lag(times, terminal_volts, node_volts)
         acquisition = self._acquisition
         if acquisition is None:
             return
         before = acquisition.stretches[-1] if acquisition.stretches else None
-        acquisition.stretches.append((times, terminal_volts, node_volts))
+        acquisition.stretches.append(_Stretch(times, terminal_volts, node_volts, begin_volts))
         if acquisition.trigger_seconds is None:
             self._look_for_trigger(acquisition, before)
         if self._seen_seconds >= acquisition.last_seconds:
@@ -194,9 +221,7 @@ class Digitizer:
             and self._seen_seconds >= acquisition.armed_seconds
         )
 
-    def _look_for_trigger(
-        self, acquisition: _Acquisition, before: tuple[_Floats, _Floats, _Floats] | None
-    ) -> None:
+    def _look_for_trigger(self, acquisition: _Acquisition, before: _Stretch | None) -> None:
         if not self._is_armed():
             return
         settings = acquisition.settings
@@ -248,34 +273,77 @@ class Digitizer:
         while len(acquisition.stretches) > 1 and acquisition.stretches[0][0][-1] < oldest_seconds:
             acquisition.stretches.popleft()
 
+    def _lag(self, times: _Floats, *signals: _Floats) -> _Floats:
+        """Let the bandwidth follow one stretch; return what it had made of the one before."""
+        begin_volts = self._lagging_volts
+        if begin_volts is None:
+            begin_volts = np.array([signal[0] for signal in signals])
+        lag_seconds = self.imperfections.lag_seconds
+        if lag_seconds > 0:
+            self._lagging_volts = last_values(times, signals, begin_volts, lag_seconds)
+        return begin_volts
+
     def _finish(self, acquisition: _Acquisition) -> None:
         settings = acquisition.settings
         assert acquisition.trigger_seconds is not None
-        grid = acquisition.first_seconds + settings.sample_seconds * np.arange(
-            settings.record_points
+        stretches = acquisition.stretches
+        times = np.concatenate([stretch.times for stretch in stretches])
+        signals = np.stack(
+            [
+                np.concatenate([stretch.terminal_volts for stretch in stretches]),
+                np.concatenate([stretch.node_volts for stretch in stretches]),
+            ]
         )
-        times, *signals = (
-            np.concatenate(part) for part in zip(*acquisition.stretches, strict=True)
-        )
-        volts_per_code = tuple(volts / self._converter.codes for volts in settings.range_volts)
+        lag_seconds = self.imperfections.lag_seconds
+        knots = signals
+        if lag_seconds > 0:
+            knots = knot_values(times, signals, stretches[0].begin_volts, lag_seconds)
+        # In portions, so that a long record needs no multiple of its own size in memory.
         codes = np.empty((CHANNELS, settings.record_points), dtype=np.int16)
-        for channel, signal in enumerate(signals):
-            exact = (np.interp(grid, times, signal) - settings.offset_volts[channel]) / (
-                volts_per_code[channel]
-            )
-            noisy = exact + self._converter.noise_codes * self._random.standard_normal(
-                settings.record_points
-            )
-            half = self._converter.codes // 2
-            codes[channel] = np.clip(np.rint(noisy), -half, half - 1)
+        for channel in range(CHANNELS):
+            chosen = slice(channel, channel + 1)
+            for first in range(0, settings.record_points, _PORTION):
+                last = min(first + _PORTION, settings.record_points)
+                places = np.arange(first, last, dtype=np.float64)
+                grid: _Floats = acquisition.first_seconds + settings.sample_seconds * places
+                if lag_seconds > 0:
+                    volts = values_at(grid, times, signals[chosen], knots[chosen], lag_seconds)[0]
+                else:
+                    volts = np.interp(grid, times, signals[channel])
+                codes[channel, first:last] = self._convert(settings, channel, volts)
+        first_seconds = acquisition.first_seconds - acquisition.trigger_seconds
+        if self.imperfections.trigger_jitter_seconds:
+            jitter = self._jitter.standard_normal()
+            first_seconds += self.imperfections.trigger_jitter_seconds * jitter
         self._record = Record(
             codes=codes,
-            volts_per_code=volts_per_code,
+            volts_per_code=tuple(volts / self._converter.codes for volts in settings.range_volts),
             offset_volts=settings.offset_volts,
             interval_seconds=settings.sample_seconds,
-            first_seconds=acquisition.first_seconds - acquisition.trigger_seconds,
+            first_seconds=first_seconds,
         )
         self._acquisition = None
+
+    def _convert(
+        self, settings: ScopeSettings, channel: int, volts: _Floats
+    ) -> NDArray[np.float64]:
+        """Return the codes that the converter makes of voltages."""
+        wrong, converter = self.imperfections, self._converter
+        codes = converter.codes
+        volts_per_code = settings.range_volts[channel] / codes
+        noise_codes = converter.noise_codes
+        if wrong.noise_share is not None:
+            noise_codes = wrong.noise_share * codes
+        exact = (volts * (1 + wrong.gain_errors[channel]) - settings.offset_volts[channel]) / (
+            volts_per_code
+        )
+        exact += wrong.offset_shares[channel] * codes
+        exact += noise_codes * self._random.standard_normal(len(volts))
+        # Fewer bits than the family sends: the lowest of them stay 0.
+        step = 1 << (converter.bits - (wrong.bits or converter.bits))
+        half = codes // 2
+        rounded: NDArray[np.float64] = np.clip(step * np.rint(exact / step), -half, half - step)
+        return rounded
 
 
 def first_crossing(

@@ -104,9 +104,9 @@ class DigitizerImperfections:
 
     bits: int | None = None
     noise_share: float | None = None
-    offset_shares: tuple[float, float] = (0.0, 0.0)
+    offset_shares: tuple[float, float] = (0.0005, -0.0005)
     gain_errors: tuple[float, float] = (0.0, 0.0)
-    bandwidth_hertz: float = math.inf
+    bandwidth_hertz: float = 100e6
     trigger_jitter_seconds: float = 0.0
     longest_record_points: int = 2_000_000
     shortest_interval_seconds: float = 1e-9

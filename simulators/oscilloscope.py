@@ -7,8 +7,6 @@ from pulsetally.simulators.scope_settings import (
     DIVISIONS,
     FEWEST_POINTS,
     LARGEST_DELAY_SECONDS,
-    LARGEST_OFFSET_VOLTS,
-    MOST_POINTS,
     ScopeSettings,
     ScopeState,
     TriggerInput,
@@ -20,18 +18,26 @@ from pulsetally.simulators.scpi_parameters import number
 MEASURING = 16
 WAITING_FOR_TRIGGER = 32
 
-OFFSET = number(-LARGEST_OFFSET_VOLTS, LARGEST_OFFSET_VOLTS, 0.0, unit="V")
-LEVEL = OFFSET
-POINTS = number(FEWEST_POINTS, MOST_POINTS, ScopeSettings().points, whole=True)
 DELAY = number(-LARGEST_DELAY_SECONDS, LARGEST_DELAY_SECONDS, 0.0, unit="S")
 
 
 class Oscilloscope(ScpiDevice):
-    """A digitizer behind a SCPI engine; a family adds its commands."""
+    """A digitizer behind a SCPI engine; a family adds its commands.
+
+    points_parameter: samples of a record. volts_parameter: of the middle of the screen, and
+    of the trigger level, V.
+    """
 
     def __init__(self, identity: str, model: Digitizer, manner: Manner) -> None:
         super().__init__(identity, manner)
         self.model = model
+        digitizer = model.imperfections
+        self.points_parameter = number(
+            FEWEST_POINTS, digitizer.longest_record_points, ScopeSettings().points, whole=True
+        )
+        self.volts_parameter = number(
+            -digitizer.largest_offset_volts, digitizer.largest_offset_volts, 0.0, unit="V"
+        )
         model.changed = self.refresh
 
     # Hooks of the engine.

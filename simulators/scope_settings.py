@@ -1,23 +1,19 @@
 """What an oscilloscope can be set to, what it is doing, and the record it makes."""
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from enum import Enum, auto
 
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsetally.simulators.imperfections import DigitizerImperfections
+
 CHANNELS = 2
 DIVISIONS = 8
 
-SMALLEST_RANGE_VOLTS = 0.008
-LARGEST_RANGE_VOLTS = 80.0
-LARGEST_OFFSET_VOLTS = 40.0
-SMALLEST_INTERVAL_SECONDS = 1e-9
-LARGEST_INTERVAL_SECONDS = 10.0
 LARGEST_DELAY_SECONDS = 1e4
 FEWEST_POINTS = 10
-MOST_POINTS = 1_000_000
 
 _Floats = NDArray[np.float64]
 
@@ -69,7 +65,10 @@ class ScopeSettings:
     instead, and has fewer points where the converter is too slow for so many.
     reference: the place in the record, 0 to 1, that lies delay_seconds after the trigger.
     A record never ends before its trigger: an earlier delay is cut to that.
+    digitizer: what the oscilloscope can do.
     """
+
+    digitizer: DigitizerImperfections = field(default_factory=DigitizerImperfections)
 
     range_volts: tuple[float, ...] = (8.0,) * CHANNELS
     offset_volts: tuple[float, ...] = (0.0,) * CHANNELS
@@ -87,7 +86,7 @@ class ScopeSettings:
         """How many samples a record has."""
         if self.span_seconds is None:
             return self.points
-        return min(self.points, round(self.span_seconds / SMALLEST_INTERVAL_SECONDS))
+        return min(self.points, round(self.span_seconds / self.digitizer.shortest_interval_seconds))
 
     @property
     def sample_seconds(self) -> float:

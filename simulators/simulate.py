@@ -51,6 +51,7 @@ class Bench:
             clock=self.clock,
             converter=family.converter,
             power_on=family.scope_power_on,
+            imperfections=settings.digitizer,
             seed=settings.seed,
         )
         self.table.observe(self.digitizer)

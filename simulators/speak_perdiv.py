@@ -15,13 +15,9 @@ from pulsetally.simulators.generator_model import (
     FireSource,
     GeneratorModel,
 )
-from pulsetally.simulators.oscilloscope import DELAY, LEVEL, OFFSET, POINTS, Oscilloscope
+from pulsetally.simulators.oscilloscope import DELAY, Oscilloscope
 from pulsetally.simulators.scope_settings import (
     DIVISIONS,
-    LARGEST_INTERVAL_SECONDS,
-    LARGEST_RANGE_VOLTS,
-    SMALLEST_INTERVAL_SECONDS,
-    SMALLEST_RANGE_VOLTS,
     Converter,
     ScopeSettings,
     ScopeState,
@@ -209,15 +205,16 @@ class PerdivOscilloscope(Oscilloscope):
         self._channel, self._binary = 0, True
 
     def _screen_commands(self) -> list[Command]:
+        digitizer = self.model.imperfections
         volts_per_division = number(
-            SMALLEST_RANGE_VOLTS / DIVISIONS,
-            LARGEST_RANGE_VOLTS / DIVISIONS,
+            digitizer.smallest_range_volts / DIVISIONS,
+            digitizer.largest_range_volts / DIVISIONS,
             SCOPE_POWER_ON.range_volts[0] / DIVISIONS,
             unit="V",
         )
         seconds_per_division = number(
-            SMALLEST_INTERVAL_SECONDS,
-            LARGEST_INTERVAL_SECONDS,
+            digitizer.shortest_interval_seconds,
+            digitizer.longest_interval_seconds,
             (SCOPE_POWER_ON.span_seconds or 0.0) / TIME_DIVISIONS,
             unit="S",
         )
@@ -228,7 +225,9 @@ class PerdivOscilloscope(Oscilloscope):
                 lambda channel, volts: self.set_range(channel, DIVISIONS * volts),
                 lambda channel: self.range_volts(channel) / DIVISIONS,
             ),
-            channel_quantity(":CHANnel<1-2>:OFFSet", OFFSET, self.set_offset, self.offset_volts),
+            channel_quantity(
+                ":CHANnel<1-2>:OFFSet", self.volts_parameter, self.set_offset, self.offset_volts
+            ),
             quantity(
                 ":TIMebase:SCALe",
                 seconds_per_division,
@@ -236,7 +235,9 @@ class PerdivOscilloscope(Oscilloscope):
                 lambda: self.interval_seconds() * self.points() / TIME_DIVISIONS,
             ),
             quantity(":TIMebase:POSition", DELAY, self.set_delay, self.delay_seconds),
-            quantity(":ACQuire:POINts", POINTS, self.set_points, self.points, write=whole),
+            quantity(
+                ":ACQuire:POINts", self.points_parameter, self.set_points, self.points, write=whole
+            ),
         ]
 
     def _trigger_commands(self) -> list[Command]:
@@ -249,7 +250,7 @@ class PerdivOscilloscope(Oscilloscope):
 
         return [
             choice(f"{edge}:SOURce", _TRIGGER_INPUTS, self.set_source, self.source),
-            quantity(f"{edge}:LEVel", LEVEL, self.set_level, self.level_volts),
+            quantity(f"{edge}:LEVel", self.volts_parameter, self.set_level, self.level_volts),
             choice(f"{edge}:SLOPe", slopes, self.set_rising, self.rising),
             action(":SINGle", single),
             action(":STOP", self.model.abort),

@@ -10,12 +10,8 @@ from pulsetally.simulators.function_generator import (
     load,
 )
 from pulsetally.simulators.generator_model import FireSource, GeneratorModel
-from pulsetally.simulators.oscilloscope import LEVEL, OFFSET, POINTS, Oscilloscope
+from pulsetally.simulators.oscilloscope import Oscilloscope
 from pulsetally.simulators.scope_settings import (
-    LARGEST_INTERVAL_SECONDS,
-    LARGEST_RANGE_VOLTS,
-    SMALLEST_INTERVAL_SECONDS,
-    SMALLEST_RANGE_VOLTS,
     Converter,
     ScopeSettings,
     TriggerInput,
@@ -158,23 +154,31 @@ class Scpi99Oscilloscope(Oscilloscope):
         self._binary = self._big_endian = True
 
     def _input_commands(self) -> list[Command]:
+        digitizer = self.model.imperfections
         initial = ScopeSettings()
         ranges = "[:SENSe<1-2>]:VOLTage[:DC]:RANGe"
         sweep = "[:SENSe<1>]:SWEep"
         peak_to_peak = number(
-            SMALLEST_RANGE_VOLTS, LARGEST_RANGE_VOLTS, initial.range_volts[0], unit="V"
+            digitizer.smallest_range_volts,
+            digitizer.largest_range_volts,
+            initial.range_volts[0],
+            unit="V",
         )
         interval = number(
-            SMALLEST_INTERVAL_SECONDS,
-            LARGEST_INTERVAL_SECONDS,
+            digitizer.shortest_interval_seconds,
+            digitizer.longest_interval_seconds,
             initial.interval_seconds,
             unit="S",
         )
         share = number(0.0, 1.0, initial.reference)
         return [
             channel_quantity(f"{ranges}:PTPeak", peak_to_peak, self.set_range, self.range_volts),
-            channel_quantity(f"{ranges}:OFFSet", OFFSET, self.set_offset, self.offset_volts),
-            quantity(f"{sweep}:POINts", POINTS, self.set_points, self.points, write=whole),
+            channel_quantity(
+                f"{ranges}:OFFSet", self.volts_parameter, self.set_offset, self.offset_volts
+            ),
+            quantity(
+                f"{sweep}:POINts", self.points_parameter, self.set_points, self.points, write=whole
+            ),
             quantity(f"{sweep}:TINTerval", interval, self.set_interval, self.interval_seconds),
             quantity(f"{sweep}:OREFerence:LOCation", share, self.set_reference, self.reference),
         ]
@@ -184,7 +188,7 @@ class Scpi99Oscilloscope(Oscilloscope):
         slopes = {"POSitive": True, "NEGative": False}
         return [
             choice(f"{trigger}:SOURce", _TRIGGER_INPUTS, self.set_source, self.source),
-            quantity(f"{trigger}:LEVel", LEVEL, self.set_level, self.level_volts),
+            quantity(f"{trigger}:LEVel", self.volts_parameter, self.set_level, self.level_volts),
             choice(f"{trigger}:SLOPe", slopes, self.set_rising, self.rising),
             action(":INITiate[:IMMediate]", self.model.initiate),
             action(":TRIGger[:SEQuence][:IMMediate]", self.model.force),

@@ -13,12 +13,8 @@ from pulsetally.simulators.function_generator import (
     load,
 )
 from pulsetally.simulators.generator_model import FireSource, GeneratorModel
-from pulsetally.simulators.oscilloscope import DELAY, LEVEL, OFFSET, POINTS, Oscilloscope
+from pulsetally.simulators.oscilloscope import DELAY, Oscilloscope
 from pulsetally.simulators.scope_settings import (
-    LARGEST_INTERVAL_SECONDS,
-    LARGEST_RANGE_VOLTS,
-    SMALLEST_INTERVAL_SECONDS,
-    SMALLEST_RANGE_VOLTS,
     Converter,
     ScopeSettings,
     ScopeState,
@@ -176,12 +172,16 @@ class StatewordOscilloscope(Oscilloscope):
         self._channel = 0
 
     def _input_commands(self) -> list[Command]:
+        digitizer = self.model.imperfections
         full_scale = number(
-            SMALLEST_RANGE_VOLTS, LARGEST_RANGE_VOLTS, SCOPE_POWER_ON.range_volts[0], unit="V"
+            digitizer.smallest_range_volts,
+            digitizer.largest_range_volts,
+            SCOPE_POWER_ON.range_volts[0],
+            unit="V",
         )
         rate = number(
-            1 / LARGEST_INTERVAL_SECONDS,
-            1 / SMALLEST_INTERVAL_SECONDS,
+            1 / digitizer.longest_interval_seconds,
+            1 / digitizer.shortest_interval_seconds,
             1 / SCOPE_POWER_ON.interval_seconds,
         )
         return [
@@ -189,7 +189,11 @@ class StatewordOscilloscope(Oscilloscope):
                 ":CH<1-2>:RANGE", full_scale, self.set_range, self.range_volts, write=real
             ),
             channel_quantity(
-                ":CH<1-2>:POSITION", OFFSET, self.set_offset, self.offset_volts, write=real
+                ":CH<1-2>:POSITION",
+                self.volts_parameter,
+                self.set_offset,
+                self.offset_volts,
+                write=real,
             ),
             quantity(
                 ":HOR:RATE",
@@ -199,7 +203,9 @@ class StatewordOscilloscope(Oscilloscope):
                 lambda: 1 / self.interval_seconds(),
                 write=real,
             ),
-            quantity(":HOR:LENGTH", POINTS, self.set_points, self.points, write=whole),
+            quantity(
+                ":HOR:LENGTH", self.points_parameter, self.set_points, self.points, write=whole
+            ),
             quantity(":HOR:DELAY", DELAY, self.set_delay, self.delay_seconds, write=real),
         ]
 
@@ -212,7 +218,9 @@ class StatewordOscilloscope(Oscilloscope):
 
         return [
             choice(":TRIG:CHANNEL", _TRIGGER_INPUTS, self.set_source, self.source),
-            quantity(":TRIG:LEVEL", LEVEL, self.set_level, self.level_volts, write=real),
+            quantity(
+                ":TRIG:LEVEL", self.volts_parameter, self.set_level, self.level_volts, write=real
+            ),
             choice(":TRIG:SLOPE", {"RISE": True, "FALL": False}, self.set_rising, self.rising),
             choice(
                 ":TRIG:MODE",

@@ -1,17 +1,21 @@
 """Talk to a bench without sockets: bytes in, bytes out, and time that moves when told to."""
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.imperfections import DigitizerImperfections
 from pulsetally.simulators.scpi_device import ScpiDevice
 from pulsetally.simulators.scpi_engine import ScpiEngine
 from pulsetally.simulators.simulate import Bench, SimulationSettings
 
 # A cell that hardly switches is a linear capacitor, whose voltages have closed forms.
 LINEAR = CellDescription(remanent_polarization=1e-9)
+# Noise alone, so that means tell what the digitizer saw.
+TRUE = DigitizerImperfections(offset_shares=(0.0, 0.0), bandwidth_hertz=math.inf)
 
 
 class Line:
@@ -32,7 +36,7 @@ class Talk:
     """A bench of one family, with a connection to each instrument."""
 
     def __init__(self, family: str) -> None:
-        self.bench = Bench(SimulationSettings(cell=LINEAR, family=family, seed=7))
+        self.bench = Bench(SimulationSettings(cell=LINEAR, digitizer=TRUE, family=family, seed=7))
         self.generator = Line(self.bench.generator)
         self.oscilloscope = Line(self.bench.oscilloscope)
 

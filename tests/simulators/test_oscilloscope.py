@@ -1,5 +1,6 @@
 """The simulated oscilloscope, through its SCPI port, fed with waveforms of a closed form."""
 
+import math
 import re
 from typing import Any
 
@@ -9,11 +10,14 @@ from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.digitizer import first_crossing
+from pulsetally.simulators.imperfections import DigitizerImperfections
 from pulsetally.simulators.scope_settings import next_step
 from pulsetally.simulators.scpi_engine import ScpiEngine
 from pulsetally.simulators.simulate import Bench, SimulationSettings
 
 LINEAR = CellDescription(remanent_polarization=1e-9)
+# Noise alone, so that means tell what the digitizer saw.
+TRUE = DigitizerImperfections(offset_shares=(0.0, 0.0), bandwidth_hertz=math.inf)
 
 PREAMBLE = re.compile(
     r"\(DIF\(VERSion 1999\.0\)DIMension=X\(TYPE IMPLicit SCALe (\S+) OFFSet (\S+) SIZE (\d+) "
@@ -26,7 +30,7 @@ class Talk:
     """A bench and one connection to its oscilloscope; time moves only when told to."""
 
     def __init__(self) -> None:
-        self.bench = Bench(SimulationSettings(cell=LINEAR, seed=7))
+        self.bench = Bench(SimulationSettings(cell=LINEAR, digitizer=TRUE, seed=7))
         self._engine = ScpiEngine(self.bench.oscilloscope)
         self.generator = ScpiEngine(self.bench.generator)
 
@@ -128,7 +132,7 @@ def test_a_word_is_read_back(talk: Talk, setting: str, answer: str) -> None:
         (":SENS3:VOLT:RANG:PTP 1", -114),
         (":SENS1:VOLT:RANG:PTP 81", -222),
         (":SENS:SWE:POIN 9", -222),
-        (":SENS:SWE:POIN 1000001", -222),
+        (":SENS:SWE:POIN 2000001", -222),
         (":SENS:SWE:TINT 0.9 NS", -222),
         (":SENS:SWE:OREF:LOC 1.1", -222),
         (":TRIG:SOUR LINE", -224),

@@ -215,7 +215,7 @@ def test_what_the_generator_cannot_do_is_an_error(talk: Talk, message: str, numb
         ("TIM:SCAL 0", -222),
         ("TIM:SCAL 11", -222),
         ("ACQ:POIN 9", -222),
-        ("ACQ:POIN 1000001", -222),
+        ("ACQ:POIN 2000001", -222),
         ("TRIG:EDGE:SOUR BUS", -224),
         ("TRIG:EDGE:SLOP RISE", -224),
         ("TRIG:LEV 1", -113),

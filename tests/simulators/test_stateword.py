@@ -193,7 +193,7 @@ def test_what_the_generator_cannot_do_is_an_error(talk: Talk, message: str, numb
         ("HOR:RATE 0", -222),
         ("HOR:RATE 1.1E9", -222),
         ("HOR:LENGTH 9", -222),
-        ("HOR:LENGTH 1000001", -222),
+        ("HOR:LENGTH 2000001", -222),
         ("HOR:DELAY 1E5", -222),
         ("TRIG:CHANNEL BUS", -224),
         ("TRIG:SLOPE POS", -224),
