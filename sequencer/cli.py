@@ -45,7 +45,15 @@ LogbookOption = Annotated[
         help="The logbook; else PULSETALLY_LOGBOOK, else logbook.db here.",
     ),
 ]
-SeedOption = Annotated[int, typer.Option(min=0, help="Seed of everything random.")]
+SeedOption = Annotated[
+    int | None, typer.Option(min=0, help="Seed of everything random; else the table's, else 1.")
+]
+TableOption = Annotated[
+    str | None,
+    typer.Option(
+        "--table", metavar="FILE|NAME", help="A table file, or the name of one that ships."
+    ),
+]
 DomainsOption = Annotated[
     int | None,
     typer.Option(min=0, help="Domains of the cell: fewer scatter more; 0 for no scatter."),
@@ -108,19 +116,25 @@ def rehearse(
     recipe: RecipeArgument,
     overrides: SetOption = None,
     logbook: LogbookOption = None,
-    seed: SeedOption = 1,
+    table: TableOption = None,
+    seed: SeedOption = None,
     domains: DomainsOption = None,
 ) -> None:
     """Run a recipe on the simulated bench."""
     from pulsetally.sequencer.rehearsal import simulated_bench
 
+    given = (("--table", table), ("--seed", seed), ("--domains", domains))
+    # With the equals sign, a name that begins with a dash is no option.
+    options = [f"{name}={value}" for name, value in given if value is not None]
     with _told():
-        plan, table = _planned(recipe, None, overrides)
-        options = ["--seed", str(seed)]
-        if domains is not None:
-            options += ["--domains", str(domains)]
-        with simulated_bench(table, options) as bench:
-            status = _carry_out(plan, bench, logbook, mode="rehearsal")
+        if table is None:
+            plan, shipped = _planned(recipe, None, overrides)
+            with simulated_bench(shipped, options) as bench:
+                status = _carry_out(plan, bench, logbook, mode="rehearsal")
+        else:
+            with _recipe_checked(recipe, overrides), simulated_bench(None, options) as bench:
+                plan, bench = _planned(recipe, bench, overrides)
+                status = _carry_out(plan, bench, logbook, mode="rehearsal")
     raise typer.Exit(status)
 
 
@@ -180,12 +194,16 @@ def show(
 @app.command(epilog="Example: pulsetally simulate --write-bench bench.yaml")
 def simulate(
     as_json: JsonOption = False,
-    seed: SeedOption = 1,
+    table: TableOption = None,
+    seed: SeedOption = None,
     domains: DomainsOption = None,
     generator_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
     oscilloscope_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
     control_port: Annotated[int, typer.Option(min=0, max=65535, help="0: any free one.")] = 0,
-    dialect: Annotated[str, typer.Option(help="scpi99, perdiv or stateword.")] = "scpi99",
+    dialect: Annotated[
+        str | None,
+        typer.Option(help="scpi99, perdiv or stateword; else the table's, else scpi99."),
+    ] = None,
     serial: Annotated[
         bool, typer.Option("--serial", help="On pseudo-terminals instead of TCP ports.")
     ] = False,
@@ -200,41 +218,49 @@ def simulate(
     if serial and hislip:
         _complain("--serial and --hislip can't be had together. To fix it, leave one out.")
         raise typer.Exit(WRONG_INPUT)
+    from pulsetally.sequencer.bench import parse_bench
+    from pulsetally.sequencer.errors import InputError
     from pulsetally.sequencer.rehearsal import addressed_bench_text
-    from pulsetally.simulators.cell import DEFAULT_DOMAINS
-    from pulsetally.simulators.simulate import (
-        Addresses,
-        SimulationSettings,
-        cell_with,
-        serve,
-        tell,
-    )
+    from pulsetally.simulators.facts import facts_of
+    from pulsetally.simulators.simulate import Addresses, chosen_settings, serve, tell
 
     def announce(addresses: Addresses) -> None:
         if write_bench is not None:
+            clock = None if settings.real_time else addresses.control
             text = addressed_bench_text(
-                addresses.generator, addresses.oscilloscope, addresses.control, dialect
+                addresses.generator,
+                addresses.oscilloscope,
+                clock,
+                settings.family,
+                table=facts if table is not None else None,
             )
             try:
+                # A table may have a wiring that no bench file can say.
+                parse_bench(text, file=str(write_bench))
                 write_bench.write_text(text, encoding="utf-8")
+            except InputError as error:
+                _complain(str(error))
+                raise typer.Exit(WRONG_INPUT) from error
             except OSError as error:
                 _complain(f"{write_bench}: the bench file can't be written: {error.strerror}")
                 raise typer.Exit(WRONG_INPUT) from error
-        tell(addresses, as_json=as_json)
+        tell(addresses, facts, as_json=as_json)
 
     try:
-        settings = SimulationSettings(
-            cell=cell_with(DEFAULT_DOMAINS if domains is None else domains),
-            seed=seed,
+        title, settings = chosen_settings(
+            table,
             family=dialect,
+            seed=seed,
+            domains=domains,
             transport="serial" if serial else "hislip" if hislip else "tcp",
             generator_port=generator_port,
             oscilloscope_port=oscilloscope_port,
             control_port=control_port,
         )
     except ValueError as error:
-        _complain(f"the simulated bench can't be made: {error}.")
+        _complain(str(error) if table else f"the simulated bench can't be made: {error}.")
         raise typer.Exit(WRONG_INPUT) from error
+    facts = facts_of(settings, title)
     try:
         serve(settings, announce)
     except OSError as error:
@@ -316,7 +342,27 @@ def bench_quiet(bench: Annotated[Path, typer.Argument(help="The bench file.")]) 
         )
 
 
-def _planned(recipe: str, bench: Path | None, overrides: list[str] | None) -> "tuple[Plan, Bench]":
+@contextmanager
+def _recipe_checked(recipe: str, overrides: list[str] | None) -> Iterator[None]:
+    """Have a table file's mistakes told together with those of the recipe."""
+    from pulsetally.sequencer.errors import InputError
+    from pulsetally.sequencer.recipe import find_recipe
+    from pulsetally.sequencer.rehearsal import TableRefused
+
+    settings, mistakes = _overrides(overrides or [])
+    try:
+        find_recipe(recipe, settings)
+    except InputError as error:
+        mistakes += error.mistakes
+    try:
+        yield
+    except TableRefused as error:
+        raise TableRefused("\n".join([*map(str, mistakes), str(error)])) from error
+
+
+def _planned(
+    recipe: str, bench: "Path | Bench | None", overrides: list[str] | None
+) -> "tuple[Plan, Bench]":
     """Read recipe and bench, and plan; every mistake of both files is told at once."""
     from pulsetally.sequencer.bench import load_bench
     from pulsetally.sequencer.errors import InputError
@@ -332,7 +378,7 @@ def _planned(recipe: str, bench: Path | None, overrides: list[str] | None) -> "t
     except InputError as error:
         mistakes += error.mistakes
     try:
-        table = shipped_bench() if bench is None else load_bench(bench)
+        table = load_bench(bench) if isinstance(bench, Path) else bench or shipped_bench()
     except InputError as error:
         mistakes += error.mistakes
     if mistakes or found is None or table is None:
@@ -448,10 +494,12 @@ def _told() -> Iterator[None]:
         OutputsNotConfirmed,
         PlanError,
     )
+    from pulsetally.sequencer.rehearsal import TableRefused
 
     statuses: list[tuple[type[Exception], int]] = [
         (InputError, WRONG_INPUT),
         (PlanError, WRONG_INPUT),
+        (TableRefused, WRONG_INPUT),
         # Once a run has begun, the engine itself takes care of a logbook that fails.
         (LogbookError, WRONG_INPUT),
         (OutputsNotConfirmed, OUTPUTS_UNKNOWN),

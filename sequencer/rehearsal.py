@@ -9,19 +9,35 @@ import json
 import subprocess
 import sys
 import tempfile
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from importlib.resources import files
-from typing import IO
+from typing import IO, Any
 
 from pulsetally.drivers.errors import PulsetallyError
-from pulsetally.sequencer.bench import Bench, parse_bench
+from pulsetally.sequencer.bench import Bench, BenchModel, parse_bench
+from pulsetally.sequencer.quantities import (
+    AREA,
+    CAPACITANCE,
+    CURRENT,
+    LENGTH,
+    RESISTANCE,
+    VOLTAGE,
+    format_quantity,
+)
 
 _STOP_SECONDS = 10.0
+# The simulated bench's exit status for a table file with mistakes.
+_WRONG_INPUT = 2
+_NO_PROBE_OHMS = 1e15
 
 
 class RehearsalError(PulsetallyError):
     """The simulated bench did not start."""
+
+
+class TableRefused(RehearsalError):
+    """The simulated bench can't be made as its table file says; the message has every mistake."""
 
 
 def shipped_bench() -> Bench:
@@ -32,22 +48,107 @@ def shipped_bench() -> Bench:
 
 
 def addressed_bench_text(
-    generator: str, oscilloscope: str, clock: str, dialect: str = "scpi99"
+    generator: str,
+    oscilloscope: str,
+    clock: str | None,
+    dialect: str = "scpi99",
+    *,
+    table: Mapping[str, Any] | None = None,
 ) -> str:
-    """Write the shipped bench file anew, with addresses and dialect of running instruments."""
-    bench = shipped_bench()
-    text = bench.text.replace("dialect: scpi99", f"dialect: {dialect}")
-    for was, now in (
-        (bench.model.generator.address, generator),
-        (bench.model.oscilloscope.address, oscilloscope),
-    ):
-        text = text.replace(was, now)
-    return text.replace("wiring:", f"clock: {clock}  # only a simulated bench has one\nwiring:")
+    """Write a bench file for running instruments: their addresses, and how they are wired.
+
+    clock: the address of a simulated bench's own time; None where it is the wall's.
+    table: what the simulated bench announces of itself; None for the shipped bench's
+    wiring and cell. Limits and channels are always those of the shipped bench.
+    """
+    shipped = shipped_bench().model
+    facts = _facts(shipped) if table is None else table
+    limits = shipped.limits
+    lines = [
+        f"bench: {_quoted(facts['title'] or shipped.bench)}",
+        "generator:",
+        f"  address: {generator}",
+        f"  dialect: {dialect}",
+        f"  channel: {shipped.generator.channel:g}",
+        "  load: high-z",
+        "oscilloscope:",
+        f"  address: {oscilloscope}",
+        f"  dialect: {dialect}",
+        f"  source channel: {shipped.oscilloscope.source_channel:g}",
+        f"  node channel: {shipped.oscilloscope.node_channel:g}",
+    ]
+    if clock is not None:
+        lines.append(f"clock: {clock}  # only a simulated bench has one")
+    lines += [
+        *_wiring_lines(facts["wiring"]),
+        "limits:",
+        f"  source: {format_quantity(limits.source, VOLTAGE)}",
+        f"  node: {format_quantity(limits.node, VOLTAGE)}",
+        "cell:",
+        f"  area: {format_quantity(facts['cell']['area'], AREA)}",
+        f"  thickness: {format_quantity(facts['cell']['thickness'], LENGTH)}",
+        f"  relative permittivity: {facts['cell']['relative_permittivity']!r}",
+    ]
+    return "\n".join(lines) + "\n"
+
+
+def _wiring_lines(wiring: Mapping[str, Any]) -> list[str]:
+    diode, clamp = wiring["diode_saturation_amperes"], wiring["clamp_volts"]
+    diode_text = clamp_text = "none"
+    if diode is not None:
+        current = format_quantity(diode, CURRENT)
+        diode_text = f"{{saturation current: {current}, emission: {wiring['diode_emission']!r}}}"
+    if clamp is not None:
+        clamp_text = f"{{breakdown: {format_quantity(clamp, VOLTAGE)}}}"
+    # A bench file has a probe: no probe at all is one that draws nothing.
+    ohms = _NO_PROBE_OHMS if wiring["probe_ohms"] is None else wiring["probe_ohms"]
+    return [
+        "wiring:",
+        f"  source resistance: {format_quantity(wiring['source_ohms'], RESISTANCE)}",
+        f"  series resistance: {format_quantity(wiring['series_ohms'], RESISTANCE)}",
+        f"  series diode: {diode_text}",
+        f"  clamp: {clamp_text}",
+        "  probe:",
+        f"    resistance: {format_quantity(ohms, RESISTANCE)}",
+        f"    capacitance: {format_quantity(wiring['probe_farads'], CAPACITANCE)}",
+    ]
+
+
+def _facts(shipped: BenchModel) -> dict[str, Any]:
+    """Return what a bench file says, in the words in which a simulated bench announces it."""
+    wiring, cell = shipped.wiring, shipped.cell
+    diode, clamp = wiring.series_diode, wiring.clamp
+    return {
+        "title": shipped.bench,
+        "wiring": {
+            "source_ohms": wiring.source_resistance,
+            "series_ohms": wiring.series_resistance,
+            "diode_saturation_amperes": diode and diode.saturation_current,
+            "diode_emission": diode and diode.emission,
+            "clamp_volts": clamp and clamp.breakdown,
+            "probe_ohms": wiring.probe.resistance,
+            "probe_farads": wiring.probe.capacitance,
+        },
+        "cell": {
+            "area": cell.area,
+            "thickness": cell.thickness,
+            "relative_permittivity": cell.relative_permittivity,
+        },
+    }
+
+
+def _quoted(text: str) -> str:
+    """Write a text as YAML, whatever is in it: JSON is YAML."""
+    return json.dumps(text)
 
 
 @contextmanager
-def simulated_bench(bench: Bench, options: Sequence[str] = ()) -> Iterator[Bench]:
-    """Start simulated instruments; give the bench with their addresses. Raises RehearsalError."""
+def simulated_bench(bench: Bench | None, options: Sequence[str] = ()) -> Iterator[Bench]:
+    """Start simulated instruments; give the bench with their addresses.
+
+    bench: how they are wired; None for what they announce of themselves.
+    Raises TableRefused for a table file with mistakes, RehearsalError for all other failures.
+    """
     command = [
         sys.executable,
         "-m",
@@ -72,13 +173,10 @@ def simulated_bench(bench: Bench, options: Sequence[str] = ()) -> Iterator[Bench
         try:
             line = announced.readline()
             if not line:
+                if process.wait(timeout=_STOP_SECONDS) == _WRONG_INPUT:
+                    raise TableRefused(_said(complaints))
                 raise RehearsalError(_why_not(complaints))
-            addresses = json.loads(line)
-            yield bench.with_addresses(
-                generator=addresses["generator"],
-                oscilloscope=addresses["oscilloscope"],
-                clock=addresses["control"],
-            )
+            yield _announced(bench, json.loads(line))
         finally:
             keep_alive.close()
             try:
@@ -93,8 +191,21 @@ def _pipes(process: subprocess.Popen[str]) -> tuple[IO[str], IO[str]]:
     return process.stdin, process.stdout
 
 
-def _why_not(complaints: IO[str]) -> str:
+def _announced(bench: Bench | None, announced: Mapping[str, Any]) -> Bench:
+    generator, oscilloscope = announced["generator"], announced["oscilloscope"]
+    clock, table = announced["control"], announced["table"]
+    if bench is not None:
+        return bench.with_addresses(generator=generator, oscilloscope=oscilloscope, clock=clock)
+    text = addressed_bench_text(generator, oscilloscope, clock, table["family"], table=table)
+    return parse_bench(text, file=f"the bench of {table['title']!r}")
+
+
+def _said(complaints: IO[str]) -> str:
     complaints.seek(0)
-    said = complaints.read().strip().splitlines()
+    return complaints.read().strip()
+
+
+def _why_not(complaints: IO[str]) -> str:
+    said = _said(complaints).splitlines()
     why = said[-1] if said else "it said nothing"
     return f"the simulated bench did not start ({why}). To fix it, try 'pulsetally simulate'."

@@ -8,6 +8,8 @@ from pulsetally.simulators.families import FAMILIES
 from pulsetally.simulators.faults import Fault
 from pulsetally.simulators.imperfections import DigitizerImperfections, SourceImperfections
 
+# What is in the socket in place of the cell: by the name of the socket's state.
+SOCKETS = ("cell", "open", "shorted")
 TRANSPORTS = ("tcp", "serial", "hislip")
 
 
@@ -17,6 +19,8 @@ class SimulationSettings:
 
     family: the language of generator and oscilloscope, a key of FAMILIES.
     source, digitizer: what generator and oscilloscope can do, and how wrong they are.
+    socket: what is in the cell's socket from the beginning, one of SOCKETS; a short in place
+    of the cell, or nothing, whatever cell says.
     transport: how generator and oscilloscope are reached, one of TRANSPORTS; pseudo-
     terminals exist only where the system has them. The control port stays on plain TCP.
     faults: what goes wrong and when.
@@ -31,6 +35,7 @@ class SimulationSettings:
     source: SourceImperfections = field(default_factory=SourceImperfections)
     digitizer: DigitizerImperfections = field(default_factory=DigitizerImperfections)
     family: str = "scpi99"
+    socket: str = "cell"
     transport: str = "tcp"
     faults: tuple[Fault, ...] = ()
     seed: int = 1
@@ -53,6 +58,8 @@ class SimulationSettings:
         for name in ("generator_port", "oscilloscope_port", "control_port"):
             if not 0 <= getattr(self, name) <= 65535:
                 raise ValueError(f"{name} must be from 0 to 65535, not {getattr(self, name)}")
+        if self.socket not in SOCKETS:
+            raise ValueError(f"socket must be one of {', '.join(SOCKETS)}, not {self.socket}")
         if self.transport not in TRANSPORTS:
             raise ValueError(
                 f"transport must be one of {', '.join(TRANSPORTS)}, not {self.transport}"

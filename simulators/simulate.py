@@ -7,15 +7,16 @@ import os
 import signal
 import sys
 import threading
-from collections.abc import Awaitable, Callable, Sequence
+from collections.abc import Awaitable, Callable, Mapping, Sequence
 from contextlib import AsyncExitStack, suppress
 from dataclasses import asdict, dataclass, replace
-from typing import Protocol
+from typing import Any, Protocol
 
 from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
 from pulsetally.simulators.clock import VirtualClock
 from pulsetally.simulators.control import BenchControl
 from pulsetally.simulators.digitizer import Digitizer
+from pulsetally.simulators.facts import facts_of
 from pulsetally.simulators.families import FAMILIES
 from pulsetally.simulators.faults import FaultSchedule
 from pulsetally.simulators.generator_model import GeneratorModel
@@ -45,13 +46,16 @@ class Bench:
     def __init__(self, settings: SimulationSettings) -> None:
         cell, wiring = settings.cell, settings.wiring
         self.table = Table(cell, wiring, seed=settings.seed)
+        if settings.socket == "open":
+            self.table.open_cell()
+        elif settings.socket == "shorted":
+            self.table.short_cell()
         self.clock = VirtualClock(self.table)
         family = FAMILIES[settings.family]
         self.digitizer = Digitizer(
             clock=self.clock,
             converter=family.converter,
             power_on=family.scope_power_on,
-            imperfections=settings.digitizer,
             seed=settings.seed,
         )
         self.table.observe(self.digitizer)
@@ -206,19 +210,42 @@ async def _serve(settings: SimulationSettings, announce: Callable[[Addresses], N
             signal.signal(number, handler)
 
 
-def tell(addresses: Addresses, *, as_json: bool) -> None:
-    """Print the addresses, as one line of JSON or as three sentences, and flush them."""
+def tell(addresses: Addresses, facts: Mapping[str, object], *, as_json: bool) -> None:
+    """Print the addresses, as one line of JSON or as three sentences, and flush them.
+
+    facts: what a person would know about such a table; the JSON has them as "table".
+    """
     if as_json:
-        print(json.dumps(asdict(addresses)), flush=True)
+        print(json.dumps(asdict(addresses) | {"table": facts}, allow_nan=False), flush=True)
         return
     print(f"The function generator listens at {addresses.generator}.")
     print(f"The oscilloscope listens at {addresses.oscilloscope}.")
     print(f"The control port, for rehearsals only, is {addresses.control}.", flush=True)
 
 
-def cell_with(domains: int) -> CellDescription:
-    """Return the default cell with so many domains; 0 for one that never scatters."""
-    return replace(CellDescription(), domains=domains or None)
+def chosen_settings(
+    table: str | None, *, family: str | None, seed: int | None, domains: int | None, **more: Any
+) -> tuple[str, SimulationSettings]:
+    """Return a title and what the simulated bench is made of, from what a person chose.
+
+    table: a table file or the name of a shipped one; None for the usual table, whose title
+    is "". family, seed, domains: go before what the table says, unless None; 0 domains for a
+    cell that never scatters. more: further settings. Raises TableFileError with every mistake
+    of the file, ValueError for settings that don't go together.
+    """
+    title, settings = "", SimulationSettings(cell=CellDescription(domains=DEFAULT_DOMAINS))
+    if table is not None:
+        # Only here: without a table file its libraries are of no use.
+        from pulsetally.simulators.table_file import find_table
+
+        found = find_table(table)
+        title, settings = found.title, found.settings
+    if domains is not None:
+        more["cell"] = replace(settings.cell, domains=domains or None)
+    for name, value in (("family", family), ("seed", seed)):
+        if value is not None:
+            more[name] = value
+    return title, replace(settings, **more)
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -231,8 +258,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument(
         "--family",
         choices=tuple(FAMILIES),
-        default="scpi99",
-        help="what generator and oscilloscope speak",
+        help="what generator and oscilloscope speak (scpi99)",
     )
     transport = parser.add_mutually_exclusive_group()
     transport.add_argument(
@@ -250,11 +276,13 @@ def main(arguments: Sequence[str] | None = None) -> int:
         const="hislip",
         help="speak HiSLIP on the TCP ports instead of plain text",
     )
-    parser.add_argument("--seed", type=int, default=1, help="seed of everything random")
+    parser.add_argument(
+        "--table", metavar="FILE|NAME", help="a table file, or the name of one that ships"
+    )
+    parser.add_argument("--seed", type=int, help="seed of everything random (1)")
     parser.add_argument(
         "--domains",
         type=int,
-        default=DEFAULT_DOMAINS,
         help="number of domains, whose fewness makes full counts scatter; 0: no scatter",
     )
     for name in ("generator", "oscilloscope", "control"):
@@ -265,11 +293,11 @@ def main(arguments: Sequence[str] | None = None) -> int:
     given = parser.parse_args(arguments)
 
     try:
-        cell = cell_with(given.domains)
-        settings = SimulationSettings(
-            cell=cell,
+        title, settings = chosen_settings(
+            given.table,
             family=given.family,
             transport=given.transport,
+            domains=given.domains,
             seed=given.seed,
             generator_port=given.generator_port,
             oscilloscope_port=given.oscilloscope_port,
@@ -277,9 +305,14 @@ def main(arguments: Sequence[str] | None = None) -> int:
             until_stdin_closes=given.until_stdin_closes,
         )
     except ValueError as error:
-        parser.error(str(error))
+        if given.table is None:
+            parser.error(str(error))
+        # The mistakes of a file, with their places: usage would only hide them.
+        print(error, file=sys.stderr)
+        return 2
+    facts = facts_of(settings, title)
     try:
-        serve(settings, lambda addresses: tell(addresses, as_json=given.json))
+        serve(settings, lambda addresses: tell(addresses, facts, as_json=given.json))
     except OSError as error:
         print(f"The simulated bench can't listen: {error}.", file=sys.stderr)
         return 1

@@ -198,7 +198,7 @@ def test_the_program_announces_serves_and_ends_quietly(how: str) -> None:
         assert process.stdout is not None
         assert process.stdin is not None
         addresses = json.loads(process.stdout.readline())
-        assert list(addresses) == ["generator", "oscilloscope", "control"]
+        assert list(addresses) == ["generator", "oscilloscope", "control", "table"]
         with Client(addresses["generator"]) as client:
             assert client.ask("*IDN?").split(",")[2] == "5"
             if how == "stdin":
