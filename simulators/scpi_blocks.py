@@ -30,23 +30,35 @@ def element_end(buffer: bytes | bytearray, start: int, *, whole: bool) -> int | 
     length field is faulty, the index behind the '#' comes back and the reader of the
     element reports the fault.
     """
+    return look_for_end(buffer, start, whole=whole)[0]
+
+
+def look_for_end(
+    buffer: bytes | bytearray, start: int, *, whole: bool, looked: int = 0
+) -> tuple[int | None, int]:
+    """Return what element_end does, and how far this was looked through where that is None.
+
+    looked: what came back when less had arrived, so that a string that comes byte by byte
+    is looked through once and not once a byte.
+    """
     if buffer[start] in _QUOTES:
-        return _string_end(buffer, start, whole)
-    return _block_end(buffer, start, whole)
+        return _string_end(buffer, start, max(start + 1, looked), whole)
+    return _block_end(buffer, start, whole), start
 
 
-def _string_end(buffer: bytes | bytearray, start: int, whole: bool) -> int | None:
+def _string_end(
+    buffer: bytes | bytearray, start: int, position: int, whole: bool
+) -> tuple[int | None, int]:
     quote = buffer[start : start + 1]
-    position = start + 1
     while True:
         closing = buffer.find(quote, position)
         if closing < 0:
-            return None
+            return None, len(buffer)
         if closing + 1 == len(buffer):
             # Only the next byte tells an end from the first half of a doubled quote.
-            return closing + 1 if whole else None
+            return (closing + 1 if whole else None), closing
         if buffer[closing + 1] != quote[0]:
-            return closing + 1
+            return closing + 1, closing + 1
         position = closing + 2
 
 

@@ -2,9 +2,10 @@
 
 What IEEE Std 488.2 says and a byte stream can't show: an answer is sent as soon as its
 message ends, and the engine never learns whether anybody read it. So a query is never
-found interrupted (-410, which a transport that knows better can report) or deadlocked
-(-430), and nobody can ask for an answer that was not made (-420). Only -440, a query
-behind an answer without an end of its own, is left.
+found interrupted (-410, which a transport that knows better can report), and nobody can
+ask for an answer that was not made (-420). What is left is -440, a query behind an answer
+without an end of its own, and -430, a message whose answers together are more than an
+instrument holds.
 """
 
 from collections.abc import Iterator
@@ -30,10 +31,15 @@ class ScpiEngine:
 
     device: the instrument; several engines may share one.
     limit: most bytes of one message; a longer one is -363 and is left out.
+    answer_limit: most bytes of all answers to one message. With more, -430: they are all
+    forgotten, and the message's further queries are left out (IEEE 488.2 6.3.1.7, from
+    memory).
     """
 
-    def __init__(self, device: ScpiDevice, *, limit: int = 65_536) -> None:
-        self._device = device
+    def __init__(
+        self, device: ScpiDevice, *, limit: int = 65_536, answer_limit: int = 1 << 26
+    ) -> None:
+        self._device, self._answer_limit = device, answer_limit
         self._reader = MessageReader(limit)
 
     def receive(self, data: bytes) -> bytes:
@@ -72,7 +78,8 @@ class ScpiEngine:
         device.begin_message()
         answers: list[bytes] = []
         path: tuple[str, ...] = ()
-        endless = unterminated = False
+        endless = unterminated = deadlocked = False
+        held_bytes = 0
         for unit in split_units(message):
             try:
                 header, data = split_header(unit)
@@ -88,13 +95,20 @@ class ScpiEngine:
                     self._end_coupled()
                 if query and endless:
                     raise ScpiError(-440)
+                if query and deadlocked:
+                    continue
                 answer = self._do(command, query, suffixes, elements, bool(answers))
                 if answer is not None:
                     if device.manner.echoes and not header.startswith("*"):
                         answer = b"%s %s" % (":".join(mnemonics).upper().encode("ascii"), answer)
                     answers.append(answer)
                     endless, unterminated = command.indefinite, command.unterminated
+                    held_bytes += len(answer)
                 device.refresh()
+                if held_bytes > self._answer_limit:
+                    answers.clear()
+                    held_bytes, endless, deadlocked = 0, False, True
+                    raise ScpiError(-430)
             except ScpiError as error:
                 device.status.report(error)
                 if error.number in _COMMAND_ERRORS:

@@ -9,7 +9,7 @@ import re
 from collections.abc import Iterator
 from dataclasses import dataclass
 
-from pulsetally.simulators.scpi_blocks import block_payload, element_end
+from pulsetally.simulators.scpi_blocks import block_payload, element_end, look_for_end
 from pulsetally.simulators.scpi_errors import ScpiError
 from pulsetally.simulators.scpi_numbers import read_decimal, read_non_decimal
 
@@ -82,7 +82,8 @@ class MessageReader:
     def __init__(self, limit: int = 65_536) -> None:
         self._limit = limit
         self._buffer = bytearray()
-        self._scanned = 0
+        # Up to where no message ends; and, in a string that begins there, no string.
+        self._scanned = self._looked = 0
         self._skipping = False
 
     def feed(self, data: bytes) -> list[bytes | ScpiError]:
@@ -102,7 +103,7 @@ class MessageReader:
                 return found
             found.append(bytes(self._buffer[:end]))
             del self._buffer[: end + 1]
-            self._scanned = 0
+            self._scanned = self._looked = 0
 
     @property
     def amid_message(self) -> bool:
@@ -116,13 +117,13 @@ class MessageReader:
         """
         message = None if self._skipping or not self._buffer else bytes(self._buffer)
         self._buffer.clear()
-        self._scanned, self._skipping = 0, False
+        self._scanned, self._looked, self._skipping = 0, 0, False
         return message
 
     def _skip_line(self) -> bool:
         newline = self._buffer.find(b"\n")
         del self._buffer[: newline + 1 if newline >= 0 else len(self._buffer)]
-        self._scanned = 0
+        self._scanned = self._looked = 0
         self._skipping = newline < 0
         return newline >= 0
 
@@ -134,11 +135,13 @@ class MessageReader:
                 return None
             if stop.group() == b"\n":
                 return stop.start()
-            end = element_end(self._buffer, stop.start(), whole=False)
+            end, self._looked = look_for_end(
+                self._buffer, stop.start(), whole=False, looked=self._looked
+            )
             if end is None:
                 self._scanned = stop.start()
                 return None
-            self._scanned = end
+            self._scanned, self._looked = end, 0
 
 
 def split_units(message: bytes) -> Iterator[bytes]:

@@ -57,7 +57,11 @@ class Notebook(ScpiDevice):
         self.operation = 0
         self.declare([*self._tree_commands(), *self._parameter_commands()])
         self.declare([*self._query_commands(), *self._status_commands()])
+
+    def with_words(self) -> "Notebook":
+        """Add a node WORD:<mnemonic> for each published mnemonic."""
         self.declare([self.noting(f":WORD:{long}") for long, _ in MNEMONIC_PAIRS])
+        return self
 
     def noting(self, pattern: str, *parameters: Parameter) -> Command:
         return Command(

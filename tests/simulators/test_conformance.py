@@ -29,8 +29,7 @@ class Lines:
 
     def __init__(self, transport: str, stack: ExitStack) -> None:
         self.transport = transport
-        self.notebook = Notebook()
-        address = stack.enter_context(serving(self.notebook, transport))
+        address = stack.enter_context(serving(Notebook().with_words(), transport))
         self._lines = {("scpi99", "notebook"): stack.enter_context(closing(open_line(address)))}
         for family in FAMILIES:
             settings = SimulationSettings(family=family, transport=transport)

@@ -72,6 +72,23 @@ def test_any_rubbish_is_cut_alike_whole_and_in_pieces(
     assert fed(pieces, limit) == fed([whole], limit)
 
 
+@given(st.text("';\"\n ", max_size=30).map(str.encode), st.data())
+def test_strings_are_cut_alike_however_they_come(tail: bytes, drawn: st.DataObject) -> None:
+    whole = b"T '" + tail
+    cuts = drawn.draw(st.lists(st.integers(0, len(whole)), max_size=6))
+    pieces = [whole[a:b] for a, b in pairwise([0, *sorted(cuts), len(whole)])]
+    assert fed(pieces) == fed([whole])
+
+
+def test_a_string_of_quotes_that_comes_byte_by_byte_is_looked_through_once() -> None:
+    # Each byte again from the string's begin would be a thousand million looks.
+    reader = MessageReader()
+    assert reader.feed(b"T '") == []
+    for _ in range(60_000):
+        assert reader.feed(b"'") == []
+    assert reader.feed(b"'\n") == [b"T '" + b"'" * 60_001]
+
+
 def test_a_message_of_exactly_the_limit_is_read() -> None:
     assert fed([b"A" * 16 + b"\nB\n"], limit=16) == [b"A" * 16, b"B"]
 
