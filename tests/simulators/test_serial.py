@@ -10,46 +10,14 @@ from contextlib import closing
 
 import numpy as np
 import pytest
-import pyvisa
-from pyvisa.resources import SerialInstrument
 
 from pulsetally.simulators.cell import CellDescription
-from pulsetally.simulators.families import FAMILIES
 from pulsetally.simulators.simulate import Addresses, SimulationSettings, main
-from tests.simulators.counting import COUNTS, ERROR_QUERIES, let_settle, wait_for
+from tests.simulators.counting import let_settle, wait_for
+from tests.simulators.plain_visa import VisaLine
 from tests.simulators.sockets import Client, served
 
 LINEAR = CellDescription(remanent_polarization=1e-9)
-
-
-class VisaLine:
-    """One instrument through PyVISA and pyvisa-py, as any script would open it."""
-
-    def __init__(self, address: str) -> None:
-        # One resource manager serves the whole process, so that it is not closed here.
-        manager = pyvisa.ResourceManager("@py")
-        resource = manager.open_resource(
-            address, read_termination="\n", write_termination="\n", timeout=10_000
-        )
-        assert isinstance(resource, SerialInstrument)
-        self._resource = resource
-
-    def write(self, text: str) -> None:
-        self._resource.write(text)
-
-    def ask(self, text: str) -> str:
-        return self._resource.query(text)
-
-    def ask_block(self, text: str, *, before: bytes = b"", behind: bytes = b"\n") -> bytes:
-        self._resource.write(text)
-        assert self._resource.read_bytes(len(before) + 1) == before + b"#"
-        digits = int(self._resource.read_bytes(1))
-        payload = self._resource.read_bytes(int(self._resource.read_bytes(digits)))
-        assert not behind or self._resource.read_bytes(len(behind)) == behind
-        return payload
-
-    def close(self) -> None:
-        self._resource.close()
 
 
 class BareLine:
@@ -104,28 +72,6 @@ def let_it_notice(control: Client) -> None:
     """Return when the server has looked at everything that was there before the call."""
     for _ in range(5):
         control.ask("*OPC?")
-
-
-@pytest.mark.parametrize("family", FAMILIES)
-def test_plain_visa_sets_up_arms_fires_and_fetches(family: str) -> None:
-    with (
-        served(SimulationSettings(family=family, transport="serial")) as addresses,
-        closing(VisaLine(addresses.generator)) as generator,
-        closing(VisaLine(addresses.oscilloscope)) as oscilloscope,
-    ):
-        assert generator.ask("*IDN?").startswith("PULSETALLY,SIMULATED FUNCTION GENERATOR")
-        serial = COUNTS[family](generator, oscilloscope, 2)
-        query, nothing = ERROR_QUERIES[family]
-        assert generator.ask(query) == oscilloscope.ask(query) == nothing
-    with (
-        served(SimulationSettings(family=family)) as addresses,
-        Client(addresses.generator) as socket_generator,
-        Client(addresses.oscilloscope) as socket_oscilloscope,
-    ):
-        ethernet = COUNTS[family](socket_generator, socket_oscilloscope, 2)
-    # Not equal: how often a client asked moves the sample clock, and with it the noise.
-    assert serial == pytest.approx(ethernet, abs=0.03)
-    assert serial[1] > serial[0]
 
 
 def test_addresses_are_serial_and_the_control_port_is_not(addresses: Addresses) -> None:
