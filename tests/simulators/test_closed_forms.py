@@ -110,7 +110,7 @@ def test_a_ramp_switches_one_region_by_an_exponential_integral(volts: float) -> 
 
 # FE-14 (A): with a full count of 31 in the noiseless model, k stored pulses leave 31 - k. Full
 # is where 30.5 pulses' worth of exponential switching has been passed.
-@pytest.mark.parametrize("stored", [0, 1, 2, 7, 15, 29, 30])
+@pytest.mark.parametrize("stored", [0, 1, 15, 30])
 def test_a_stored_count_and_its_remainder_make_up_the_full_count(stored: int) -> None:
     width, tau = 50e-9, 1e-6
     attempt = tau * math.exp(-25.0 / 4.0)

@@ -81,7 +81,7 @@ def test_a_higher_amplitude_fills_in_fewer_pulses(cell: CellDescription) -> None
 @pytest.mark.parametrize("spread_volts", [0.0, 5.0])
 def test_log_count_is_a_straight_line_against_inverse_amplitude(spread_volts: float) -> None:
     cell = replace(SLOW_CELL, activation_spread=spread_volts)
-    amplitudes = np.array([2.8, 3.0, 3.2, 3.5, 3.9])
+    amplitudes = np.array([2.8, 3.1, 3.5, 3.9])
     logs = np.log(
         [half_count(cell, SMALL_RESISTANCE, volts=volts, seconds=1e-6) for volts in amplitudes]
     )
@@ -174,7 +174,7 @@ def test_a_pulse_shorter_than_the_circuit_never_passes_the_threshold() -> None:
     wiring = Wiring()
     table = connected(CellDescription(), wiring)
     preset(table)
-    ends = [pulse(table, 4.0, 50e-6) for _ in range(100)]
+    ends = [pulse(table, 4.0, 50e-6) for _ in range(60)]
     # A: a full cell is a linear capacitor of 307.1 pF.
     tau_seconds = wiring.branch_ohms * 307.14e-12
     ceiling = 4.0 * -math.expm1(-50e-6 / tau_seconds)
