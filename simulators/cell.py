@@ -9,6 +9,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from statistics import NormalDist
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -38,7 +39,7 @@ FULLY_DOWN_FRACTION = 1e-4
 USED_FRACTION = 1e-3
 
 # Nothing switches closer to the imprint voltage than this; it only keeps a/|v| finite.
-_LEAST_DRIVING_VOLTS = 1e-9
+LEAST_DRIVING_VOLTS = 1e-9
 
 Array = NDArray[np.float64]
 
@@ -133,6 +134,39 @@ class CellDescription:
         return guarded
 
 
+class SwitchingLaw(NamedTuple):
+    """The activation law of all regions, as plain numbers.
+
+    barriers: activation voltages to the power alpha, V^alpha, ascending.
+    """
+
+    barriers: Array
+    alpha: float
+    attempts_per_second: float
+
+
+def rates_and_slopes(law: SwitchingLaw, driving_volts: Sequence[float]) -> tuple[Array, Array]:
+    """Evaluate the activation law at distances from the imprint voltage, V.
+
+    At or below 0 nothing switches. Return rates 1/tau (1/s) and their derivatives
+    (1/(s V)): a row for each distance, a column for each region.
+    """
+    inverses = np.array([[1 / max(volts, LEAST_DRIVING_VOLTS)] for volts in driving_volts])
+    powers = inverses if law.alpha == 1 else inverses**law.alpha
+    slopes = law.barriers * -powers
+    rates = np.exp(slopes)
+    rates *= law.attempts_per_second
+    slopes *= rates
+    slopes *= inverses * -law.alpha
+    return rates, slopes
+
+
+def softest_rate(law: SwitchingLaw, driving_volts: float) -> float:
+    """Return the largest rate that any region has this far (V) from imprint, 1/s."""
+    distance = max(driving_volts, LEAST_DRIVING_VOLTS)
+    return law.attempts_per_second * math.exp(-law.barriers[0] * (1 / distance) ** law.alpha)
+
+
 class Cell:
     """The state of one cell: which part of each region is up.
 
@@ -140,6 +174,7 @@ class Cell:
     frozen: nothing switches now, whatever the voltage.
     imprint_volts: at which neither direction is driven, V. remanent_polarization: C/m2, and
     switchable_coulombs, C: of what is not worn out. They begin as described.
+    law: of its regions now. used: whether it has been up since domains were last dealt.
     """
 
     def __init__(self, description: CellDescription, *, seed: int) -> None:
@@ -148,14 +183,11 @@ class Cell:
         self.imprint_volts = description.imprint_volts
         self.remanent_polarization = description.remanent_polarization
         self.switchable_coulombs = description.switchable_coulombs
-        self.activations = description.activations()
+        self.used = False
+        self.scale_activations(1.0)
         self.up: Array = np.zeros(description.regions)
         self.weights: Array = np.full(description.regions, 1 / description.regions)
         self._random = np.random.default_rng(seed)
-        self._negative_activations = -self.activations
-        self._attempts_per_second = 1 / description.attempt_seconds
-        self._softest_volts = float(self.activations[0])
-        self._used = False
         self._deal()
 
     @property
@@ -168,46 +200,10 @@ class Cell:
         """Polarization, C/m2; -P_r when fully down."""
         return self.remanent_polarization * (2 * self.up_fraction - 1)
 
-    def rates_and_slopes(self, driving_volts: Sequence[float]) -> tuple[Array, Array]:
-        """Evaluate the activation law at distances from the imprint voltage, V.
-
-        At or below 0 nothing switches. Return rates 1/tau (1/s) and their derivatives
-        (1/(s V)): a row for each distance, a column for each region.
-        """
-        alpha = self.description.alpha
-        inverses = np.array([[1 / max(volts, _LEAST_DRIVING_VOLTS)] for volts in driving_volts])
-        barriers = self._negative_activations * inverses
-        if alpha != 1:
-            barriers = -((-barriers) ** alpha)
-        rates = np.exp(barriers)
-        rates *= self._attempts_per_second
-        slopes = barriers
-        slopes *= rates
-        slopes *= inverses * -alpha
-        return rates, slopes
-
     def rates(self, driving_volts: float) -> Array:
         """Return each region's switching rate, 1/s, this far (V) from the imprint voltage."""
-        rates: Array = self.rates_and_slopes((driving_volts,))[0][0]
+        rates: Array = rates_and_slopes(self.law, (driving_volts,))[0][0]
         return rates
-
-    def softest_rate(self, driving_volts: float) -> float:
-        """Return the largest rate that any region has this far (V) from imprint, 1/s."""
-        distance = max(driving_volts, _LEAST_DRIVING_VOLTS)
-        barrier = (self._softest_volts / distance) ** self.description.alpha
-        return math.exp(-barrier) / self.description.attempt_seconds
-
-    def remaining(self, side: int) -> Array:
-        """Return the part of each region that can still go up (side 1) or down (side -1)."""
-        if self.frozen:
-            return np.zeros_like(self.up)
-        return 1 - self.up if side > 0 else self.up.copy()
-
-    def switch(self, side: int, kept: Array) -> None:
-        """Keep this part of what each region can still switch to a side; switch the rest."""
-        if self.frozen:
-            return
-        self.up = 1 - (1 - self.up) * kept if side > 0 else self.up * kept
 
     def lose(self, side: int, kept: float) -> None:
         """Keep this part of what each region has up (side 1) or down (side -1)."""
@@ -221,8 +217,10 @@ class Cell:
     def scale_activations(self, factor: float) -> None:
         """Multiply the described activation voltages by a factor."""
         self.activations = self.description.activations() * factor
-        self._negative_activations = -self.activations
-        self._softest_volts = float(self.activations[0])
+        alpha = self.description.alpha
+        self.law = SwitchingLaw(
+            self.activations**alpha, alpha, 1 / self.description.attempt_seconds
+        )
 
     def settle(self) -> bool:
         """Deal new domains when the cell has become fully down; tell whether that was so."""
@@ -230,10 +228,10 @@ class Cell:
             return False
         fraction = self.up_fraction
         if fraction > USED_FRACTION:
-            self._used = True
-        if not self._used or fraction >= FULLY_DOWN_FRACTION:
+            self.used = True
+        if not self.used or fraction >= FULLY_DOWN_FRACTION:
             return False
-        self._used = False
+        self.used = False
         # What little is still up is spread evenly: the polarization must not jump
         # when the weights change, or charge would appear from nowhere.
         self.up = np.full_like(self.up, fraction)

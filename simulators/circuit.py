@@ -239,12 +239,13 @@ def wright_omega(argument: float) -> float:
 
 def clamp_current(node_volts: float, clamp_volts: float) -> tuple[float, float]:
     """Return a clamp's current (A) and slope (S); equal and opposite for both polarities."""
-    forward, forward_slope = _clamp_arm((node_volts - clamp_volts) / CLAMP_FOLD_VOLTS)
-    reverse, reverse_slope = _clamp_arm((-node_volts - clamp_volts) / CLAMP_FOLD_VOLTS)
+    forward, forward_slope = clamp_arm((node_volts - clamp_volts) / CLAMP_FOLD_VOLTS)
+    reverse, reverse_slope = clamp_arm((-node_volts - clamp_volts) / CLAMP_FOLD_VOLTS)
     return forward - reverse, forward_slope + reverse_slope
 
 
-def _clamp_arm(folds: float) -> tuple[float, float]:
+def clamp_arm(folds: float) -> tuple[float, float]:
+    """Return the current (A) and slope (S) of one polarity, so many folds above the knee."""
     growth = math.exp(min(folds, _MOST_CLAMP_FOLDS))
     beyond = max(folds - _MOST_CLAMP_FOLDS, 0.0)
     return CLAMP_KNEE_AMPERES * growth * (

@@ -5,6 +5,7 @@ from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import Cell
 from pulsetally.simulators.circuit import Circuit
+from pulsetally.simulators.march import NEVER, Stop, is_beyond
 from pulsetally.simulators.solver import Ramp, Solver
 from pulsetally.simulators.wear import Incubation
 
@@ -59,12 +60,13 @@ class IncubatingSolver(Solver):
         rising[0] = True
         return whole[rising], all_volts[rising]
 
-    def _stops_here(self) -> bool:
-        return not self.cell.frozen and self._is_back(self.node_volts)
+    def _stop(self) -> Stop:
+        return NEVER if self.cell.frozen else self._leaving()
 
-    def _is_back(self, volts: float) -> bool:
+    def _leaving(self) -> Stop:
         within = LEAVING_SHARE * self._incubation.threshold_volts
-        return self._beyond_side * (volts - self.cell.imprint_volts) < within
+        side = self._beyond_side
+        return Stop(side, self.cell.imprint_volts + side * within)
 
     def _piece(self, ramp: Ramp) -> tuple[Array, Array]:
         """Go on to the ramp's end or to the next instant at which something changes."""
@@ -79,7 +81,7 @@ class IncubatingSolver(Solver):
             return times, volts
         if not self.cell.frozen:
             times, volts = super().run(ramp, sampled=True)
-            if self._is_back(self.node_volts):
+            if is_beyond(self._leaving(), self.node_volts):
                 self._go_back()
             return times, volts
         short = min(ramp.seconds, waiting_seconds)

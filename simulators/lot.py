@@ -19,7 +19,8 @@ from pulsetally.simulators.cell import LEAST_ACTIVATION_SHARE, CellDescription
 from pulsetally.simulators.circuit import Circuit, Wiring
 from pulsetally.simulators.collocation import AT_BEGIN, EMBEDDED, MATRIX, NODES
 from pulsetally.simulators.drive import PulseTrain
-from pulsetally.simulators.solver import FIRST_MOVE_VOLTS, StepTooSmallError
+from pulsetally.simulators.march import FIRST_MOVE_VOLTS
+from pulsetally.simulators.solver import StepTooSmallError
 
 Array = NDArray[np.float64]
 # What has a value for each region of each cell is in single precision, which moves an end

@@ -7,29 +7,21 @@ from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import Cell
 from pulsetally.simulators.circuit import Circuit
-from pulsetally.simulators.collocation import NODES, Point, Trial, Triple, point_at, try_step
-from pulsetally.simulators.trajectory import (
-    Quintic,
-    curve_of,
-    decay_times,
-    extrapolate,
-    sample_step,
+from pulsetally.simulators.collocation import Equations, equations_of
+from pulsetally.simulators.compiled import march_in_use
+from pulsetally.simulators.march import (
+    FIRST_STRIDE,
+    NEVER,
+    Course,
+    State,
+    Stop,
+    Stride,
+    reach,
+    softest_is_quiet,
 )
+from pulsetally.simulators.trajectory import decay_times
 
 Array = NDArray[np.float64]
-
-# Largest embedded error of a step, V. The embedded formula is of order 3 and the result
-# of order 5, so what is really lost in a step is far less.
-STEP_TOLERANCE_VOLTS = 2e-3
-# Largest distance between the dense output and the step's inner nodes, V.
-DENSE_TOLERANCE_VOLTS = 1e-4
-# Right after a kink a fast transient may still run, which hides from that measure.
-KINK_CAUTION = 0.25
-_LARGEST_GROWTH, _LARGEST_SHRINK, _SAFETY = 12.0, 0.15, 0.85
-FIRST_MOVE_VOLTS = 0.3
-_LEAST_SECONDS = 1e-24
-# A stretch over which less than this part of the cell could switch is left unswitched.
-QUIET_FRACTION = 1e-12
 
 
 class StepTooSmallError(RuntimeError):
@@ -68,7 +60,6 @@ class Solver:
         self.cell, self.circuit = cell, circuit
         self.node_volts = node_volts
         self._side = 1
-        self._next_seconds = 0.0
 
     def run(self, ramp: Ramp, *, sampled: bool) -> tuple[Array, Array]:
         """Integrate along a ramp.
@@ -79,56 +70,58 @@ class Solver:
         """
         times, volts = [np.zeros(1)], [np.array([self.node_volts])]
         done_seconds = 0.0
-        begin: Point | None = None
-        previous: tuple[Quintic, Trial] | None = None
-        while done_seconds < ramp.seconds:
+        stride = FIRST_STRIDE
+        stopped = False
+        while done_seconds < ramp.seconds and not stopped:
             rest = ramp.after(done_seconds)
-            if self.circuit.is_linear and self._is_quiet(rest, begin):
-                more_times, more_volts = self._follow(rest)
-                taken_seconds = rest.seconds
-            else:
-                if begin is None:
-                    begin = self._begin(rest)
-                    self._next_seconds = self._first_seconds(rest, begin)
-                trial, quintic = self._step(rest, begin, previous)
-                taken_seconds = trial.seconds
-                if sampled:
-                    more_times, more_volts = sample_step(quintic, trial.seconds)
-                else:
-                    more_times, more_volts = np.array([taken_seconds]), np.array([trial.volts[2]])
-                previous = (quintic, trial)
-                begin = self._accept(rest, trial)
-            more_times += done_seconds
-            last = taken_seconds >= rest.seconds
-            done_seconds = ramp.seconds if last else done_seconds + taken_seconds
-            more_times[-1] = done_seconds
-            times.append(more_times)
-            volts.append(more_volts)
-            if self._stops_here():
-                break
+            equations = equations_of(self.cell, self.circuit)
+            quiet = equations.linear and self._is_idle(equations, rest)
+            if not quiet:
+                course = self._march(equations, stride, rest, sampled=sampled)
+                quiet, stopped, stride = course.quiet, course.stopped, course.stride
+                times.append(course.times + done_seconds)
+                volts.append(course.volts)
+                ended = course.seconds >= rest.seconds
+                done_seconds = ramp.seconds if ended else done_seconds + course.seconds
+                times[-1][-1:] = done_seconds
+            if quiet:
+                more_times, more_volts = self._follow(ramp.after(done_seconds))
+                more_times += done_seconds
+                more_times[-1] = done_seconds = ramp.seconds
+                times.append(more_times)
+                volts.append(more_volts)
         return np.concatenate(times), np.concatenate(volts)
 
-    def _stops_here(self) -> bool:
-        """Tell whether to return before the ramp's end; for those who watch the node."""
-        return False
+    def _stop(self) -> Stop:
+        """Tell where to return before the ramp's end; for those who watch the node."""
+        return NEVER
 
-    def _is_quiet(self, ramp: Ramp, begin: Point | None) -> bool:
-        """Tell whether the cell switches nothing, wherever a linear node can get to."""
-        if self.cell.frozen:
-            return True
-        if begin is not None and begin.moving * ramp.seconds > QUIET_FRACTION:
-            return False
-        gain = self.circuit.gain
-        reach = (self.node_volts, gain * ramp.begin_volts, gain * ramp.at(ramp.seconds))
+    def _is_idle(self, equations: Equations, ramp: Ramp) -> bool:
+        """Tell, cheaply, whether the cell switches nothing; it may be so all the same."""
+        up_volts, down_volts = reach(
+            equations, self.node_volts, ramp.begin_volts, ramp.at(ramp.seconds)
+        )
+        return softest_is_quiet(equations, up_volts, down_volts, ramp.seconds)
+
+    def _march(self, equations: Equations, stride: Stride, ramp: Ramp, *, sampled: bool) -> Course:
         cell = self.cell
-        imprint_volts = cell.imprint_volts
-        up_volts, down_volts = max(reach) - imprint_volts, imprint_volts - min(reach)
-        # Cheap, and enough in most idle times: not even the softest region moves.
-        if cell.softest_rate(max(up_volts, down_volts)) * ramp.seconds < QUIET_FRACTION:
-            return True
-        rates, _ = cell.rates_and_slopes((up_volts, down_volts))
-        moving = rates[0] * (1 - cell.up) + rates[1] * cell.up
-        return bool(moving @ cell.weights * ramp.seconds < QUIET_FRACTION)
+        course = march_in_use()(
+            equations,
+            State(cell.up, self.node_volts, self._side, cell.used),
+            stride,
+            ramp.begin_volts,
+            ramp.volts_per_second,
+            ramp.seconds,
+            sampled,
+            self._stop(),
+        )
+        cell.up, self.node_volts, self._side, cell.used = course.state
+        if course.failed:
+            raise StepTooSmallError(
+                f"no step from {self.node_volts} V at the node satisfies the equations"
+            )
+        cell.settle()
+        return course
 
     def _follow(self, ramp: Ramp) -> tuple[Array, Array]:
         """Follow a ramp in closed form: one resistance and one capacitance."""
@@ -145,112 +138,3 @@ class Solver:
         volts = forced_volts + forced_slope * times + decaying_volts * np.exp(-times / tau_seconds)
         self.node_volts = float(volts[-1])
         return times, volts
-
-    def _begin(self, ramp: Ramp) -> Point:
-        distance = self.node_volts - self.cell.imprint_volts
-        if distance != 0:
-            self._side = 1 if distance > 0 else -1
-        return self._point(ramp)
-
-    def _point(self, ramp: Ramp) -> Point:
-        return point_at(
-            self.cell,
-            self.circuit,
-            self.node_volts,
-            self._side,
-            emf_volts=ramp.begin_volts,
-            emf_slope=ramp.volts_per_second,
-        )
-
-    def _first_seconds(self, ramp: Ramp, begin: Point) -> float:
-        """Return a step over which the node moves by about FIRST_MOVE_VOLTS."""
-        amperes, _, _ = self.circuit.node_current(ramp.at(ramp.seconds), self.node_volts)
-        slope = max(abs(begin.slope), abs(amperes) / self.circuit.farads)
-        return min(ramp.seconds, FIRST_MOVE_VOLTS / slope) if slope > 0 else ramp.seconds
-
-    def _step(
-        self, ramp: Ramp, begin: Point, previous: tuple[Quintic, Trial] | None
-    ) -> tuple[Trial, Quintic]:
-        seconds = self._next_seconds
-        dense_volts = DENSE_TOLERANCE_VOLTS * (KINK_CAUTION if previous is None else 1)
-        flipped = False
-        while seconds > _LEAST_SECONDS:
-            # A sliver left over would cost a whole step.
-            if seconds > 0.9 * ramp.seconds:
-                seconds = ramp.seconds
-            trial = try_step(
-                self.cell,
-                self.circuit,
-                begin,
-                seconds,
-                _guess(begin, previous, seconds),
-                emf_volts=ramp.begin_volts,
-                emf_slope=ramp.volts_per_second,
-            )
-            if trial is None:
-                seconds *= 0.25
-                continue
-            if not self._is_one_sided(begin, trial):
-                if flipped or trial.moved > QUIET_FRACTION:
-                    seconds *= self._crossing(begin, trial)
-                else:
-                    self._side, flipped = -begin.side, True
-                    begin = self._point(ramp)
-                continue
-            quintic, off_volts = curve_of(begin, trial)
-            error = max(
-                trial.error_volts / STEP_TOLERANCE_VOLTS,
-                off_volts / dense_volts,
-            )
-            factor = _SAFETY * max(error, 1e-9) ** -0.25
-            factor = min(max(factor, _LARGEST_SHRINK), _LARGEST_GROWTH)
-            if error > 1:
-                seconds *= factor
-                continue
-            self._next_seconds = factor * seconds
-            return trial, quintic
-        raise StepTooSmallError(
-            f"no step from {self.node_volts} V at the node satisfies the equations"
-        )
-
-    def _is_one_sided(self, begin: Point, trial: Trial) -> bool:
-        """Tell whether the step neglects no switching to the other side."""
-        imprint_volts = self.cell.imprint_volts
-        other = max(begin.side * (imprint_volts - volts) for volts in trial.volts)
-        if other <= 0 or self.cell.softest_rate(other) * trial.seconds < QUIET_FRACTION:
-            return True
-        shares = self.cell.weights * self.cell.remaining(-begin.side)
-        return bool(shares @ self.cell.rates(other) * trial.seconds < QUIET_FRACTION)
-
-    def _crossing(self, begin: Point, trial: Trial) -> float:
-        """Return the part of a step after which the node comes to the imprint voltage."""
-        imprint_volts = self.cell.imprint_volts
-        before, place = begin.volts - imprint_volts, 0.0
-        for node, volts in zip(NODES, trial.volts, strict=True):
-            after = volts - imprint_volts
-            if before * after <= 0 and before != after:
-                found = place + (node - place) * before / (before - after)
-                return min(max(found, 0.05), 0.8)
-            before, place = after, node
-        return 0.5
-
-    def _accept(self, ramp: Ramp, trial: Trial) -> Point:
-        self.cell.switch(trial.end.side, trial.kept)
-        self.node_volts = trial.volts[2]
-        if self.cell.settle():
-            # The new weights change how fast the node's charge goes into the cell.
-            return self._point(ramp.after(trial.seconds))
-        return trial.end
-
-
-def _guess(begin: Point, previous: tuple[Quintic, Trial] | None, seconds: float) -> Triple:
-    """Guess the node at NODES of the next step, V."""
-    if previous is not None:
-        quintic, trial = previous
-        if seconds < 2 * trial.seconds and begin.side == trial.end.side:
-            return extrapolate(quintic, seconds / trial.seconds)
-    limit = FIRST_MOVE_VOLTS
-    first, second, third = (
-        begin.volts + min(max(begin.slope * node * seconds, -limit), limit) for node in NODES
-    )
-    return first, second, third

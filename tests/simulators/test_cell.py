@@ -10,6 +10,8 @@ from pulsetally.simulators.cell import (
     LEAST_ACTIVATION_SHARE,
     Cell,
     CellDescription,
+    rates_and_slopes,
+    softest_rate,
 )
 
 VOLTS_PER_METRE = 1e5  # 1 kV/cm
@@ -76,21 +78,21 @@ def test_switching_times_of_barium_titanate(kilovolts_per_cm: float, seconds: fl
 def test_slope_of_the_rates_is_their_difference_quotient(alpha: float) -> None:
     cell = Cell(CellDescription(alpha=alpha, regions=5), seed=1)
     step = 1e-5
-    rates, slopes = cell.rates_and_slopes((2.0 - step, 2.0, 2.0 + step))
+    rates, slopes = rates_and_slopes(cell.law, (2.0 - step, 2.0, 2.0 + step))
     assert slopes[1] == pytest.approx((rates[2] - rates[0]) / (2 * step), rel=1e-6)
 
 
 def test_nothing_switches_without_a_voltage() -> None:
     cell = Cell(CellDescription(alpha=0.5), seed=1)
-    rates, slopes = cell.rates_and_slopes((0.0, -1.0))
+    rates, slopes = rates_and_slopes(cell.law, (0.0, -1.0))
     assert not rates.any()
     assert not slopes.any()
-    assert cell.softest_rate(0.0) == 0.0
+    assert softest_rate(cell.law, 0.0) == 0.0
 
 
 def test_softest_rate_is_the_largest() -> None:
     cell = Cell(CellDescription(alpha=1.3), seed=1)
-    assert cell.softest_rate(3.0) == pytest.approx(cell.rates(3.0).max(), rel=1e-12)
+    assert softest_rate(cell.law, 3.0) == pytest.approx(cell.rates(3.0).max(), rel=1e-12)
 
 
 # A: the median and the quartiles of a normal distribution lie at 0 and 0.67449 sd.
@@ -113,11 +115,11 @@ def test_activation_voltages_stay_above_zero() -> None:
 def test_polarization_runs_from_down_to_up() -> None:
     cell = Cell(CellDescription(), seed=1)
     assert cell.polarization == -0.25
-    cell.switch(1, np.full(64, 0.5))
+    cell.up = np.full(64, 0.5)
     assert cell.polarization == pytest.approx(0.0, abs=1e-15)
-    cell.switch(1, np.zeros(64))
+    cell.up = np.ones(64)
     assert cell.polarization == pytest.approx(0.25)
-    cell.switch(-1, np.full(64, 0.25))
+    cell.up = np.repeat([1.0, 0.0], [16, 48])
     assert cell.up_fraction == pytest.approx(0.25)
     assert not Cell(CellDescription(), seed=1).settle()
 
