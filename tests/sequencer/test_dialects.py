@@ -41,6 +41,7 @@ FAMILIES = [
     SimulationSettings(family="scpi99"),
     SimulationSettings(family="perdiv"),
     SimulationSettings(family="stateword"),
+    SimulationSettings(family="scpi99", transport="hislip"),
     SimulationSettings(family="scpi99", transport="serial"),
     SimulationSettings(family="stateword", transport="serial"),
 ]
