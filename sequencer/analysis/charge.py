@@ -89,8 +89,9 @@ def cell_charge(
     resting = _resting(times, source_volts, node_volts, before)
     current = _resistive_current(source_volts, node_volts, series_ohms, probe_ohms)
     current = current - np.mean(current[:resting])
-    charge: Samples = cumulative_trapezoid(current, times, initial=0.0)
-    return charge - probe_farads * (node_volts - node_volts[0])
+    taken: Samples = cumulative_trapezoid(current, times, initial=0)
+    probe: Samples = probe_farads * (node_volts - node_volts[0])
+    return taken - probe
 
 
 def charge_noise(
