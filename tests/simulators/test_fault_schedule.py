@@ -2,6 +2,7 @@
 
 import math
 from dataclasses import fields, replace
+from typing import Any
 
 import pytest
 from hypothesis import given
@@ -21,8 +22,8 @@ VALUES = {
 OCCASIONS = ("kind", "instrument", "exchange", "chance", "at_seconds")
 
 
-def fault(kind: str = "no answer", exchange: int = 1, **more: object) -> Fault:
-    return Fault(kind=kind, instrument="generator", exchange=exchange, **more)  # type: ignore[arg-type]
+def fault(kind: str = "no answer", *, exchange: int = 1, **more: Any) -> Fault:
+    return Fault(kind=kind, instrument="generator", exchange=exchange, **more)
 
 
 def run(schedule: FaultSchedule, exchanges: int, kind: str = "no answer") -> list[int]:
@@ -86,10 +87,10 @@ def test_only_a_fault_of_the_cell_has_an_instant(kind: str) -> None:
         ),
     ],
 )
-def test_what_cannot_be_is_refused(wrong: dict[str, object], message: str) -> None:
-    right: dict[str, object] = {"kind": "no answer", "instrument": "generator", "exchange": 1}
+def test_what_cannot_be_is_refused(wrong: dict[str, Any], message: str) -> None:
+    right: dict[str, Any] = {"kind": "no answer", "instrument": "generator", "exchange": 1}
     with pytest.raises(ValueError, match=message):
-        Fault(**(right | wrong))  # type: ignore[arg-type]
+        Fault(**(right | wrong))
 
 
 def test_a_fault_happens_once_at_its_exchange() -> None:
