@@ -10,6 +10,7 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.integrate import cumulative_trapezoid
 
 from pulsetally.sequencer.analysis.pulses import Samples
@@ -29,25 +30,36 @@ class SwitchingUnclear(ValueError):
 class ChargeNoise:
     """Say how sure an integrated charge is, by what makes it unsure.
 
-    random: of the current's noise, in coulombs per root second. offset_amperes: standard
-    uncertainty of the offset that was taken off. rounding: of the digitizer's steps, where
-    noise doesn't blur them, in coulombs. edges: of edges that fall between samples, in coulombs.
+    random: of the current's noise, in coulombs per root second. rest_amperes, step_amperes:
+    standard uncertainties of the offset that was taken off, from noise and from the digitizer's
+    steps. step_charge: what the latter gathers while the channels are away from their rest, in
+    coulombs; back on the same code the error is the same and nothing is gathered.
+    rounding: of the steps away from the rest, where noise doesn't blur them, in coulombs.
+    edges: of edges that fall between samples, in coulombs.
     node_step, node_noise: one step of the node's digitizer (0 where none shows) and one sample's
     standard deviation, in volts.
     """
 
     random: float
-    offset_amperes: float
+    rest_amperes: float
+    step_amperes: float
+    step_charge: float
     rounding: float
     edges: float
     node_step: float
     node_noise: float
 
+    @property
+    def offset_amperes(self) -> float:
+        """Return the standard uncertainty of the offset that was taken off, in amperes."""
+        return math.hypot(self.rest_amperes, self.step_amperes)
+
     def after(self, seconds: float) -> float:
         """Return the charge's standard uncertainty this long after the rest, in coulombs."""
         return math.hypot(
             self.random * math.sqrt(seconds),
-            self.offset_amperes * seconds,
+            self.rest_amperes * seconds,
+            self.step_charge,
             self.rounding,
             self.edges,
         )
@@ -102,32 +114,40 @@ def charge_noise(
     series_ohms: float,
     probe_ohms: float,
     before: float,
+    steps: tuple[float, float] | None = None,
 ) -> ChargeNoise:
     """Estimate how sure the charge of the same record is; arguments and errors are the same.
 
-    The noise is that of the rest. A digitizer's steps are recognized by few distinct values: as
-    long as a channel stays on one, its rounding error (a uniform distribution, JCGM 100:2008,
-    4.3.7) is one and the same and gathers with time.
+    The noise is that of the rest. steps: one code of the source's and of the node's digitizer, in
+    volts; None: told from the closest values of a channel that shows few of them, which is too
+    much where it shows next to none. As long as a channel stays on one code, its rounding error
+    (a uniform distribution, JCGM 100:2008, 4.3.7) is one and the same and gathers with time.
     """
     _check_circuit(series_ohms, probe_ohms, 0.0)
     resting = _resting(times, source_volts, node_volts, before)
     current = _resistive_current(source_volts, node_volts, series_ohms, probe_ohms)
     interval = float(times[-1] - times[0]) / (times.size - 1)
     variance = _long_run_variance(current[:resting])
-    rounding_variance = offset_variance = 0.0
-    for volts in (source_volts, node_volts):
-        step = digitizer_step(volts)
-        runs = _run_seconds(volts[resting:], interval)
+    rounding_variance = offset_variance = gathered_variance = 0.0
+    if steps is None:
+        steps = digitizer_step(source_volts), digitizer_step(node_volts)
+    for volts, step in zip((source_volts, node_volts), steps, strict=True):
+        bias = _step_bias(volts[:resting], step)
+        away = ~np.isin(volts[resting:], np.unique(volts[:resting]))
+        runs = _run_seconds(volts[resting:], away, interval)
         rounding_variance += step**2 / 12 * float(runs @ runs)
-        offset_variance += _step_bias(volts[:resting], step) ** 2
+        offset_variance += bias**2
+        gathered_variance += (bias * interval * np.count_nonzero(away)) ** 2
     jump = float(np.max(np.abs(np.diff(current))))
     return ChargeNoise(
         random=math.sqrt(variance * interval),
-        offset_amperes=math.sqrt(variance / resting + offset_variance / series_ohms**2),
+        rest_amperes=math.sqrt(variance / resting),
+        step_amperes=math.sqrt(offset_variance) / series_ohms,
+        step_charge=math.sqrt(gathered_variance) / series_ohms,
         rounding=math.sqrt(rounding_variance) / series_ohms,
         # An edge is anywhere within its interval, and a pulse has two.
         edges=jump * interval / math.sqrt(6),
-        node_step=digitizer_step(node_volts),
+        node_step=steps[1],
         node_noise=float(np.std(node_volts[:resting], ddof=1)),
     )
 
@@ -203,11 +223,12 @@ def _long_run_variance(current: Samples) -> float:
     return max(variance, length * float(np.var(blocks, ddof=1)))
 
 
-def _run_seconds(volts: Samples, interval: float) -> Samples:
-    """Return how long each run of equal samples lasts, in seconds."""
+def _run_seconds(volts: Samples, counted: NDArray[np.bool_], interval: float) -> Samples:
+    """Return how long each run of equal samples lasts, in seconds; 0 for those not counted."""
     ends = np.flatnonzero(np.diff(volts) != 0)
-    bounds = np.concatenate(([-1], ends, [volts.size - 1]))
-    return interval * np.diff(bounds).astype(np.float64)
+    firsts = np.concatenate(([0], ends + 1))
+    lengths = np.diff(np.append(firsts, volts.size))
+    return interval * np.where(counted[firsts], lengths, 0).astype(np.float64)
 
 
 def _step_bias(volts: Samples, step: float) -> float:

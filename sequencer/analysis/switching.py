@@ -80,8 +80,9 @@ def charge_moved(
     probe_ohms: float,
     probe_farads: float,
     before: float,
+    steps: tuple[float, float] | None = None,
 ) -> ChargeMoved:
-    """Return what one pulse left behind; arguments as for cell_charge.
+    """Return what one pulse left behind; arguments as for cell_charge and charge_noise.
 
     The charge is taken at the end of the record and not at the pulse's top: there, capacitance
     times voltage adds to it, and it doesn't drop out of a difference where the series resistance
@@ -105,6 +106,7 @@ def charge_moved(
         series_ohms=series_ohms,
         probe_ohms=probe_ohms,
         before=before,
+        steps=steps,
     )
     resting = int(np.searchsorted(times, before, side="left"))
     tail = max(_LEAST_TAIL, round(_TAIL_SHARE * times.size))
