@@ -19,6 +19,14 @@ ACKNOWLEDGED = Heard(type=hs.DEVICE_CLEAR_ACKNOWLEDGE)
 FAILURE, SUCCESS, SHARED_RELEASED, INVALID = range(4)
 
 
+@pytest.fixture(autouse=True)
+def the_server_never_stumbles(caplog: pytest.LogCaptureFixture) -> Iterator[None]:
+    """Fail where an exception got as far as the server's event loop."""
+    yield
+    told = [*caplog.get_records("setup"), *caplog.get_records("call")]
+    assert [record.getMessage() for record in told] == []
+
+
 @pytest.fixture(scope="module")
 def addresses() -> Iterator[Addresses]:
     with served(SimulationSettings(cell=LINEAR, transport="hislip")) as found:
