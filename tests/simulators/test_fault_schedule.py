@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 from pulsetally.simulators.faults import INSTRUMENTS, KINDS, Fault, FaultSchedule
 from pulsetally.simulators.settings import SimulationSettings
 
-VALUES = {
+VALUES: dict[str, Any] = {
     "seconds": 2.0,
     "share": 0.25,
     "followed": False,
