@@ -142,6 +142,7 @@ _EVENT_WEIGHTS = (
 )
 
 _LONGEST_DESCRIPTION = 255
+QUEUE_OVERFLOW = -350
 
 
 def event_weight(number: int) -> int:
@@ -191,12 +192,14 @@ class ErrorQueue:
     def __len__(self) -> int:
         return len(self._entries)
 
-    def push(self, error: ScpiError) -> None:
-        """Add an error at the end of the queue."""
-        if len(self._entries) < self._limit:
+    def push(self, error: ScpiError) -> bool:
+        """Add an error at the end of the queue; return whether there was room for it."""
+        has_room = len(self._entries) < self._limit
+        if has_room:
             self._entries.append(error)
         else:
-            self._entries[-1] = ScpiError(-350)
+            self._entries[-1] = ScpiError(QUEUE_OVERFLOW)
+        return has_room
 
     def pop(self) -> ScpiError:
         """Take the oldest error out; number 0 when there is none."""

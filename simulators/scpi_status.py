@@ -1,6 +1,6 @@
 """Keep the status registers of IEEE Std 488.2 section 11 and SCPI-99 Vol. 1 section 9."""
 
-from pulsetally.simulators.scpi_errors import ErrorQueue, ScpiError, event_weight
+from pulsetally.simulators.scpi_errors import QUEUE_OVERFLOW, ErrorQueue, ScpiError, event_weight
 
 OPERATION_COMPLETE = 1
 POWER_ON = 128
@@ -63,8 +63,12 @@ class Status:
         self._event_status = POWER_ON
 
     def report(self, error: ScpiError) -> None:
-        """Put an error into the queue and its class into the event status register."""
-        self.errors.push(error)
+        """Put an error into the queue and its class into the event status register.
+
+        A queue that overflows is an error of its own, with its own class.
+        """
+        if not self.errors.push(error):
+            self._event_status |= event_weight(QUEUE_OVERFLOW)
         self._event_status |= event_weight(error.number)
 
     def set_event_status(self, weight: int) -> None:

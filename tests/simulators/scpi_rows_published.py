@@ -184,8 +184,9 @@ ERRORS = [
     asked("QUE-empty", b":SYST:ERR?;ERR:NEXT?", b'0,"No error";0,"No error"', Device.SCPI99),
     talked("QUE-first in first out", (b"*XYZ", None), (b"*ESE 999", None), (b"*ESE", None),
            device=Device.ANY, errors=(-113, -222, -109)),
-    talked("QUE-overflow", *[(b"*XYZ", None)] * 40, device=Device.ANY,
-           errors=(-113,) * 31 + (-350,)),
+    # 40: a command error (32), and an overflow, which is of the device-specific class (8).
+    talked("QUE-overflow", *[(b"*XYZ", None)] * 32, (b"*ESR?", b"32"), (b"*XYZ", None),
+           (b"*ESR?", b"40"), device=Device.ANY, errors=(-113,) * 31 + (-350,)),
     talked("QUE-text", (b":FAIL", None), (b":SYST:ERR?", b'-200,"Execution error"'),
            device=Device.NOTEBOOK),
     refused("ERR-1", b"*XYZ", -113, device=Device.ANY),
