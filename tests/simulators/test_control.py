@@ -4,9 +4,12 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from pulsetally.simulators import control
 from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.faults import KINDS
 from pulsetally.simulators.scpi_engine import ScpiEngine
 from pulsetally.simulators.simulate import Bench, SimulationSettings
+from tests.simulators.talking import patterns_of
 
 
 class Talk:
@@ -74,6 +77,17 @@ def test_truth_cannot_be_set(talk: Talk) -> None:
     assert talk.say(":SYST:ERR?").startswith("-113,")
 
 
+def test_the_page_of_the_control_port_names_every_command_and_kind(talk: Talk) -> None:
+    page = control.__doc__ or ""
+    for pattern in patterns_of(talk.bench.control):
+        if not pattern.startswith((":STAT", ":SYST")):
+            *root, last = pattern.removeprefix(":").split(":")
+            assert last in page, pattern
+            assert f":{root[0]}:" in page, pattern
+    for kind in KINDS.values():
+        assert f"    {kind.word}" in page or f", {kind.word}" in page, kind
+
+
 # Messages in any order to the three instruments: 0 generator, 1 oscilloscope, 2 control.
 MESSAGES = [
     (0, ":VOLT:HIGH 4;LOW 0"),
@@ -109,11 +123,11 @@ MESSAGES = [
 @given(st.lists(st.sampled_from(MESSAGES), max_size=15))
 def test_any_order_of_messages_keeps_the_bench_whole(messages: list[tuple[int, str]]) -> None:
     bench = Bench(SimulationSettings(cell=CellDescription(regions=4)))
-    generator, oscilloscope, control = (
+    generator, oscilloscope, truth = (
         ScpiEngine(device) for device in (bench.generator, bench.oscilloscope, bench.control)
     )
     for index, message in messages:
-        assert (generator, oscilloscope, control)[index].receive(f"{message}\n".encode()) == b""
+        assert (generator, oscilloscope, truth)[index].receive(f"{message}\n".encode()) == b""
         high, low = map(float, generator.receive(b":VOLT:HIGH?;LOW?\n").split(b";"))
         assert high > low
         condition = int(generator.receive(b":STAT:OPER:COND?\n"))
@@ -124,5 +138,5 @@ def test_any_order_of_messages_keeps_the_bench_whole(messages: list[tuple[int, s
         assert abs(bench.table.terminal_volts) <= 10
     generator.receive(b"*RST\n")
     oscilloscope.receive(b":ABOR\n")
-    assert control.receive(b":TRUT:OUTP?\n") == b"0\n"
+    assert truth.receive(b":TRUT:OUTP?\n") == b"0\n"
     assert oscilloscope.receive(b"*CLS;*RST;:INIT;*WAI;*OPC?;:SYST:ERR?\n") == b'1;0,"No error"\n'
