@@ -56,9 +56,10 @@ class Bench:
             clock=self.clock,
             converter=family.converter,
             power_on=family.scope_power_on,
+            imperfections=settings.digitizer,
             seed=settings.seed,
         )
-        self.table.observe(self.digitizer)
+        self.table.observe(self.digitizer, needs_detail=lambda: self.digitizer.needs_detail)
         self.generator_model = GeneratorModel(
             table=self.table,
             clock=self.clock,
@@ -296,8 +297,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
         title, settings = chosen_settings(
             given.table,
             family=given.family,
-            transport=given.transport,
             domains=given.domains,
+            transport=given.transport,
             seed=given.seed,
             generator_port=given.generator_port,
             oscilloscope_port=given.oscilloscope_port,

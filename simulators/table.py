@@ -1,6 +1,7 @@
 """The table of the simulated bench: one cell, its wiring, the drive and virtual time."""
 
 import math
+from collections.abc import Callable
 from dataclasses import replace
 from typing import Protocol
 
@@ -12,6 +13,7 @@ from pulsetally.simulators.cell import Cell, CellDescription
 from pulsetally.simulators.circuit import Circuit, Wiring
 from pulsetally.simulators.drive import PulseTrain, Rest
 from pulsetally.simulators.incubation import solver_of
+from pulsetally.simulators.repetition import Period
 from pulsetally.simulators.solver import Ramp, Solver
 
 Array = NDArray[np.float64]
@@ -22,6 +24,15 @@ SETTLED_AT_START = (3e-4, 30)
 SETTLED_AGAIN = (1e-3, 8)
 LAST_PAIRS = 5
 MOST_PAIRS_OF_DOMAINS = 3
+
+# Of a train that has more whole periods than this before it, most are not integrated. The
+# first and the last ones are; and more where the node's voltage does not repeat, V.
+MANY_PERIODS = 100
+FIRST_PERIODS = 2
+LAST_PERIODS = 5
+FEWEST_AT_ONCE = 4
+REPEATED_VOLTS = 1e-4
+MOST_FIRST_PERIODS = 50
 # Of a cell whose electrodes touch.
 SHORT_OHMS = 5.0
 
@@ -56,6 +67,8 @@ class Table:
         self._solver = solver_of(self._cell, self._circuit)
         self._drive: PulseTrain | Rest = Rest()
         self._observers: list[Observer] = []
+        self._needing_detail: list[Callable[[], bool]] = []
+        self._period: Period | None = None
         # Pulses of the present train that are settled: delivered, or missed.
         self._settled_pulses = 0
 
@@ -142,9 +155,17 @@ class Table:
         emf_volts = np.array([self._drive.volts_at(self.now)])
         return float(self._circuit.terminal_volts(emf_volts, np.array([self.node_volts]))[0])
 
-    def observe(self, observer: Observer) -> None:
-        """Show every stretch from now on to an observer."""
+    def observe(
+        self, observer: Observer, *, needs_detail: Callable[[], bool] | None = None
+    ) -> None:
+        """Show every stretch from now on to an observer.
+
+        needs_detail: asked while a long train goes on; where it says no, most of the
+        train's periods are shown as one stretch at rest.
+        """
         self._observers.append(observer)
+        if needs_detail is not None:
+            self._needing_detail.append(needs_detail)
 
     def connect(self, on: bool) -> None:
         """Switch the output relay; a pulse under way is lost either way."""
@@ -174,8 +195,12 @@ class Table:
         """Let this many seconds pass, at least 0; observers see each stretch of them."""
         if not 0 <= seconds < math.inf:
             raise ValueError(f"seconds is {seconds}; time passes forwards and not for ever")
-        end_seconds = self.now + seconds
+        self._advance_to(self.now + seconds, in_detail=False)
+
+    def _advance_to(self, end_seconds: float, *, in_detail: bool) -> None:
         while self.now < end_seconds:
+            if not in_detail and self._pass_many_periods(end_seconds):
+                continue
             stretch = self._drive.stretch_at(self.now)
             stop_seconds = min(stretch.end_seconds, end_seconds)
             stop_seconds = self._up_to_date_until(stop_seconds)
@@ -191,6 +216,61 @@ class Table:
                 stop_seconds,
             )
             self._count_pulses()
+
+    def _pass_many_periods(self, end_seconds: float) -> bool:
+        """Pass most of the train's periods before an instant; False where they are few."""
+        train = self._drive
+        if not isinstance(train, PulseTrain) or train.count <= MANY_PERIODS:
+            return False
+        index = train.pulses_begun(self.now)
+        # Only at the very begin of a pulse; the last one begun before the end is left.
+        if index >= train.count or train.pulse_start(index) != self.now:
+            return False
+        whole = train.pulses_begun(end_seconds) - 1 - index
+        if whole <= MANY_PERIODS:
+            return False
+        integrated = 0
+        while whole > LAST_PERIODS and not any(needs() for needs in self._needing_detail):
+            begin, begin_volts = self._ageing.tally, self.node_volts
+            self._period = Period(self._cell, repeats=whole)
+            self._advance_to(train.pulse_start(index + 1), in_detail=True)
+            period, self._period = self._period, None
+            index, whole, integrated = index + 1, whole - 1, integrated + 1
+            repeated = abs(self.node_volts - begin_volts) < REPEATED_VOLTS
+            if integrated < FIRST_PERIODS or not (repeated or integrated >= MOST_FIRST_PERIODS):
+                continue
+            many, mean = self._most_periods(
+                period, self._ageing.tally.since(begin), whole - LAST_PERIODS
+            )
+            if many >= FEWEST_AT_ONCE:
+                self._cell.up = period.after(many)
+                self._repeat_periods(train, mean, index, many)
+                index, whole = index + many, whole - many
+        return integrated > 0
+
+    def _most_periods(self, period: Period, last: Tally, periods: int) -> tuple[int, Tally]:
+        """Return how many periods may come at once, and the mean one of them."""
+        volts = self._cell.switchable_coulombs / self._circuit.farads
+        many = period.most_repeats(periods, switched_volts=volts)
+        mean = last
+        # Fewer periods have another mean, which allows another number of them.
+        for _ in range(2):
+            if many < 1:
+                break
+            cycles, state_seconds = period.mean_use(many)
+            mean = last._replace(cycles=cycles, state_seconds=state_seconds)
+            many = int(max(1, min(many, self._ageing.most_repeats(mean))))
+            many = self._ageing.most_held(mean, many)
+        return many, mean
+
+    def _repeat_periods(self, train: PulseTrain, mean: Tally, index: int, many: int) -> None:
+        self._ageing.repeat(mean, many)
+        begin_seconds = self.now
+        self.now = train.pulse_start(index + many)
+        if self._circuit.relay_on:
+            self._deliver(train, many)
+        self._settled_pulses = index + many
+        self._show_rest(begin_seconds)
 
     def cycle(self, down: PulseTrain, up: PulseTrain, *, pairs: int) -> None:
         """Deliver pairs of pulses, down then up, from now on, and let their time pass.
@@ -241,6 +321,9 @@ class Table:
         if self._circuit.relay_on:
             for train in (down, up):
                 self._deliver(train, repeats)
+        self._show_rest(begin_seconds)
+
+    def _show_rest(self, begin_seconds: float) -> None:
         volts = np.full(2, self.node_volts)
         terminal_volts = np.full(2, self.terminal_volts)
         for observer in self._observers:
@@ -265,6 +348,8 @@ class Table:
             volts_before=share * volts_before,
             volts_after=share * self.node_volts,
         )
+        if self._period is not None:
+            self._period.add(times, share * node_volts)
         begin_seconds, self.now = self.now, stop_seconds
         if not self._observers:
             return
