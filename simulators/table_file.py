@@ -13,7 +13,7 @@ parse_table reads.
 
 import re
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from importlib.resources import files
 from pathlib import Path as FilePath
 from typing import Any
@@ -121,8 +121,15 @@ def table_text(settings: SimulationSettings, *, title: str, purpose: str = "") -
     return "\n".join([*lines, *_group_lines(settings, 0)]) + "\n"
 
 
-def _group_lines(value: Any, depth: int) -> list[str]:
-    return _branch_lines(tree_of(type(value)), value, words_of(type(value)), depth)
+def _group_lines(value: Any, depth: int, *, all_of_it: bool = True) -> list[str]:
+    """Write a group's settings; not all_of_it: only those that differ from their defaults."""
+    words = words_of(type(value))
+    if not all_of_it:
+        defaults = {each.name: each.default for each in fields(value)}
+        words = {
+            name: word for name, word in words.items() if getattr(value, name) != defaults[name]
+        }
+    return _branch_lines(tree_of(words), value, words, depth)
 
 
 def _branch_lines(tree: Tree, value: Any, words: Mapping[str, Word], depth: int) -> list[str]:
@@ -143,7 +150,8 @@ def _field_lines(name: str, value: Any, word: Word, depth: int) -> list[str]:
     if word.listed:
         lines = [f"{indent}{name}:"] if value else []
         for each in value:
-            first, *rest = _group_lines(each, depth + 2)
+            # Most of what a fault can have is of no use to its kind.
+            first, *rest = _group_lines(each, depth + 2, all_of_it=False)
             lines += [f"{indent}  - {first.lstrip()}", *rest]
         return lines
     if word.group and value is not None:

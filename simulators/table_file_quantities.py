@@ -28,7 +28,7 @@ class Kind:
     number. scaled: symbols that take SI prefixes. factors: other units and what one of
     them is in SI units, as decimal text. offsets: what is added after that. example: a well
     written one. shown: units that are tried first in writing.
-    whole: an integer from 0 on.
+    whole: an integer, from 0 on unless signed.
     """
 
     name: str
@@ -39,6 +39,7 @@ class Kind:
     example: str
     shown: tuple[str, ...] = ()
     whole: bool = False
+    signed: bool = False
 
     @property
     def units(self) -> str:
@@ -103,11 +104,12 @@ SHARE = Kind(
     shown=("%",),
 )
 NUMBER = Kind(name="a plain number", example="1.5")
-COUNT = Kind(name="a whole number", example="100", whole=True)
+COUNT = Kind(name="a whole number from 0 on", example="100", whole=True)
+INTEGER = Kind(name="a whole number", example="-310", whole=True, signed=True)
 
 KINDS = (
     VOLTAGE, TIME, RESISTANCE, CAPACITANCE, CURRENT, FREQUENCY, ENERGY, LENGTH, AREA,
-    POLARIZATION, TEMPERATURE, PER_KELVIN, SHARE, NUMBER, COUNT,
+    POLARIZATION, TEMPERATURE, PER_KELVIN, SHARE, NUMBER, COUNT, INTEGER,
 )  # fmt: skip
 
 _WRITTEN = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,5})?)\s*(\S*)\s*", re.ASCII)
@@ -167,8 +169,8 @@ def format_quantity(value: float, kind: Kind) -> str:
 
 def _whole(written: str, number: str, unit: str, kind: Kind) -> int:
     exact = Decimal(number)
-    if unit or exact != exact.to_integral_value() or exact < 0:
-        raise QuantityError(f"{written[:60]!r} is not {kind.name} from 0 on", _write(kind))
+    if unit or exact != exact.to_integral_value() or (exact < 0 and not kind.signed):
+        raise QuantityError(f"{written[:60]!r} is not {kind.name}", _write(kind))
     return int(exact)
 
 

@@ -18,23 +18,26 @@ from pulsetally.simulators.table_file_yaml import Path, PlacedTable, nearest, sp
 Tree = dict[str, "str | Tree"]
 
 
-def tree_of(kind: type) -> Tree:
-    """Return the settings of a class as a file nests them: names -> field or further names."""
-    tree: Tree = {}
-    for name, word in words_of(kind).items():
-        branch = tree
-        for part in word.path[:-1]:
-            inner = branch.setdefault(part, {})
-            assert isinstance(inner, dict)
-            branch = inner
-        branch[word.path[-1]] = name
-    return tree
-
-
 def words_of(kind: type) -> dict[str, Word]:
     """Return the words of a class, by its fields, in the order in which a file has them."""
-    present = {each.name for each in fields(kind)}
-    return {name: word for name, word in WORDS[kind].items() if name in present}
+    return WORDS[kind]
+
+
+def tree_of(words: Mapping[str, Word], depth: int = 0) -> Tree:
+    """Return settings as a file nests them: names -> field or further names."""
+    tree: Tree = {}
+    for name, word in words.items():
+        head = word.path[depth]
+        if len(word.path) == depth + 1:
+            tree[head] = name
+        elif head not in tree:
+            inside = {
+                other: each
+                for other, each in words.items()
+                if len(each.path) > depth + 1 and each.path[depth] == head
+            }
+            tree[head] = tree_of(inside, depth + 1)
+    return tree
 
 
 def leader_of(branch: "str | Tree", words: Mapping[str, Word]) -> str | None:
@@ -49,7 +52,7 @@ def build(kind: type, data: object, path: Path, placed: PlacedTable) -> Any:
     """Build a dataclass from a group of settings; mistakes go to placed.
 
     data: what stands in the file at path. Returns a valid object even where there are
-    mistakes, so that what holds it can be checked too.
+    mistakes, so that what holds it can be checked too, or NOTHING where there is none.
     """
     return _Group(kind, path, placed).build(data)
 
@@ -63,9 +66,11 @@ class _Group:
         self._fields: dict[str, Field[Any]] = {each.name: each for each in fields(kind)}
         self._given: dict[str, Any] = {}
         self._places: dict[str, Path] = {}
+        # Fields whose mistake has been told; what follows from it is none of its own.
+        self._spoiled: set[str] = set()
 
     def build(self, data: object) -> Any:
-        self._walk(tree_of(self._kind), data, self._path)
+        self._walk(tree_of(self._words), data, self._path)
         for name, word in self._words.items():
             if name not in self._given:
                 self._fill(name, word)
@@ -116,7 +121,9 @@ class _Group:
         word = self._words[name]
         self._places[name] = here
         found = self._read(word, value, here)
-        if found is not NOTHING:
+        if found is NOTHING:
+            self._spoiled.add(name)
+        else:
             self._given[name] = found
 
     def _read(self, word: Word, value: object, here: Path) -> Any:
@@ -125,10 +132,11 @@ class _Group:
             return word.none
         if word.listed and word.group:
             if isinstance(value, list):
-                return tuple(
+                found = [
                     build(word.group, each, (*here, index), self._placed)
                     for index, each in enumerate(value)
-                )
+                ]
+                return tuple(each for each in found if each is not NOTHING)
             self._placed.add(here, f"{shown(value)} is not a list", "write '- ' before each item")
             return NOTHING
         if word.group:
@@ -138,7 +146,7 @@ class _Group:
         if word.choices:
             return self._chosen(word, value, here)
         if word.kind is None:
-            if isinstance(value, str) and value:
+            if isinstance(value, str):
                 return value
             self._placed.add(here, f"{shown(value)} is not text", f"write {word.sample!r}")
             return NOTHING
@@ -217,36 +225,38 @@ class _Group:
                 message = str(error)
             name = self._blamed(message)
             if name is None:
-                self._placed.add(self._path, self._in_words(message), "change what is named here")
+                if not self._spoiled:
+                    remedy = "change what is named here"
+                    self._placed.add(self._path, self._in_words(message), remedy)
                 return self._fallback()
             word = self._words[name]
             self._placed.add(
                 self._places[name], self._in_words(message), self._remedy(message, word)
             )
-            del self._places[name]
+            self._spoiled.add(name)
             del self._given[name]
-            self._fill_quietly(name, word)
-
-    def _fill_quietly(self, name: str, word: Word) -> None:
-        own = self._fields[name]
-        if own.default is MISSING and own.default_factory is MISSING:
-            self._given[name] = self._sample(word)
-        elif word.default is not NOTHING:
-            self._given[name] = word.default
+            self._fill(name, word)
 
     def _fallback(self) -> Any:
-        """Build the object from nothing but what it must have."""
+        """Build the object from nothing but what it must have; NOTHING where that won't do."""
         required = {
             name: self._sample(word)
             for name, word in self._words.items()
             if self._fields[name].default is MISSING
             and self._fields[name].default_factory is MISSING
         }
-        return self._kind(**required)
+        try:
+            return self._kind(**required)
+        except ValueError:
+            return NOTHING
 
     def _blamed(self, message: str) -> str | None:
         """Return the field that a refusal names first, of those that the file says."""
-        named = [(found.start(), name) for name in self._places if (found := _find(name, message))]
+        named = [
+            (found.start(), name)
+            for name in self._places
+            if name not in self._spoiled and (found := _find(name, message))
+        ]
         return min(named)[1] if named else None
 
     def _in_words(self, message: str) -> str:

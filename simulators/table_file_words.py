@@ -5,13 +5,14 @@ here, and a test asks for it.
 """
 
 import math
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
 from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
 from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.families import FAMILIES
+from pulsetally.simulators.faults import INSTRUMENTS, KINDS, Fault
 from pulsetally.simulators.imperfections import DigitizerImperfections, SourceImperfections
 from pulsetally.simulators.settings import SOCKETS, SimulationSettings
 from pulsetally.simulators.table_file_quantities import (
@@ -21,6 +22,7 @@ from pulsetally.simulators.table_file_quantities import (
     CURRENT,
     ENERGY,
     FREQUENCY,
+    INTEGER,
     LENGTH,
     NUMBER,
     PER_KELVIN,
@@ -84,6 +86,10 @@ def _said(
     return Word(path=names, kind=kind, none=none, example=example, default=default)
 
 
+def _chosen(name: str, words: Iterable[str]) -> Word:
+    return Word(path=(name,), choices={each: each for each in words})
+
+
 def _option(path: str, group: type) -> Word:
     return Word(path=(path,), group=group, none=None)
 
@@ -93,13 +99,16 @@ _ACTIVATION = _said("activation energy", ENERGY)
 WORDS: dict[type, dict[str, Word]] = {
     SimulationSettings: {
         "cell": Word(path=("cell",), group=CellDescription),
-        "socket": Word(path=("socket",), choices={each: each for each in SOCKETS}),
+        "socket": _chosen("socket", SOCKETS),
         "wiring": Word(path=("wiring",), group=Wiring),
-        "family": Word(path=("instruments", "family"), choices={each: each for each in FAMILIES}),
+        "family": Word(
+            path=("instruments", "family"), choices=dict(zip(FAMILIES, FAMILIES, strict=True))
+        ),
         "exchange_seconds": _said("instruments / exchange time", TIME, example="1 ms"),
         "source": Word(path=("instruments", "generator"), group=SourceImperfections),
         "digitizer": Word(path=("instruments", "oscilloscope"), group=DigitizerImperfections),
         "seed": _said("seed", COUNT),
+        "faults": Word(path=("faults",), group=Fault, listed=True),
     },
     CellDescription: {
         "area": _said("area", AREA),
@@ -200,6 +209,19 @@ WORDS: dict[type, dict[str, Word]] = {
         "smallest_range_volts": _said("smallest range", VOLTAGE, example="8 mV"),
         "largest_range_volts": _said("largest range", VOLTAGE, example="80 V"),
         "largest_offset_volts": _said("largest offset", VOLTAGE, example="40 V"),
+    },
+    Fault: {
+        "kind": _chosen("fault", KINDS),
+        "instrument": _chosen("instrument", INSTRUMENTS),
+        "exchange": _said("exchange", COUNT, example="12"),
+        "chance": _said("chance", SHARE, example="1 %"),
+        "at_seconds": _said("at", TIME, example="3 s"),
+        "seconds": _said("time", TIME, example="1 s"),
+        "share": _said("sent share", SHARE, example="50 %"),
+        "followed": Word(path=("followed",), choices={"yes": True, "no": False}),
+        "number": _said("error number", INTEGER),
+        "message": Word(path=("message",), example="supply voltage low"),
+        "ohms": _said("short resistance", RESISTANCE, example="5 ohm"),
     },
 }
 

@@ -201,6 +201,9 @@ def _construct(node: Any, path: Path, placed: PlacedTable) -> Any:
         else:
             placed.keys[(*path, key)] = at
             group[key] = _construct(value_node, (*path, key), placed)
+            if value_node.start_mark.index == value_node.end_mark.index:
+                # A blank has no place of its own, but where the next line begins.
+                placed.values[(*path, key)] = at
     return group
 
 
