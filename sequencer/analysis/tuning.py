@@ -16,6 +16,8 @@ from operator import itemgetter
 import numpy as np
 from scipy.stats import t as student
 
+from pulsetally.sequencer.analysis.pulses import Samples
+
 # The scatter of one round, in pulses, that is believed before any was seen, and how many
 # observations that belief is worth.
 _PRIOR_SCATTER = 0.25
@@ -26,6 +28,12 @@ _PRIOR_WEIGHT = 4
 _BEND = 0.4
 # A count this many scatters from the target lies on a certain side of it.
 _CERTAIN_SCATTERS = 3.0
+# Where the first pulse passed, the count is at most 1; where none did, it is taken as this many
+# times what was seen; both are bounds, so that the logarithm may be off by this.
+_MORE = 2.0
+_BOUND_UNCERTAINTY = 3.0
+# Before a search ends, a count must have come this close to what is wanted.
+_NEAR_SCATTERS = 2.0
 # A fitted value keeps this share of the bracket away from its ends, so that it says something.
 _MARGIN = 0.02
 _SURENESS = 0.95
@@ -217,7 +225,8 @@ class Tuning:
         estimate = self._estimate(seen, scatter)
         if estimate is not None:
             off = abs(estimate.count - self._target)
-            if off + estimate.count_bound <= self._within:
+            sure = off + estimate.count_bound <= self._within
+            if sure and self._was_near(seen, scatter):
                 return TuneStatus.FOUND
         if len(self._told) >= self._at_most:
             return TuneStatus.AT_MOST_REACHED
@@ -235,10 +244,12 @@ class Tuning:
 
     def _estimate(self, seen: list[_Seen], scatter: float) -> _Estimate | None:
         """Return where the target is, within the bracket; None where no line can be laid."""
-        line = _fit(seen, scatter, self._target)
+        first, last = self._bracket(seen)
+        # Between the certain sides a line interpolates; what lies outside would bend it.
+        inside = [each for each in seen if first <= each.position <= last]
+        line = _fit(inside, scatter, self._target)
         if line is None or line.slope * _direction(seen) <= 0:
             return None
-        first, last = self._bracket(seen)
         position = min(max(line.meets(self._target), first), last)
         degrees = _PRIOR_WEIGHT + max(sum(len(each.counts) for each in seen) - 2, 1)
         count = math.exp(line.at(position))
@@ -248,6 +259,15 @@ class Tuning:
             position_uncertainty=log_uncertainty / abs(line.slope),
             count=count,
             count_bound=count * log_uncertainty * float(student.ppf((1 + _SURENESS) / 2, degrees)),
+        )
+
+    def _was_near(self, seen: list[_Seen], scatter: float) -> bool:
+        """Say whether a count near the target was seen, so that a line needn't be believed far."""
+        return any(
+            abs(each.mean - self._target)
+            <= self._within + _NEAR_SCATTERS * scatter / math.sqrt(len(each.counts))
+            for each in seen
+            if each.counts
         )
 
     def _bracket(self, seen: list[_Seen]) -> tuple[float, float]:
@@ -321,12 +341,27 @@ def _fit(seen: list[_Seen], scatter: float, target: float) -> _Line | None:
     gave counts.
     """
     told = [each for each in seen if each.counts]
-    if len(told) < 2:
+    positions = [each.position for each in told]
+    logs = [math.log(each.mean) for each in told]
+    noise = [scatter / each.mean / math.sqrt(len(each.counts)) for each in told]
+    if told:
+        # Reads without a count say little of the slope, but more than two counts side by side.
+        most = math.log(_MORE * max(target, max(each.mean for each in told)))
+        for bound, blind in (
+            (0.0, [each.position for each in seen if each.few and not each.counts]),
+            (most, [each.position for each in seen if each.many and not each.counts]),
+        ):
+            if blind:
+                positions.append(min(blind, key=lambda position: abs(position - positions[0])))
+                logs.append(bound)
+                noise.append(_BOUND_UNCERTAINTY)
+    if len(positions) < 2:
         return None
-    positions = np.array([each.position for each in told])
-    logs = np.log([each.mean for each in told])
-    noise = np.array([scatter / each.mean / math.sqrt(len(each.counts)) for each in told])
-    bend = _BEND * (logs - math.log(target)) ** 2
+    return _line(np.array(positions), np.array(logs), np.array(noise), math.log(target))
+
+
+def _line(positions: Samples, logs: Samples, noise: Samples, log_target: float) -> _Line | None:
+    bend = _BEND * (logs - log_target) ** 2
     weights = 1 / (noise**2 + bend**2)
     total = float(weights.sum())
     centre = float(weights @ positions) / total
