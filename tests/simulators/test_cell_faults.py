@@ -8,6 +8,7 @@ from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.circuit import STRAY_FARADS, Wiring
+from pulsetally.simulators.drive import PulseTrain
 from pulsetally.simulators.table import SHORT_OHMS, Table
 from pulsetally.simulators.wear import Breakdown, Incubation, Retention
 from tests.simulators.table_pulses import connected, preset, up
@@ -90,6 +91,29 @@ def test_an_open_cell_neither_counts_nor_is_preset() -> None:
     assert table.up_fraction == before
     # The generator delivered them all the same.
     assert (table.delivered, table.presets) == (6, 2)
+
+
+# The periods of a long train are carried over in closed form, which must leave the cell alone.
+def test_a_long_train_leaves_an_open_cell_as_it_is() -> None:
+    table = connected(CellDescription())
+    preset(table)
+    for _ in range(3):
+        up(table)
+    before, delivered = table.up_fraction, table.delivered
+    table.open_cell()
+    table.play(
+        PulseTrain(
+            base_volts=-5.0,
+            level_volts=4.0,
+            width_seconds=100e-6,
+            period_seconds=200e-6,
+            count=10**6,
+            start_seconds=table.now,
+        )
+    )
+    table.advance(200.0)
+    assert table.up_fraction == before
+    assert table.delivered - delivered == 10**6
 
 
 # A: through a diode the node still settles at what the probe lets through.

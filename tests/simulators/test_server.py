@@ -14,13 +14,14 @@ import pytest
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.simulate import Addresses, SimulationSettings, main
 from tests.simulators.sockets import Client, served
+from tests.simulators.talking import TRUE
 
 LINEAR = CellDescription(remanent_polarization=1e-9)
 
 
 @pytest.fixture(scope="module")
 def addresses() -> Iterator[Addresses]:
-    with served(SimulationSettings(cell=LINEAR, seed=3)) as found:
+    with served(SimulationSettings(cell=LINEAR, digitizer=TRUE, seed=3)) as found:
         yield found
 
 
