@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from pulsetally.drivers.dialect import GeneratorDialect
 from pulsetally.sequencer.bench import Bench, parse_bench
 from pulsetally.sequencer.rehearsal import addressed_bench_text, shipped_bench
+from pulsetally.simulators.facts import facts_of
 from pulsetally.simulators.simulate import Addresses, SimulationSettings, serve_until
 
 
@@ -60,8 +61,15 @@ class Simulated:
 
 
 @contextmanager
-def simulated(settings: SimulationSettings | None = None) -> Iterator[Simulated]:
-    """Serve a bench in a thread for as long as the block runs."""
+def simulated(
+    settings: SimulationSettings | None = None, *, title: str = ""
+) -> Iterator[Simulated]:
+    """Serve a bench in a thread for as long as the block runs.
+
+    title: where there is one, the bench file has this title, and wiring and cell as settings
+    say; otherwise it is the shipped one.
+    """
+    made = settings or SimulationSettings()
     listening = threading.Event()
     found: list[Addresses] = []
     loop = asyncio.new_event_loop()
@@ -73,7 +81,7 @@ def simulated(settings: SimulationSettings | None = None) -> Iterator[Simulated]
 
     def serve() -> None:
         asyncio.set_event_loop(loop)
-        loop.run_until_complete(serve_until(settings or SimulationSettings(), announce, stop))
+        loop.run_until_complete(serve_until(made, announce, stop))
         loop.close()
 
     thread = threading.Thread(target=serve)
@@ -85,7 +93,8 @@ def simulated(settings: SimulationSettings | None = None) -> Iterator[Simulated]
             addresses.generator,
             addresses.oscilloscope,
             addresses.control,
-            (settings or SimulationSettings()).family,
+            made.family,
+            table=facts_of(made, title) if title else None,
         )
         bench = parse_bench(text, file="bench.yaml")
         yield Simulated(addresses=addresses, bench=bench)
