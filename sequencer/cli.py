@@ -210,6 +210,9 @@ def simulate(
     hislip: Annotated[
         bool, typer.Option("--hislip", help="HiSLIP on the TCP ports instead of plain text.")
     ] = False,
+    real_time: Annotated[
+        bool, typer.Option("--real-time", help="Have the bench's time follow the wall's.")
+    ] = False,
     write_bench: Annotated[
         Path | None, typer.Option(metavar="FILE", help="Write a bench file with the addresses.")
     ] = None,
@@ -252,6 +255,7 @@ def simulate(
             family=dialect,
             seed=seed,
             domains=domains,
+            real_time=real_time,
             transport="serial" if serial else "hislip" if hislip else "tcp",
             generator_port=generator_port,
             oscilloscope_port=oscilloscope_port,

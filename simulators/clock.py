@@ -1,6 +1,7 @@
 """Let virtual time pass on the table, and do what is due on the way."""
 
 import heapq
+import time
 from collections.abc import Callable
 from itertools import count
 
@@ -23,7 +24,10 @@ class VirtualClock:
 
     Every instrument lets time pass through here, never through the table itself, so that
     a relay closes and a burst ends at its own instant whoever moves the clock.
+    may_be_advanced: whether somebody may move it at will.
     """
+
+    may_be_advanced = True
 
     def __init__(self, table: Table) -> None:
         self._table = table
@@ -34,6 +38,9 @@ class VirtualClock:
     def now(self) -> float:
         """Virtual time, s."""
         return self._table.now
+
+    def catch_up(self) -> None:
+        """Come up to the present; a virtual clock is always there."""
 
     def call_at(self, at_seconds: float, action: Callable[[], None]) -> Appointment:
         """Have something done when the clock reaches an instant (at once if it passed)."""
@@ -59,3 +66,37 @@ class VirtualClock:
         # Twice where the first sum was rounded: a burst's end must really be reached.
         while (seconds := at_seconds - self.now) > 0:
             self._table.advance(seconds)
+
+
+class WallClock(VirtualClock):
+    """The bench's clock in real time: it follows the clock on the wall.
+
+    To advance it is to wait. While it waits, nothing else of the bench's process is done;
+    what came due in the meantime is done at its own instant all the same.
+    wall: seconds of a clock that never goes back. sleep: waits for so many seconds.
+    """
+
+    may_be_advanced = False
+
+    def __init__(
+        self,
+        table: Table,
+        *,
+        wall: Callable[[], float] = time.monotonic,
+        sleep: Callable[[float], None] = time.sleep,
+    ) -> None:
+        super().__init__(table)
+        self._wall, self._sleep = wall, sleep
+        self._zero_seconds = wall() - table.now
+
+    def catch_up(self) -> None:
+        """Let pass what has passed on the wall."""
+        super().advance_to(self._wall() - self._zero_seconds)
+
+    def advance_to(self, at_seconds: float) -> None:
+        """Wait until an instant."""
+        while (seconds := at_seconds - (self._wall() - self._zero_seconds)) > 0:
+            self._sleep(seconds)
+        # To the instant itself, and then on: a sleep may last longer.
+        super().advance_to(at_seconds)
+        self.catch_up()

@@ -3,7 +3,7 @@
 For rehearsals and tests only. No real table has one, so nothing that measures may use it.
 
     :CLOCk:TIME?                    virtual time, s
-    :CLOCk:ADVance <seconds>        let time pass
+    :CLOCk:ADVance <seconds>        let time pass; -221 on a bench that keeps real time
     :TRUTh:POLarization?            of the cell, C/m2; UP? the part of it that is up, 0 to 1
     :TRUTh:NODE?, TERMinal?         volts across the cell, and at the generator's terminal
     :TRUTh:OUTPut?                  whether the generator's output is commanded on, 1 or 0
@@ -71,6 +71,13 @@ class BenchControl(ScpiDevice):
         schedule: FaultSchedule,
     ) -> None:
         super().__init__(identity)
+        self._clock = clock
+
+        def advance(call: Call) -> None:
+            if not clock.may_be_advanced:
+                raise ScpiError(-221, "the clock follows real time; wait instead")
+            clock.advance(call.number())
+
         self.declare(
             [
                 Command(
@@ -79,7 +86,7 @@ class BenchControl(ScpiDevice):
                 Command(
                     pattern=":CLOCk:ADVance",
                     parameters=(number(0.0, LONGEST_ADVANCE_SECONDS, 0.0, unit="S"),),
-                    execute=lambda call: clock.advance(call.number()),
+                    execute=advance,
                 ),
                 _truth("POLarization", lambda: format_real(table.polarization)),
                 _truth("UP", lambda: format_real(table.up_fraction)),
@@ -94,6 +101,10 @@ class BenchControl(ScpiDevice):
             ]
         )
         self.declare(_fault_commands(schedule))
+
+    def begin_message(self) -> None:
+        """Come up to the present."""
+        self._clock.catch_up()
 
 
 def _state_of_cell(table: Table) -> str:

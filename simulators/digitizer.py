@@ -120,6 +120,10 @@ class Digitizer:
 
     # What it can be told.
 
+    def begin_message(self) -> None:
+        """Come up to the present."""
+        self._clock.catch_up()
+
     def reset(self) -> None:
         """Forget the record and go back to the settings after power-on."""
         self._acquisition = self._record = None

@@ -62,8 +62,8 @@ class FunctionGenerator(ScpiDevice):
         self.model.reset()
 
     def begin_message(self) -> None:
-        """Forget a conflict of an earlier message."""
-        self.model.forget_conflict()
+        """Come up to the present; forget a conflict of an earlier message."""
+        self.model.begin_message()
 
     def end_coupled(self) -> None:
         """Check the settings together; take them over, or put the old ones back (-221)."""

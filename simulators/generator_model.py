@@ -193,8 +193,9 @@ class GeneratorModel:
         self._sent_pulses = 0
         self._rest()
 
-    def forget_conflict(self) -> None:
-        """Begin anew after a group of settings that was put back."""
+    def begin_message(self) -> None:
+        """Come up to the present, and begin anew after settings that were put back."""
+        self._clock.catch_up()
         self._conflict = False
 
     def take_over(self) -> None:

@@ -42,6 +42,10 @@ class Oscilloscope(ScpiDevice):
 
     # Hooks of the engine.
 
+    def begin_message(self) -> None:
+        """Come up to the present."""
+        self.model.begin_message()
+
     def reset(self) -> None:
         """Forget the record and go back to the settings after power-on."""
         self.model.reset()

@@ -13,7 +13,7 @@ from dataclasses import asdict, dataclass, replace
 from typing import Any, Protocol
 
 from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
-from pulsetally.simulators.clock import VirtualClock
+from pulsetally.simulators.clock import VirtualClock, WallClock
 from pulsetally.simulators.control import BenchControl
 from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.facts import facts_of
@@ -50,7 +50,8 @@ class Bench:
             self.table.open_cell()
         elif settings.socket == "shorted":
             self.table.short_cell()
-        self.clock = VirtualClock(self.table)
+        clock = WallClock if settings.real_time else VirtualClock
+        self.clock = clock(self.table)
         family = FAMILIES[settings.family]
         self.digitizer = Digitizer(
             clock=self.clock,
@@ -110,7 +111,10 @@ async def serve_until(
         mishaps.later = asyncio.get_running_loop().call_later
 
     def pass_time() -> None:
-        bench.clock.advance(settings.exchange_seconds)
+        if settings.real_time:
+            bench.clock.catch_up()
+        else:
+            bench.clock.advance(settings.exchange_seconds)
 
     listener = _LISTENERS[settings.transport]
     async with AsyncExitStack() as listening:
@@ -225,14 +229,21 @@ def tell(addresses: Addresses, facts: Mapping[str, object], *, as_json: bool) ->
 
 
 def chosen_settings(
-    table: str | None, *, family: str | None, seed: int | None, domains: int | None, **more: Any
+    table: str | None,
+    *,
+    family: str | None,
+    seed: int | None,
+    domains: int | None,
+    real_time: bool = False,
+    **more: Any,
 ) -> tuple[str, SimulationSettings]:
     """Return a title and what the simulated bench is made of, from what a person chose.
 
     table: a table file or the name of a shipped one; None for the usual table, whose title
     is "". family, seed, domains: go before what the table says, unless None; 0 domains for a
-    cell that never scatters. more: further settings. Raises TableFileError with every mistake
-    of the file, ValueError for settings that don't go together.
+    cell that never scatters. real_time: in place of virtual time. more: further settings.
+    Raises TableFileError with every mistake of the file, ValueError for settings that don't
+    go together.
     """
     title, settings = "", SimulationSettings(cell=CellDescription(domains=DEFAULT_DOMAINS))
     if table is not None:
@@ -241,6 +252,8 @@ def chosen_settings(
 
         found = find_table(table)
         title, settings = found.title, found.settings
+    if real_time:
+        more["real_time"] = True
     if domains is not None:
         more["cell"] = replace(settings.cell, domains=domains or None)
     for name, value in (("family", family), ("seed", seed)):
@@ -289,6 +302,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     for name in ("generator", "oscilloscope", "control"):
         parser.add_argument(f"--{name}-port", type=int, default=0, help="0: any free port")
     parser.add_argument(
+        "--real-time", action="store_true", help="have the bench's time follow the wall's"
+    )
+    parser.add_argument(
         "--until-stdin-closes", action="store_true", help="end when standard input does"
     )
     given = parser.parse_args(arguments)
@@ -303,6 +319,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
             generator_port=given.generator_port,
             oscilloscope_port=given.oscilloscope_port,
             control_port=given.control_port,
+            real_time=given.real_time,
             until_stdin_closes=given.until_stdin_closes,
         )
     except ValueError as error:
