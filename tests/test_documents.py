@@ -17,6 +17,8 @@ from pulsetally.sequencer.recipe import (
     shipped_recipes,
 )
 from pulsetally.sequencer.rehearsal import shipped_bench
+from pulsetally.simulators.table_file import parse_table, shipped_tables, table_text
+from pulsetally.simulators.table_file_words import WORDS
 
 ROOT = Path(__file__).resolve().parent.parent
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -60,6 +62,27 @@ def test_the_recipe_and_bench_of_the_readme_run_as_they_stand() -> None:
     # The shipped bench and the one in the README differ in names and addresses only.
     assert bench.model.wiring == shipped_bench().model.wiring
     assert bench.model.limits == shipped_bench().model.limits
+
+
+def test_the_readme_names_every_table_and_every_setting_of_one() -> None:
+    for name in shipped_tables():
+        assert f"`{name}`" in README
+    section = README.partition("\n## The simulated bench\n")[2].partition("\n## ")[0]
+    section = " ".join(section.split())
+    words = [word for words in WORDS.values() for word in words.values()]
+    for word in words:
+        for part in (*word.path, *word.choices):
+            assert re.search(rf"\b{part}\b", section), part
+
+
+def test_the_table_file_of_the_readme_is_read_as_it_stands() -> None:
+    (text,) = (text for text in fenced("yaml") if text.startswith("table:"))
+    found = parse_table(text, file="README.md")
+    assert found.settings.cell.fatigue is not None
+    assert found.settings.wiring.clamp_volts == 15.0
+    assert [fault.kind for fault in found.settings.faults] == ["late answer"]
+    again = table_text(found.settings, title=found.title, purpose=found.purpose)
+    assert parse_table(again, file="again.yaml") == found
 
 
 def test_the_readme_sets_up_with_two_commands() -> None:
