@@ -50,3 +50,7 @@ def test_the_wheel_holds_all_that_the_program_needs(tmp_path: Path) -> None:
     assert {"sequencer", "drivers", "simulators", "recipes"} <= names
     assert (target / "pulsetally" / "sequencer" / "analysis" / "counting.py").exists()
     assert (target / "pulsetally" / "drivers" / "py.typed").exists()
+    tables = {path.name for path in (ROOT / "simulators" / "tables").glob("*.yaml")}
+    installed = target / "pulsetally" / "simulators" / "tables"
+    assert {path.name for path in installed.iterdir()} == tables
+    assert "six_pulses.yaml" in tables
