@@ -54,9 +54,9 @@ class TuneResult:
     """Say what a search found.
 
     value, uncertainty: of the setting and its standard uncertainty, in the setting's unit.
-    count: the mean full count estimated there, in pulses. All three are None where nothing
-    could be estimated: the target is not bracketed, or no two reads gave a count. scatter: of
-    one round, pulses, from residuals and what is believed beforehand. rounds: how many were told.
+    count: the mean full count estimated there, in pulses. All three are None where the target is
+    not bracketed, or no count came near it in all the rounds. scatter: of one round, pulses, from
+    residuals and what is believed beforehand. rounds: how many were told.
     """
 
     value: float | None
@@ -190,7 +190,8 @@ class Tuning:
             raise ValueError(f"the search goes on, at {self._value(status):.6g}")
         seen, scatter = _seen(self._told, self._target)
         estimate = None
-        if status is not TuneStatus.NOT_BRACKETED:
+        # Between ends that only bound the count, a line may cross the target where the law jumps.
+        if status is not TuneStatus.NOT_BRACKETED and self._was_near(seen, scatter):
             estimate = self._estimate(seen, scatter)
         value = uncertainty = count = None
         if estimate is not None:
