@@ -9,11 +9,12 @@ new ones.
 import asyncio
 import socket
 import struct
-from collections.abc import Callable
+from collections import deque
+from collections.abc import Callable, Iterator
 from typing import cast
 
 from pulsetally.simulators.connection import Connection
-from pulsetally.simulators.deliveries import Outbox
+from pulsetally.simulators.deliveries import Delivery, Outbox
 from pulsetally.simulators.mishaps import Mishaps
 from pulsetally.simulators.scpi_device import ScpiDevice
 
@@ -41,6 +42,9 @@ class _Client(asyncio.Protocol):
     ) -> None:
         self._connection, self._present, self._after_message = connection, present, after_message
         self._transport: asyncio.Transport | None = None
+        # What has come, each to be followed a message at a time.
+        self._work: deque[Iterator[list[Delivery]]] = deque()
+        self._is_working = False
         self._is_full = False
 
     def connection_made(self, transport: asyncio.BaseTransport) -> None:
@@ -56,20 +60,46 @@ class _Client(asyncio.Protocol):
             close=self._transport.close,
             reset=self._reset,
             later=asyncio.get_running_loop().call_later,
-            emptied=self._read_on,
+            emptied=self._go_on,
         )
 
     def connection_lost(self, exc: Exception | None) -> None:
-        self._outbox.drop()
         if self._transport is not None:
             self._present.discard(self._transport)
+        # What was sent before is followed all the same; the answers go nowhere.
+        self._outbox.drop()
+        self._is_full = False
+        self._go_on()
+        self._outbox.drop()
 
     def data_received(self, data: bytes) -> None:
-        for deliveries in self._connection.receive(data):
+        self._work.append(self._connection.receive(data))
+        self._go_on()
+
+    def _go_on(self) -> None:
+        """Follow what has come, unless too much waits to be read; then read no more either."""
+        if self._is_working:
+            return
+        self._is_working = True
+        while self._work and not self._is_held:
+            deliveries = next(self._work[0], None)
+            if deliveries is None:
+                self._work.popleft()
+                continue
             self._outbox.put(deliveries)
             # The client has its answer and can work on it while time passes here.
             self._after_message()
-        self._read_on()
+        self._is_working = False
+        if self._transport is None or self._transport.is_closing():
+            return
+        if self._is_held:
+            self._transport.pause_reading()
+        else:
+            self._transport.resume_reading()
+
+    @property
+    def _is_held(self) -> bool:
+        return self._is_full or self._outbox.held_bytes > MOST_HELD_BYTES
 
     def _send(self, content: bytes) -> None:
         if content and self._transport is not None and not self._transport.is_closing():
@@ -81,19 +111,10 @@ class _Client(asyncio.Protocol):
 
     def pause_writing(self) -> None:
         self._is_full = True
-        self._read_on()
 
     def resume_writing(self) -> None:
         self._is_full = False
-        self._read_on()
-
-    def _read_on(self) -> None:
-        if self._transport is None or self._transport.is_closing():
-            return
-        if self._is_full or self._outbox.held_bytes > MOST_HELD_BYTES:
-            self._transport.pause_reading()
-        else:
-            self._transport.resume_reading()
+        self._go_on()
 
 
 class DeviceServer:

@@ -64,6 +64,15 @@ class Bare:
         self.send(text)
         return self.hear_until(b"\n")
 
+    def is_cut(self) -> bool:
+        """Whether the connection ends, with whatever came before that."""
+        try:
+            while self.hear():
+                pass
+        except ConnectionResetError:
+            pass
+        return True
+
     def is_silent(self) -> bool:
         return not select.select([self._end], [], [], 0)[0]
 
@@ -109,7 +118,7 @@ class Scene:
 
     def wait_for(self, question: str, answer: str) -> None:
         """Return when the control port says so, at last."""
-        for _ in range(100_000):
+        for _ in range(20_000):
             if self.control.ask(question) == answer:
                 return
         raise AssertionError(f"{question} never answered {answer}")
