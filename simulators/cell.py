@@ -29,6 +29,10 @@ FARADS_PER_METRE = 8.8541878128e-12
 # recipe (4 V for 100 us), scatters by 0.250 +- 0.007 pulse (standard deviation of 700 rounds).
 DEFAULT_DOMAINS = 168
 
+# A slip in a file should be told, and not fill the memory or the integers of a dealt hand.
+MOST_REGIONS = 100_000
+MOST_DOMAINS = 10**15
+
 # A normal distribution has no lower end: activation voltages stop at this part of their
 # mean, so that the law stays a barrier for every region.
 LEAST_ACTIVATION_SHARE = 0.05
@@ -57,7 +61,7 @@ class CellDescription:
     the solver would have to follow it there).
     alpha: exponent of the activation law, 0.5 to 5 (far below, hardly a voltage stops switching).
     attempt_seconds: switching time at infinite voltage, s.
-    regions: how many, from 1.
+    regions: how many, 1 to 100 000.
     leak_ohms: resistance across the film; inf for none.
     imprint_volts: voltage at which neither direction is driven, V.
     domains: finite number of domains dealt over the regions anew after each full preset;
@@ -104,14 +108,14 @@ class CellDescription:
             )
         if not 0.5 <= self.alpha <= 5:
             raise ValueError(f"alpha is {self.alpha}; it must be from 0.5 to 5")
-        if self.regions < 1:
-            raise ValueError(f"regions is {self.regions}; it must be at least 1")
+        if not 1 <= self.regions <= MOST_REGIONS:
+            raise ValueError(f"regions is {self.regions}; it must be from 1 to {MOST_REGIONS}")
         if not self.leak_ohms > 0:
             raise ValueError(f"leak_ohms is {self.leak_ohms}; it must be above 0")
         if not math.isfinite(self.imprint_volts):
             raise ValueError(f"imprint_volts is {self.imprint_volts}; it must be finite")
-        if self.domains is not None and self.domains < 1:
-            raise ValueError(f"domains is {self.domains}; it must be at least 1, or None")
+        if self.domains is not None and not 1 <= self.domains <= MOST_DOMAINS:
+            raise ValueError(f"domains is {self.domains}; it must be from 1 to {MOST_DOMAINS:.0e}")
 
     @property
     def farads(self) -> float:

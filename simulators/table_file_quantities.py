@@ -104,8 +104,8 @@ SHARE = Kind(
     shown=("%",),
 )
 NUMBER = Kind(name="a plain number", example="1.5")
-COUNT = Kind(name="a whole number from 0 on", example="100", whole=True)
-INTEGER = Kind(name="a whole number", example="-310", whole=True, signed=True)
+COUNT = Kind(name="a whole number", example="100", whole=True)
+INTEGER = Kind(name="a whole number of either sign", example="-310", whole=True, signed=True)
 
 KINDS = (
     VOLTAGE, TIME, RESISTANCE, CAPACITANCE, CURRENT, FREQUENCY, ENERGY, LENGTH, AREA,
@@ -170,7 +170,8 @@ def format_quantity(value: float, kind: Kind) -> str:
 def _whole(written: str, number: str, unit: str, kind: Kind) -> int:
     exact = Decimal(number)
     if unit or exact != exact.to_integral_value() or (exact < 0 and not kind.signed):
-        raise QuantityError(f"{written[:60]!r} is not {kind.name}", _write(kind))
+        least = "" if kind.signed else " from 0 on"
+        raise QuantityError(f"{written[:60]!r} is not {kind.name}{least}", _write(kind))
     return int(exact)
 
 

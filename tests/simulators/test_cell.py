@@ -180,10 +180,10 @@ MISTAKES = [
     ("remanent_polarization", -0.1, "must be 0 or more"),
     ("activation_spread", -1.0, "must be 0 or more"),
     ("alpha", 0.2, "must be from 0.5 to 5"),
-    ("regions", 0, "must be at least 1"),
+    ("regions", 0, "must be from 1 to 100000"),
     ("leak_ohms", 0.0, "must be above 0"),
     ("imprint_volts", math.inf, "must be finite"),
-    ("domains", 0, "must be at least 1, or None"),
+    ("domains", 0, "must be from 1 to 1e[+]15"),
 ]
 
 
