@@ -64,7 +64,7 @@ class Line:
         """Write a number as this instrument takes it: in base units, never with a suffix."""
         if not math.isfinite(value):
             raise ValueError(f"{value} can't be sent as a number")
-        if value == int(value) and abs(value) < 1e9:
+        if value == int(value) and abs(value) < 1e15:
             return f"{int(value)}"
         letter = "E" if self.number == "scientific" else "G"
         return f"{value:.{self.digits}{letter}}"
@@ -161,7 +161,10 @@ class Speech:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class GeneratorDialect(Speech):
-    """How a function generator is spoken to. settle_seconds: of the output relay."""
+    """How a function generator is spoken to.
+
+    settle_seconds: of the output relay. most_count: pulses that one trigger can send.
+    """
 
     output: Setting
     load: Setting | None
@@ -169,6 +172,7 @@ class GeneratorDialect(Speech):
     idle: Predicate | None
     settle_seconds: float = 0.05
     fixed_edge: float | None = None
+    most_count: int = 1_000_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -176,6 +180,8 @@ class OscilloscopeDialect(Speech):
     """How an oscilloscope is spoken to.
 
     divisions: of the screen, high and wide. force: triggers an armed acquisition at once.
+    shortest_interval: between two samples, seconds; most_points: of a record; both None where
+    nobody has said.
     """
 
     divisions: tuple[int, int]
@@ -184,6 +190,8 @@ class OscilloscopeDialect(Speech):
     done: Predicate
     force: tuple[str, ...]
     waveform: WaveformForm
+    shortest_interval: float | None = None
+    most_points: int | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

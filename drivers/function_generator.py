@@ -80,6 +80,11 @@ class FunctionGenerator(Instrument):
         """Return how long the output relay needs after it was switched."""
         return self._dialect.settle_seconds
 
+    @property
+    def most_count(self) -> int:
+        """Return how many pulses one trigger can send at most."""
+        return self._dialect.most_count if self._dialect.setting("count") else 1
+
     def prepare(self) -> None:
         """Reset, tell the load, and choose triggering by command. The output is off after it."""
         self.reset()

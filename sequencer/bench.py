@@ -26,6 +26,7 @@ from pulsetally.sequencer.quantities import (
     VOLTAGE,
     QuantityError,
     parse_quantity,
+    show_quantity,
 )
 from pulsetally.sequencer.yaml_places import Path, PlacedData, load_yaml, nearest, read_text
 
@@ -182,6 +183,10 @@ _SECTIONS: dict[str, type[Model]] = {
 }
 
 
+class CellVoltsUnreachable(ValueError):
+    """No setting of the generator puts this voltage across the cell."""
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Bench:
     """A bench file that was read without a mistake.
@@ -239,6 +244,27 @@ class Bench:
         if wiring.clamp is not None:
             volts = math.copysign(min(abs(volts), wiring.clamp.breakdown), volts)
         return volts
+
+    def panel_volts_for_cell(self, cell_volts: float) -> float:
+        """Return the panel setting that puts this voltage across the cell, in volts.
+
+        It holds long after the cell's switching ended, as cell_volts does. Raises
+        CellVoltsUnreachable where clamp or diode don't let it through.
+        """
+        wiring = self.model.wiring
+        if wiring.clamp is not None and abs(cell_volts) >= wiring.clamp.breakdown:
+            raise CellVoltsUnreachable(
+                f"the clamp conducts at {show_quantity(wiring.clamp.breakdown, 'V')}"
+            )
+        current = cell_volts / wiring.probe.resistance
+        loop = wiring.source_resistance + wiring.series_resistance
+        emf = cell_volts + loop * current
+        if wiring.series_diode is not None:
+            share = current / wiring.series_diode.saturation_current
+            if share <= -1:
+                raise CellVoltsUnreachable("the series diode blocks that polarity")
+            emf += wiring.series_diode.emission * _THERMAL_VOLTS * math.log1p(share)
+        return self.panel_volts(emf)
 
     def probe_tau(self) -> float:
         """Return the node's time constant without a cell, in seconds."""

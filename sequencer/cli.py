@@ -396,6 +396,7 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
     from pulsetally.sequencer.events import RunState
     from pulsetally.sequencer.live import follow
     from pulsetally.sequencer.logbook import Logbook
+    from pulsetally.sequencer.person import AlwaysReady, whoever_is_there
     from pulsetally.sequencer.progress import Progress
     from pulsetally.sequencer.results import run_result
     from pulsetally.sequencer.safety import StopSwitch, signals
@@ -412,7 +413,8 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
     with signals(stop):
         recorder = book.begin_run(plan, bench, mode=mode)
         # Closed here and now, whatever happens: closing is what switches the output off.
-        with closing(engine.run(plan, bench, recorder, stop)) as events:
+        person = AlwaysReady() if mode == "rehearsal" else whoever_is_there()
+        with closing(engine.run(plan, bench, recorder, stop, person)) as events:
             try:
                 follow(events, progress, console)
             except OSError as error:

@@ -283,6 +283,11 @@ class GeneratorSection(_SpeechSection):
     fire: Annotated[Commands, Field(min_length=1)]
     idle: PredicateSection | None = None
     fixed_edge: Annotated[float | None, Field(alias="fixed edge"), quantity(TIME, above=0)] = None
+    most_pulses_a_trigger: Annotated[
+        float,
+        Field(alias="most pulses a trigger"),
+        quantity(NUMBER, least=1, most=1e12, whole=True),
+    ] = 1_000_000.0
 
     @model_validator(mode="after")
     def _can_make_pulses(self) -> "GeneratorSection":
@@ -306,6 +311,7 @@ class GeneratorSection(_SpeechSection):
             idle=self.idle.build() if self.idle else None,
             settle_seconds=self.output_settles_in,
             fixed_edge=self.fixed_edge,
+            most_count=int(self.most_pulses_a_trigger),
         )
 
 
@@ -320,6 +326,12 @@ class OscilloscopeSection(_SpeechSection):
     done: PredicateSection
     force: Annotated[Commands, Field(alias="force trigger")] = Field(default_factory=list)
     waveform: WaveformSection
+    shortest_interval: Annotated[
+        float | None, Field(alias="shortest interval"), quantity(TIME, above=0)
+    ] = None
+    most_points: Annotated[
+        float | None, Field(alias="most points"), quantity(NUMBER, least=100, whole=True)
+    ] = None
 
     @model_validator(mode="after")
     def _can_take_records(self) -> "OscilloscopeSection":
@@ -345,6 +357,8 @@ class OscilloscopeSection(_SpeechSection):
             done=self.done.build(),
             force=tuple(self.force),
             waveform=self.waveform.build(),
+            shortest_interval=self.shortest_interval,
+            most_points=None if self.most_points is None else int(self.most_points),
         )
 
 

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from pulsetally.sequencer.analysis.contact import ContactResult
 from pulsetally.sequencer.analysis.pulses import EndVoltage
-from pulsetally.sequencer.plan import Round
+from pulsetally.sequencer.rounds import Round
 
 
 class Role(StrEnum):
@@ -22,6 +22,9 @@ class Role(StrEnum):
     STEP = "step"
     READ = "read"
     CONTACT = "contact"
+    PUND = "pund"
+    LOOP = "loop"
+    CYCLE = "cycle"
 
 
 class RunState(StrEnum):
@@ -100,8 +103,9 @@ class PulseSetUp:
 class PulseArmed:
     """The oscilloscope is armed and the generator is about to fire.
 
-    order: which pulse of the round, from 1. Whoever records must have done so before the
-    next event is asked for: the pulse goes out then.
+    order: which pulse of the round, from 1; of a train, its first. count: pulses that this
+    trigger sends, period seconds apart where there are several. Whoever records must have done
+    so before the next event is asked for: the pulse goes out then.
     """
 
     round: int
@@ -109,18 +113,24 @@ class PulseArmed:
     role: Role
     pulse: str
     threshold: float | None = None
+    count: int = 1
+    period: float | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class ShotTaken:
-    """A pulse was delivered and recorded. end: None when its record doesn't show the pulse."""
+    """A pulse or a train was delivered and recorded.
+
+    ends: the end voltage of each pulse, empty where they were not looked for or the record
+    doesn't show them.
+    """
 
     round: int
     order: int
     role: Role
     pulse: str
     shot: Shot
-    end: EndVoltage | None
+    ends: tuple[EndVoltage, ...] = ()
     threshold: float | None = None
     at_most: int | None = None
 
@@ -160,6 +170,74 @@ class ContactChecked:
     round: int
     pulse: str
     result: ContactResult
+
+
+class FindingKind(StrEnum):
+    """What was measured beside a count."""
+
+    PUND = "pund"
+    LOOP = "loop"
+    CYCLING = "cycling"
+    TUNE = "tune"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Found:
+    """Something beside a count was measured.
+
+    pulse: what with. settings: what was in force. values: by name, in SI units; words where
+    something is no number.
+    """
+
+    round: int
+    kind: FindingKind
+    pulse: str
+    settings: dict[str, float]
+    values: dict[str, float | str | None]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CyclingBegan:
+    """Pairs of pulses go out, this many before the next pause; done: went out before."""
+
+    round: int
+    pairs: int
+    done: int
+    seconds: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PairsSent:
+    """So many pairs of a cycling have gone out in all; planned: of the whole cycling."""
+
+    round: int
+    done: int
+    planned: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PersonAsked:
+    """The output is off, and a person is asked for something; seconds: how long is waited."""
+
+    round: int
+    message: str
+    seconds: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PersonAnswered:
+    """The waiting for a person is over. answered: False when the time was up."""
+
+    round: int
+    answered: bool
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RoundsSkipped:
+    """So many planned rounds are not needed, for a reason."""
+
+    count: int
+    reason: str
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -207,6 +285,12 @@ Event = (
     | WaitBegan
     | ReadFinished
     | ContactChecked
+    | Found
+    | CyclingBegan
+    | PairsSent
+    | PersonAsked
+    | PersonAnswered
+    | RoundsSkipped
     | RoundFinished
     | RoundSpoiled
     | StopAsked

@@ -55,6 +55,9 @@ def _closing_live(progress: Progress, console: Console) -> Iterator[Live]:
 def draw(progress: Progress, height: int = 24) -> RenderableType:
     """Draw how a run stands; height: lines of the terminal."""
     parts: list[RenderableType] = [_head(progress)]
+    if progress.asking:
+        words = f"The output is off. {printable(progress.asking)} Then press Enter."
+        parts.append(Panel(Text(words, style="bold"), title="a person is needed"))
     if progress.stopping and not progress.ended:
         parts.append(Text("Stopping after this round. Ctrl-C again stops at once.", style="bold"))
     parts.append(_answer(progress))

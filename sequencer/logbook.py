@@ -28,12 +28,16 @@ from pulsetally.sequencer.errors import LogbookError
 from pulsetally.sequencer.events import (
     ContactChecked,
     Event,
+    Found,
+    PersonAnswered,
+    PersonAsked,
     PulseArmed,
     PulseSetUp,
     ReadFinished,
     RoundBegan,
     RoundFinished,
     RoundSpoiled,
+    RoundsSkipped,
     RunBegan,
     RunEnded,
     ShotTaken,
@@ -42,7 +46,7 @@ from pulsetally.sequencer.events import (
 )
 from pulsetally.sequencer.plan import Plan
 
-LOGBOOK_VERSION = 1
+LOGBOOK_VERSION = 2
 # Tells our files from other SQLite databases ('ptly' in ASCII).
 _MARK = 0x70746C79
 
@@ -193,6 +197,63 @@ contacts = sa.Table(
 )
 
 
+# Of a pulse that stands for several, sent by one trigger: how many, and how far apart.
+trains = sa.Table(
+    "trains",
+    _tables,
+    _key(),
+    _to("pulse", "pulses", unique=True),
+    _whole("count"),
+    _real("period_seconds"),
+)
+# The end voltage of each pulse of a train, from its one shot.
+train_ends = sa.Table(
+    "train_ends",
+    _tables,
+    _key(),
+    _to("shot", "shots"),
+    _whole("place"),
+    _real("end_volts"),
+    _real("end_uncertainty"),
+    _real("end_seconds"),
+)
+findings = sa.Table(
+    "findings",
+    _tables,
+    _key(),
+    _to("round", "rounds"),
+    _text("kind"),
+    _text("pulse"),
+    _text("settings"),
+    _text("found"),
+    _text("at"),
+)
+asked = sa.Table(
+    "asked",
+    _tables,
+    _key(),
+    _to("round", "rounds"),
+    _text("message"),
+    _text("asked_at"),
+)
+answers = sa.Table(
+    "answers",
+    _tables,
+    _key(),
+    _to("asked", "asked", unique=True),
+    sa.Column("answered", sa.Boolean, nullable=False),
+    _text("at"),
+)
+skipped_rounds = sa.Table(
+    "skipped_rounds",
+    _tables,
+    _key(),
+    _to("run", "runs"),
+    _whole("count"),
+    _text("reason"),
+)
+
+
 class Logbook:
     """Open a logbook; begin runs in it and look runs up."""
 
@@ -217,18 +278,25 @@ class Logbook:
                 )
             _tables.create_all(connection)
             connection.exec_driver_sql(f"PRAGMA application_id={_MARK}")
-            if connection.execute(sa.select(about.c.version)).scalar() is None:
+            # An older logbook lacks tables only, which have just been made.
+            if (_version(connection) or 0) < LOGBOOK_VERSION:
                 _insert(connection, about, version=LOGBOOK_VERSION, written_by=_software())
         self._check_version()
 
     def _check_version(self) -> None:
         with self._guarded("read") as connection:
-            found = connection.execute(sa.select(about.c.version)).scalar() or 0
+            found = _version(connection) or 0
         if found > LOGBOOK_VERSION:
             raise LogbookError(
                 f"{self.path}: this logbook was written by a newer version of the program (its"
                 f" version is {found}, this program knows {LOGBOOK_VERSION}). To fix it,"
                 " upgrade the program."
+            )
+        if found < LOGBOOK_VERSION:
+            raise LogbookError(
+                f"{self.path}: this logbook was written by an older version of the program (its"
+                f" version is {found}, this program's {LOGBOOK_VERSION}). To fix it, keep a"
+                " copy, then record any run or rehearsal into it, which brings it up to date."
             )
 
     def close(self) -> None:
@@ -286,7 +354,7 @@ class Recorder:
     def __init__(self, logbook: Logbook, run: int) -> None:
         self.run, self._logbook = run, logbook
         self.ended: RunEnded | None = None
-        self._round = self._pulse = 0
+        self._round = self._pulse = self._asked = 0
         self._setups: dict[str, int] = {}
 
     def record(self, event: Event) -> None:
@@ -323,6 +391,11 @@ class Recorder:
                     threshold=event.threshold,
                     armed_at=_now(),
                 )
+                if event.period is not None:
+                    # In the same breath as the intent: nothing goes out before both are kept.
+                    self._enter(
+                        trains, pulse=self._pulse, count=event.count, period_seconds=event.period
+                    )
             case ShotTaken():
                 self._record_shot(event)
             case ReadFinished():
@@ -351,6 +424,24 @@ class Recorder:
                     tau=event.result.tau,
                     expected_tau=event.result.expected_tau,
                 )
+            case Found():
+                self._enter(
+                    findings,
+                    round=self._round,
+                    kind=event.kind.value,
+                    pulse=event.pulse,
+                    settings=_json(event.settings),
+                    found=json.dumps(event.values),
+                    at=_now(),
+                )
+            case PersonAsked():
+                self._asked = self._enter(
+                    asked, round=self._round, message=event.message, asked_at=_now()
+                )
+            case PersonAnswered():
+                self._enter(answers, asked=self._asked, answered=event.answered, at=_now())
+            case RoundsSkipped():
+                self._enter(skipped_rounds, run=self.run, count=event.count, reason=event.reason)
             case RoundFinished():
                 self._enter(
                     round_ends, round=self._round, spoiled=False, reason="", ended_at=_now()
@@ -380,8 +471,10 @@ class Recorder:
         )
 
     def _record_shot(self, event: ShotTaken) -> None:
-        shot, end = event.shot, event.end
-        self._enter(
+        shot = event.shot
+        # Of a train the last one stands for the shot; all of them follow.
+        end = event.ends[-1] if event.ends else None
+        entered = self._enter(
             shots,
             pulse=self._pulse,
             at=_now(),
@@ -399,6 +492,19 @@ class Recorder:
             end_uncertainty=end.uncertainty if end else None,
             end_seconds=end.seconds if end else None,
         )
+        if len(event.ends) > 1:
+            rows = [
+                {
+                    "shot": entered,
+                    "place": place,
+                    "end_volts": each.volts,
+                    "end_uncertainty": each.uncertainty,
+                    "end_seconds": each.seconds,
+                }
+                for place, each in enumerate(event.ends, start=1)
+            ]
+            with self._logbook._guarded("written") as connection:
+                connection.execute(sa.insert(train_ends), rows)
 
     def _enter(self, table: sa.Table, **values: Any) -> int:
         with self._logbook._guarded("written") as connection:
@@ -424,6 +530,11 @@ def _insert(connection: Connection, table: sa.Table, **values: Any) -> int:
 
 def _json(settings: Mapping[str, float]) -> str:
     return json.dumps(dict(settings))
+
+
+def _version(connection: Connection) -> int | None:
+    """Return the newest version that has written into the logbook."""
+    return connection.execute(sa.select(sa.func.max(about.c.version))).scalar()
 
 
 def _now() -> str:

@@ -6,10 +6,19 @@ line, column, what was found, what is allowed, what to write.
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
+from typing import Annotated, Any
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError, ValidationInfo
-from pydantic_core import ErrorDetails, PydanticCustomError
+from pydantic import (
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    GetCoreSchemaHandler,
+    GetJsonSchemaHandler,
+    ValidationError,
+    ValidationInfo,
+    WithJsonSchema,
+)
+from pydantic_core import ErrorDetails, PydanticCustomError, core_schema
 
 from pulsetally.sequencer.errors import Mistake
 from pulsetally.sequencer.quantities import KINDS, Kind, QuantityError, is_quantity, parse_quantity
@@ -59,41 +68,58 @@ def _checked(
     return value
 
 
-def quantity(
-    kind: Kind,
-    *,
-    least: float | None = None,
-    most: float | None = None,
-    above: float | None = None,
-    whole: bool = False,
-    names: bool = False,
-) -> Any:
-    """Return a validator that reads a quantity of one kind, or the name of a parameter.
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Quantified:
+    """Read a quantity of one kind, or the name of a parameter, in a model's field.
 
     least, most, above: bounds in SI units. whole: only whole numbers. names: a parameter's
     name is allowed; the value it was declared with is checked like a written one.
     """
 
-    def read(written: object, info: ValidationInfo) -> float | Name:
+    kind: Kind
+    least: float | None = None
+    most: float | None = None
+    above: float | None = None
+    whole: bool = False
+    names: bool = False
+
+    def __get_pydantic_core_schema__(
+        self, source: Any, handler: GetCoreSchemaHandler
+    ) -> core_schema.CoreSchema:
+        """Tell pydantic to read what is written before it looks at the type."""
+        return core_schema.with_info_before_validator_function(self._read, handler(source))
+
+    def __get_pydantic_json_schema__(
+        self, schema: core_schema.CoreSchema, handler: GetJsonSchemaHandler
+    ) -> dict[str, Any]:
+        """Describe what may be written, for editors."""
+        return {"type": ["string", "number"], "examples": [self.kind.example]}
+
+    def _read(self, written: object, info: ValidationInfo) -> float | Name:
+        if isinstance(written, Name):
+            return written
         try:
-            if names and isinstance(written, str) and not is_quantity(written):
-                return _named(written, info)
-            return _checked(parse_quantity(written, kind), least, most, above, whole)
+            if self.names and isinstance(written, str) and not is_quantity(written):
+                return self._named(written, info)
+            return self._checked(parse_quantity(written, self.kind))
         except QuantityError as error:
             raise fault(error.problem, error.remedy) from error
 
-    def _named(written: str, info: ValidationInfo) -> Name:
+    def _checked(self, value: float) -> float:
+        return _checked(value, self.least, self.most, self.above, self.whole)
+
+    def _named(self, written: str, info: ValidationInfo) -> Name:
         declared: Declared = info.context or Declared()
         parameters = declared.parameters or {}
         if written not in parameters:
             raise fault(
-                f"{written!r} is neither {kind.name} nor a declared parameter",
-                f"{nearest(written, [*parameters])}, or a value such as '{kind.example}'"
+                f"{written!r} is neither {self.kind.name} nor a declared parameter",
+                f"{nearest(written, [*parameters])}, or a value such as '{self.kind.example}'"
                 if parameters
-                else f"write a value such as '{kind.example}', or declare the parameter",
+                else f"write a value such as '{self.kind.example}', or declare the parameter",
             )
         try:
-            _checked(parse_quantity(parameters[written], kind), least, most, above, whole)
+            self._checked(parse_quantity(parameters[written], self.kind))
         except QuantityError as error:
             problem, remedy = error.problem, error.remedy
         except PydanticCustomError as error:
@@ -111,7 +137,59 @@ def quantity(
             },
         )
 
-    return BeforeValidator(read)
+
+def quantity(
+    kind: Kind,
+    *,
+    least: float | None = None,
+    most: float | None = None,
+    above: float | None = None,
+    whole: bool = False,
+    names: bool = False,
+) -> Quantified:
+    """Return what reads a quantity of one kind; see Quantified."""
+    return Quantified(kind=kind, least=least, most=most, above=above, whole=whole, names=names)
+
+
+@dataclass(frozen=True, slots=True)
+class OneOf:
+    """Read one of a few words in a model's field."""
+
+    words: tuple[str, ...]
+
+    def __get_pydantic_core_schema__(
+        self, source: Any, handler: GetCoreSchemaHandler
+    ) -> core_schema.CoreSchema:
+        """Tell pydantic to look at the word first."""
+        return core_schema.no_info_before_validator_function(self._read, handler(source))
+
+    def __get_pydantic_json_schema__(
+        self, schema: core_schema.CoreSchema, handler: GetJsonSchemaHandler
+    ) -> dict[str, Any]:
+        """Describe what may be written, for editors."""
+        return {"enum": [*self.words]}
+
+    def _read(self, written: object) -> str:
+        if isinstance(written, str) and written in self.words:
+            return written
+        raise fault(
+            f"{str(written)[:60]!r} is not known here", nearest(str(written), [*self.words])
+        )
+
+
+def _yes_or_no(written: object) -> bool:
+    # YAML 1.2 knows only true and false; people write yes and no.
+    known = {"yes": True, "no": False, True: True, False: False}
+    if isinstance(written, (str, bool)) and written in known:
+        return known[written]
+    raise fault(f"{str(written)[:60]!r} is neither yes nor no", "write 'yes' or 'no'")
+
+
+YesNo = Annotated[
+    bool,
+    BeforeValidator(_yes_or_no),
+    WithJsonSchema({"enum": ["yes", "no", True, False]}),
+]
 
 
 def kind_of(written: object) -> Kind | None:

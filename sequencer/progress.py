@@ -8,13 +8,20 @@ from dataclasses import dataclass, field
 from pulsetally.sequencer.analysis.counting import CountStatistics, full_count
 from pulsetally.sequencer.events import (
     ContactChecked,
+    CyclingBegan,
     Event,
+    FindingKind,
+    Found,
+    PairsSent,
+    PersonAnswered,
+    PersonAsked,
     PulseArmed,
     ReadFinished,
     Role,
     RoundBegan,
     RoundFinished,
     RoundSpoiled,
+    RoundsSkipped,
     RunBegan,
     RunEnded,
     ShotTaken,
@@ -30,7 +37,8 @@ class Progress:
 
     rounds: planned; done: finished. seconds: as planned, None where nobody knows. round: the
     one that goes on. ends: end voltages of its current read, volts. crossings: full counts so
-    far at this setting, pulses. lines: what was said, oldest first.
+    far at this setting, pulses. asking: what a person is asked for, or empty. lines: what was
+    said, oldest first.
     """
 
     rounds: int
@@ -51,6 +59,7 @@ class Progress:
     crossings: list[float] = field(default_factory=list)
     counts: Counter[int] = field(default_factory=Counter)
     stopping: bool = False
+    asking: str = ""
     ended: RunEnded | None = None
     lines: list[str] = field(default_factory=list)
     _began: float = 0.0
@@ -94,6 +103,9 @@ class Progress:
                     Role.STEP: "stepping",
                     Role.READ: "reading",
                     Role.CONTACT: "looking for contact",
+                    Role.PUND: "measuring the switched charge",
+                    Role.LOOP: "measuring a loop",
+                    Role.CYCLE: "cycling",
                 }[event.role]
                 if event.role is not Role.READ:
                     self.ends.clear()
@@ -108,6 +120,29 @@ class Progress:
                 return [self._read(event)]
             case ContactChecked():
                 return _contact_lines(event)
+            case Found():
+                return [finding_line(event.round, event.kind, event.values)]
+            case CyclingBegan():
+                self.doing = f"cycling {event.pairs:,} pairs"
+                self.ends.clear()
+                return [
+                    f"round {event.round}: {self.doing} after {event.done:,}, which takes"
+                    f" {show_duration(event.seconds)}"
+                ]
+            case PairsSent():
+                self.doing = f"cycling: {event.done:,} of {event.planned:,} pairs sent"
+            case PersonAsked():
+                self.asking = event.message
+                return [
+                    f"round {event.round}: the output is off. {event.message} Then press Enter;"
+                    f" there are {show_duration(event.seconds)}."
+                ]
+            case PersonAnswered():
+                self.asking = ""
+                return [f"round {event.round}: " + ("answered" if event.answered else "no answer")]
+            case RoundsSkipped():
+                self.rounds -= event.count
+                return [f"{event.count} rounds are not needed: {event.reason}"]
             case RoundFinished():
                 self.done += 1
                 if self._pending is not None:
@@ -153,11 +188,12 @@ class Progress:
             self.counts.clear()
 
     def _shot(self, event: ShotTaken) -> None:
-        self.pulses += 1
+        sent = max(1, len(event.ends))
+        self.pulses += sent
         if event.role is Role.STEP:
-            self.stepped += 1
-        if event.role is Role.READ and event.end is not None:
-            self.ends.append(event.end.volts)
+            self.stepped += sent
+        if event.role is Role.READ and event.ends:
+            self.ends += [each.volts for each in event.ends]
             self.threshold = event.threshold
             self.at_most = event.at_most or 0
 
@@ -189,9 +225,43 @@ def _contact_lines(event: ContactChecked) -> list[str]:
     return [*lines, f"round {event.round}: {result.note}"] if result.note else lines
 
 
+def finding_line(round_number: int, kind: FindingKind, values: Mapping[str, object]) -> str:
+    """Write what was measured beside a count as one line."""
+    begin = f"round {round_number}: "
+    if "problem" in values:
+        return f"{begin}{kind.value} can't be told: {values['problem']}"
+    match kind:
+        case FindingKind.PUND:
+            density = show_quantity(_number(values, "switched_polarization") * 1e2, "", 4)
+            charge = show_quantity(_number(values, "switched_coulombs"), "C", 4)
+            return f"{begin}switched charge {charge}, {density} uC/cm2"
+        case FindingKind.LOOP:
+            remanent = show_quantity(_number(values, "remanent_polarization") * 1e2, "", 4)
+            up, down = (
+                show_quantity(_number(values, f"coercive_{way}_volts"), "V", 3)
+                for way in ("up", "down")
+            )
+            return f"{begin}remanent polarization {remanent} uC/cm2, coercive {up} and {down}"
+        case FindingKind.CYCLING:
+            return f"{begin}{_number(values, 'pairs'):,.0f} pairs: {values['ended']}"
+        case FindingKind.TUNE:
+            value = values["value"]
+            if value is None:
+                return f"{begin}{values['setting']} was not found: {values['status']}"
+            shown = show_setting(str(values["setting"]), _number(values, "value"))
+            words = f"{begin}{values['setting']} = {shown} ({values['status']})"
+            count = values["count"]
+            return words if count is None else f"{words}, full count {count:.2f}"
+
+
+def _number(values: Mapping[str, object], name: str) -> float:
+    value = values[name]
+    return value if isinstance(value, float) else 0.0
+
+
 def show_setting(name: str, value: float) -> str:
     """Write a swept setting's value with its unit, as far as its name tells it."""
-    from pulsetally.sequencer.recipe import PULSE_KINDS
+    from pulsetally.sequencer.steps import PULSE_KINDS
 
     kind = PULSE_KINDS.get(name.rpartition(".")[2]) if "." in name else None
     return show_quantity(value, kind.unit if kind else "")

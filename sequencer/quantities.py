@@ -8,6 +8,7 @@ and saying so when one is wrong.
 import math
 import re
 from dataclasses import dataclass
+from decimal import Decimal
 
 from quantiphy import Quantity
 
@@ -63,9 +64,10 @@ AREA = Kind(
     example="10000 um2",
 )  # fmt: skip
 LENGTH = Kind(name="a length", unit="m", scaled=("m",), fixed={}, example="150 nm")
+SHARE = Kind(name="a share", unit="%", scaled=(), fixed={"%": 0.01}, example="50 %")
 NUMBER = Kind(name="a plain number", unit="", scaled=(), fixed={}, example="5")
 
-KINDS = (VOLTAGE, TIME, RESISTANCE, CAPACITANCE, CURRENT, AREA, LENGTH, NUMBER)
+KINDS = (VOLTAGE, TIME, RESISTANCE, CAPACITANCE, CURRENT, AREA, LENGTH, SHARE, NUMBER)
 
 _WRITTEN = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*(\S*)\s*")
 _PREFIXES = "QRYZEPTGMkmuµμnpfazyrq"
@@ -96,6 +98,9 @@ def parse_quantity(written: object, kind: Kind) -> float:
         raise QuantityError(f"{written!r} is beyond every range", f"write {_example(kind)}")
     if not unit:
         return parse_quantity(float(number), kind)
+    if kind is SHARE and unit == "%":
+        # In decimal, so that what was written as 1.1 % is read as 0.011 and not nearly so.
+        return float(Decimal(number).scaleb(-2))
     if unit in kind.fixed:
         return float(number) * kind.fixed[unit]
     for symbol in kind.scaled:
@@ -117,6 +122,8 @@ def format_quantity(value: float, kind: Kind) -> str:
     """Write a value in SI units so that parse_quantity reads the same value back."""
     if kind is AREA:
         return f"{_plain(value * 1e12)} um2"
+    if kind is SHARE:
+        return f"{Decimal(repr(value)).scaleb(2)} %"
     if not kind.unit:
         return _plain(value)
     text = Quantity(value, kind.unit).render(prec="full", form="si")

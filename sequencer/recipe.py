@@ -1,31 +1,28 @@
-"""The recipe language: what a recipe may say, and how it is read.
+"""Read a recipe: its text becomes models, and every mistake comes back with its place.
 
-A recipe is data. Its models are the language's definition; every mistake comes back with its
-place, and all mistakes of a file at once.
+All mistakes of a file are told at once, whether they are in the YAML, in a model or between
+several parts of the recipe.
 """
 
 import re
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from importlib.resources import files
 from pathlib import Path as FilePath
-from typing import Annotated, Any
-
-from pydantic import BeforeValidator, Discriminator, Field, Tag, ValidationInfo
+from typing import Any
 
 from pulsetally.sequencer.errors import Mistake, RecipeError
-from pulsetally.sequencer.models import (
-    Declared,
-    Model,
-    Name,
-    fault,
-    field_names,
-    is_tag,
-    kind_of,
-    quantity,
-    validate,
+from pulsetally.sequencer.models import Declared, field_names, is_tag, kind_of, validate
+from pulsetally.sequencer.quantities import Kind
+from pulsetally.sequencer.ranges import RangeFault, axis_values
+from pulsetally.sequencer.steps import (
+    PULSE_KINDS,
+    STEP_MODELS,
+    CyclePair,
+    PulseModel,
+    RecipeModel,
+    StopWhen,
 )
-from pulsetally.sequencer.quantities import NUMBER, TIME, VOLTAGE, Kind
 from pulsetally.sequencer.yaml_places import (
     Path,
     PlacedData,
@@ -36,168 +33,8 @@ from pulsetally.sequencer.yaml_places import (
 )
 
 _WORD = re.compile(r"[A-Za-z][A-Za-z0-9_-]*")
-
-Value = float | Name
-
-
-def _pulse_name(written: object, info: ValidationInfo) -> str:
-    declared: Declared = info.context or Declared()
-    if not isinstance(written, str) or written not in declared.pulses:
-        raise fault(
-            f"{written!r} is not a pulse of this recipe",
-            nearest(str(written), [*declared.pulses]) + ", or declare it under pulses",
-        )
-    return written
-
-
-PulseName = Annotated[str, BeforeValidator(_pulse_name)]
-Count = Annotated[Value, quantity(NUMBER, least=1, most=1_000_000, whole=True, names=True)]
-# 0 is a count too: step 0 pulses, then read, is how a full count is taken in a sweep.
-StepCount = Annotated[Value, quantity(NUMBER, least=0, most=1_000_000, whole=True, names=True)]
-
-
-class PulseModel(Model):
-    """A trapezoid from base to level and back.
-
-    level, base: volts at the generator's panel. width: seconds between the 50 % points.
-    edge: seconds from 10 % to 90 %. rest: least time at base after it, in seconds.
-    """
-
-    level: Annotated[Value, quantity(VOLTAGE, names=True)]
-    width: Annotated[Value, quantity(TIME, above=0, most=1000, names=True)]
-    base: Annotated[Value, quantity(VOLTAGE, names=True)] = 0.0
-    edge: Annotated[Value, quantity(TIME, above=0, most=100, names=True)] = 100e-9
-    rest: Annotated[Value, quantity(TIME, least=0, names=True)] = 1e-3
-
-
-PULSE_KINDS: dict[str, Kind] = {
-    "level": VOLTAGE,
-    "width": TIME,
-    "base": VOLTAGE,
-    "edge": TIME,
-    "rest": TIME,
-}
-
-
-class PresetStep(Model):
-    """Drive the cell fully down with one pulse; a new round begins here."""
-
-    preset: PulseName
-
-
-class StepStep(Model):
-    """Deliver a stated number of pulses."""
-
-    step: PulseName
-    count: StepCount = 1.0
-
-
-class ReadStep(Model):
-    """Deliver pulses until the end voltage passes the threshold, counting them."""
-
-    read: PulseName
-    until: Annotated[Value, quantity(VOLTAGE, names=True)]
-    at_most: Annotated[Count, Field(alias="at most")]
-
-
-class WaitStep(Model):
-    """Leave the cell alone, with the output on at its base."""
-
-    wait: Annotated[Value, quantity(TIME, least=0, names=True)]
-
-
-class ContactStep(Model):
-    """Look with a small pulse whether a cell is there; the run ends if it is open or short."""
-
-    contact: PulseName
-
-
-class RepeatStep(Model):
-    """Do the steps a stated number of times."""
-
-    repeat: Count
-    steps: Annotated[list["Step"], Field(min_length=1)]
-
-
-def _sweep_axes(written: object, info: ValidationInfo) -> object:
-    if not isinstance(written, dict) or not written:
-        raise fault(
-            "a sweep names what it changes", "write 'sweep: {up.width: [80 us, 100 us, 125 us]}'"
-        )
-    return written
-
-
-class SweepStep(Model):
-    """Do the steps for each combination of the stated values of the stated settings."""
-
-    sweep: Annotated[dict[str, list[Any]], BeforeValidator(_sweep_axes)]
-    steps: Annotated[list["Step"], Field(min_length=1)]
-
-
-STEP_MODELS: dict[str, type[Model]] = {
-    "preset": PresetStep,
-    "step": StepStep,
-    "read": ReadStep,
-    "wait": WaitStep,
-    "contact": ContactStep,
-    "repeat": RepeatStep,
-    "sweep": SweepStep,
-}
-
-
-def _verb(written: object) -> str | None:
-    if isinstance(written, Model):
-        return next(f"<{verb}>" for verb, model in STEP_MODELS.items() if type(written) is model)
-    if isinstance(written, dict):
-        # Some verbs are settings of none, so at most one of them is here.
-        return next((f"<{verb}>" for verb in STEP_MODELS if verb in written), None)
-    return None
-
-
-def _known_step(written: object) -> object:
-    if isinstance(written, Model) or _verb(written):
-        return written
-    verbs = [*STEP_MODELS]
-    if isinstance(written, dict) and written:
-        word = str(next(iter(written)))
-        raise fault(f"there is no step {word!r}", nearest(word, verbs))
-    if isinstance(written, str):
-        raise fault(f"{written!r} is not a step", f"write it as '{verbs[0]}: down'")
-    raise fault("this is not a step", f"begin it with one of {', '.join(verbs)}")
-
-
-Step = Annotated[
-    Annotated[PresetStep, Tag("<preset>")]
-    | Annotated[StepStep, Tag("<step>")]
-    | Annotated[ReadStep, Tag("<read>")]
-    | Annotated[WaitStep, Tag("<wait>")]
-    | Annotated[ContactStep, Tag("<contact>")]
-    | Annotated[RepeatStep, Tag("<repeat>")]
-    | Annotated[SweepStep, Tag("<sweep>")],
-    Discriminator(_verb),
-    BeforeValidator(_known_step),
-]
-
-
-def _title(written: object) -> object:
-    if not isinstance(written, str) or not written.strip():
-        raise fault("a recipe has a title", "write 'recipe: what it finds out'")
-    return written
-
-
-class RecipeModel(Model):
-    """A whole recipe: its title, what it declares, and its steps."""
-
-    recipe: Annotated[str, BeforeValidator(_title)]
-    purpose: str = ""
-    parameters: Annotated[dict[str, Any], Field(default_factory=dict)]
-    pulses: Annotated[dict[str, PulseModel], Field(default_factory=dict)]
-    steps: Annotated[list[Step], Field(min_length=1)]
-
-
-RepeatStep.model_rebuild()
-SweepStep.model_rebuild()
-RecipeModel.model_rebuild()
+# A name of the program's own in what rounds are listed by.
+_TAKEN = ("cycles",)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -270,6 +107,8 @@ def parse_recipe(text: str, *, file: str, overrides: Mapping[str, str] | None = 
 
 
 def _known(path: Path) -> list[str]:
+    if path and path[-1] in _GROUPS:
+        return field_names(_GROUPS[str(path[-1])])
     tags = [part for part in path if is_tag(part)]
     if tags:
         return field_names(STEP_MODELS[str(tags[-1]).strip("<>")])
@@ -332,6 +171,10 @@ def _check_parameters(placed: PlacedData, declared: Declared) -> list[Mistake]:
             )
     for group in ("parameters", "pulses"):
         for name in _group(placed, group):
+            if name in _TAKEN:
+                problem = f"{name!r} is a word of the program's own"
+                remedy = "call it something else"
+                mistakes.append(placed.mistake((group, name), problem, remedy, at_key=True))
             if not _WORD.fullmatch(name):
                 mistakes.append(
                     placed.mistake(
@@ -344,55 +187,98 @@ def _check_parameters(placed: PlacedData, declared: Declared) -> list[Mistake]:
     return mistakes
 
 
+_GROUPS: dict[str, Any] = {"cycle": CyclePair, "stop when": StopWhen}
+
+
+def _steps(steps: object, path: Path) -> Iterator[tuple[dict[str, Any], Path]]:
+    """Yield every step of a recipe as written, however deep, with its place."""
+    for index, step in enumerate(steps if isinstance(steps, list) else []):
+        if isinstance(step, dict):
+            yield step, (*path, index)
+            yield from _steps(step.get("steps"), (*path, index, "steps"))
+
+
 def _check_sweeps(
     placed: PlacedData, declared: Declared, overrides: Mapping[str, str]
 ) -> list[Mistake]:
     mistakes: list[Mistake] = []
-
-    def walk(steps: object, path: Path) -> None:
-        for index, step in enumerate(steps if isinstance(steps, list) else []):
-            if isinstance(step, dict):
-                if isinstance(step.get("sweep"), dict):
-                    for name, values in step["sweep"].items():
-                        here = (*path, index, "sweep", name)
-                        if name in overrides:
-                            problem = f"{name!r} is swept here, so --set would change nothing"
-                            remedy = "change the sweep, or leave that --set out"
-                            mistakes.append(placed.mistake(here, problem, remedy, at_key=True))
-                        mistakes.extend(_check_axis(placed, declared, name, values, here))
-                walk(step.get("steps"), (*path, index, "steps"))
-
-    walk(placed.data.get("steps") if isinstance(placed.data, dict) else None, ("steps",))
+    steps = placed.data.get("steps") if isinstance(placed.data, dict) else None
+    for step, path in _steps(steps, ("steps",)):
+        axes = step.get("sweep")
+        if isinstance(axes, dict):
+            lengths = set()
+            for name, written in axes.items():
+                here = (*path, "sweep", name)
+                found, more = _check_axis(placed, declared, name, written, here)
+                mistakes += more + _check_override(placed, name, here, overrides)
+                lengths.add(len(found))
+            if step.get("together") in ("yes", True) and len(lengths) > 1 and 0 not in lengths:
+                problem = f"axes that move together have {_list(sorted(lengths))} values"
+                remedy = "give all of them as many values"
+                mistakes.append(placed.mistake((*path, "sweep"), problem, remedy))
+        if isinstance(step.get("tune"), str) and isinstance(step.get("between"), list):
+            mistakes += _check_tune(placed, declared, step, path, overrides)
     return mistakes
 
 
-def _check_axis(
-    placed: PlacedData, declared: Declared, name: str, values: object, path: Path
+def _list(numbers: list[int]) -> str:
+    return " and ".join(str(each) for each in numbers)
+
+
+def _check_override(
+    placed: PlacedData, name: str, path: Path, overrides: Mapping[str, str]
 ) -> list[Mistake]:
+    if name not in overrides:
+        return []
+    problem = f"{name!r} is swept here, so --set would change nothing"
+    remedy = "change the sweep, or leave that --set out"
+    return [placed.mistake(path, problem, remedy, at_key=True)]
+
+
+def _check_axis(
+    placed: PlacedData, declared: Declared, name: str, written: object, path: Path
+) -> tuple[list[float], list[Mistake]]:
     kind = axis_kind(name, declared)
     if kind is None:
-        known = _settable({pulse: {} for pulse in declared.pulses}, declared.parameters or {})
-        return [
-            placed.mistake(
-                path,
-                f"{name!r} is not a parameter or pulse setting of this recipe",
-                nearest(name, known),
-                at_key=True,
-            )
-        ]
-    if not isinstance(values, list):
-        return []
-    if not values:
-        return [placed.mistake(path, "a sweep without values does nothing", "write some values")]
-    return [
-        placed.mistake(
-            (*path, index),
-            f"{str(written)[:60]!r} is not {kind.name}, which {name} needs",
-            f"write one such as '{kind.example}'",
-        )
-        for index, written in enumerate(values)
-        if (found := kind_of(written)) is not kind and not (found and written == 0)
-    ]
+        return [], [_unknown_setting(placed, declared, name, path, at_key=True)]
+    try:
+        return axis_values(name, written, kind), []
+    except RangeFault as error:
+        where = path if error.place is None else (*path, error.place)
+        return [], [placed.mistake(where, error.problem, error.remedy)]
+
+
+def _check_tune(
+    placed: PlacedData,
+    declared: Declared,
+    step: dict[str, Any],
+    path: Path,
+    overrides: Mapping[str, str],
+) -> list[Mistake]:
+    name = step["tune"]
+    if axis_kind(name, declared) is None:
+        return [_unknown_setting(placed, declared, name, (*path, "tune"))]
+    ends, mistakes = _check_axis(placed, declared, name, step["between"], (*path, "between"))
+    if len(ends) == 2 and ends[0] >= ends[1]:
+        problem, remedy = "the first value is not the smaller one", "write [smaller, larger]"
+        mistakes.append(placed.mistake((*path, "between"), problem, remedy))
+    if name in overrides:
+        problem = f"{name!r} is tuned here, so --set would change nothing"
+        remedy = "leave that --set out"
+        mistakes.append(placed.mistake((*path, "tune"), problem, remedy))
+    return mistakes
+
+
+def _unknown_setting(
+    placed: PlacedData, declared: Declared, name: str, path: Path, *, at_key: bool = False
+) -> Mistake:
+    known = _settable({pulse: {} for pulse in declared.pulses}, declared.parameters or {})
+    return placed.mistake(
+        path,
+        f"{name!r} is not a parameter or pulse setting of this recipe",
+        nearest(name, known),
+        at_key=at_key,
+    )
 
 
 def axis_kind(name: str, declared: Declared) -> Kind | None:

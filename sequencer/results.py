@@ -1,7 +1,6 @@
 """Look up what runs found: logbook -> results, for people and for programs."""
 
 import json
-import math
 import os
 import re
 import socket
@@ -17,6 +16,7 @@ from pulsetally.sequencer.events import Role, RunState, Shot
 from pulsetally.sequencer.logbook import (
     Logbook,
     contacts,
+    findings,
     pulses,
     reads,
     round_ends,
@@ -25,6 +25,8 @@ from pulsetally.sequencer.logbook import (
     run_identities,
     runs,
     shots,
+    skipped_rounds,
+    trains,
     unpack,
 )
 
@@ -44,6 +46,7 @@ class RunSummary:
     rounds: int
     planned_rounds: int
     shots: int
+    skipped: int = 0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -62,11 +65,22 @@ class ReadResult:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Finding:
+    """Something beside a count. kind: a FindingKind's word; the rest as in Found."""
+
+    kind: str
+    pulse: str
+    settings: dict[str, float]
+    values: dict[str, Any]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class RoundResult:
     """One attempt at a round.
 
     stepped: pulses of 'step' that were recorded in it. contacts: what each contact pulse found:
-    pulse, verdict, final_volts, tau and expected_tau (seconds).
+    pulse, verdict, final_volts, tau and expected_tau (seconds). findings: what else was
+    measured.
     """
 
     round: int
@@ -79,6 +93,7 @@ class RoundResult:
     stepped: int
     reads: tuple[ReadResult, ...]
     contacts: tuple[dict[str, Any], ...] = ()
+    findings: tuple["Finding", ...] = ()
 
     @property
     def fill(self) -> ReadResult | None:
@@ -141,6 +156,7 @@ class RunResult:
             "ended_at": summary.ended_at,
             "instruments": self.identities,
             "planned_rounds": summary.planned_rounds,
+            "skipped_rounds": summary.skipped,
             "shots": summary.shots,
             "swept": list(self.swept),
             "rounds": [_round_object(each) for each in self.rounds],
@@ -187,14 +203,15 @@ def run_result(logbook: Logbook, run: int) -> RunResult:
     swept = json.loads(logbook.select(sa.select(runs.c.swept).where(runs.c.id == run))[0][0])
     found = _rounds(logbook, run, going=summary.state == RunState.RUNNING)
     counted = [read for each in found if (read := each.full_read) is not None]
-    groups: dict[tuple[float, ...], list[float]] = {}
+    groups: dict[tuple[tuple[str, float], ...], list[float]] = {}
     for read in counted:
         if read.crossing is not None:
-            place = tuple(read.settings.get(name, math.nan) for name in swept)
+            # Not everything that is swept is in force everywhere, as the pairs of a cycling.
+            place = tuple((name, read.settings[name]) for name in swept if name in read.settings)
             groups.setdefault(place, []).append(read.crossing)
     by_setting = [
-        SettingCount(settings=dict(zip(swept, values, strict=True)), count=statistics)
-        for values, group in groups.items()
+        SettingCount(settings=dict(place), count=statistics)
+        for place, group in groups.items()
         if swept and (statistics := full_count(group)) is not None
     ]
     return RunResult(
@@ -242,6 +259,9 @@ def _summaries() -> "sa.Select[Any]":
         .join(rounds, pulses.c.round == rounds.c.id)
         .where(rounds.c.run == runs.c.id)
     )
+    skipped = sa.select(sa.func.coalesce(sa.func.sum(skipped_rounds.c["count"]), 0)).where(
+        skipped_rounds.c.run == runs.c.id
+    )
     return sa.select(
         runs,
         run_ends.c.state,
@@ -250,6 +270,7 @@ def _summaries() -> "sa.Select[Any]":
         run_ends.c.ended_at,
         done.scalar_subquery().label("rounds_done"),
         taken.scalar_subquery().label("shots_taken"),
+        skipped.scalar_subquery().label("rounds_skipped"),
     ).outerjoin(run_ends, run_ends.c.run == runs.c.id)
 
 
@@ -271,6 +292,7 @@ def _summary(row: Any) -> RunSummary:
         rounds=row.rounds_done,
         planned_rounds=row.planned_rounds,
         shots=row.shots_taken,
+        skipped=row.rounds_skipped,
     )
 
 
@@ -292,14 +314,19 @@ def _identities(logbook: Logbook, run: int) -> dict[str, str]:
 def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
     sent: dict[int, list[str]] = {}
     recorded = (
-        sa.select(pulses.c.round, pulses.c.role)
+        sa.select(
+            pulses.c.round,
+            pulses.c.role,
+            sa.func.coalesce(trains.c["count"], 1).label("several"),
+        )
         .join(shots, shots.c.pulse == pulses.c.id)
+        .outerjoin(trains, trains.c.pulse == pulses.c.id)
         .join(rounds, pulses.c.round == rounds.c.id)
         .where(rounds.c.run == run)
         .order_by(pulses.c.id)
     )
     for row in logbook.select(recorded):
-        sent.setdefault(row.round, []).append(row.role)
+        sent.setdefault(row.round, []).extend([row.role] * row.several)
     read: dict[int, list[ReadResult]] = {}
     for row in logbook.select(
         sa.select(reads)
@@ -330,6 +357,21 @@ def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
     ):
         names = ("pulse", "verdict", "final_volts", "tau", "expected_tau")
         looked.setdefault(row.round, []).append({name: row._mapping[name] for name in names})
+    found: dict[int, list[Finding]] = {}
+    for row in logbook.select(
+        sa.select(findings)
+        .join(rounds, findings.c.round == rounds.c.id)
+        .where(rounds.c.run == run)
+        .order_by(findings.c.id)
+    ):
+        found.setdefault(row.round, []).append(
+            Finding(
+                kind=row.kind,
+                pulse=row.pulse,
+                settings=json.loads(row.settings),
+                values=json.loads(row.found),
+            )
+        )
     query = (
         sa.select(rounds, round_ends.c.spoiled, round_ends.c.reason)
         .outerjoin(round_ends, round_ends.c.round == rounds.c.id)
@@ -349,6 +391,7 @@ def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
             stepped=sent.get(row.id, []).count(Role.STEP.value),
             reads=tuple(read.get(row.id, [])),
             contacts=tuple(looked.get(row.id, [])),
+            findings=tuple(found.get(row.id, [])),
         )
         for row in logbook.select(query)
     ]
@@ -374,6 +417,15 @@ def _round_object(each: RoundResult) -> dict[str, Any]:
         "reason": each.reason,
         "stepped": each.stepped,
         "contacts": list(each.contacts),
+        "findings": [
+            {
+                "kind": one.kind,
+                "pulse": one.pulse,
+                "settings": one.settings,
+                **one.values,
+            }
+            for one in each.findings
+        ],
         "reads": [
             {
                 "pulse": read.pulse,

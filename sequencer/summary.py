@@ -79,7 +79,7 @@ def show_runs(console: Console, found: list[RunSummary]) -> None:
             Text(printable(each.title)),
             Text(printable(each.mode)),
             Text(printable(each.state)),
-            f"{each.rounds} of {each.planned_rounds}",
+            f"{each.rounds} of {each.planned_rounds - each.skipped}",
             str(each.shots),
         )
     console.print(table)
@@ -97,7 +97,10 @@ def show_result(console: Console, result: RunResult, *, rounds: bool = True) -> 
     if rounds:
         for role, identity in result.identities.items():
             say(console, f"{role}: {identity}")
-    kept = f"{summary.rounds} of {summary.planned_rounds} rounds, {summary.shots} shots kept"
+    needed = summary.planned_rounds - summary.skipped
+    kept = f"{summary.rounds} of {needed} rounds, {summary.shots} shots kept"
+    if summary.skipped:
+        kept += f"; {summary.skipped} more were planned and not needed"
     say(console, kept)
     if rounds and result.rounds:
         console.print(_round_table(result))
@@ -136,7 +139,7 @@ def _show_counts(console: Console, result: RunResult) -> None:
             *_names(result), "full count", "scatter", "rounds", title="Full count, pulses"
         )
         for each in result.by_setting:
-            values = [show_setting(name, value) for name, value in each.settings.items()]
+            values = [_swept(name, each.settings) for name in result.swept]
             table.add_row(
                 *values, f"{each.count.mean:.2f}", _scatter(each.count), str(each.count.rounds)
             )

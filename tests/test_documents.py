@@ -10,13 +10,9 @@ import pytest
 from pulsetally.sequencer.bench import parse_bench
 from pulsetally.sequencer.dialects import shipped_dialects
 from pulsetally.sequencer.plan import make_plan
-from pulsetally.sequencer.recipe import (
-    PULSE_KINDS,
-    STEP_MODELS,
-    parse_recipe,
-    shipped_recipes,
-)
+from pulsetally.sequencer.recipe import parse_recipe, shipped_recipes
 from pulsetally.sequencer.rehearsal import shipped_bench
+from pulsetally.sequencer.steps import PULSE_KINDS, STEP_MODELS
 from pulsetally.simulators.table_file import parse_table, shipped_tables, table_text
 from pulsetally.simulators.table_file_words import WORDS
 

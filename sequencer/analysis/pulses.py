@@ -125,3 +125,46 @@ def cell_charge(
     """
     current = series_current(source, node, series_ohms) - node / probe_ohms
     return float(np.trapezoid(current, times))
+
+
+def train_ends(
+    times: Samples,
+    source: Samples,
+    node: Samples,
+    *,
+    base: float,
+    level: float,
+    ramp: float,
+    count: int,
+    period: float,
+    seen: tuple[float, float] = (-math.inf, math.inf),
+) -> tuple[EndVoltage, ...]:
+    """Estimate the end voltage of each of count pulses in one record, period seconds apart.
+
+    The record's time 0 is where the first leading edge passes 50 %. Everything else as for
+    end_voltage, whose errors it raises with the number of the pulse.
+    """
+    first, last = half_crossings(times, source, base, level)
+    # Halfway between two pulses, as far as the generator keeps the period it was told.
+    width = last - first - (count - 1) * period
+    lead = (period - width) / 2
+    found = []
+    for place in range(count):
+        begin = first + place * period - lead
+        left, right = np.searchsorted(times, (begin, begin + period), side="left")
+        part = slice(int(left), int(right))
+        try:
+            found.append(
+                end_voltage(
+                    times[part],
+                    source[part],
+                    node[part],
+                    base=base,
+                    level=level,
+                    ramp=ramp,
+                    seen=seen,
+                )
+            )
+        except PulseUnreadable as error:
+            raise PulseUnreadable(f"pulse {place + 1} of the train: {error}") from error
+    return tuple(found)

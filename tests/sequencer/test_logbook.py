@@ -77,7 +77,7 @@ def armed(order: int, role: Role) -> PulseArmed:
 def taken(order: int, role: Role, volts: float) -> ShotTaken:
     end = EndVoltage(volts=volts, uncertainty=1e-3, samples=9, seconds=1e-4)
     shot = invented_shot(order)
-    return ShotTaken(round=1, order=order, role=role, pulse="up", shot=shot, end=end)
+    return ShotTaken(round=1, order=order, role=role, pulse="up", shot=shot, ends=(end,))
 
 
 def seen_from_outside(path: Path, table: str) -> int:

@@ -4,9 +4,10 @@ import pytest
 
 from pulsetally.sequencer.bench import parse_bench
 from pulsetally.sequencer.errors import PlanError
-from pulsetally.sequencer.plan import Plan, Preset, Read, Step, Wait, make_plan
+from pulsetally.sequencer.plan import Plan, make_plan
 from pulsetally.sequencer.recipe import find_recipe, parse_recipe, shipped_recipes
 from pulsetally.sequencer.rehearsal import shipped_bench
+from pulsetally.sequencer.rounds import Preset, Read, Step, Wait
 
 HEAD = """\
 recipe: test

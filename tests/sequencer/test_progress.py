@@ -24,8 +24,8 @@ from pulsetally.sequencer.events import (
     WaitBegan,
 )
 from pulsetally.sequencer.live import draw, follow
-from pulsetally.sequencer.plan import Preset, Pulse, Round
 from pulsetally.sequencer.progress import Progress, printable
+from pulsetally.sequencer.rounds import Preset, Pulse, Round
 from tests.sequencer.test_logbook import invented_shot
 
 
@@ -39,7 +39,7 @@ def read_pulse(order: int, volts: float) -> list[Event]:
             role=Role.READ,
             pulse="up",
             shot=invented_shot(),
-            end=end,
+            ends=(end,),
             threshold=2.5,
             at_most=60,
         ),

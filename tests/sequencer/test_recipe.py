@@ -96,7 +96,7 @@ MISTAKES = [
     ("hold: [1 s, 10 s]", "hold: []", "a sweep without values"),
     ("hold: [1 s, 10 s]", "hold: [1 V]", "not a time, which hold needs"),
     ("hold: [1 s, 10 s]", "hodl: [1 s]", "'hodl' is not a parameter"),
-    ("hold: [1 s, 10 s]", "hold: 1 s", "not a list"),
+    ("hold: [1 s, 10 s]", "hold: 1 s", "neither a list nor a range"),
     ("stored: 5", "stored: five", "not a quantity"),
     ("recipe: Full count", "recipe:", "a recipe has a title"),
     ("recipe: Full count", "recipe: Full count\nauthor: me", "there is no setting 'author'"),

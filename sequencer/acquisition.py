@@ -1,0 +1,373 @@
+"""Deliver pulses and fetch what the oscilloscope saw of them: set up, arm, fire, fetch.
+
+The oscilloscope is known to be armed before the generator fires, and whoever records has
+recorded the intent by then: it is an event, and the pulse goes out when the next one is asked
+for.
+"""
+
+from collections.abc import Callable, Generator, Iterator
+from dataclasses import dataclass
+
+from pulsetally.drivers.errors import InstrumentError
+from pulsetally.drivers.function_generator import PulseSetting
+from pulsetally.drivers.oscilloscope import AcquisitionSetting, Trace
+from pulsetally.sequencer.analysis.pulses import (
+    EndVoltage,
+    PulseUnreadable,
+    end_voltage,
+    train_ends,
+)
+from pulsetally.sequencer.bench import Bench
+from pulsetally.sequencer.errors import ShotMissing, StopRequested
+from pulsetally.sequencer.events import (
+    Event,
+    PairsSent,
+    PulseArmed,
+    PulseSetUp,
+    Role,
+    Shot,
+    ShotTaken,
+    StopAsked,
+    Waveform,
+)
+from pulsetally.sequencer.instruments import Instruments
+from pulsetally.sequencer.records import Window, train_period, train_window, window_of
+from pulsetally.sequencer.rounds import Cycle, Pulse
+from pulsetally.sequencer.safety import StopSwitch
+
+# While a run waits, the lines are used so often, and at most so many times.
+_IDLE_SECONDS, _LONGEST_IDLE_SECONDS, _SLICES = 30.0, 180.0, 20
+# The digitizer's range, against the swing that is expected.
+_HEADROOM = 1.2
+# How long one burst of a cycling lasts at most, so that a stop after it comes in the same night.
+_BURST_SECONDS = 3600.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Burst:
+    """What one trigger sends and what is recorded of it.
+
+    count: pulses. ends: whether end voltages are wanted. window: None where nothing is recorded.
+    """
+
+    pulse: Pulse
+    window: Window | None
+    count: int = 1
+    ends: bool = True
+
+    @property
+    def period(self) -> float:
+        """Return the time from one pulse to the next, in seconds."""
+        # A pulse that is triggered by itself has its rest as the program waits.
+        return train_period(self.pulse) if self.count > 1 else 2 * self.pulse.duration
+
+
+def single(pulse: Pulse) -> Burst:
+    """Return a burst of one pulse whose end voltage is wanted."""
+    return Burst(pulse=pulse, window=window_of(pulse))
+
+
+def train(pulse: Pulse, count: int) -> Burst:
+    """Return a burst of several pulses in one record."""
+    if count == 1:
+        return single(pulse)
+    return Burst(pulse=pulse, count=count, window=train_window(pulse, count))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Taken:
+    """A burst's record, and the end voltage of each of its pulses."""
+
+    shot: Shot
+    ends: tuple[EndVoltage, ...]
+
+
+class Acquisition:
+    """Take the instruments of a bench from burst to burst."""
+
+    def __init__(self, bench: Bench, instruments: Instruments, stop: StopSwitch) -> None:
+        self._bench, self._stop = bench, stop
+        self.generator, self.oscilloscope = instruments.generator, instruments.oscilloscope
+        self.clock = instruments.clock
+        self._ready_for: Burst | None = None
+        self._next_at = 0.0
+        self._stop_announced = False
+        self._record_seconds = 0.0
+
+    def deliver(
+        self,
+        burst: Burst,
+        *,
+        number: int,
+        order: int,
+        role: Role,
+        threshold: float | None = None,
+        at_most: int | None = None,
+    ) -> Generator[Event, None, Taken]:
+        """Deliver a burst and record it: arm, know that it is armed, fire, fetch.
+
+        number: of the round. order: of its first pulse. Raises ShotMissing when it was fired and
+        its record isn't there.
+        """
+        pulse = burst.pulse
+        if self._unannounced:
+            yield self._announce()
+        # The rest is spent at the base of the pulse before; only then comes the next one's.
+        self._pause(self._next_at - self.clock.now())
+        yield from self._set_up(burst)
+        if self._stop.at_once:
+            raise StopRequested(self._stop.reason)
+        self.oscilloscope.arm()
+        before = burst.window.before if burst.window else 0.0
+        armed, done = self.oscilloscope.armed, self.oscilloscope.done
+        patience = armed.limit_seconds + 2 * before * self._record_seconds
+        if not self._until(self.oscilloscope.is_armed, patience, armed.poll_seconds):
+            raise InstrumentError(
+                self.oscilloscope.address,
+                "",
+                f"it did not arm within {patience:.3g} s, so nothing was fired",
+                "look whether its screen waits for a person",
+            )
+        yield PulseArmed(
+            round=number,
+            order=order,
+            role=role,
+            pulse=pulse.name,
+            threshold=threshold,
+            count=burst.count,
+            period=burst.period if burst.count > 1 else None,
+        )
+        self.generator.fire()
+        patience = done.limit_seconds + self._record_seconds
+        if not self._until(self.oscilloscope.is_done, patience, done.poll_seconds):
+            self.oscilloscope.abort()
+            raise ShotMissing(order, f"pulse {order} was fired and the oscilloscope saw no trigger")
+        shot, node = self._fetch()
+        self._next_at = shot.bench_seconds + pulse.rest
+        ends, problem = self._reduce(shot, node, burst)
+        yield ShotTaken(
+            round=number,
+            order=order,
+            role=role,
+            pulse=pulse.name,
+            shot=shot,
+            ends=ends,
+            threshold=threshold,
+            at_most=at_most,
+        )
+        if problem:
+            raise ShotMissing(order, f"the record of pulse {order} can't be used: {problem}")
+        return Taken(shot=shot, ends=ends)
+
+    def cycle(self, action: Cycle, *, number: int, order: int) -> Generator[Event, None, None]:
+        """Have the generator send pairs by itself, in bursts, and wait for their ends.
+
+        Yields PulseArmed before each burst. A stop in the middle of one aborts it.
+        """
+        left, pulse = action.pairs, action.pulse
+        most = max(1, int(min(self.generator.most_count, _BURST_SECONDS / action.period)))
+        self._pause(self._next_at - self.clock.now())
+        while left:
+            if self._stop.after_round and left < action.pairs:
+                raise StopRequested(self._stop.reason)
+            count = min(left, most)
+            burst = Burst(pulse=pulse, count=count, window=None, ends=False)
+            yield from self._set_up(burst, period=action.period)
+            yield PulseArmed(
+                round=number,
+                order=order,
+                role=Role.CYCLE,
+                pulse=pulse.name,
+                count=count,
+                period=action.period,
+            )
+            if self._stop.at_once:
+                raise StopRequested(self._stop.reason)
+            self.generator.fire()
+            seconds = count * action.period
+            try:
+                yield from self.wait(seconds)
+            except StopRequested:
+                self.generator.abort()
+                raise
+            if not self._until(self.generator.is_idle, 5.0 + 0.01 * seconds, 2e-3):
+                self.generator.abort()
+                raise InstrumentError(
+                    self.generator.address,
+                    "",
+                    f"its burst of {count} pulse pairs should have taken {seconds:.6g} s and goes"
+                    " on after that",
+                    "compare its period and count with the recipe",
+                )
+            left -= count
+            order += 1
+            yield PairsSent(round=number, done=action.pairs - left, planned=action.pairs)
+        self._next_at = self.clock.now()
+
+    def explain(self, problem: str) -> str:
+        """Return a problem with what the instruments say about it; make them ready again."""
+        words = [problem]
+        for instrument in (self.generator, self.oscilloscope):
+            for number, text in instrument.errors():
+                words.append(f"{instrument.address} reports {number}, {text!r}")
+        self.oscilloscope.abort()
+        self.generator.abort()
+        self._ready_for = None
+        return "; ".join(words)
+
+    def switch_off(self) -> None:
+        """Switch the output off and read that back, until the next burst is set up."""
+        self._ready_for = None
+        self.generator.switch(on=False)
+
+    def check_errors(self) -> None:
+        """Raise what is in the instruments' error queues."""
+        self.generator.raise_errors("")
+        self.oscilloscope.raise_errors("")
+
+    # Setting up.
+
+    def _set_up(self, burst: Burst, *, period: float | None = None) -> Iterator[Event]:
+        if burst == self._ready_for:
+            return
+        self._ready_for = None
+        pulse = burst.pulse
+        generated = self.generator.set_pulse(
+            PulseSetting(
+                base=pulse.base,
+                level=pulse.level,
+                width=pulse.width,
+                edge=pulse.edge,
+                period=period or burst.period,
+                count=burst.count,
+            )
+        )
+        acquired: dict[str, float] = {}
+        if burst.window is not None:
+            acquisition = self._acquisition(pulse, burst.window)
+            acquired = self.oscilloscope.set_acquisition(acquisition)
+            self._record_seconds = acquisition.points * acquisition.sample_interval
+        self.generator.switch(on=True)
+        self.clock.sleep(self.generator.settle_seconds)
+        self._ready_for = burst
+        yield PulseSetUp(
+            pulse=pulse.name,
+            settings={
+                **{f"generator {name}": value for name, value in generated.items()},
+                **{f"oscilloscope {name}": value for name, value in acquired.items()},
+            },
+        )
+
+    def _acquisition(self, pulse: Pulse, window: Window) -> AcquisitionSetting:
+        oscilloscope = self._bench.model.oscilloscope
+        levels = (pulse.base, pulse.level)
+        source = [self._bench.terminal_volts(volts) for volts in levels]
+        node = [self._bench.cell_volts(volts) for volts in levels]
+        return AcquisitionSetting(
+            sample_interval=self.oscilloscope.interval_for(window.seconds, window.points),
+            points=window.points,
+            before=window.before,
+            ranges={
+                int(oscilloscope.source_channel): _range(source),
+                int(oscilloscope.node_channel): _range(node),
+            },
+            trigger_channel=int(oscilloscope.source_channel),
+            trigger_volts=sum(source) / 2,
+            rising=pulse.rising,
+        )
+
+    # Records.
+
+    def _fetch(self) -> tuple[Shot, Trace]:
+        oscilloscope = self._bench.model.oscilloscope
+        source = self.oscilloscope.fetch(int(oscilloscope.source_channel))
+        node = self.oscilloscope.fetch(int(oscilloscope.node_channel))
+        shot = Shot(
+            source=_waveform(source),
+            node=_waveform(node),
+            sample_interval=source.sample_interval,
+            first_seconds=source.first_seconds,
+            clipped=source.clipped or node.clipped,
+            bench_seconds=self.clock.now(),
+        )
+        return shot, node
+
+    def _reduce(self, shot: Shot, node: Trace, burst: Burst) -> tuple[tuple[EndVoltage, ...], str]:
+        if not burst.ends:
+            return (), ""
+        pulse, bench = burst.pulse, self._bench
+        base, level = bench.terminal_volts(pulse.base), bench.terminal_volts(pulse.level)
+        arrays = shot.times, shot.source.volts, shot.node.volts
+        seen = node.range_volts
+        try:
+            if burst.count == 1:
+                end = end_voltage(*arrays, base=base, level=level, ramp=pulse.ramp, seen=seen)
+                return (end,), ""
+            return train_ends(
+                *arrays,
+                base=base,
+                level=level,
+                ramp=pulse.ramp,
+                seen=seen,
+                count=burst.count,
+                period=burst.period,
+            ), ""
+        except PulseUnreadable as error:
+            return (), str(error)
+
+    # Time.
+
+    def wait(self, seconds: float) -> Iterator[Event]:
+        """Leave the cell alone, and ask the instruments something now and then.
+
+        Routers and instruments drop a line that is idle for long; a dropped one is better
+        noticed now than when the cell is due. Who asks for a stop meanwhile is answered at once.
+        """
+        end = self.clock.now() + seconds
+        part = min(max(_IDLE_SECONDS, seconds / _SLICES), _LONGEST_IDLE_SECONDS)
+        # A wait of a month in a rehearsal is no reason to ask ten thousand times.
+        part = max(part, seconds / 1000)
+        while (left := end - self.clock.now()) > 0:
+            self.clock.sleep(min(left, part), lambda: self._stop.at_once or self._unannounced)
+            if self._stop.at_once:
+                raise StopRequested(self._stop.reason)
+            if self._unannounced:
+                yield self._announce()
+            elif left > part:
+                self.generator.output_is_on()
+                self.oscilloscope.identify()
+
+    @property
+    def _unannounced(self) -> bool:
+        return self._stop.after_round and not self._stop_announced
+
+    def _announce(self) -> StopAsked:
+        self._stop_announced = True
+        return StopAsked(at_once=self._stop.at_once)
+
+    def _pause(self, seconds: float) -> None:
+        if seconds > 0:
+            self.clock.sleep(seconds, lambda: self._stop.at_once)
+        if self._stop.at_once:
+            raise StopRequested(self._stop.reason)
+
+    def _until(self, condition: Callable[[], bool], seconds: float, poll_seconds: float) -> bool:
+        if condition():
+            return True
+        deadline = self.clock.now() + seconds
+        while self.clock.now() < deadline:
+            self.clock.sleep(poll_seconds)
+            if condition():
+                return True
+        return False
+
+
+def _range(levels: list[float]) -> tuple[float, float]:
+    # Around the pulse and not around zero: a pulse goes one way only, and an 8-bit digitizer
+    # has no codes to give away.
+    middle, half = sum(levels) / 2, abs(levels[1] - levels[0]) / 2
+    return middle - _HEADROOM * half, middle + _HEADROOM * half
+
+
+def _waveform(trace: Trace) -> Waveform:
+    return Waveform(codes=trace.codes, scale=trace.volts_per_code, offset=trace.volts_at_zero)

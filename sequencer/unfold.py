@@ -1,0 +1,499 @@
+"""Unfold a recipe: repeats, sweeps, tunings and cyclings written out as rounds.
+
+Walks the steps with the settings that are in force at each, works out names, sweeps and
+voltages across the cell, and cuts the result at each preset. Every problem is collected.
+"""
+
+import itertools
+import random
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+from pulsetally.sequencer.bench import Bench, CellVoltsUnreachable
+from pulsetally.sequencer.models import Declared, Model, Name, kind_of
+from pulsetally.sequencer.quantities import parse_quantity, show_quantity
+from pulsetally.sequencer.ranges import axis_values
+from pulsetally.sequencer.recipe import Recipe, axis_kind
+from pulsetally.sequencer.rounds import (
+    Action,
+    Ask,
+    Contact,
+    Cycle,
+    Cycling,
+    Loop,
+    Preset,
+    Pulse,
+    Pund,
+    Read,
+    Round,
+    Step,
+    Tune,
+    Wait,
+    pulses_of,
+    triangle,
+)
+from pulsetally.sequencer.steps import (
+    MOST_PAIRS,
+    PULSE_KINDS,
+    AskStep,
+    ContactStep,
+    CycleStep,
+    LoopStep,
+    PresetStep,
+    PundStep,
+    ReadStep,
+    RepeatStep,
+    StepStep,
+    SweepStep,
+    TuneStep,
+    WaitStep,
+)
+
+# A night has room for some ten thousand rounds; a million is a mistake in a sweep.
+MOST_ROUNDS = 100_000
+_MOST_ACTIONS = 1_000_000
+# Ten years: nobody waits longer, and a sweep that says so has lost its unit.
+_LONGEST_WAIT = 3.2e8
+
+Settings = dict[str, float]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Part:
+    """One action with the settings in force at it, and what its round belongs to."""
+
+    action: Action
+    settings: Settings
+    cycling: Cycling | None = None
+    tune: Tune | None = None
+    begins: bool = False
+
+
+class Unfolding:
+    """Walk a recipe's steps for a bench; rounds() does it, problems and swept tell the rest."""
+
+    def __init__(self, recipe: Recipe, bench: Bench) -> None:
+        self._recipe, self._bench = recipe, bench
+        self._actions = 0
+        self._changed = False
+        self._settings: Settings = {}
+        self._names: dict[str, Name] = {}
+        self.problems: list[str] = []
+        self.swept: dict[str, None] = {}
+        model = recipe.model
+        self._declared = Declared(tuple(model.pulses), model.parameters)
+        for name, written in model.parameters.items():
+            self._settings[name] = _written(written)
+        for pulse, settings in model.pulses.items():
+            for setting in PULSE_KINDS:
+                value = getattr(settings, setting)
+                if isinstance(value, Name):
+                    self._names[f"{pulse}.{setting}"] = value
+                else:
+                    self._settings[f"{pulse}.{setting}"] = value
+
+    def rounds(self) -> tuple[Round, ...]:
+        """Return all rounds, in order."""
+        finished: list[Round] = []
+        pending: list[_Part] = []
+
+        def finish() -> None:
+            if pending:
+                first = pending[0]
+                finished.append(
+                    Round(
+                        number=len(finished) + 1,
+                        settings=self._all(first.settings),
+                        actions=tuple(each.action for each in pending),
+                        cycling=first.cycling,
+                        tune=first.tune,
+                    )
+                )
+            pending.clear()
+            self._changed = False
+
+        for part in self._walk(self._recipe.model.steps, self._settings):
+            if pending and self._cuts(pending, part):
+                finish()
+                if len(finished) >= MOST_ROUNDS:
+                    self._problem(
+                        f"the recipe has over {MOST_ROUNDS} rounds",
+                        "sweep fewer values or repeat less often",
+                    )
+                    return tuple(finished)
+            self._actions += 1
+            if self._actions > _MOST_ACTIONS:
+                self._problem(
+                    f"the recipe has over {_MOST_ACTIONS} steps when its repeats are written out",
+                    "repeat less often",
+                )
+                break
+            pending.append(part)
+            self._changed = self._changed or not isinstance(part.action, Contact | Wait)
+            if isinstance(part.action, Cycle):
+                finish()
+        finish()
+        return tuple(finished)
+
+    def _cuts(self, pending: list[_Part], part: _Part) -> bool:
+        """Say whether a part begins a new round."""
+        before = pending[0]
+        if part.begins or (before.cycling, before.tune) != (part.cycling, part.tune):
+            return True
+        if isinstance(part.action, Cycle):
+            return True
+        # What only looks leaves the cell as it is, so that a preset may follow it.
+        return isinstance(part.action, Preset) and self._changed
+
+    def _problem(self, problem: str, remedy: str) -> None:
+        self.problems.append(f"{self._recipe.file}: {problem}. To fix it, {remedy}.")
+
+    # Steps that hold steps.
+
+    def _walk(
+        self, steps: list[Any], settings: Settings, cycling: Cycling | None = None
+    ) -> Iterator[_Part]:
+        for step in steps:
+            match step:
+                case RepeatStep():
+                    for _ in range(self._whole("repeat", step.repeat, settings, least=1)):
+                        yield from self._walk(step.steps, settings, cycling)
+                case SweepStep():
+                    for changed in self._combinations(step, settings):
+                        yield from self._walk(step.steps, changed, cycling)
+                case TuneStep():
+                    if cycling is not None:
+                        self._problem(
+                            "a tune stands inside a cycle", "tune before or after cycling"
+                        )
+                        return
+                    yield from self._tune(step, settings)
+                case CycleStep():
+                    if cycling is not None:
+                        self._problem("a cycle stands inside a cycle", "write one after the other")
+                        return
+                    yield from self._cycle(step, settings)
+                case _:
+                    yield _Part(
+                        action=self._action(step, settings), settings=settings, cycling=cycling
+                    )
+
+    def _combinations(self, step: SweepStep, settings: Settings) -> Iterator[Settings]:
+        names = list(step.sweep)
+        self.swept.update(dict.fromkeys(names))
+        axes = [self._axis(name, written) for name, written in step.sweep.items()]
+        chosen: Iterator[tuple[float, ...]]
+        chosen = zip(*axes, strict=True) if step.together else itertools.product(*axes)
+        if step.order == "shuffled":
+            few = list(itertools.islice(chosen, MOST_ROUNDS + 1))
+            random.Random(int(step.seed)).shuffle(few)
+            chosen = iter(few)
+        for values in chosen:
+            yield settings | dict(zip(names, values, strict=True))
+
+    def _axis(self, name: str, written: object) -> list[float]:
+        kind = axis_kind(name, self._declared)
+        if kind is None:
+            raise ValueError(f"{name!r} passed as an axis")
+        return axis_values(name, written, kind)
+
+    def _tune(self, step: TuneStep, settings: Settings) -> Iterator[_Part]:
+        low, high = self._axis(step.tune, step.between)
+        self.swept[step.tune] = None
+
+        def actions(value: float) -> tuple[tuple[Action, ...], Settings]:
+            changed = settings | {step.tune: value}
+            parts = tuple(self._action(each, changed) for each in step.steps)
+            return parts, self._all(changed)
+
+        if not self._tunable(step.steps):
+            return
+        most = self._whole("at most", step.at_most, settings, least=3)
+        tune = Tune(
+            name=step.tune,
+            low=low,
+            high=high,
+            target=self._value(step.full_count, settings),
+            within=self._value(step.within, settings),
+            at_most=most,
+            actions=actions,
+        )
+        # Both ends are looked at now, so that no value between them can break a limit.
+        lowest, highest = actions(low)[0], actions(high)[0]
+        ways = [
+            [each.rising for action in some for each in pulses_of(action)]
+            for some in (lowest, highest)
+        ]
+        if ways[0] != ways[1]:
+            self._problem(
+                f"tuning {step.tune!r} from {low:g} to {high:g} turns a pulse round on the way",
+                "keep level on one side of base",
+            )
+        for _ in range(most):
+            for place, action in enumerate(lowest):
+                yield _Part(
+                    action=action,
+                    settings=settings | {step.tune: low},
+                    tune=tune,
+                    begins=place == 0,
+                )
+
+    def _tunable(self, steps: Sequence[Model]) -> bool:
+        plain = (PresetStep, StepStep, ReadStep, WaitStep, ContactStep)
+        if not all(isinstance(each, plain) for each in steps):
+            self._problem(
+                "the steps of a tune hold something else than preset, step, read, wait and contact",
+                "leave the rest out of it",
+            )
+            return False
+        kept = [each for each in steps if not isinstance(each, WaitStep | ContactStep)]
+        presets = sum(isinstance(each, PresetStep) for each in kept)
+        if len(kept) < 2 or not isinstance(kept[0], PresetStep) or presets > 1:
+            self._problem(
+                "the steps of a tune are not one round", "write one preset, then one read"
+            )
+            return False
+        if not isinstance(kept[1], ReadStep):
+            self._problem(
+                "a tune has no read right after its preset", "read before anything is stepped"
+            )
+            return False
+        return True
+
+    def _cycle(self, step: CycleStep, settings: Settings) -> Iterator[_Part]:
+        pairs = self._whole("pairs", step.pairs, settings, least=1, most=MOST_PAIRS)
+        if not pairs:
+            return
+        stop = step.stop_when
+        cycling = Cycling(
+            pairs=pairs,
+            least_charge=self._optional(stop.switched_charge_below, settings),
+            most_off=self._optional(stop.full_count_off_by, settings),
+            contact=stop.contact_is_lost,
+        )
+        self._check_stops(step)
+        if step.steps:
+            self.swept["cycles"] = None
+        down, up = (self._pulse(each, settings) for each in (step.cycle.down, step.cycle.up))
+        if not down.level < up.level:
+            self._problem(
+                f"cycling from {show_quantity(down.level, 'V')} to {show_quantity(up.level, 'V')}"
+                " does not go up",
+                "write the lower level as down",
+            )
+        done = 0
+        yield from self._pause(step, settings, cycling, done)
+        for stop_at in _pauses(step, pairs):
+            yield _Part(
+                action=Cycle(down=down, up=up, pairs=stop_at - done, done=done),
+                settings=settings | {"cycles": float(done)},
+                cycling=cycling,
+                begins=True,
+            )
+            done = stop_at
+            yield from self._pause(step, settings, cycling, done)
+
+    def _pause(
+        self, step: CycleStep, settings: Settings, cycling: Cycling, done: int
+    ) -> Iterator[_Part]:
+        parts = self._walk(step.steps, settings | {"cycles": float(done)}, cycling)
+        for place, part in enumerate(parts):
+            yield replace(part, begins=True) if place == 0 else part
+
+    def _check_stops(self, step: CycleStep) -> None:
+        held = set(_verbs(step.steps))
+        for name, needed, value in (
+            ("switched charge below", PundStep, step.stop_when.switched_charge_below),
+            ("full count off by", ReadStep, step.stop_when.full_count_off_by),
+            ("contact is lost", ContactStep, step.stop_when.contact_is_lost or None),
+        ):
+            if value is not None and needed not in held:
+                verb = needed.__name__.removesuffix("Step").lower()
+                self._problem(
+                    f"a cycle stops on {name!r}, and nothing in its steps measures that",
+                    f"add a '{verb}' to its steps",
+                )
+
+    # Steps that do something.
+
+    def _action(self, step: Model, settings: Settings) -> Action:
+        match step:
+            case WaitStep():
+                seconds = self._value(step.wait, settings)
+                if not 0 <= seconds <= _LONGEST_WAIT:
+                    self._problem(
+                        f"a wait of {seconds:g} s is swept",
+                        f"sweep waits from 0 s to {_LONGEST_WAIT:g} s",
+                    )
+                return Wait(seconds=seconds)
+            case PresetStep():
+                return Preset(pulse=self._pulse(step.preset, settings))
+            case ContactStep():
+                return Contact(pulse=self._pulse(step.contact, settings))
+            case StepStep():
+                count = self._whole("count", step.count, settings, least=0)
+                return Step(
+                    pulse=self._pulse(step.step, settings),
+                    count=count,
+                    train=self._train(step, settings),
+                )
+            case ReadStep():
+                return self._read(step, settings)
+            case PundStep():
+                pulse = self._pulse(step.pund, settings)
+                if pulse.base != 0 or pulse.level < 0:
+                    self._problem(
+                        f"pund with pulse {pulse.name!r} needs a pulse up from 0 V",
+                        "write a level above 0 V and no base",
+                    )
+                return Pund(pulse=pulse, settings=self._all(settings))
+            case LoopStep():
+                return self._loop(step, settings)
+            case AskStep():
+                return Ask(
+                    message=step.ask,
+                    seconds=self._value(step.within, settings),
+                    go_on=step.otherwise == "go on",
+                )
+            case _:
+                raise TypeError(f"{type(step).__name__} is no action")
+
+    def _read(self, step: ReadStep, settings: Settings) -> Read:
+        pulse = self._pulse(step.read, settings)
+        threshold = self._value(step.until, settings)
+        # What counts is where the node can get, not what the panel shows.
+        base, level = (self._bench.cell_volts(volts) for volts in (pulse.base, pulse.level))
+        low, high = sorted((base, level))
+        if not low < threshold < high:
+            self._problem(
+                f"reading with pulse {pulse.name!r} until {show_quantity(threshold, 'V')} can't"
+                f" end, since the cell goes from {show_quantity(base, 'V')} to"
+                f" {show_quantity(level, 'V')} at most",
+                "choose a threshold between the two",
+            )
+        return Read(
+            pulse=pulse,
+            threshold=threshold,
+            at_most=self._whole("at most", step.at_most, settings, least=1),
+            settings=self._all(settings),
+            train=self._train(step, settings),
+        )
+
+    def _loop(self, step: LoopStep, settings: Settings) -> Loop:
+        volts = self._value(step.loop, settings)
+        period = self._value(step.period, settings)
+        if not (volts > 0 and 0 < period <= 1000):
+            self._problem(
+                f"a loop of {volts:g} V and {period:g} s is swept",
+                "sweep amplitudes above 0 V and periods to 1000 s",
+            )
+            volts, period = 1.0, 1e-3
+        if step.at == "cell":
+            # Both ends must arrive at the cell; behind a diode they can't.
+            low, high = (
+                self._panel_for(f"a loop of {show_quantity(volts, 'V')}", each)
+                for each in (-volts, volts)
+            )
+            volts = max(-low, high)
+        return Loop(pulse=triangle("loop", volts, period), settings=self._all(settings))
+
+    def _train(self, step: StepStep | ReadStep, settings: Settings) -> int:
+        if step.capture == "each":
+            return 1
+        return self._whole("train of", step.train_of, settings, least=1)
+
+    # Values.
+
+    def _all(self, settings: Settings) -> Settings:
+        """Return settings with those that are declared as parameters resolved."""
+        return {key: settings[name.word] for key, name in self._names.items()} | settings
+
+    def _value(self, value: float | Name, settings: Settings) -> float:
+        return settings[value.word] if isinstance(value, Name) else value
+
+    def _optional(self, value: float | Name | None, settings: Settings) -> float | None:
+        return None if value is None else self._value(value, settings)
+
+    def _whole(
+        self,
+        what: str,
+        value: float | Name,
+        settings: Settings,
+        *,
+        least: int,
+        most: int = _MOST_ACTIONS,
+    ) -> int:
+        number = self._value(value, settings)
+        if not least <= number <= most or number != int(number):
+            self._problem(
+                f"{what} is {number:g} in a sweep",
+                f"sweep it over whole numbers from {least} to {most}",
+            )
+            return 0
+        return int(number)
+
+    def _pulse(self, name: str, settings: Settings) -> Pulse:
+        values = {}
+        for setting in PULSE_KINDS:
+            key = f"{name}.{setting}"
+            # A sweep of the setting itself wins over the parameter it was declared with.
+            if key not in settings and key in self._names:
+                values[setting] = settings[self._names[key].word]
+            else:
+                values[setting] = settings[key]
+        if self._recipe.model.pulses[name].at == "cell":
+            for setting in ("level", "base"):
+                values[setting] = self._panel_for(f"the {setting} of {name!r}", values[setting])
+        pulse = Pulse(name=name, **values)
+        self._check_pulse(pulse)
+        return pulse
+
+    def _panel_for(self, what: str, cell_volts: float) -> float:
+        try:
+            return self._bench.panel_volts_for_cell(cell_volts)
+        except CellVoltsUnreachable as error:
+            self._problem(
+                f"{what} shall be {show_quantity(cell_volts, 'V')} across the cell, and {error}",
+                "write what the wiring lets through, or give it at the panel",
+            )
+            return 0.0
+
+    def _check_pulse(self, pulse: Pulse) -> None:
+        if pulse.level == pulse.base:
+            self._problem(f"pulse {pulse.name!r}: its level is its base", "make them differ")
+        if not 0 < pulse.width <= 1000 or not 0 < pulse.edge <= 100 or pulse.rest < 0:
+            self._problem(
+                f"pulse {pulse.name!r}: a time in it is out of bounds",
+                "use widths to 1000 s, edges to 100 s, and rests of 0 s or more",
+            )
+        elif pulse.width < pulse.ramp:
+            self._problem(
+                f"pulse {pulse.name!r}: its edges of {show_quantity(pulse.edge, 's')} leave no"
+                f" flat top in a width of {show_quantity(pulse.width, 's')}",
+                "write a shorter edge or a longer width",
+            )
+
+
+def _written(written: object) -> float:
+    kind = kind_of(written)
+    if kind is None:
+        raise ValueError(f"{written!r} passed as a quantity")
+    return parse_quantity(written, kind)
+
+
+def _verbs(steps: list[Any]) -> Iterator[type[Model]]:
+    for step in steps:
+        yield type(step)
+        yield from _verbs(getattr(step, "steps", []))
+
+
+def _pauses(step: CycleStep, pairs: int) -> list[int]:
+    """Return after how many pairs a cycling pauses, the last pair among them."""
+    stops = {int(each) for each in step.pause_at}
+    if each_decade := int(step.per_decade):
+        place = 0
+        while (stop := round(10 ** (place / each_decade))) < pairs:
+            stops.add(stop)
+            place += 1
+    return sorted({each for each in stops if each < pairs} | {pairs})
