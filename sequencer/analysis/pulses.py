@@ -1,4 +1,4 @@
-"""Reduce the record of one pulse: where its flat top ends, the end voltage, the charge.
+"""Reduce the record of pulses: where a flat top ends, and the end voltage.
 
 Times are seconds from the trigger, voltages are volts; arrays are 1-D and of equal length.
 """
@@ -106,25 +106,6 @@ def end_voltage(
         samples=count,
         seconds=end,
     )
-
-
-def series_current(source: Samples, node: Samples, series_ohms: float) -> Samples:
-    """Return the current from the source's terminal to the node, in amperes.
-
-    It holds where nothing but a resistance lies between the two.
-    """
-    return (source - node) / series_ohms
-
-
-def cell_charge(
-    times: Samples, source: Samples, node: Samples, *, series_ohms: float, probe_ohms: float
-) -> float:
-    """Return the charge that the cell and the probe's capacitance took, in coulombs.
-
-    Integrates the current through the series resistance, less the probe's, by trapezoids.
-    """
-    current = series_current(source, node, series_ohms) - node / probe_ohms
-    return float(np.trapezoid(current, times))
 
 
 def train_ends(

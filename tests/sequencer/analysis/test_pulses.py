@@ -8,7 +8,6 @@ import pytest
 from pulsetally.sequencer.analysis.pulses import (
     PulseUnreadable,
     Samples,
-    cell_charge,
     end_voltage,
     half_crossings,
 )
@@ -97,13 +96,3 @@ def test_a_record_with_too_few_samples_is_refused() -> None:
     source = trapezoid(times, 4.0, ramp=10e-6)
     with pytest.raises(PulseUnreadable, match="samples lie on the last fifth"):
         end_voltage(times, source, source, base=0.0, level=4.0, ramp=10e-6)
-
-
-# Closed form: charging a linear capacitor by dV takes C dV, whatever the resistance.
-def test_charge_of_a_linear_capacitor() -> None:
-    farads, ohms = 300e-12, 220e3
-    tau = farads * ohms
-    times = np.linspace(0, 2e-4, 20_001)
-    node = 4 * (1 - np.exp(-times / tau))
-    taken = cell_charge(times, np.full(times.size, 4.0), node, series_ohms=ohms, probe_ohms=1e18)
-    assert taken == pytest.approx(farads * node[-1], rel=1e-6)
