@@ -235,7 +235,7 @@ def simulate(
                 addresses.oscilloscope,
                 clock,
                 settings.family,
-                table=facts if table is not None else None,
+                table=facts,
             )
             try:
                 # A table may have a wiring that no bench file can say.
