@@ -129,6 +129,7 @@ def rehearse(
     with _told():
         if table is None:
             plan, shipped = _planned(recipe, None, overrides)
+            options.append(f"--pulses={plan.most_pulses}")
             with simulated_bench(shipped, options) as bench:
                 status = _carry_out(plan, bench, logbook, mode="rehearsal")
         else:
@@ -224,6 +225,7 @@ def simulate(
     from pulsetally.sequencer.bench import parse_bench
     from pulsetally.sequencer.errors import InputError
     from pulsetally.sequencer.rehearsal import addressed_bench_text
+    from pulsetally.simulators.compiled import use_compiled
     from pulsetally.simulators.facts import facts_of
     from pulsetally.simulators.simulate import Addresses, chosen_settings, serve, tell
 
@@ -235,7 +237,7 @@ def simulate(
                 addresses.oscilloscope,
                 clock,
                 settings.family,
-                table=facts if table is not None else None,
+                table=facts,
             )
             try:
                 # A table may have a wiring that no bench file can say.
@@ -265,6 +267,8 @@ def simulate(
         _complain(str(error) if table else f"the simulated bench can't be made: {error}.")
         raise typer.Exit(WRONG_INPUT) from error
     facts = facts_of(settings, title)
+    # Before anybody can connect: no client would wait for a compiler.
+    use_compiled()
     try:
         serve(settings, announce)
     except OSError as error:

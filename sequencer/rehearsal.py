@@ -138,8 +138,12 @@ def _facts(shipped: BenchModel) -> dict[str, Any]:
 
 
 def _quoted(text: str) -> str:
-    """Write a text as YAML, whatever is in it: JSON is YAML."""
-    return json.dumps(text)
+    """Write a text as YAML, whatever is in it."""
+    # Not as JSON, which splits what lies beyond 16 bits into two halves that YAML keeps.
+    plain = (
+        each if " " <= each <= "~" and each not in '"\\' else f"\\U{ord(each):08x}" for each in text
+    )
+    return f'"{"".join(plain)}"'
 
 
 @contextmanager
@@ -173,7 +177,7 @@ def simulated_bench(bench: Bench | None, options: Sequence[str] = ()) -> Iterato
         try:
             line = announced.readline()
             if not line:
-                if process.wait(timeout=_STOP_SECONDS) == _WRONG_INPUT:
+                if _status(process) == _WRONG_INPUT:
                     raise TableRefused(_said(complaints))
                 raise RehearsalError(_why_not(complaints))
             yield _announced(bench, json.loads(line))
@@ -191,9 +195,18 @@ def _pipes(process: subprocess.Popen[str]) -> tuple[IO[str], IO[str]]:
     return process.stdin, process.stdout
 
 
+def _status(process: subprocess.Popen[str]) -> int | None:
+    """Return the exit status of a process that has closed its output; None if it won't end."""
+    try:
+        return process.wait(timeout=_STOP_SECONDS)
+    except subprocess.TimeoutExpired:
+        return None
+
+
 def _announced(bench: Bench | None, announced: Mapping[str, Any]) -> Bench:
     generator, oscilloscope = announced["generator"], announced["oscilloscope"]
-    clock, table = announced["control"], announced["table"]
+    table = announced["table"]
+    clock = None if table["real_time"] else announced["control"]
     if bench is not None:
         return bench.with_addresses(generator=generator, oscilloscope=oscilloscope, clock=clock)
     text = addressed_bench_text(generator, oscilloscope, clock, table["family"], table=table)

@@ -14,6 +14,7 @@ from typing import Any, Protocol
 
 from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
 from pulsetally.simulators.clock import VirtualClock, WallClock
+from pulsetally.simulators.compiled import use_compiled
 from pulsetally.simulators.control import BenchControl
 from pulsetally.simulators.digitizer import Digitizer
 from pulsetally.simulators.facts import facts_of
@@ -307,6 +308,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument(
         "--until-stdin-closes", action="store_true", help="end when standard input does"
     )
+    parser.add_argument(
+        "--pulses", type=int, help="how many are to come, if known: few are not worth compiling"
+    )
     given = parser.parse_args(arguments)
 
     try:
@@ -329,6 +333,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
         print(error, file=sys.stderr)
         return 2
     facts = facts_of(settings, title)
+    # Before anybody can connect: no client would wait for a compiler.
+    use_compiled(pulses=given.pulses)
     try:
         serve(settings, lambda addresses: tell(addresses, facts, as_json=given.json))
     except OSError as error:

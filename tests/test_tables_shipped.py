@@ -10,13 +10,16 @@ from pathlib import Path
 import pytest
 
 from pulsetally.sequencer import engine
-from pulsetally.sequencer.bench import load_bench
+from pulsetally.sequencer.bench import load_bench, parse_bench
 from pulsetally.sequencer.events import ContactChecked, Event, ReadFinished, RunEnded, RunState
 from pulsetally.sequencer.logbook import Logbook
 from pulsetally.sequencer.plan import make_plan
 from pulsetally.sequencer.recipe import Recipe, find_recipe, parse_recipe
+from pulsetally.sequencer.rehearsal import addressed_bench_text, shipped_bench
 from pulsetally.sequencer.results import run_result
 from pulsetally.sequencer.safety import StopSwitch
+from pulsetally.simulators.facts import facts_of
+from pulsetally.simulators.settings import SimulationSettings
 from pulsetally.simulators.table_file import find_table, shipped_tables
 from tests.simulated import simulated
 
@@ -162,6 +165,19 @@ def test_a_series_diode_and_a_clamp_of_the_table_are_in_the_plan() -> None:
         assert wiring.series_diode.emission == 1.05
         assert wiring.clamp is not None
         assert wiring.clamp.breakdown == 15.0
+
+
+def test_the_usual_table_has_the_wiring_and_cell_of_the_shipped_bench() -> None:
+    text = addressed_bench_text("A::1", "B::2", None, table=facts_of(SimulationSettings(), ""))
+    usual, shipped = parse_bench(text, file="usual.yaml").model, shipped_bench().model
+    assert (usual.wiring, usual.cell) == (shipped.wiring, shipped.cell)
+    assert (usual.limits, usual.bench) == (shipped.limits, shipped.bench)
+
+
+def test_any_title_of_a_table_is_that_of_its_bench_file() -> None:
+    title = 'six: "pulses" \\ \U0001f600 \x07 # \u2028'
+    text = addressed_bench_text("A::1", "B::2", None, table=facts_of(SimulationSettings(), title))
+    assert parse_bench(text, file="b.yaml").model.bench == title
 
 
 def test_mistakes_of_recipe_and_table_are_told_at_once(tmp_path: Path) -> None:

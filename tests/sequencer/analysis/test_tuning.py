@@ -60,6 +60,7 @@ def test_it_lands_within_a_pulse_of_the_target(*, within: float, logarithmic: bo
     # The sureness is 95 %, and the uncertainty a standard uncertainty.
     assert np.mean(np.array(errors) <= within) >= 0.95
     assert np.mean(np.array(pulls) < 2) >= 0.88
+    assert np.mean(np.array(pulls) > 0.3) >= 0.5
     assert np.mean(rounds) < 9
 
 
