@@ -1,8 +1,8 @@
 """Read quantities as people write them, and write them as people read them.
 
 '2.5 V', '100 us', '220 kohm', '10000 um2' become SI floats and back. Numbers with SI prefixes
-are the business of quantiphy; what is ours is which units belong to which kind of quantity,
-and saying so when one is wrong.
+are written by quantiphy; what is ours is reading them, which units belong to which kind of
+quantity, and saying so when one is wrong.
 """
 
 import math
@@ -69,8 +69,17 @@ NUMBER = Kind(name="a plain number", unit="", scaled=(), fixed={}, example="5")
 
 KINDS = (VOLTAGE, TIME, RESISTANCE, CAPACITANCE, CURRENT, AREA, LENGTH, SHARE, NUMBER)
 
-_WRITTEN = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*(\S*)\s*")
-_PREFIXES = "QRYZEPTGMkmuµμnpfazyrq"
+_NUMBER = r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?"
+_WRITTEN = re.compile(rf"\s*({_NUMBER})\s*(\S*)\s*")
+# The powers of ten of the SI prefixes: SI Brochure, 9th edition (2019), table 7. Micro is
+# written in three ways.
+_PREFIXES = {
+    "Q": 30, "R": 27, "Y": 24, "Z": 21, "E": 18, "P": 15, "T": 12, "G": 9, "M": 6, "k": 3,
+    "m": -3, "u": -6, "µ": -6, "μ": -6, "n": -9, "p": -12, "f": -15, "a": -18, "z": -21,
+    "y": -24, "r": -27, "q": -30,
+}  # fmt: skip
+# Beyond this, products of two quantities stop being finite.
+_LARGEST = 1e300
 
 
 def parse_quantity(written: object, kind: Kind) -> float:
@@ -82,7 +91,7 @@ def parse_quantity(written: object, kind: Kind) -> float:
     if isinstance(written, bool) or not isinstance(written, (str, int, float)):
         raise _wrong(written, kind, "is not")
     if isinstance(written, (int, float)):
-        if abs(written) > 1e300 or not math.isfinite(written):
+        if abs(written) > _LARGEST or not math.isfinite(written):
             shown = f"{written}"[:40]
             raise QuantityError(f"{shown} is not a finite number", f"write {_example(kind)}")
         if not kind.unit or written == 0:
@@ -95,22 +104,58 @@ def parse_quantity(written: object, kind: Kind) -> float:
         raise _wrong(written, kind, "is not")
     number, unit = found[1], found[2]
     if not math.isfinite(float(number)):
-        raise QuantityError(f"{written!r} is beyond every range", f"write {_example(kind)}")
+        raise QuantityError(f"{written[:60]!r} is beyond every range", f"write {_example(kind)}")
     if not unit:
         return parse_quantity(float(number), kind)
+    value = _scaled(number, unit, kind)
+    if value is None:
+        raise _wrong(written, kind, "is not")
+    if abs(value) > _LARGEST:
+        raise QuantityError(f"{written[:60]!r} is beyond every range", f"write {_example(kind)}")
+    return value
+
+
+def _scaled(number: str, unit: str, kind: Kind) -> float | None:
+    """Return a number with a unit in SI units; None if the unit is none of the kind."""
+    if float(number) == 0:
+        power: int | None = 0 if unit in kind.fixed else _power(unit, kind)
+        return None if power is None else 0.0
     if kind is SHARE and unit == "%":
         # In decimal, so that what was written as 1.1 % is read as 0.011 and not nearly so.
         return float(Decimal(number).scaleb(-2))
     if unit in kind.fixed:
         return float(number) * kind.fixed[unit]
+    power = _power(unit, kind)
+    return None if power is None else float(Decimal(number).scaleb(power))
+
+
+def _power(unit: str, kind: Kind) -> int | None:
     for symbol in kind.scaled:
-        prefix = unit.removesuffix(symbol)
+        # The symbol alone comes first, or the m of metres would be milli.
         if unit == symbol:
-            # Not for quantiphy, which would take the m of metres for milli.
-            return float(number)
-        if unit.endswith(symbol) and len(prefix) == 1 and prefix in _PREFIXES:
-            return float(Quantity(f"{number} {prefix}{symbol}", units=symbol))
-    raise _wrong(written, kind, "is not")
+            return 0
+        if unit.endswith(symbol) and (prefix := unit.removesuffix(symbol)) in _PREFIXES:
+            return _PREFIXES[prefix]
+    return None
+
+
+def quantity_pattern(kind: Kind, *, least: float | None = None, above: float | None = None) -> str:
+    """Return a regular expression for the texts that parse_quantity reads, for schemas.
+
+    It holds in Python and in ECMA-262. least, above: bounds in SI units, of which a pattern can
+    say no more than the sign.
+    """
+    units = [*kind.fixed]
+    if kind.scaled:
+        units.append(f"[{''.join(_PREFIXES)}]?(?:{'|'.join(kind.scaled)})")
+    zero = r"[+-]?(?:0+\.?0*|\.0+)(?:[eE][+-]?[0-9]+)?"
+    body = rf"{_NUMBER}\s*(?:{'|'.join(units)})|{zero}" if units else _NUMBER
+    sign = ""
+    if above is not None and above >= 0:
+        sign = r"(?=\s*\+?[0.]*[1-9])"
+    elif least is not None and least >= 0:
+        sign = r"(?!\s*-[0.]*[1-9])"
+    return rf"^{sign}\s*(?:{body})\s*$"
 
 
 def is_quantity(written: str) -> bool:
@@ -171,7 +216,7 @@ def _guess(number: float, kind: Kind) -> str:
 
 
 def _wrong(written: object, kind: Kind, verb: str) -> QuantityError:
-    shown = repr(written) if isinstance(written, str) else f"a {_yaml_name(written)}"
+    shown = repr(written[:60]) if isinstance(written, str) else f"a {_yaml_name(written)}"
     allowed = ", ".join([*kind.scaled[:1], *kind.fixed][:5])
     units = f" (its unit is {allowed}, with or without an SI prefix)" if kind.scaled else ""
     if not kind.scaled and kind.fixed:

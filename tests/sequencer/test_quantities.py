@@ -1,5 +1,6 @@
 """Quantities: as people write them, to SI and back."""
 
+import re
 from contextlib import suppress
 
 import pytest
@@ -20,6 +21,7 @@ from pulsetally.sequencer.quantities import (
     QuantityError,
     format_quantity,
     parse_quantity,
+    quantity_pattern,
     show_duration,
     show_quantity,
 )
@@ -28,6 +30,11 @@ from pulsetally.sequencer.quantities import (
 WRITTEN = [
     ("2.5 V", VOLTAGE, 2.5),
     ("-5V", VOLTAGE, -5.0),
+    # An exponent and a prefix both count.
+    ("1e3 mV", VOLTAGE, 1.0),
+    ("1e-3 kV", VOLTAGE, 1.0),
+    ("-2.5E1mV", VOLTAGE, -0.025),
+    ("0e99 s", TIME, 0.0),
     ("80us", TIME, 80e-6),
     ("80 µs", TIME, 80e-6),
     ("100 ns", TIME, 100e-9),
@@ -65,6 +72,9 @@ def test_well_written_quantities(written: object, kind: Kind, value: float) -> N
         (float("inf"), VOLTAGE, "not a finite number", "'2.5 V'"),
         ("nan V", VOLTAGE, "is not a voltage", "'2.5 V'"),
         ("1e999 V", VOLTAGE, "beyond every range", "'2.5 V'"),
+        ("1e300 kV", VOLTAGE, "beyond every range", "'2.5 V'"),
+        ("1e299 d", TIME, "beyond every range", "'100 us'"),
+        ("٣ mV", VOLTAGE, "is not a voltage", "'2.5 V'"),
         ({}, VOLTAGE, "a group of settings is not", "'2.5 V'"),
         ([], VOLTAGE, "a list is not", "'2.5 V'"),
         (None, VOLTAGE, "a blank is not", "'2.5 V'"),
@@ -86,6 +96,23 @@ def test_writing_and_reading_gives_the_same_value(kind: Kind, value: float) -> N
     again = parse_quantity(format_quantity(value, kind), kind)
     # An area is written in um2, whose factor is not a power of two.
     assert again == (pytest.approx(value, rel=1e-15) if kind is AREA else value)
+
+
+@given(st.data(), st.sampled_from(KINDS))
+def test_the_pattern_of_a_kind_fits_what_is_read_and_nothing_else(
+    data: st.DataObject, kind: Kind
+) -> None:
+    pattern = re.compile(quantity_pattern(kind))
+    text = data.draw(
+        st.one_of(st.from_regex(pattern), st.text("0123456789.eE+- umkVs%", max_size=9))
+    )
+    problem = ""
+    try:
+        parse_quantity(text, kind)
+    except QuantityError as error:
+        problem = error.problem
+    # A pattern knows no range.
+    assert bool(pattern.search(text)) == (not problem or "beyond every range" in problem)
 
 
 @given(st.text(max_size=30), st.sampled_from(KINDS))
