@@ -110,24 +110,8 @@ class Oscilloscope(Instrument):
         self.raise_errors("; ".join(self._dialect.prepare))
 
     def interval_for(self, window: float, points: int) -> float:
-        """Return the shortest sample interval it makes whose record covers a window, seconds.
-
-        Instruments that step their time base in 1-2-5 do so by division, sample or rate.
-        """
-        wanted = window / points
-        wide = self._dialect.divisions[1]
-        for name, value in (
-            ("sample interval", wanted),
-            ("time per division", window / wide),
-            ("window", window),
-        ):
-            setting = self._dialect.setting(name)
-            if setting is not None and setting.stepped:
-                return wanted * next_step(value) / value
-        rate = self._dialect.setting("sample rate")
-        if rate is not None and rate.stepped:
-            return 1 / previous_step(1 / wanted)
-        return wanted
+        """Return the sample interval that covers a window with so many points, in seconds."""
+        return interval_for(self._dialect, window, points)
 
     def set_acquisition(self, setting: AcquisitionSetting) -> dict[str, float]:
         """Set up the next records; return the numbers as read back, by name.
@@ -240,6 +224,28 @@ class Oscilloscope(Instrument):
 
     def _faulty(self, command: str, problem: str) -> BadReply:
         return BadReply(self.address, command, problem, OTHER_DIALECT)
+
+
+def interval_for(dialect: OscilloscopeDialect, window: float, points: int) -> float:
+    """Return the shortest sample interval whose record covers a window, in seconds.
+
+    window: seconds. points: of the record. Instruments that step their time base in 1-2-5 do so
+    by division, sample or rate; none samples faster than it can, so that a record may last longer
+    than its window.
+    """
+    wanted = max(window / points, dialect.shortest_interval or 0.0)
+    for name, scale in (
+        ("sample interval", 1.0),
+        ("time per division", points / dialect.divisions[1]),
+        ("window", float(points)),
+    ):
+        setting = dialect.setting(name)
+        if setting is not None and setting.stepped:
+            return next_step(wanted * scale) / scale
+    rate = dialect.setting("sample rate")
+    if rate is not None and rate.stepped:
+        return 1 / previous_step(1 / wanted)
+    return wanted
 
 
 def next_step(value: float) -> float:

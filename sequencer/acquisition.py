@@ -31,7 +31,7 @@ from pulsetally.sequencer.events import (
     Waveform,
 )
 from pulsetally.sequencer.instruments import Instruments
-from pulsetally.sequencer.records import Window, train_period, train_window, window_of
+from pulsetally.sequencer.records import Window, fitted, train_period, train_window, window_of
 from pulsetally.sequencer.rounds import Cycle, Pulse
 from pulsetally.sequencer.safety import StopSwitch
 
@@ -260,6 +260,7 @@ class Acquisition:
 
     def _acquisition(self, pulse: Pulse, window: Window) -> AcquisitionSetting:
         oscilloscope = self._bench.model.oscilloscope
+        window = fitted(window, self._bench.oscilloscope_dialect.most_points)
         levels = (pulse.base, pulse.level)
         source = [self._bench.terminal_volts(volts) for volts in levels]
         node = [self._bench.cell_volts(volts) for volts in levels]

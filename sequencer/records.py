@@ -33,6 +33,11 @@ class Window:
     points: int
 
 
+def fitted(window: Window, most_points: int | None) -> Window:
+    """Return a window that asks for no more samples than an oscilloscope has, if that is known."""
+    return window if most_points is None else replace(window, points=min(window.points, most_points))
+
+
 def window_of(pulse: Pulse) -> Window:
     """Return what to record of one pulse, from well before it to well after.
 
