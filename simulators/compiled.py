@@ -3,7 +3,7 @@
 numba compiles it, if installed (the extra "fast"). Loading costs most of a second, and
 compiling, once for each version of the sources, about ten: a process chooses once, before its
 first pulse, and never changes its mind in between, so that a seed gives the same numbers.
-PULSETALLY_JIT=0 in the environment forbids it.
+PULSETALLY_JIT in the environment decides for it: 0 forbids what is compiled, 1 wants it always.
 """
 
 import hashlib
@@ -15,6 +15,7 @@ from pathlib import Path
 
 from pulsetally.simulators import march
 from pulsetally.simulators.collocation import Equations
+from pulsetally.simulators.lot_numbers import Array, LotNumbers, Pieces
 
 March = Callable[
     [
@@ -30,23 +31,29 @@ March = Callable[
     march.Course,
 ]
 
+RunLot = Callable[[LotNumbers, Pieces, Array], bool]
+
 ENVIRONMENT_VARIABLE = "PULSETALLY_JIT"
-# From so many pulses on, loading is won back several times over.
-WORTH_PULSES = 500
+# From so many pulses on, most of which may not come, loading is won back several times over.
+WORTH_PULSES = 2000
 
 # What is compiled: after a change in any of them, old machine code is not used again.
-_SOURCES = ("cell", "circuit", "collocation", "trajectory", "march", "kernel")
+_SOURCES = ("cell", "circuit", "collocation", "trajectory", "march", "kernel", "lot_kernel")
 
-_in_use: March = march.march
+_in_use: March | None = None
 
 
 def march_in_use() -> March:
-    """Return the march that this process uses."""
-    return _in_use
+    """Return the march that this process uses: in numpy, unless something else was said."""
+    if _in_use is None:
+        use_numpy()
+        if os.environ.get(ENVIRONMENT_VARIABLE) == "1":
+            use_compiled()
+    return _in_use or march.march
 
 
 def use_numpy() -> None:
-    """Use the march in numpy in this process from now on, as at the start."""
+    """Use the march in numpy in this process from now on."""
     global _in_use
     _in_use = march.march
 
@@ -57,7 +64,9 @@ def use_compiled(*, pulses: int | None = None) -> bool:
     pulses: how many are to come, None when nobody knows; few are not worth it.
     """
     global _in_use
-    found = compiled_march() if pulses is None or pulses >= WORTH_PULSES else None
+    worth = pulses is None or pulses >= WORTH_PULSES
+    wanted = os.environ.get(ENVIRONMENT_VARIABLE) == "1"
+    found = compiled_march() if worth or wanted else None
     if found is not None:
         _in_use = found
     return found is not None
@@ -71,6 +80,11 @@ def compiled_march() -> March | None:
     would cost more than it brings.
     """
     return None if os.environ.get(ENVIRONMENT_VARIABLE) == "0" else _load()
+
+
+def compiled_lot() -> RunLot | None:
+    """Load what runs a lot with the compiled march, or compile it; None as compiled_march."""
+    return None if os.environ.get(ENVIRONMENT_VARIABLE) == "0" else _load_lot()
 
 
 @cache
@@ -88,6 +102,21 @@ def _load() -> March | None:
     try:
         compiled: March = kernel.compile_march(folder)
         return compiled
+    except kernel.CompileErrors as error:
+        _complain(error)
+        return None
+
+
+@cache
+def _load_lot() -> RunLot | None:
+    compiled, folder = _load(), _own_folder()
+    if compiled is None or folder is None:
+        return None
+    from pulsetally.simulators import kernel, lot_kernel
+
+    try:
+        run: RunLot = lot_kernel.compile_lot(compiled, folder)
+        return run
     except kernel.CompileErrors as error:
         _complain(error)
         return None

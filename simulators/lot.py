@@ -1,8 +1,10 @@
-"""A whole lot of cells through the same pulses, all of them together in numpy.
+"""A whole lot of cells through the same pulses.
 
-The equations and the method are those of the table (pulsetally.simulators.collocation); here
-each array has a row for each cell, and each cell takes steps of its own length. Cells are
-handled in groups that fit the processor's cache, and the groups side by side in threads.
+Large lots go through the compiled march of the table, cell by cell, where there is one
+(pulsetally.simulators.compiled). Otherwise all cells go together in numpy: with the table's
+equations and method (pulsetally.simulators.collocation), but each array has a row for each
+cell, and each cell takes steps of its own length. Either way cells are handled in groups that
+fit the processor's cache, and the groups side by side in threads.
 """
 
 import math
@@ -10,15 +12,16 @@ import os
 from collections.abc import Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import fields, replace
-from statistics import NormalDist
 
 import numpy as np
 from numpy.typing import NDArray
 
-from pulsetally.simulators.cell import LEAST_ACTIVATION_SHARE, CellDescription
-from pulsetally.simulators.circuit import Circuit, Wiring
+from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.collocation import AT_BEGIN, EMBEDDED, MATRIX, NODES
+from pulsetally.simulators.compiled import compiled_lot
 from pulsetally.simulators.drive import PulseTrain
+from pulsetally.simulators.lot_numbers import Pieces, numbers_of, pieces_of
 from pulsetally.simulators.march import FIRST_MOVE_VOLTS
 from pulsetally.simulators.solver import StepTooSmallError
 
@@ -30,6 +33,8 @@ Mask = NDArray[np.bool_]
 Places = NDArray[np.intp]
 
 GROUP = 512
+# From so many pulses of so many cells on, loading what is compiled is won back.
+WORTH_PULSES = 10_000
 # Looser than the table's: the end voltages are good to 1 mV, the table's to 0.1 mV.
 STEP_TOLERANCE_VOLTS = 5e-4
 NEWTON_TOLERANCE_VOLTS = 1e-3
@@ -85,11 +90,13 @@ def run_lot(
     pulses: Sequence[PulseTrain],
     *,
     threads: int | None = None,
+    compiled: bool | None = None,
 ) -> Array:
     """Drive fresh cells, fully down and discharged, through pulses one after another.
 
     pulses: trains of one pulse; each takes its period, its start is not looked at. threads:
     how many groups of cells run side by side; as many as the machine has cores if None.
+    compiled: whether to use the compiled march, if there is one; None: where it pays.
     Returns end voltages (node voltage at the end of the flat top), V: a row for each cell,
     a column for each pulse; within 1 mV of the table's.
     Raises ValueError where cells differ in regions or have options beyond DRAWN, where the
@@ -99,9 +106,21 @@ def run_lot(
     workers = threads or os.cpu_count() or 1
     size = max(1, min(GROUP, math.ceil(len(cells) / workers)))
     groups = [cells[begin : begin + size] for begin in range(0, len(cells), size)]
-    pieces = [_pieces(train) for train in pulses]
+    pieces = pieces_of(pulses)
+    if compiled is None:
+        compiled = len(cells) * len(pulses) >= WORTH_PULSES
+    run_compiled = compiled_lot() if compiled else None
+
+    def run_group(group: Sequence[CellDescription]) -> Array:
+        ends = np.zeros((len(group), len(pulses)))
+        if run_compiled is None:
+            _Group(group, wiring).run(pieces, ends)
+        elif not run_compiled(numbers_of(group, wiring), pieces, ends):
+            raise StepTooSmallError("no step of a cell satisfies the equations")
+        return ends
+
     with ThreadPoolExecutor(workers) as pool:
-        found = list(pool.map(lambda group: _Group(group, wiring).run(pieces), groups))
+        found = list(pool.map(run_group, groups))
     return np.concatenate(found) if found else np.zeros((0, len(pulses)))
 
 
@@ -123,56 +142,25 @@ def _check(cells: Sequence[CellDescription], wiring: Wiring, pulses: Sequence[Pu
             raise ValueError(f"pulse {index} has a count of {train.count}; it must be 1")
 
 
-# A straight piece of the EMF: volts at both ends, seconds, whether the flat top ends with it.
-_Piece = tuple[float, float, float, bool]
-
-
-def _pieces(train: PulseTrain) -> list[_Piece]:
-    single = replace(train, start_seconds=0.0)
-    pieces: list[_Piece] = []
-    at_seconds = 0.0
-    while at_seconds < train.period_seconds:
-        stretch = single.stretch_at(at_seconds)
-        end_seconds = min(stretch.end_seconds, train.period_seconds)
-        at_top = stretch.end_volts == train.level_volts
-        pieces.append((stretch.begin_volts, stretch.end_volts, end_seconds - at_seconds, at_top))
-        at_seconds = end_seconds
-    return pieces
-
-
 class _Group:
     """Some cells, a row each."""
 
     def __init__(self, cells: Sequence[CellDescription], wiring: Wiring) -> None:
-        def column(name: str) -> Array:
-            return np.array([getattr(cell, name) for cell in cells], dtype=np.float64)
+        lot = numbers_of(cells, wiring)
+        self._alpha, self._barriers = lot.alphas, lot.barriers.astype(np.float32)
+        self._attempt_logs = np.log(lot.attempts_per_second)
+        self._imprint, self._coulombs = lot.imprint_volts, lot.switchable_coulombs
+        self._farads, self._shunt = lot.farads, lot.shunt_siemens
+        self._branch = 1 / lot.branch_ohms
+        self._up = np.zeros(lot.barriers.shape)
+        self._volts = np.zeros(len(cells))
+        self._side = np.ones(len(cells))
 
-        count, regions = len(cells), cells[0].regions
-        normal = NormalDist()
-        quantiles = np.array([normal.inv_cdf((k + 0.5) / regions) for k in range(regions)])
-        means = column("activation_volts")[:, None]
-        activations = means + column("activation_spread")[:, None] * quantiles
-        activations = np.maximum(activations, LEAST_ACTIVATION_SHARE * means)
-        self._alpha = column("alpha")
-        self._barriers = (activations ** self._alpha[:, None]).astype(np.float32)
-        self._attempt_logs = -np.log(column("attempt_seconds"))
-        self._imprint = column("imprint_volts")
-        self._coulombs = np.array([cell.switchable_coulombs for cell in cells])
-        self._farads = np.array([Circuit(cell, wiring).farads for cell in cells])
-        self._shunt = 1 / column("leak_ohms") + 1 / wiring.probe_ohms
-        self._branch = 1 / wiring.branch_ohms
-        self._up = np.zeros((count, regions))
-        self._volts = np.zeros(count)
-        self._side = np.ones(count)
-
-    def run(self, pulses: Sequence[Sequence[_Piece]]) -> Array:
-        ends = np.zeros((len(self._volts), len(pulses)))
-        for index, pieces in enumerate(pulses):
-            for begin_volts, end_volts, seconds, at_top in pieces:
-                self._advance(begin_volts, (end_volts - begin_volts) / seconds, seconds)
-                if at_top:
-                    ends[:, index] = self._volts
-        return ends
+    def run(self, pieces: Pieces, ends: Array) -> None:
+        for begin_volts, slope, seconds, pulse in zip(*pieces, strict=True):
+            self._advance(begin_volts, slope, seconds)
+            if pulse >= 0:
+                ends[:, pulse] = self._volts
 
     def _advance(self, begin_volts: float, emf_slope: float, seconds: float) -> None:
         """Carry all cells along one straight piece of the EMF."""

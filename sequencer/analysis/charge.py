@@ -11,7 +11,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.integrate import cumulative_trapezoid
 
 from pulsetally.sequencer.analysis.pulses import Samples
 
@@ -101,7 +100,7 @@ def cell_charge(
     resting = _resting(times, source_volts, node_volts, before)
     current = _resistive_current(source_volts, node_volts, series_ohms, probe_ohms)
     current = current - np.mean(current[:resting])
-    taken: Samples = cumulative_trapezoid(current, times, initial=0)
+    taken = running_integral(current, times)
     probe: Samples = probe_farads * (node_volts - node_volts[0])
     return taken - probe
 
@@ -195,6 +194,13 @@ def _resting(times: Samples, source: Samples, node: Samples, before: float) -> i
             " there is none"
         )
     return resting
+
+
+def running_integral(ordinate: Samples, times: Samples) -> Samples:
+    """Return the integral from the first sample to each, by the trapezoid rule."""
+    strips = (ordinate[1:] + ordinate[:-1]) / 2 * np.diff(times)
+    integral: Samples = np.concatenate(([0.0], np.cumsum(strips)))
+    return integral
 
 
 def check_record(times: Samples, **channels: Samples) -> None:

@@ -9,9 +9,13 @@ from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.integrate import cumulative_trapezoid
 
-from pulsetally.sequencer.analysis.charge import ChargeNoise, SwitchingUnclear, check_record
+from pulsetally.sequencer.analysis.charge import (
+    ChargeNoise,
+    SwitchingUnclear,
+    check_record,
+    running_integral,
+)
 from pulsetally.sequencer.analysis.pulses import Samples
 
 # The share of the extreme node voltage beyond which a branch that comes from saturation is taken
@@ -122,7 +126,7 @@ def loop_of(
     seconds = times[resting:] - before
     volts = node_volts[resting:]
     taken = charge[resting:] - np.mean(charge[:resting])
-    volt_seconds: Samples = cumulative_trapezoid(volts, seconds, initial=0)
+    volt_seconds = running_integral(volts, seconds)
     branches = _branches(volts, rest_volts)
     columns = np.column_stack([volts, seconds, volt_seconds])
     line = _straight(columns, taken, branches, rest_volts, noise)

@@ -14,7 +14,7 @@ from itertools import groupby
 from operator import itemgetter
 
 import numpy as np
-from scipy.stats import t as student
+from scipy.special import stdtrit
 
 from pulsetally.sequencer.analysis.pulses import Samples
 
@@ -259,7 +259,7 @@ class Tuning:
             position=position,
             position_uncertainty=log_uncertainty / abs(line.slope),
             count=count,
-            count_bound=count * log_uncertainty * float(student.ppf((1 + _SURENESS) / 2, degrees)),
+            count_bound=count * log_uncertainty * float(stdtrit(degrees, (1 + _SURENESS) / 2)),
         )
 
     def _was_near(self, seen: list[_Seen], scatter: float) -> bool:
@@ -310,6 +310,7 @@ def _direction(seen: list[_Seen]) -> int:
     first, last = seen[0], seen[-1]
     if first.side != last.side:
         return 1 if last.side > first.side else -1
+    # Both ends lie near the target, or neither was judged: any count is better than none.
     return 1 if last.counts > first.counts else -1
 
 
