@@ -17,7 +17,11 @@ from tests.simulators.talking import LINEAR, Line, block
 
 Floats = NDArray[np.float64]
 
-EXACT = {"offset_shares": (0.0, 0.0), "bandwidth_hertz": math.inf, "noise_share": 0.0}
+EXACT: dict[str, Any] = {
+    "offset_shares": (0.0, 0.0),
+    "bandwidth_hertz": math.inf,
+    "noise_share": 0.0,
+}
 
 
 class Setup:
@@ -54,7 +58,8 @@ class Setup:
         first = float(words[words.index("OFFSet") + 1])
         codes = np.frombuffer(block(self.oscilloscope.ask(":TRAC? CHAN1"), behind=b"\n"), ">i2")
         assert self.oscilloscope.say(":SYST:ERR?") == '0,"No error"'
-        return first + 5e-8 * np.arange(len(codes)), codes * 16 / 4096
+        times: Floats = first + 5e-8 * np.arange(len(codes), dtype=np.float64)
+        return times, codes.astype(np.float64) * 16 / 4096
 
 
 def top(times: Floats, volts: Floats) -> Floats:
