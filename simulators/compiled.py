@@ -34,8 +34,8 @@ March = Callable[
 RunLot = Callable[[LotNumbers, Pieces, Array], bool]
 
 ENVIRONMENT_VARIABLE = "PULSETALLY_JIT"
-# From so many pulses on, loading is won back several times over.
-WORTH_PULSES = 500
+# From so many pulses on, most of which may not come, loading is won back several times over.
+WORTH_PULSES = 2000
 
 # What is compiled: after a change in any of them, old machine code is not used again.
 _SOURCES = ("cell", "circuit", "collocation", "trajectory", "march", "kernel", "lot_kernel")

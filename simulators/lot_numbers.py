@@ -65,7 +65,7 @@ def numbers_of(cells: Sequence[CellDescription], wiring: Wiring) -> LotNumbers:
         switchable_coulombs=column("switchable_coulombs"),
         farads=np.array([Circuit(cell, wiring).farads for cell in cells]),
         shunt_siemens=1 / column("leak_ohms") + 1 / wiring.probe_ohms,
-        branch_ohms=wiring.branch_ohms,
+        branch_ohms=float(wiring.branch_ohms),
     )
 
 

@@ -76,6 +76,19 @@ CASES = {
         Wiring(),
         [PRESET, UP, pulse(-3.0, 100e-6, edge_seconds=10e-6), UP, pulse(-2.0, 50e-6), UP],
     ),
+    "whole numbers": (
+        CellDescription(
+            activation_volts=20,
+            activation_spread=4,
+            alpha=1,
+            imprint_volts=0,
+            relative_permittivity=500,
+            leak_ohms=10**9,
+            incubation=Incubation(seconds=5e-6, threshold_volts=1),
+        ),
+        Wiring(source_ohms=50, series_ohms=950, probe_ohms=10**7, clamp_volts=3),
+        [pulse(-5, 1e-3), pulse(4, 1e-5), pulse(4, 1e-5)],
+    ),
     "incubation": (
         CellDescription(incubation=Incubation(seconds=5e-6)),
         Wiring(),
@@ -138,6 +151,7 @@ def test_few_pulses_are_left_to_numpy(monkeypatch: pytest.MonkeyPatch) -> None:
 def test_a_compiled_lot_has_the_end_voltages_of_the_table() -> None:
     nominal = CellDescription(regions=16)
     cells = [
+        replace(nominal, area=1e-8, activation_volts=20, leak_ohms=10**9),
         *draw_cells(nominal, 6, relative_spread=0.05, seed=1),
         replace(nominal, alpha=1.3, imprint_volts=0.2, leak_ohms=50e6),
     ]
