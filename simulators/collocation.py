@@ -67,17 +67,19 @@ class Equations(NamedTuple):
 
 def equations_of(cell: Cell, circuit: Circuit) -> Equations:
     """Put what a cell and its circuit are now into plain numbers."""
+    law, branches = cell.law, circuit.branches
+    # Settings may be whole numbers; what is compiled tells them from fractions.
     return Equations(
-        law=cell.law,
+        law=SwitchingLaw(law.barriers, float(law.alpha), float(law.attempts_per_second)),
         weights=cell.weights,
-        imprint_volts=cell.imprint_volts,
-        switchable_coulombs=cell.switchable_coulombs,
+        imprint_volts=float(cell.imprint_volts),
+        switchable_coulombs=float(cell.switchable_coulombs),
         frozen=cell.frozen,
         deals=cell.description.domains is not None,
-        farads=circuit.farads,
+        farads=float(circuit.farads),
         linear=circuit.is_linear,
-        gain=circuit.gain,
-        branches=circuit.branches,
+        gain=float(circuit.gain),
+        branches=Branches(branches.relay_on, *map(float, branches[1:])),
     )
 
 

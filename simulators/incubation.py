@@ -66,7 +66,7 @@ class IncubatingSolver(Solver):
     def _leaving(self) -> Stop:
         within = LEAVING_SHARE * self._incubation.threshold_volts
         side = self._beyond_side
-        return Stop(side, self.cell.imprint_volts + side * within)
+        return Stop(side, float(self.cell.imprint_volts + side * within))
 
     def _piece(self, ramp: Ramp) -> tuple[Array, Array]:
         """Go on to the ramp's end or to the next instant at which something changes."""

@@ -87,8 +87,9 @@ class Number:
         if math.isinf(value) and value in self.words.values():
             return value
         limits = self.limits()
-        # The slack is for 20 NS, which in binary is not quite 20e-9.
-        below, above = 1e-12 * abs(limits.lowest), 1e-12 * abs(limits.highest)
+        # The slack is for 20 NS, which in binary is not quite 20e-9; a count needs none.
+        slack = 0.0 if self.whole else 1e-12
+        below, above = slack * abs(limits.lowest), slack * abs(limits.highest)
         if self.whole:
             value = round(value) if math.isfinite(value) else value
         if not limits.lowest - below <= value <= limits.highest + above:

@@ -107,11 +107,11 @@ class Solver:
         cell = self.cell
         course = march_in_use()(
             equations,
-            State(cell.up, self.node_volts, self._side, cell.used),
+            State(cell.up, float(self.node_volts), self._side, cell.used),
             stride,
-            ramp.begin_volts,
-            ramp.volts_per_second,
-            ramp.seconds,
+            float(ramp.begin_volts),
+            float(ramp.volts_per_second),
+            float(ramp.seconds),
             sampled,
             self._stop(),
         )

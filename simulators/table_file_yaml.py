@@ -56,7 +56,8 @@ class PlacedTable:
     data: Any = None
     values: dict[Path, tuple[int, int]] = field(default_factory=dict)
     keys: dict[Path, tuple[int, int]] = field(default_factory=dict)
-    mistakes: list[TableMistake] = field(default_factory=list)
+    # Each once; a dict, since a file may hold thousands of them.
+    mistakes: dict[TableMistake, None] = field(default_factory=dict)
 
     def add(self, path: Path, problem: str, remedy: str, *, at_key: bool = False) -> None:
         """Keep a mistake at a path; its place is the nearest one that is known."""
@@ -79,8 +80,7 @@ class PlacedTable:
             problem=problem,
             remedy=remedy,
         )
-        if mistake not in self.mistakes:
-            self.mistakes.append(mistake)
+        self.mistakes[mistake] = None
 
     def refuse(self) -> None:
         """Raise TableFileError with every mistake, in the order of the file, if there is one."""
