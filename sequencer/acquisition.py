@@ -39,8 +39,9 @@ from pulsetally.sequencer.safety import StopSwitch
 _IDLE_SECONDS, _LONGEST_IDLE_SECONDS, _SLICES = 30.0, 180.0, 20
 # The digitizer's range, against the swing that is expected.
 _HEADROOM = 1.2
-# How long one burst of a cycling lasts at most, so that a stop after it comes in the same night.
-_BURST_SECONDS = 3600.0
+# How long one burst of a cycling lasts at most: whoever stops after the round waits for its end,
+# and whoever can't wait stops at once.
+_BURST_SECONDS = 86_400.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
