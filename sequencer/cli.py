@@ -8,6 +8,7 @@ import os
 import sys
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
+from datetime import datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -85,11 +86,14 @@ def check(
     ],
     bench: Annotated[Path | None, typer.Option(help="The bench it would run on.")] = None,
     overrides: SetOption = None,
+    logbook: LogbookOption = None,
     as_json: JsonOption = False,
 ) -> None:
     """Read a recipe or bench file, and say what it will do or what is wrong with it."""
     from pulsetally.sequencer.bench import is_bench_file, load_bench
-    from pulsetally.sequencer.summary import plan_object, say, show_plan
+    from pulsetally.sequencer.forecast import free_bytes
+    from pulsetally.sequencer.plan_summary import plan_object, show_plan
+    from pulsetally.sequencer.summary import say
 
     with _told():
         # A pipe can be read once only, and is taken for a recipe.
@@ -105,10 +109,11 @@ def check(
                     " at the panel keep its limits")  # fmt: skip
             return
         plan, table = _planned(file, bench, overrides)
+        now, free = datetime.now().astimezone(), free_bytes(_logbook_path(logbook))
         if as_json:
-            _print_json(plan_object(plan))
+            _print_json(plan_object(plan, table, now=now, free_bytes=free))
         else:
-            show_plan(_console(), plan, table)
+            show_plan(_console(), plan, table, now=now, free_bytes=free)
 
 
 @app.command(epilog="Example: pulsetally rehearse full_count --set rounds=5")

@@ -8,9 +8,18 @@ from dataclasses import dataclass, field
 
 from pulsetally.sequencer.bench import Bench
 from pulsetally.sequencer.errors import PlanError
+from pulsetally.sequencer.forecast import EMPTY_BYTES, disk_bytes_of, seconds_of
+from pulsetally.sequencer.outline import Branch, outline_of
 from pulsetally.sequencer.quantities import show_quantity
 from pulsetally.sequencer.recipe import Recipe
-from pulsetally.sequencer.records import POINTS, RecordTooLong, train_points
+from pulsetally.sequencer.records import RecordTooLong, train_points
+from pulsetally.sequencer.resolution import (
+    PulseRecord,
+    generator_problems,
+    record_problems,
+    record_warnings,
+    records_of,
+)
 from pulsetally.sequencer.rounds import (
     Action,
     Ask,
@@ -20,23 +29,20 @@ from pulsetally.sequencer.rounds import (
     Read,
     Round,
     Step,
-    Wait,
-    most_pulses,
     pulses_of,
 )
 from pulsetally.sequencer.unfold import Unfolding
 
-# Two channels of two bytes a sample, and what else a pulse leaves in the logbook.
-_BYTES_PER_POINT, _BYTES_PER_SHOT = 4, 600
-# Common practice: a handful of exchanges a pulse, a few milliseconds each on a real line.
-_SECONDS_PER_SHOT, _SECONDS_PER_SETUP = 0.04, 0.15
-
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class PulseVolts:
-    """What one pulse means along the way to the cell, in volts."""
+    """What one end of a pulse means along the way to the cell, in volts.
+
+    end: 'level' or 'base'; a base of 0 V at the panel is left out.
+    """
 
     name: str
+    end: str
     panel: float
     terminal: float
     cell: float
@@ -48,7 +54,8 @@ class Plan:
 
     swept: names of what the recipe changes. most_pulses: if every read goes to its end. pairs:
     of all cyclings together. seconds, disk_bytes: estimates for that case; asking_seconds: how
-    long a person may let it wait, beyond seconds. volts: by pulse, largest of each.
+    long a person may let it wait, beyond seconds. volts: by pulse, largest of each. records: how
+    each pulse is recorded, the coarsest of each kind. outline: what the recipe does, as a tree.
     """
 
     recipe: Recipe
@@ -60,6 +67,8 @@ class Plan:
     asking_seconds: float
     disk_bytes: int
     volts: tuple[PulseVolts, ...]
+    records: tuple[PulseRecord, ...]
+    outline: tuple[Branch, ...]
     warnings: tuple[str, ...] = field(default=())
 
 
@@ -74,8 +83,13 @@ def make_plan(recipe: Recipe, bench: Bench) -> Plan:
     problems += _limit_problems(volts, bench)
     problems += _panel_problems(pulses, bench)
     problems += dict.fromkeys(_train_problems(actions))
+    # What is no pulse at all needs no record either.
+    records = [] if problems else records_of(actions, bench)
+    problems += record_problems(records, bench)
+    problems += dict.fromkeys(generator_problems(actions, bench))
     if problems:
         raise PlanError(problems)
+    most_points = bench.oscilloscope_dialect.most_points
     planned = [action for each in rounds for action in each.actions]
     return Plan(
         recipe=recipe,
@@ -83,11 +97,17 @@ def make_plan(recipe: Recipe, bench: Bench) -> Plan:
         swept=tuple(unfolding.swept),
         most_pulses=sum(each.most_pulses for each in rounds),
         pairs=sum(each.pairs for each in planned if isinstance(each, Cycle)),
-        seconds=sum(map(_seconds, planned)),
+        seconds=sum(map(seconds_of, planned)),
         asking_seconds=sum(each.seconds for each in planned if isinstance(each, Ask)),
-        disk_bytes=sum(map(_disk_bytes, planned)) + 100_000,
+        disk_bytes=EMPTY_BYTES + sum(disk_bytes_of(each, most_points) for each in planned),
         volts=tuple(volts),
-        warnings=(*_warnings(rounds, volts, bench), *_contact_warnings(rounds, bench)),
+        records=tuple(records),
+        outline=outline_of(recipe),
+        warnings=(
+            *_warnings(rounds, volts, bench),
+            *_contact_warnings(rounds, bench),
+            *record_warnings(records),
+        ),
     )
 
 
@@ -109,44 +129,22 @@ def _train_problems(actions: list[Action]) -> Iterator[str]:
                 yield f"pulse {action.pulse.name!r}: {error}."
 
 
-def _seconds(action: Action) -> float:
-    match action:
-        case Wait():
-            return action.seconds
-        case Ask():
-            return 0.0
-        case Cycle():
-            return _SECONDS_PER_SETUP + action.pairs * action.period
-        case Step(train=train) | Read(train=train) if train > 1:
-            trains = -(-most_pulses(action) // train)
-            each = (action.pulse.duration + action.pulse.rest) * train * 2 + _SECONDS_PER_SHOT
-            return _SECONDS_PER_SETUP + trains * each
-        case _:
-            # A record takes up to five times its pulse, since time bases go in steps of 1, 2, 5.
-            each = 4 * action.pulse.duration + action.pulse.rest + _SECONDS_PER_SHOT
-            return _SECONDS_PER_SETUP + each * most_pulses(action)
-
-
-def _disk_bytes(action: Action) -> int:
-    if isinstance(action, Step | Read) and action.train > 1:
-        trains = -(-most_pulses(action) // action.train)
-        points = train_points(action.pulse, action.train)
-        return trains * (points * _BYTES_PER_POINT + _BYTES_PER_SHOT)
-    return most_pulses(action) * (POINTS * _BYTES_PER_POINT + _BYTES_PER_SHOT)
-
-
 def _volts(pulses: list[Pulse], bench: Bench) -> list[PulseVolts]:
-    largest: dict[str, PulseVolts] = {}
+    """Return what both ends of each pulse come to, the largest of all that have its name."""
+    largest: dict[tuple[str, str], PulseVolts] = {}
     for pulse in pulses:
-        panel = max((pulse.level, pulse.base), key=abs)
-        found = PulseVolts(
-            name=pulse.name,
-            panel=panel,
-            terminal=bench.terminal_volts(panel),
-            cell=bench.cell_volts(panel),
-        )
-        if pulse.name not in largest or abs(found.panel) > abs(largest[pulse.name].panel):
-            largest[pulse.name] = found
+        for end, panel in (("level", pulse.level), ("base", pulse.base)):
+            if end == "base" and panel == 0:
+                continue
+            before = largest.get((pulse.name, end))
+            if before is None or abs(panel) > abs(before.panel):
+                largest[pulse.name, end] = PulseVolts(
+                    name=pulse.name,
+                    end=end,
+                    panel=panel,
+                    terminal=bench.terminal_volts(panel),
+                    cell=bench.cell_volts(panel),
+                )
     return list(largest.values())
 
 
@@ -159,9 +157,10 @@ def _limit_problems(volts: list[PulseVolts], bench: Bench) -> list[str]:
             ("across the cell", each.cell, limits.node, "node"),
         ):
             if not abs(value) <= limit:
+                what = "" if each.end == "level" else "the base of "
                 problems.append(
-                    f"pulse {each.name!r} of {show_quantity(each.panel, 'V')} at the panel means"
-                    f" {show_quantity(value, 'V')} {place}, beyond the {name} limit of"
+                    f"{what}pulse {each.name!r} of {show_quantity(each.panel, 'V')} at the panel"
+                    f" means {show_quantity(value, 'V')} {place}, beyond the {name} limit of"
                     f" {show_quantity(limit, 'V')} in {bench.file}. To fix it, lower the pulse,"
                     " or raise the limit if the cell bears it."
                 )
@@ -206,10 +205,11 @@ def _contact_warnings(rounds: tuple[Round, ...], bench: Bench) -> Iterator[str]:
 def _warnings(rounds: tuple[Round, ...], volts: list[PulseVolts], bench: Bench) -> Iterator[str]:
     for each in volts:
         if abs(each.cell) < 0.05 * abs(each.terminal):
+            what = "" if each.end == "level" else "the base of "
             sent, left = show_quantity(each.terminal, "V"), show_quantity(each.cell, "V")
             yield (
-                f"pulse {each.name!r} hardly reaches the cell: of {sent} at the terminal {left}"
-                " are left; a series diode blocks one polarity"
+                f"{what}pulse {each.name!r} hardly reaches the cell: of {sent} at the terminal"
+                f" {left} are left; a series diode blocks one polarity"
             )
     if rounds and not rounds[0].repeatable:
         yield "the recipe begins without a preset: the first round starts from an unknown state"

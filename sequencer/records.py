@@ -35,7 +35,8 @@ class Window:
 
 def fitted(window: Window, most_points: int | None) -> Window:
     """Return a window that asks for no more samples than an oscilloscope has, if that is known."""
-    return window if most_points is None else replace(window, points=min(window.points, most_points))
+    most = window.points if most_points is None else most_points
+    return replace(window, points=min(window.points, most))
 
 
 def window_of(pulse: Pulse) -> Window:

@@ -6,12 +6,9 @@ from rich.table import Table
 from rich.text import Text
 
 from pulsetally.sequencer.analysis.counting import CountStatistics
-from pulsetally.sequencer.bench import Bench
 from pulsetally.sequencer.discovery import Found
-from pulsetally.sequencer.plan import Plan
 from pulsetally.sequencer.probe import Check
 from pulsetally.sequencer.progress import printable, show_setting
-from pulsetally.sequencer.quantities import show_duration, show_quantity
 from pulsetally.sequencer.results import RoundResult, RunResult, RunSummary
 
 _MOST_ROWS = 60
@@ -20,51 +17,6 @@ _MOST_ROWS = 60
 def say(console: Console, words: str, style: str = "") -> None:
     """Print one sentence that may hold text from a file or an instrument."""
     console.print(Text(printable(words, 5000), style=style), soft_wrap=True)
-
-
-def show_plan(console: Console, plan: Plan, bench: Bench) -> None:
-    """Print what a plan will ask for."""
-    say(console, plan.recipe.title, style="bold")
-    if plan.recipe.model.purpose:
-        say(console, plan.recipe.model.purpose)
-    reading = f"at most {plan.most_pulses} pulses"
-    rounds = "1 round" if len(plan.rounds) == 1 else f"{len(plan.rounds)} rounds"
-    say(console, f"{rounds}, {reading}, at most about"
-        f" {show_duration(plan.seconds)} and {show_bytes(plan.disk_bytes)} of logbook")  # fmt: skip
-    table = Table("pulse", "at the panel", "at the terminal", "across the cell", title="Voltages")
-    for each in plan.volts:
-        table.add_row(
-            Text(printable(each.name)),
-            *(show_quantity(volts, "V") for volts in (each.panel, each.terminal, each.cell)),
-        )
-    limits = bench.model.limits
-    table.add_row(
-        "limit",
-        "",
-        show_quantity(limits.source, "V"),
-        show_quantity(limits.node, "V"),
-        end_section=True,
-    )
-    console.print(table)
-    for warning in plan.warnings:
-        say(console, f"Note: {warning}.")
-
-
-def plan_object(plan: Plan) -> dict[str, object]:
-    """Return a plan as an object for JSON, in SI units."""
-    return {
-        "recipe": plan.recipe.title,
-        "rounds": len(plan.rounds),
-        "most_pulses": plan.most_pulses,
-        "seconds": plan.seconds,
-        "disk_bytes": plan.disk_bytes,
-        "swept": list(plan.swept),
-        "pulses": [
-            {"pulse": each.name, "panel": each.panel, "terminal": each.terminal, "cell": each.cell}
-            for each in plan.volts
-        ],
-        "warnings": list(plan.warnings),
-    }
 
 
 def show_runs(console: Console, found: list[RunSummary]) -> None:

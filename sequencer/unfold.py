@@ -284,7 +284,7 @@ class Unfolding:
             )
         done = 0
         yield from self._pause(step, settings, cycling, done)
-        for stop_at in _pauses(step, pairs):
+        for stop_at in pauses_of(step, pairs):
             yield _Part(
                 action=Cycle(down=down, up=up, pairs=stop_at - done, done=done),
                 settings=settings | {"cycles": float(done)},
@@ -488,7 +488,7 @@ def _verbs(steps: list[Any]) -> Iterator[type[Model]]:
         yield from _verbs(getattr(step, "steps", []))
 
 
-def _pauses(step: CycleStep, pairs: int) -> list[int]:
+def pauses_of(step: CycleStep, pairs: int) -> list[int]:
     """Return after how many pairs a cycling pauses, the last pair among them."""
     stops = {int(each) for each in step.pause_at}
     if each_decade := int(step.per_decade):
