@@ -10,7 +10,14 @@ from dataclasses import dataclass, replace
 from pathlib import Path as FilePath
 from typing import Annotated, Any
 
-from pydantic import BeforeValidator, Field
+from pydantic import (
+    BeforeValidator,
+    Field,
+    GetCoreSchemaHandler,
+    GetJsonSchemaHandler,
+    WithJsonSchema,
+)
+from pydantic_core import core_schema
 
 from pulsetally.drivers.dialect import Dialect, GeneratorDialect, OscilloscopeDialect
 from pulsetally.sequencer.dialects import DialectError, find_dialect, shipped_dialects
@@ -62,6 +69,20 @@ def _none_word(written: object) -> object:
     return None if written == "none" else written
 
 
+class _OrNone:
+    """Read the word none as leaving a group out."""
+
+    def __get_pydantic_core_schema__(
+        self, source: Any, handler: GetCoreSchemaHandler
+    ) -> core_schema.CoreSchema:
+        return core_schema.no_info_before_validator_function(_none_word, handler(source))
+
+    def __get_pydantic_json_schema__(
+        self, schema: core_schema.CoreSchema, handler: GetJsonSchemaHandler
+    ) -> dict[str, Any]:
+        return {"anyOf": [handler(schema), {"const": "none"}]}
+
+
 def _address(written: object) -> object:
     if not isinstance(written, str) or "::" not in written:
         raise fault(
@@ -71,8 +92,20 @@ def _address(written: object) -> object:
     return written
 
 
-Address = Annotated[str, BeforeValidator(_address)]
-DialectName = Annotated[str, BeforeValidator(_dialect)]
+_ADDRESS_SCHEMA = {
+    "type": "string",
+    "pattern": "::",
+    "description": "a VISA resource name",
+    "examples": ["TCPIP::192.0.2.10::5025::SOCKET"],
+}
+_LOAD_SCHEMA = {"anyOf": [{"const": "high-z"}, quantity(RESISTANCE, above=0).schema()]}
+_TEXT_SCHEMA = {"type": "string", "pattern": r"\S"}
+Address = Annotated[str, BeforeValidator(_address), WithJsonSchema(_ADDRESS_SCHEMA)]
+DialectName = Annotated[
+    str,
+    BeforeValidator(_dialect),
+    WithJsonSchema(_TEXT_SCHEMA | {"examples": shipped_dialects()}),
+]
 
 
 def _channel() -> Any:
@@ -80,16 +113,24 @@ def _channel() -> Any:
 
 
 class GeneratorSection(Model):
-    """Where the function generator is and what it is told about its load."""
+    """Where the function generator is and what it is told about its load.
+
+    address: where it answers. dialect: how it is spoken to; one that ships, or a file. channel:
+    its output. load: what it is told about its load; high-z unless it says otherwise.
+    """
 
     address: Address
     dialect: DialectName = _FIRST_DIALECT
     channel: Annotated[float, _channel()] = 1.0
-    load: Annotated[float, BeforeValidator(_load)] = math.inf
+    load: Annotated[float, BeforeValidator(_load), WithJsonSchema(_LOAD_SCHEMA)] = math.inf
 
 
 class OscilloscopeSection(Model):
-    """Where the oscilloscope is and what its channels watch."""
+    """Where the oscilloscope is and what its channels watch.
+
+    address: where it answers. dialect: how it is spoken to; one that ships, or a file.
+    source_channel: watches the generator's terminal. node_channel: watches the cell.
+    """
 
     address: Address
     dialect: DialectName = _FIRST_DIALECT
@@ -98,7 +139,10 @@ class OscilloscopeSection(Model):
 
 
 class DiodeSection(Model):
-    """A series diode after Shockley."""
+    """A series diode after Shockley.
+
+    saturation_current: amperes. emission: the coefficient beside the thermal voltage.
+    """
 
     saturation_current: Annotated[
         float, Field(alias="saturation current"), quantity(CURRENT, above=0)
@@ -107,20 +151,31 @@ class DiodeSection(Model):
 
 
 class ClampSection(Model):
-    """A clamp across the cell that conducts beyond its breakdown voltage."""
+    """A clamp across the cell that conducts beyond its breakdown voltage.
+
+    breakdown: volts, of both polarities.
+    """
 
     breakdown: Annotated[float, quantity(VOLTAGE, above=0)]
 
 
 class ProbeSection(Model):
-    """What the oscilloscope's probe puts across the cell."""
+    """What the oscilloscope's probe puts across the cell.
+
+    resistance: ohms. capacitance: farads.
+    """
 
     resistance: Annotated[float, quantity(RESISTANCE, above=0)] = 10e6
     capacitance: Annotated[float, quantity(CAPACITANCE, least=0)] = 12e-12
 
 
 class WiringSection(Model):
-    """What lies between the generator and the cell."""
+    """What lies between the generator and the cell.
+
+    source_resistance: of the generator's output, in ohms. series_resistance: of the resistor
+    that charges the cell, in ohms. series_diode: in series with it, or none. clamp: across the
+    cell, or none. probe: across the cell.
+    """
 
     source_resistance: Annotated[
         float, Field(alias="source resistance"), quantity(RESISTANCE, least=0)
@@ -128,22 +183,27 @@ class WiringSection(Model):
     series_resistance: Annotated[
         float, Field(alias="series resistance"), quantity(RESISTANCE, above=0)
     ]
-    series_diode: Annotated[
-        DiodeSection | None, Field(alias="series diode"), BeforeValidator(_none_word)
-    ] = None
-    clamp: Annotated[ClampSection | None, BeforeValidator(_none_word)] = None
+    series_diode: Annotated[DiodeSection | None, Field(alias="series diode"), _OrNone()] = None
+    clamp: Annotated[ClampSection | None, _OrNone()] = None
     probe: Annotated[ProbeSection, Field(default_factory=ProbeSection)]
 
 
 class LimitsSection(Model):
-    """Voltages that nothing may pass, whatever a recipe says."""
+    """Voltages that nothing may pass, whatever a recipe says.
+
+    source: at the generator's terminal, in volts. node: across the cell, in volts.
+    """
 
     source: Annotated[float, quantity(VOLTAGE, above=0)]
     node: Annotated[float, quantity(VOLTAGE, above=0)]
 
 
 class CellSection(Model):
-    """The cell's geometry."""
+    """The cell's geometry.
+
+    name: what a person calls it. area: square metres. thickness: of the film, in metres.
+    relative_permittivity: of the film, from which a contact's time constant is expected.
+    """
 
     name: str = "unnamed"
     area: Annotated[float, quantity(AREA, above=0)]
@@ -160,9 +220,14 @@ def _title(written: object) -> object:
 
 
 class BenchModel(Model):
-    """A whole bench file."""
+    """A whole bench file: instruments, the wiring between them, limits and the cell.
 
-    bench: Annotated[str, BeforeValidator(_title)]
+    bench: what a person calls it. generator, oscilloscope: the instrument. clock: the time of a
+    simulated bench, which no real one has. wiring: what lies between generator and cell.
+    limits: voltages that bind every recipe. cell: its geometry.
+    """
+
+    bench: Annotated[str, BeforeValidator(_title), WithJsonSchema(_TEXT_SCHEMA)]
     generator: GeneratorSection
     oscilloscope: OscilloscopeSection
     clock: Address | None = None

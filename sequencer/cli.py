@@ -9,6 +9,7 @@ import sys
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
 from datetime import datetime
+from enum import StrEnum
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -59,6 +60,15 @@ DomainsOption = Annotated[
     int | None,
     typer.Option(min=0, help="Domains of the cell: fewer scatter more; 0 for no scatter."),
 ]
+
+
+class SchemaName(StrEnum):
+    """What a JSON schema can be had of."""
+
+    RECIPE = "recipe"
+    BENCH = "bench"
+
+
 JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON, for programs.")]
 
 
@@ -82,14 +92,26 @@ def begin(
 @app.command(epilog="Example: pulsetally check my_recipe.yaml --bench my_bench.yaml")
 def check(
     file: Annotated[
-        str, typer.Argument(help="A recipe, a shipped recipe's name, or a bench file.")
-    ],
+        str | None, typer.Argument(help="A recipe, a shipped recipe's name, or a bench file.")
+    ] = None,
     bench: Annotated[Path | None, typer.Option(help="The bench it would run on.")] = None,
     overrides: SetOption = None,
     logbook: LogbookOption = None,
     as_json: JsonOption = False,
+    schema: Annotated[
+        SchemaName | None,
+        typer.Option(help="Print the JSON schema of recipes or bench files instead."),
+    ] = None,
 ) -> None:
     """Read a recipe or bench file, and say what it will do or what is wrong with it."""
+    if schema is not None:
+        from pulsetally.sequencer.schemas import schema_text
+
+        typer.echo(schema_text(schema.value), nl=False)
+        return
+    if file is None:
+        _complain("check what? To fix it, name a recipe or a bench file, or give --schema.")
+        raise typer.Exit(WRONG_INPUT)
     from pulsetally.sequencer.bench import is_bench_file, load_bench
     from pulsetally.sequencer.forecast import free_bytes
     from pulsetally.sequencer.plan_summary import plan_object, show_plan

@@ -4,6 +4,9 @@ Pydantic does the walking and collects every error; this module makes its errors
 line, column, what was found, what is allowed, what to write.
 """
 
+import inspect
+import math
+import re
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Annotated, Any
@@ -18,17 +21,92 @@ from pydantic import (
     ValidationInfo,
     WithJsonSchema,
 )
+from pydantic.fields import FieldInfo
 from pydantic_core import ErrorDetails, PydanticCustomError, core_schema
 
 from pulsetally.sequencer.errors import Mistake
-from pulsetally.sequencer.quantities import KINDS, Kind, QuantityError, is_quantity, parse_quantity
+from pulsetally.sequencer.quantities import (
+    KINDS,
+    Kind,
+    QuantityError,
+    format_quantity,
+    is_quantity,
+    parse_quantity,
+    quantity_pattern,
+    show_quantity,
+)
 from pulsetally.sequencer.yaml_places import Path, PlacedData, nearest
+
+# What pulses and parameters may be called.
+WORD = "[A-Za-z][A-Za-z0-9_-]*"
 
 
 class Model(BaseModel):
     """A group of settings: frozen, and nothing but what is declared."""
 
     model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True)
+
+    @classmethod
+    def __get_pydantic_json_schema__(
+        cls, schema: core_schema.CoreSchema, handler: GetJsonSchemaHandler
+    ) -> dict[str, Any]:
+        """Describe the group for editors: each setting in the docstring's words."""
+        described = handler(schema)
+        group = handler.resolve_ref_schema(described)
+        group["description"] = summary(cls)
+        told = field_descriptions(cls)
+        for name, field in cls.model_fields.items():
+            setting = group["properties"][field.alias or name]
+            words = [told.get(name, ""), setting.get("description", "")]
+            setting["description"] = "; ".join(filter(None, words))
+            default = written_value(field.default, quantified(field))
+            if isinstance(default, (str, int, float)):
+                setting["default"] = default
+            else:
+                # There is none, or it can't be written.
+                setting.pop("default", None)
+        return described
+
+
+def summary(model: type[BaseModel]) -> str:
+    """Return the first sentence of a model's docstring."""
+    return inspect.cleandoc(model.__doc__ or "").partition("\n\n")[0]
+
+
+def field_descriptions(model: type[BaseModel]) -> dict[str, str]:
+    """Return what a model's docstring says of its fields: 'name, other: words. third: words.'."""
+    text = " ".join(inspect.cleandoc(model.__doc__ or "").partition("\n\n")[2].split())
+    names = "|".join(model.model_fields)
+    parts = re.split(rf"(?:^|(?<=\. ))((?:{names})(?:, (?:{names}))*): ", text)
+    return {
+        name: words.strip().removesuffix(".")
+        for listed, words in zip(parts[1::2], parts[2::2], strict=True)
+        for name in listed.split(", ")
+    }
+
+
+def quantified(field: FieldInfo) -> "Quantified | None":
+    """Return how a field reads its quantity; None if it holds none."""
+    return next((each for each in field.metadata if isinstance(each, Quantified)), None)
+
+
+def written_value(value: object, read: "Quantified | None") -> object:
+    """Write a field's value as a file has it, so that it is read back as the same value.
+
+    read: how the field reads a quantity. What can't be written is given back as it is.
+    """
+    if isinstance(value, Name):
+        return value.word
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    if not isinstance(value, (int, float)):
+        return value
+    if not math.isfinite(value):
+        return None
+    if read is not None and read.kind.unit:
+        return format_quantity(value, read.kind)
+    # Larger floats are whole as well, and would be written with all their digits.
+    return int(value) if value == int(value) and abs(value) <= 2**53 else value
 
 
 def fault(problem: str, remedy: str) -> PydanticCustomError:
@@ -93,7 +171,43 @@ class Quantified:
         self, schema: core_schema.CoreSchema, handler: GetJsonSchemaHandler
     ) -> dict[str, Any]:
         """Describe what may be written, for editors."""
-        return {"type": ["string", "number"], "examples": [self.kind.example]}
+        return self.schema()
+
+    def schema(self) -> dict[str, Any]:
+        """Return the JSON schema of what may be written.
+
+        Bounds of a quantity with a unit are told in words: a pattern can say only its sign.
+        """
+        pattern = quantity_pattern(self.kind, least=self.least, above=self.above)
+        ways: list[dict[str, Any]] = [{"type": "string", "pattern": pattern}]
+        if not self.kind.unit:
+            bounds = (("minimum", self.least), ("maximum", self.most),
+                      ("exclusiveMinimum", self.above))  # fmt: skip
+            number = {"type": "integer" if self.whole else "number"}
+            ways.append(number | {word: value for word, value in bounds if value is not None})
+        elif (self.least is None or self.least <= 0) and (self.above is None or self.above < 0):
+            ways.append({"const": 0})
+        text = "a whole number" if self.whole else self.kind.name
+        if self.least is not None and self.most is not None:
+            text += f" from {self._shown(self.least)} to {self._shown(self.most)}"
+        elif self.least is not None:
+            text += f" of {self._shown(self.least)} or more"
+        elif self.above is not None:
+            text += f" above {self._shown(self.above)}"
+            text += f" and to {self._shown(self.most)}" if self.most is not None else ""
+        if self.names:
+            ways.append({"type": "string", "pattern": f"^{WORD}$"})
+            text += ", or the name of a parameter"
+        example = self.kind.example if self.kind.unit else self._example()
+        return {"anyOf": ways, "description": text, "examples": [example]}
+
+    def _shown(self, value: float) -> str:
+        return show_quantity(value, self.kind.unit) if self.kind.unit != "%" else f"{value:.0%}"
+
+    def _example(self) -> float:
+        example = float(self.kind.example)
+        least, most = self.least or -math.inf, math.inf if self.most is None else self.most
+        return int(min(max(example, least), most))
 
     def _read(self, written: object, info: ValidationInfo) -> float | Name:
         if isinstance(written, Name):
@@ -185,6 +299,15 @@ def _yes_or_no(written: object) -> bool:
     raise fault(f"{str(written)[:60]!r} is neither yes nor no", "write 'yes' or 'no'")
 
 
+def schema_of_quantities(*kinds: Kind) -> dict[str, Any]:
+    """Return the JSON schema of a quantity of any of these kinds."""
+    ways: list[dict[str, Any]] = [
+        {"type": "string", "pattern": "|".join(map(quantity_pattern, kinds))},
+        {"const": 0} if all(kind.unit for kind in kinds) else {"type": "number"},
+    ]
+    return {"anyOf": ways, "examples": [kinds[0].example]}
+
+
 YesNo = Annotated[
     bool,
     BeforeValidator(_yes_or_no),
@@ -256,13 +379,31 @@ def _mistake(
             f"write settings such as '{names[0]}: ...'" if names else "write 'name: value' lines"
         )
         return placed.mistake(path, f"{_shown(found)} is not a group of settings", remedy)
-    if kind == "too_short":
-        return placed.mistake(path, "the list is empty", "write at least one item")
+    if kind in ("too_short", "too_long"):
+        return placed.mistake(path, *_wrong_length(context))
+    if kind in ("string_too_short", "string_too_long"):
+        problem = f"the text has {len(found)} characters"
+        least, most = context.get("min_length", 1), context.get("max_length")
+        remedy = f"write {most} or fewer" if most else f"write {least} or more"
+        return placed.mistake(path, problem, remedy)
     if kind == "list_type":
         return placed.mistake(path, f"{_shown(found)} is not a list", "write '- ' before each item")
     if kind == "string_type":
         return placed.mistake(path, f"{_shown(found)} is not text", "write a word or a sentence")
     return placed.mistake(path, f"{_shown(found)}: {entry['msg']}", "write what is allowed")
+
+
+def _wrong_length(context: dict[str, Any]) -> tuple[str, str]:
+    """Return problem and remedy for a list of the wrong length."""
+    length = context["actual_length"]
+    wanted: int = context["min_length" if "min_length" in context else "max_length"]
+    if not length:
+        return "the list is empty", f"write at least {_items(wanted)}"
+    return f"the list has {_items(length)}", f"write {_items(wanted)}"
+
+
+def _items(count: int) -> str:
+    return "one item" if count == 1 else f"{count} items"
 
 
 def is_tag(part: str | int) -> bool:

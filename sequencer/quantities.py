@@ -147,14 +147,17 @@ def quantity_pattern(kind: Kind, *, least: float | None = None, above: float | N
     """
     units = [*kind.fixed]
     if kind.scaled:
-        units.append(f"[{''.join(_PREFIXES)}]?(?:{'|'.join(kind.scaled)})")
-    zero = r"[+-]?(?:0+\.?0*|\.0+)(?:[eE][+-]?[0-9]+)?"
-    body = rf"{_NUMBER}\s*(?:{'|'.join(units)})|{zero}" if units else _NUMBER
+        symbols = "|".join(kind.scaled)
+        units.append(f"[{''.join(_PREFIXES)}]?(?:{symbols})")
+    body = rf"{_NUMBER}\s*(?:{'|'.join(units)})" if units else _NUMBER
     sign = ""
     if above is not None and above >= 0:
         sign = r"(?=\s*\+?[0.]*[1-9])"
-    elif least is not None and least >= 0:
-        sign = r"(?!\s*-[0.]*[1-9])"
+    elif units:
+        # 0 of anything is 0.
+        body += r"|[+-]?(?:0+\.?0*|\.0+)(?:[eE][+-]?[0-9]+)?"
+    if least is not None and least >= 0:
+        sign += r"(?!\s*-[0.]*[1-9])"
     return rf"^{sign}\s*(?:{body})\s*$"
 
 

@@ -12,7 +12,7 @@ from pathlib import Path as FilePath
 from typing import Any
 
 from pulsetally.sequencer.errors import Mistake, RecipeError
-from pulsetally.sequencer.models import Declared, field_names, is_tag, kind_of, validate
+from pulsetally.sequencer.models import WORD, Declared, field_names, is_tag, kind_of, validate
 from pulsetally.sequencer.quantities import Kind
 from pulsetally.sequencer.ranges import RangeFault, axis_values
 from pulsetally.sequencer.steps import (
@@ -32,7 +32,7 @@ from pulsetally.sequencer.yaml_places import (
     read_text,
 )
 
-_WORD = re.compile(r"[A-Za-z][A-Za-z0-9_-]*")
+_WORD = re.compile(WORD)
 # A name of the program's own in what rounds are listed by.
 _TAKEN = ("cycles",)
 

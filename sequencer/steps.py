@@ -16,6 +16,7 @@ from pydantic import (
 )
 
 from pulsetally.sequencer.models import (
+    WORD,
     Declared,
     Model,
     Name,
@@ -23,13 +24,16 @@ from pulsetally.sequencer.models import (
     YesNo,
     fault,
     quantity,
+    schema_of_quantities,
 )
-from pulsetally.sequencer.quantities import NUMBER, SHARE, TIME, VOLTAGE, Kind
+from pulsetally.sequencer.quantities import KINDS, NUMBER, SHARE, TIME, VOLTAGE, Kind
 from pulsetally.sequencer.yaml_places import nearest
 
 # An instrument that counts on for years has lost its end.
 MOST_PAIRS = 1_000_000_000_000
 _MOST_TUNING_ROUNDS = 200
+# Ten years: nobody waits longer.
+LONGEST_WAIT = 3.2e8
 
 Value = float | Name
 
@@ -44,7 +48,8 @@ def _pulse_name(written: object, info: ValidationInfo) -> str:
     return written
 
 
-PulseName = Annotated[str, BeforeValidator(_pulse_name)]
+_NAME_SCHEMA = {"type": "string", "pattern": f"^{WORD}$"}
+PulseName = Annotated[str, BeforeValidator(_pulse_name), WithJsonSchema(_NAME_SCHEMA)]
 Volts = Annotated[Value, quantity(VOLTAGE, names=True)]
 Count = Annotated[Value, quantity(NUMBER, least=1, most=1_000_000, whole=True, names=True)]
 # 0 is a count too: step 0 pulses, then read, is how a full count is taken in a sweep.
@@ -59,14 +64,15 @@ class PulseModel(Model):
 
     level, base: volts, at the generator's panel or across the cell, as 'at' says. width:
     seconds between the 50 % points. edge: seconds from 10 % to 90 %, of both edges. rest: least
-    time at base after it, in seconds.
+    time at base after it, in seconds. at: where level and base are meant; the panel's setting
+    is computed through the wiring.
     """
 
     level: Volts
     width: Annotated[Value, quantity(TIME, above=0, most=1000, names=True)]
     base: Volts = 0.0
     edge: Annotated[Value, quantity(TIME, above=0, most=100, names=True)] = 100e-9
-    rest: Annotated[Value, quantity(TIME, least=0, names=True)] = 1e-3
+    rest: Annotated[Value, quantity(TIME, least=0, most=LONGEST_WAIT, names=True)] = 1e-3
     at: Where = "panel"
 
 
@@ -81,13 +87,20 @@ PULSE_KINDS: dict[str, Kind] = {
 
 
 class PresetStep(Model):
-    """Drive the cell fully down with one pulse; a new round begins here."""
+    """Drive the cell fully down with one pulse; a new round begins here.
+
+    preset: the name of the pulse.
+    """
 
     preset: PulseName
 
 
 class StepStep(Model):
-    """Deliver a stated number of pulses."""
+    """Deliver a stated number of pulses.
+
+    step: the name of the pulse. count: how many. capture: each pulse by itself, or a train of
+    them with one trigger and one long record. train_of: pulses in a train.
+    """
 
     step: PulseName
     count: StepCount = 1.0
@@ -96,7 +109,12 @@ class StepStep(Model):
 
 
 class ReadStep(Model):
-    """Deliver pulses until the end voltage passes the threshold, counting them."""
+    """Deliver pulses until the end voltage passes the threshold, counting them.
+
+    read: the name of the pulse. until: the threshold across the cell, in volts. at_most: pulses.
+    capture: each pulse by itself, or a train of them with one trigger and one long record; then
+    it stops after the first train that passes. train_of: pulses in a train.
+    """
 
     read: PulseName
     until: Volts
@@ -106,25 +124,38 @@ class ReadStep(Model):
 
 
 class WaitStep(Model):
-    """Leave the cell alone, with the output on at its base."""
+    """Leave the cell alone, with the output on at its base.
 
-    wait: Annotated[Value, quantity(TIME, least=0, names=True)]
+    wait: seconds.
+    """
+
+    wait: Annotated[Value, quantity(TIME, least=0, most=LONGEST_WAIT, names=True)]
 
 
 class ContactStep(Model):
-    """Look with a small pulse whether a cell is there; the run ends if it is open or short."""
+    """Look with a small pulse whether a cell is there; the run ends if it is open or short.
+
+    contact: the name of a pulse far below coercive.
+    """
 
     contact: PulseName
 
 
 class PundStep(Model):
-    """Measure the switched charge: preset, two pulses up and two down of one size."""
+    """Measure the switched charge: preset, two pulses up and two down of one size.
+
+    pund: the name of the pulse up; its mirror image goes down.
+    """
 
     pund: PulseName
 
 
 class LoopStep(Model):
-    """Measure a hysteresis loop: two triangles from minus to plus the amplitude and back."""
+    """Measure a hysteresis loop: two triangles from minus to plus the amplitude and back.
+
+    loop: the amplitude, in volts. period: seconds a triangle. at: where the amplitude is meant;
+    the panel's setting is computed through the wiring.
+    """
 
     loop: Annotated[Value, quantity(VOLTAGE, above=0, names=True)]
     period: Annotated[Value, quantity(TIME, above=0, most=1000, names=True)]
@@ -132,15 +163,21 @@ class LoopStep(Model):
 
 
 class AskStep(Model):
-    """Switch the output off and wait for a person, for so long at most."""
+    """Switch the output off and wait for a person, for so long at most.
+
+    ask: what the person is told. within: seconds. otherwise: what happens when nobody answers.
+    """
 
     ask: Annotated[str, Field(min_length=1, max_length=2000)]
-    within: Annotated[Value, quantity(TIME, above=0, names=True)] = 3600.0
+    within: Annotated[Value, quantity(TIME, above=0, most=LONGEST_WAIT, names=True)] = 3600.0
     otherwise: Annotated[str, OneOf(("stop", "go on"))] = "stop"
 
 
 class RepeatStep(Model):
-    """Do the steps a stated number of times."""
+    """Do the steps a stated number of times.
+
+    repeat: how often. steps: what is repeated.
+    """
 
     repeat: Count
     steps: Annotated[list["Step"], Field(min_length=1)]
@@ -154,33 +191,45 @@ def _sweep_axes(written: object) -> object:
     return written
 
 
-_AXIS_SCHEMA = {
-    "type": "object",
-    "additionalProperties": {
+def _axis_schema(*kinds: Kind) -> dict[str, Any]:
+    one, count = schema_of_quantities(*kinds), quantity(NUMBER, least=1, whole=True).schema()
+    ends = {"from": one, "to": one, "per decade": count, "points": count}
+    return {
         "anyOf": [
-            {"type": "array", "items": {"type": ["string", "number"]}},
+            {"type": "array", "items": one, "minItems": 1},
             {
                 "type": "object",
-                "properties": {
-                    name: {"type": ["string", "number"]}
-                    for name in ("from", "to", "per decade", "points")
-                },
+                "properties": ends,
                 "required": ["from", "to"],
+                "oneOf": [{"required": ["per decade"]}, {"required": ["points"]}],
                 "additionalProperties": False,
             },
         ]
+    }
+
+
+_SETTABLE = f"^{WORD}([.]({'|'.join(PULSE_KINDS)}))?$"
+_SWEEP_SCHEMA = {
+    "type": "object",
+    "patternProperties": {
+        f"^{WORD}$": _axis_schema(*KINDS),
+        **{f"[.]{name}$": _axis_schema(kind) for name, kind in PULSE_KINDS.items()},
     },
+    "propertyNames": {"pattern": _SETTABLE},
+    "minProperties": 1,
 }
 
 
 class SweepStep(Model):
     """Do the steps for each combination of the stated values of the stated settings.
 
-    together: the settings move in step instead of forming a grid. order: shuffled takes the
-    combinations in an order drawn with the seed, since drift hides in an ordered sweep.
+    sweep: for each parameter or pulse setting a list of values, or a range. together: the
+    settings move in step instead of forming a grid. order: shuffled takes the combinations in
+    an order drawn with the seed, since drift hides in an ordered sweep. seed: of that order.
+    steps: what is done for each combination.
     """
 
-    sweep: Annotated[dict[str, Any], BeforeValidator(_sweep_axes), WithJsonSchema(_AXIS_SCHEMA)]
+    sweep: Annotated[dict[str, Any], BeforeValidator(_sweep_axes), WithJsonSchema(_SWEEP_SCHEMA)]
     together: YesNo = False
     order: Annotated[str, OneOf(("as written", "shuffled"))] = "as written"
     seed: Annotated[float, quantity(NUMBER, least=0, most=2**32, whole=True)] = 1.0
@@ -190,17 +239,19 @@ class SweepStep(Model):
 class TuneStep(Model):
     """Find the value of one setting, between two others, that gives a wanted full count.
 
-    within: pulses. at_most: rounds.
+    tune: the parameter or pulse setting. between: the smallest and the largest value.
+    full_count: what is wanted, in pulses. within: pulses. at_most: rounds. steps: one round,
+    which begins with a preset and a read.
     """
 
-    tune: str
+    tune: Annotated[str, WithJsonSchema({"type": "string", "pattern": _SETTABLE})]
     between: Annotated[
         list[Any],
         Field(min_length=2, max_length=2),
         WithJsonSchema(
             {
                 "type": "array",
-                "items": {"type": ["string", "number"]},
+                "items": schema_of_quantities(*KINDS),
                 "minItems": 2,
                 "maxItems": 2,
             }
@@ -221,14 +272,21 @@ class TuneStep(Model):
 
 
 class CyclePair(Model):
-    """The two levels between which a cell is cycled, by the names of pulses."""
+    """The two levels between which a cell is cycled, by the names of pulses.
+
+    down, up: the name of the pulse; its level is held as long as it is wide.
+    """
 
     down: PulseName
     up: PulseName
 
 
 class StopWhen(Model):
-    """What ends a cycling before its last pair. Shares are of the first value measured."""
+    """What ends a cycling before its last pair. Shares are of the first value measured.
+
+    switched_charge_below: a share, which needs a pund among the steps. full_count_off_by: a
+    share, which needs a read. contact_is_lost: needs a contact.
+    """
 
     switched_charge_below: Annotated[
         Value | None,
@@ -241,10 +299,15 @@ class StopWhen(Model):
     contact_is_lost: Annotated[YesNo, Field(alias="contact is lost")] = False
 
 
+_PAIRS_SCHEMA = quantity(NUMBER, least=1, most=MOST_PAIRS, whole=True).schema()
+
+
 class CycleStep(Model):
     """Send an exact number of pulse pairs, pausing to do the steps.
 
-    The steps are done before the first pair, at each pause, and after the last.
+    cycle: the levels, as two pulses. pairs: how many, to 1e12. pause_at: numbers of pairs after
+    which the steps are done. per_decade: so many pauses a decade of pairs. stop_when: what ends
+    it early. steps: what is done before the first pair, at each pause, and after the last.
     """
 
     cycle: CyclePair
@@ -253,19 +316,7 @@ class CycleStep(Model):
         list[float],
         Field(alias="pause at"),
         BeforeValidator(lambda written: _pauses(written)),
-        WithJsonSchema(
-            {
-                "anyOf": [
-                    {"type": "array", "items": {"type": ["string", "number"]}},
-                    {
-                        "type": "object",
-                        "properties": {"per decade": {"type": "integer"}},
-                        "required": ["per decade"],
-                        "additionalProperties": False,
-                    },
-                ]
-            }
-        ),
+        WithJsonSchema({"type": "array", "items": _PAIRS_SCHEMA}),
     ] = []  # noqa: RUF012 - a model's default, which pydantic copies
     per_decade: Annotated[
         float, Field(alias="pauses per decade"), quantity(NUMBER, least=0, most=20, whole=True)
@@ -362,21 +413,33 @@ def _title(written: object) -> object:
     return written
 
 
+_TITLE_SCHEMA = {"type": "string", "pattern": r"\S"}
+# The word cycles is the program's own.
+_NAMES_SCHEMA = {"pattern": f"^(?!cycles$){WORD}$"}
 _PARAMETERS_SCHEMA = {
     "type": "object",
-    "additionalProperties": {"type": ["string", "number"]},
+    "additionalProperties": schema_of_quantities(*KINDS),
+    "propertyNames": _NAMES_SCHEMA,
 }
 
 
 class RecipeModel(Model):
-    """A whole recipe: its title, what it declares, and its steps."""
+    """A whole recipe: its title, what it declares, and its steps.
 
-    recipe: Annotated[str, BeforeValidator(_title)]
+    recipe: its title. purpose: what it finds out, in a sentence. parameters: names for values
+    that steps and pulses use, and that --set changes. pulses: trapezoids by name. steps: what is
+    done, in order.
+    """
+
+    recipe: Annotated[str, BeforeValidator(_title), WithJsonSchema(_TITLE_SCHEMA)]
     purpose: str = ""
     parameters: Annotated[
         dict[str, Any], Field(default_factory=dict), WithJsonSchema(_PARAMETERS_SCHEMA)
     ]
-    pulses: Annotated[dict[str, PulseModel], Field(default_factory=dict)]
+    pulses: Annotated[
+        dict[str, PulseModel],
+        Field(default_factory=dict, json_schema_extra={"propertyNames": _NAMES_SCHEMA}),
+    ]
     steps: Annotated[list[Step], Field(min_length=1)]
 
 

@@ -79,13 +79,14 @@ def test_the_build_names_every_package() -> None:
         assert (ROOT / folder / "py.typed").exists()
 
 
-def test_the_build_takes_along_every_yaml_file() -> None:
+@pytest.mark.parametrize("files", ["*.yaml", "*.json"])
+def test_the_build_takes_along_every_file_of_settings(files: str) -> None:
     setup = tomllib.loads((ROOT / "pyproject.toml").read_text(encoding="utf-8"))
     data: dict[str, list[str]] = setup["tool"]["setuptools"]["package-data"]
     for folder in FOLDERS:
         patterns = data["*"] + data.get(f"pulsetally.{folder}", [])
         taken = {path for pattern in patterns for path in (ROOT / folder).glob(pattern)}
-        assert set((ROOT / folder).rglob("*.yaml")) <= taken
+        assert set((ROOT / folder).rglob(files)) <= taken
 
 
 def test_files_are_not_too_long() -> None:

@@ -50,6 +50,9 @@ def test_the_wheel_holds_all_that_the_program_needs(tmp_path: Path) -> None:
     assert {"sequencer", "drivers", "simulators", "recipes"} <= names
     assert (target / "pulsetally" / "sequencer" / "analysis" / "counting.py").exists()
     assert (target / "pulsetally" / "drivers" / "py.typed").exists()
+    recipes = {path.name for path in (ROOT / "recipes").glob("*.*")}
+    assert {path.name for path in (target / "pulsetally" / "recipes").glob("*.*")} == recipes
+    assert {"recipe.schema.json", "bench.schema.json", "full_count.yaml"} <= recipes
     tables = {path.name for path in (ROOT / "simulators" / "tables").glob("*.yaml")}
     installed = target / "pulsetally" / "simulators" / "tables"
     assert {path.name for path in installed.iterdir()} == tables
