@@ -123,7 +123,8 @@ class Progress:
             case Found():
                 return [finding_line(event.round, event.kind, event.values)]
             case CyclingBegan():
-                self.doing = f"cycling {event.pairs:,} pairs"
+                pairs = "1 pair" if event.pairs == 1 else f"{event.pairs:,} pairs"
+                self.doing = f"cycling {pairs}"
                 self.ends.clear()
                 return [
                     f"round {event.round}: {self.doing} after {event.done:,}, which takes"
@@ -209,7 +210,8 @@ class Progress:
             if self._preset and event.reached:
                 self._pending = event
             return f"{begin}: full after {event.count} pulses, crossing {count}"
-        return f"{begin}: {event.stepped} stored, {event.count} remaining, crossing {count}"
+        before = f"after {event.stepped} stepped, " if event.stepped else ""
+        return f"{begin}: {before}{event.count} remaining, crossing {count}"
 
 
 def _contact_lines(event: ContactChecked) -> list[str]:
@@ -263,6 +265,8 @@ def show_setting(name: str, value: float) -> str:
     """Write a swept setting's value with its unit, as far as its name tells it."""
     from pulsetally.sequencer.steps import PULSE_KINDS
 
+    if name == "cycles":
+        return f"{value:,.0f}"
     kind = PULSE_KINDS.get(name.rpartition(".")[2]) if "." in name else None
     return show_quantity(value, kind.unit if kind else "")
 

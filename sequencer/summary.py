@@ -1,14 +1,20 @@
 """Write plans and results for people: tables and sentences, for a terminal or a pipe."""
 
 from rich.console import Console
-from rich.markup import escape
 from rich.table import Table
 from rich.text import Text
 
 from pulsetally.sequencer.analysis.counting import CountStatistics
 from pulsetally.sequencer.discovery import Found
+from pulsetally.sequencer.finding_tables import (
+    finding_sentences,
+    finding_tables,
+    remaining_table,
+    swept_cells,
+    swept_names,
+)
 from pulsetally.sequencer.probe import Check
-from pulsetally.sequencer.progress import printable, show_setting
+from pulsetally.sequencer.progress import printable
 from pulsetally.sequencer.results import RoundResult, RunResult, RunSummary
 
 _MOST_ROWS = 60
@@ -54,16 +60,24 @@ def show_result(console: Console, result: RunResult, *, rounds: bool = True) -> 
     if summary.skipped:
         kept += f"; {summary.skipped} more were planned and not needed"
     say(console, kept)
-    if rounds and result.rounds:
-        console.print(_round_table(result))
-        if len(result.rounds) > _MOST_ROWS:
-            say(console, f"The last {_MOST_ROWS} of {len(result.rounds)} rounds are shown.")
+    # What a round found beside counts has tables of its own.
+    told = [each for each in result.rounds if each.reads or each.stepped or _note(each)]
+    if rounds and told:
+        console.print(_round_table(result, told[-_MOST_ROWS:]))
+        if len(told) > _MOST_ROWS:
+            say(console, f"The last {_MOST_ROWS} of {len(told)} rounds are shown.")
     show_answer(console, result)
 
 
 def show_answer(console: Console, result: RunResult) -> None:
-    """Print the full count, for each combination of what was swept, and what it leaves out."""
+    """Print what was measured, for each combination of what was swept, and what it leaves out."""
+    for table in finding_tables(result, most_rows=_MOST_ROWS):
+        console.print(table)
+    for sentence in finding_sentences(result):
+        say(console, sentence)
     _show_counts(console, result)
+    if (remaining := remaining_table(result)) is not None:
+        console.print(remaining)
     left = result.left_out
     reasons = [
         f"{count} {words}"
@@ -83,17 +97,20 @@ def show_answer(console: Console, result: RunResult) -> None:
 
 def _show_counts(console: Console, result: RunResult) -> None:
     if result.full_count is None:
-        say(console, _why_no_answer(result))
+        if words := _why_no_answer(result):
+            say(console, words)
         return
     # One row says at which setting, also where a sweep was cut short.
     if result.by_setting:
         table = Table(
-            *_names(result), "full count", "scatter", "rounds", title="Full count, pulses"
+            *swept_names(result), "full count", "scatter", "rounds", title="Full count, pulses"
         )
         for each in result.by_setting:
-            values = [_swept(name, each.settings) for name in result.swept]
             table.add_row(
-                *values, f"{each.count.mean:.2f}", _scatter(each.count), str(each.count.rounds)
+                *swept_cells(result, each.settings),
+                f"{each.count.mean:.2f}",
+                _scatter(each.count),
+                str(each.count.rounds),
             )
         console.print(table)
         return
@@ -102,8 +119,12 @@ def _show_counts(console: Console, result: RunResult) -> None:
 
 def _why_no_answer(result: RunResult) -> str:
     reads = [read for each in result.rounds for read in each.reads]
+    measured = any(each.findings or each.contacts for each in result.rounds)
     if not reads:
-        return "No read was finished, so there is no full count."
+        # A recipe that measures something else owes no full count.
+        return "" if measured else "No read was finished, so there is no full count."
+    if not any(each.preset for each in result.rounds):
+        return ""
     if any(not read.reached for read in reads):
         return "No full count: the threshold was not reached; see 'at most' and the threshold."
     return (
@@ -160,26 +181,18 @@ def show_bytes(count: float) -> str:
     return f"{count:.3g} GB"
 
 
-def _names(result: RunResult) -> list[str]:
-    return [escape(printable(name)) for name in result.swept]
-
-
-def _swept(name: str, settings: dict[str, float]) -> str:
-    return show_setting(name, settings[name]) if name in settings else ""
-
-
 def _scatter(count: CountStatistics) -> str:
     return "" if count.sd is None else f"{count.sd:.2f}"
 
 
-def _round_table(result: RunResult) -> Table:
-    table = Table("round", *_names(result), "stepped", "remaining", "crossing", "sum", "note")
-    for each in result.rounds[-_MOST_ROWS:]:
+def _round_table(result: RunResult, told: list[RoundResult]) -> Table:
+    table = Table("round", *swept_names(result), "stepped", "remaining", "crossing", "sum", "note")
+    for each in told:
         if not each.reads:
-            swept = [_swept(name, each.settings) for name in result.swept]
+            swept = swept_cells(result, each.settings)
             table.add_row(str(each.round), *swept, str(each.stepped), "", "", "", _note(each))
         for read in each.reads:
-            swept = [_swept(name, read.settings) for name in result.swept]
+            swept = swept_cells(result, read.settings)
             remaining = str(read.count) if read.reached else f"> {read.count}"
             crossing = "" if read.crossing is None else f"{read.crossing:.2f}"
             total = "" if read.crossing is None else f"{read.stepped + read.crossing:.2f}"
