@@ -35,8 +35,6 @@ from pulsetally.sequencer.records import Window, fitted, train_period, train_win
 from pulsetally.sequencer.rounds import Cycle, Pulse
 from pulsetally.sequencer.safety import StopSwitch
 
-# While a run waits, the lines are used so often, and at most so many times.
-_IDLE_SECONDS, _LONGEST_IDLE_SECONDS, _SLICES = 30.0, 180.0, 20
 # The digitizer's range, against the swing that is expected.
 _HEADROOM = 1.2
 # How long one burst of a cycling lasts at most: whoever stops after the round waits for its end,
@@ -326,9 +324,7 @@ class Acquisition:
         noticed now than when the cell is due. Who asks for a stop meanwhile is answered at once.
         """
         end = self.clock.now() + seconds
-        part = min(max(_IDLE_SECONDS, seconds / _SLICES), _LONGEST_IDLE_SECONDS)
-        # A wait of a month in a rehearsal is no reason to ask ten thousand times.
-        part = max(part, seconds / 1000)
+        part = self.clock.piece_seconds
         while (left := end - self.clock.now()) > 0:
             self.clock.sleep(min(left, part), lambda: self._stop.at_once or self._unannounced)
             if self._stop.at_once:

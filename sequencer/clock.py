@@ -4,6 +4,7 @@ A simulated bench has a clock of its own, so that an eight-hour recipe is rehear
 the engine can't tell the two apart.
 """
 
+import math
 import time
 from collections.abc import Callable
 from typing import Protocol
@@ -17,7 +18,14 @@ _SLICE_SECONDS = 0.05
 
 
 class Clock(Protocol):
-    """Say what time it is on the bench, in seconds from any fixed moment, and let it pass."""
+    """Say what time it is on the bench, in seconds from any fixed moment, and let it pass.
+
+    piece_seconds: how long a wait may be in one piece, before the lines want to be used.
+    """
+
+    @property
+    def piece_seconds(self) -> float:
+        """Return the longest wait in one piece, in seconds."""
 
     def now(self) -> float:
         """Return the time in seconds; it never goes back."""
@@ -33,6 +41,11 @@ def _never() -> bool:
 class WallClock:
     """The time of a real table."""
 
+    @property
+    def piece_seconds(self) -> float:
+        """Return how long lines may be idle: routers and instruments drop those that are longer."""
+        return 30.0
+
     def now(self) -> float:
         """Return the time in seconds; it never goes back."""
         return time.monotonic()
@@ -46,6 +59,11 @@ class WallClock:
 
 class BenchClock:
     """The time of a simulated bench, which passes when it is told to."""
+
+    @property
+    def piece_seconds(self) -> float:
+        """Return no bound: however long a wait, it is over at once."""
+        return math.inf
 
     def __init__(self, link: Link) -> None:
         self._link = link
