@@ -42,6 +42,10 @@ VACUUM_PERMITTIVITY = 8.8541878128e-12
 # Boltzmann constant over elementary charge, exact in the SI of 2019, at 27 degrees Celsius.
 _THERMAL_VOLTS = 1.380649e-23 / 1.602176634e-19 * 300.15
 
+# A clamp's voltage rises with its current: beyond this share of its breakdown, and these volts, it
+# does so only with more than a series resistance of kiloohms lets through (invented, ample).
+_CLAMP_RISE = (1.1, 0.3)
+
 
 def _load(written: object) -> object:
     if written == "high-z":
@@ -363,8 +367,10 @@ class Bench:
         """Return the largest panel voltage, either sign, that keeps both limits, in volts."""
         limits, wiring = self.model.limits, self.model.wiring
         source = self.panel_volts(limits.source)
-        if wiring.clamp is not None and wiring.clamp.breakdown <= limits.node:
-            return source
+        if wiring.clamp is not None:
+            share, volts = _CLAMP_RISE
+            if share * wiring.clamp.breakdown + volts <= limits.node:
+                return source
         # Without the diode's drop: the limit must hold for the side on which it conducts best.
         loop = wiring.source_resistance + wiring.series_resistance + wiring.probe.resistance
         return min(source, self.panel_volts(limits.node * loop / wiring.probe.resistance))
