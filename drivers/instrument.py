@@ -93,6 +93,68 @@ class Instrument:
         judged together at the end of a message (IEEE Std 488.2-1992, 6.4.5.3; from memory).
         """
         commands = [self.spell(each, wanted[each.name], channel) for each in settings]
+        self._send_joined(commands)
+        self.raise_errors(";".join(commands))
+
+    def establish(
+        self, groups: Sequence[tuple[Sequence[Setting], Wanted, int]], *, first: Sequence[str] = ()
+    ) -> list[dict[str, float]]:
+        """Set groups of settings, each with what is wanted and its channel, and read them back.
+
+        first: templates of commands that go before them. Returns the numbers found, for each
+        group. Does what apply and read_back do one after the other, in two exchanges where the
+        line has room: each costs its way there and back, and there are two set-ups a round.
+        Raises what they raise.
+        """
+        commands = [
+            self.spell(each, wanted[each.name], channel)
+            for settings, wanted, channel in groups
+            for each in settings
+        ]
+        self._send_joined([*(fill(each, channel=1) for each in first), *commands])
+        asked = [
+            (place, setting, fill(setting.ask, channel=channel), wanted[setting.name])
+            for place, (settings, wanted, channel) in enumerate(groups)
+            for setting in settings
+            if setting.ask
+        ]
+        error_query = self._speech.error_query
+        # Errors first: some error queries have no leading colon and stand only at the beginning.
+        query = ";".join([*filter(None, [error_query]), *(each[2] for each in asked)])
+        if not asked or len(query) > self._speech.line.longest:
+            self.raise_errors(";".join(commands))
+            return [self.read_back(*each) for each in groups]
+        # An error's text may hold semicolons, an answer to a setting doesn't.
+        answers = self._link.ask(query).rsplit(";", len(asked) - (not error_query))
+        if error_query:
+            self._raise_joined(answers[0], ";".join(commands))
+            answers = answers[1:]
+        self._check_number(query, answers, len(asked))
+        found: list[dict[str, float]] = [{} for _ in groups]
+        for (place, setting, own, wanted), answer in zip(asked, answers, strict=True):
+            value = self._judge(setting, own, self._bare(answer), wanted)
+            if value is not None:
+                found[place][setting.name] = value
+        return found
+
+    def _raise_joined(self, answer: str, command: str) -> None:
+        """Raise the error that a joined query brought, if it is one; empty the queue before."""
+        try:
+            number, text = parse_error_entry(self._bare(answer))
+        except NumberError:
+            # The answers are not in their places: what the queue says tells why.
+            self.raise_errors(command)
+            return
+        if number:
+            self.errors()
+            raise InstrumentComplaint(self.address, command, number, text)
+
+    def _check_number(self, command: str, answers: Sequence[str], due: int) -> None:
+        if len(answers) != due:
+            problem = f"{due} answers were expected, {len(answers)} came"
+            raise BadReply(self.address, command, problem, OTHER_DIALECT)
+
+    def _send_joined(self, commands: Sequence[str]) -> None:
         message = ""
         for command in commands:
             if message and len(message) + len(command) + 1 > self._speech.line.longest:
@@ -101,7 +163,6 @@ class Instrument:
             message += f";{command}" if message else command
         if message:
             self._link.write(message)
-        self.raise_errors(";".join(commands))
 
     def spell(self, setting: Setting, value: float | str, channel: int) -> str:
         """Write the command for a setting. A word must be one that the dialect knows."""
@@ -128,9 +189,7 @@ class Instrument:
             answers = [self._link.ask(query) for query in queries]
         else:
             answers = self._link.ask(command).split(";")
-        if len(answers) != len(asked):
-            problem = f"{len(asked)} answers were expected, {len(answers)} came"
-            raise BadReply(self.address, command, problem, OTHER_DIALECT)
+        self._check_number(command, answers, len(asked))
         found: dict[str, float] = {}
         for setting, query, answer in zip(asked, queries, answers, strict=True):
             value = self._judge(setting, query, self._bare(answer), wanted[setting.name])

@@ -11,6 +11,7 @@ from pulsetally.drivers.dialect import (
     SAMPLE_TYPES,
     OscilloscopeDialect,
     Predicate,
+    Setting,
     fill,
     read_preamble,
 )
@@ -119,23 +120,22 @@ class Oscilloscope(Instrument):
         Raises SettingRefused when the oscilloscope made something else of it.
         """
         high, wide = self._dialect.divisions
-        found: dict[str, float] = {}
-        self.abort()
-        each_channel = [each for each in self._dialect.settings if each.name in CHANNEL_SETTINGS]
+        settings = self._dialect.settings
+        each_channel = [each for each in settings if each.name in CHANNEL_SETTINGS]
+        whole = [each for each in settings if each.name not in CHANNEL_SETTINGS]
+        groups: list[tuple[list[Setting], dict[str, float | str], int]] = []
         for channel, (lowest, highest) in setting.ranges.items():
             span = highest - lowest
-            wanted = {
+            wanted: dict[str, float | str] = {
                 "span": span,
                 "volts per division": span / high,
                 "centre": (lowest + highest) / 2,
             }
-            self.apply(each_channel, wanted, channel)
-            numbers = self.read_back(each_channel, wanted, channel)
-            found |= {f"channel {channel} {name}": value for name, value in numbers.items()}
-        whole = [each for each in self._dialect.settings if each.name not in CHANNEL_SETTINGS]
-        values = setting.values(wide)
-        self.apply(whole, values, setting.trigger_channel)
-        found |= self.read_back(whole, values, setting.trigger_channel)
+            groups.append((each_channel, wanted, channel))
+        groups.append((whole, setting.values(wide), setting.trigger_channel))
+        *numbers, found = self.establish(groups, first=self._dialect.abort)
+        for channel, told in zip(setting.ranges, numbers, strict=True):
+            found |= {f"channel {channel} {name}": value for name, value in told.items()}
         self._points, self._interval = setting.points, setting.sample_interval
         return found
 

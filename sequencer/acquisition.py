@@ -5,6 +5,7 @@ recorded the intent by then: it is an event, and the pulse goes out when the nex
 for.
 """
 
+import math
 from collections.abc import Callable, Generator, Iterator
 from dataclasses import dataclass
 
@@ -47,16 +48,20 @@ class Burst:
     """What one trigger sends and what is recorded of it.
 
     count: pulses. ends: whether end voltages are wanted. window: None where nothing is recorded.
+    own_period: seconds from one pulse to the next where the pulse doesn't tell.
     """
 
     pulse: Pulse
     window: Window | None
     count: int = 1
     ends: bool = True
+    own_period: float | None = None
 
     @property
     def period(self) -> float:
         """Return the time from one pulse to the next, in seconds."""
+        if self.own_period is not None:
+            return self.own_period
         # A pulse that is triggered by itself has its rest as the program waits.
         return train_period(self.pulse) if self.count > 1 else 2 * self.pulse.duration
 
@@ -161,17 +166,21 @@ class Acquisition:
     def cycle(self, action: Cycle, *, number: int, order: int) -> Generator[Event, None, None]:
         """Have the generator send pairs by itself, in bursts, and wait for their ends.
 
-        Yields PulseArmed before each burst. A stop in the middle of one aborts it.
+        Yields PulseArmed before each burst. A stop in the middle of one aborts it; StopRequested
+        says how many pairs may have gone out then.
         """
         left, pulse = action.pairs, action.pulse
         most = max(1, int(min(self.generator.most_count, _BURST_SECONDS / action.period)))
         self._pause(self._next_at - self.clock.now())
         while left:
+            sent = action.done + action.pairs - left
             if self._stop.after_round and left < action.pairs:
-                raise StopRequested(self._stop.reason)
+                raise StopRequested(f"{self._stop.reason}; {sent:,} pairs have gone out")
             count = min(left, most)
-            burst = Burst(pulse=pulse, count=count, window=None, ends=False)
-            yield from self._set_up(burst, period=action.period)
+            burst = Burst(
+                pulse=pulse, count=count, window=None, ends=False, own_period=action.period
+            )
+            yield from self._set_up(burst)
             yield PulseArmed(
                 round=number,
                 order=order,
@@ -181,27 +190,40 @@ class Acquisition:
                 period=action.period,
             )
             if self._stop.at_once:
-                raise StopRequested(self._stop.reason)
+                raise StopRequested(f"{self._stop.reason}; {sent:,} pairs have gone out")
             self.generator.fire()
+            fired = self.clock.now()
             seconds = count * action.period
             try:
                 yield from self.wait(seconds)
-            except StopRequested:
+            except StopRequested as error:
                 self.generator.abort()
-                raise
+                # The pair that was going on may have been cut anywhere.
+                begun = math.ceil((self.clock.now() - fired) / action.period) + 1
+                most_sent = sent + min(count, begun)
+                raise StopRequested(
+                    f"{error}; from {sent:,} to {most_sent:,} pairs may have gone out"
+                ) from error
             if not self._until(self.generator.is_idle, 5.0 + 0.01 * seconds, 2e-3):
                 self.generator.abort()
-                raise InstrumentError(
-                    self.generator.address,
-                    "",
+                raise self._not_cycling(
                     f"its burst of {count} pulse pairs should have taken {seconds:.6g} s and goes"
                     " on after that",
                     "compare its period and count with the recipe",
+                )
+            if not self.generator.output_is_on():
+                raise self._not_cycling(
+                    f"its output went off while it sent {count} pulse pairs, so that nobody knows"
+                    " how many reached the cell",
+                    "look at its front panel for an overload",
                 )
             left -= count
             order += 1
             yield PairsSent(round=number, done=action.pairs - left, planned=action.pairs)
         self._next_at = self.clock.now()
+
+    def _not_cycling(self, problem: str, remedy: str) -> InstrumentError:
+        return InstrumentError(self.generator.address, "", problem, remedy)
 
     def explain(self, problem: str) -> str:
         """Return a problem with what the instruments say about it; make them ready again."""
@@ -219,6 +241,15 @@ class Acquisition:
         self._ready_for = None
         self.generator.switch(on=False)
 
+    def stay_off(self) -> None:
+        """Look whether the output is still off, and switch it off if somebody switched it on.
+
+        This also keeps the lines from being dropped as idle.
+        """
+        if self.generator.output_is_on():
+            self.generator.switch(on=False)
+        self.oscilloscope.identify()
+
     def check_errors(self) -> None:
         """Raise what is in the instruments' error queues."""
         self.generator.raise_errors("")
@@ -226,7 +257,7 @@ class Acquisition:
 
     # Setting up.
 
-    def _set_up(self, burst: Burst, *, period: float | None = None) -> Iterator[Event]:
+    def _set_up(self, burst: Burst) -> Iterator[Event]:
         if burst == self._ready_for:
             return
         self._ready_for = None
@@ -237,7 +268,7 @@ class Acquisition:
                 level=pulse.level,
                 width=pulse.width,
                 edge=pulse.edge,
-                period=period or burst.period,
+                period=burst.period,
                 count=burst.count,
             )
         )
@@ -353,11 +384,12 @@ class Acquisition:
         if condition():
             return True
         deadline = self.clock.now() + seconds
-        while self.clock.now() < deadline:
+        while True:
             self.clock.sleep(poll_seconds)
             if condition():
                 return True
-        return False
+            if self.clock.now() >= deadline:
+                return False
 
 
 def _range(levels: list[float]) -> tuple[float, float]:

@@ -216,13 +216,13 @@ class _Conductor:
                 case Read():
                     order, count = yield from self._read(number, order, stepped, first, action)
                     if first and stepped == 0 and preset:
-                        self._heard.append(partial(_tell_count, count))
+                        self._heard.append(partial(_tell_count, action, count))
                     first = False
                 case Pund():
                     charge = yield from measures.pund(
                         acquisition, self._bench, action, number=number, order=order
                     )
-                    self._heard.append(partial(_tell_charge, charge))
+                    self._heard.append(partial(_tell_charge, action, charge))
                     order += 5
                 case Loop():
                     yield from measures.loop(
@@ -301,9 +301,9 @@ class _Conductor:
         return order
 
 
-def _tell_count(count: ReadCount, group: Group) -> None:
-    group.counted(count)
+def _tell_count(read: Read, count: ReadCount, group: Group) -> None:
+    group.counted(read, count)
 
 
-def _tell_charge(coulombs: float | None, group: Group) -> None:
-    group.switched(coulombs)
+def _tell_charge(pund: Pund, coulombs: float | None, group: Group) -> None:
+    group.switched(pund, coulombs)

@@ -10,7 +10,7 @@ from typing import Protocol
 from pulsetally.sequencer.analysis.counting import ReadCount
 from pulsetally.sequencer.analysis.tuning import Tuning
 from pulsetally.sequencer.events import Event, FindingKind, Found
-from pulsetally.sequencer.rounds import Cycle, Cycling, Round, Tune
+from pulsetally.sequencer.rounds import Cycle, Cycling, Pulse, Pund, Read, Round, Tune
 
 
 class Group(Protocol):
@@ -24,10 +24,10 @@ class Group(Protocol):
     def next_round(self, planned: Round) -> Round | None:
         """Return the round to do in place of a planned one, or None where it isn't needed."""
 
-    def counted(self, count: ReadCount) -> None:
-        """Hear how many pulses filled the cell."""
+    def counted(self, read: Read, count: ReadCount) -> None:
+        """Hear how many pulses of a read filled the cell."""
 
-    def switched(self, coulombs: float | None) -> None:
+    def switched(self, pund: Pund, coulombs: float | None) -> None:
         """Hear a switched charge; None where it could not be told."""
 
     def cycled(self, pairs: int) -> None:
@@ -38,6 +38,15 @@ class Group(Protocol):
 
     def findings(self) -> Iterator[Event]:
         """Say what it came to."""
+
+
+_What = tuple[str, float | None, tuple[tuple[str, float], ...]]
+
+
+def _what(pulse: Pulse, settings: dict[str, float], threshold: float | None = None) -> _What:
+    """Return what tells apart the measurements of a pause, whatever pairs went before it."""
+    others = sorted((name, value) for name, value in settings.items() if name != "cycles")
+    return pulse.name, threshold, tuple(others)
 
 
 def group_of(each: Round) -> Group | None:
@@ -54,8 +63,9 @@ class CyclingGroup:
         self._cycling = cycling
         self.reason = ""
         self._pairs, self._lost = 0, False
-        self._first_charge: float | None = None
-        self._first_count: float | None = None
+        # By what was measured: a pause may do so with several pulses or settings.
+        self._first_charges: dict[_What, float] = {}
+        self._first_counts: dict[_What, float] = {}
         self._last: Round | None = None
 
     def holds(self, each: Round) -> bool:
@@ -74,33 +84,36 @@ class CyclingGroup:
         self._last = planned
         return planned
 
-    def counted(self, count: ReadCount) -> None:
+    def counted(self, read: Read, count: ReadCount) -> None:
         """Stop where a full count is too far from the first one."""
-        most = self._cycling.most_off
-        if self._first_count is None:
-            self._first_count = count.crossing
+        what, most = _what(read.pulse, read.settings, read.threshold), self._cycling.most_off
+        first = self._first_counts.get(what)
+        if first is None:
+            if count.crossing is not None:
+                self._first_counts[what] = count.crossing
             return
         if most is None or self.reason:
             return
         if count.crossing is None:
             self.reason = "the cell no longer gives a full count"
-        elif abs(count.crossing - self._first_count) > most * self._first_count:
-            self.reason = (
-                f"the full count is {count.crossing:.2f} and was {self._first_count:.2f} at first"
-            )
+        elif abs(count.crossing - first) > most * first:
+            self.reason = f"the full count is {count.crossing:.2f} and was {first:.2f} at first"
 
-    def switched(self, coulombs: float | None) -> None:
+    def switched(self, pund: Pund, coulombs: float | None) -> None:
         """Stop where the switched charge is too small a share of the first one."""
-        least = self._cycling.least_charge
-        if self._first_charge is None:
-            self._first_charge = coulombs
+        what, least = _what(pund.pulse, pund.settings), self._cycling.least_charge
+        first = self._first_charges.get(what)
+        if first is None:
+            # Of a charge that is nothing but noise no share can be told.
+            if coulombs is not None and coulombs > 0:
+                self._first_charges[what] = coulombs
             return
         if least is None or self.reason:
             return
         if coulombs is None:
             self.reason = "the switched charge can't be told any more"
-        elif coulombs < least * self._first_charge:
-            self.reason = f"the switched charge is {coulombs / self._first_charge:.0%} of the first"
+        elif coulombs < least * first:
+            self.reason = f"the switched charge is {coulombs / first:.0%} of the first"
 
     def cycled(self, pairs: int) -> None:
         """Remember how many pairs have gone out in all."""
@@ -158,12 +171,12 @@ class TuneGroup:
         self._last = planned.tuned(self._value)
         return self._last
 
-    def counted(self, count: ReadCount) -> None:
+    def counted(self, read: Read, count: ReadCount) -> None:
         """Hear how many pulses filled the cell at the present value."""
         if self._value is not None:
             self._tuning.add(self._value, count.crossing, too_many=not count.reached)
 
-    def switched(self, coulombs: float | None) -> None:
+    def switched(self, pund: Pund, coulombs: float | None) -> None:
         """Take no notice: a tune measures counts."""
 
     def cycled(self, pairs: int) -> None:

@@ -195,9 +195,15 @@ def ask(
     acquisition.switch_off()
     person.ask()
     yield PersonAsked(round=number, message=action.message, seconds=action.seconds)
-    end = acquisition.clock.now() + action.seconds
+    now = acquisition.clock.now()
+    piece = acquisition.clock.piece_seconds
+    end, look_at = now + action.seconds, now + piece
     while not person.answered():
-        left = end - acquisition.clock.now()
+        now = acquisition.clock.now()
+        left = end - now
+        if now >= look_at:
+            acquisition.stay_off()
+            look_at = now + piece
         if left <= 0:
             yield PersonAnswered(round=number, answered=False)
             if action.go_on:

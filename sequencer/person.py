@@ -1,5 +1,6 @@
 """Whoever may answer what a recipe asks: a person at a terminal, nobody, or a rehearsal."""
 
+import contextlib
 import os
 import select
 import sys
@@ -52,12 +53,15 @@ class AtTerminal:
     @staticmethod
     def _read() -> bytes:
         typed = b""
-        while select.select([0], [], [], 0)[0]:
-            # Not through Python's own buffer, which select can't look into.
-            more = os.read(0, 4096)
-            if not more:
-                break
-            typed += more
+        # The system stops a program in the background that reads from its terminal, and so would
+        # end a night's run; a terminal that has gone says nothing either.
+        with contextlib.suppress(OSError):
+            while os.tcgetpgrp(0) == os.getpgrp() and select.select([0], [], [], 0)[0]:
+                # Not through Python's own buffer, which select can't look into.
+                more = os.read(0, 4096)
+                if not more:
+                    break
+                typed += more
         return typed
 
 

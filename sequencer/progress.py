@@ -153,7 +153,8 @@ class Progress:
                         self.crossings.append(self._pending.crossing)
                 self._pending = None
             case RoundSpoiled():
-                self._pending = None
+                # Whoever was asked isn't any more.
+                self._pending, self.asking = None, ""
                 return [f"round {event.round} is spoiled: {event.reason}"]
             case StopAsked():
                 self.stopping = True
@@ -163,7 +164,7 @@ class Progress:
                     else "stopping after this round; press Ctrl-C again to stop at once"
                 ]
             case RunEnded():
-                self.ended = event
+                self.ended, self.asking = event, ""
                 self.doing = event.state.value
         return []
 

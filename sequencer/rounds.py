@@ -240,8 +240,7 @@ def most_pulses(action: Action) -> int:
         case Step():
             return action.count
         case Read():
-            # A train is sent whole.
-            return -(-action.at_most // action.train) * action.train
+            return action.at_most
         case Pund():
             return 5
         case Loop():

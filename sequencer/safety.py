@@ -23,7 +23,7 @@ def quiet(generator: FunctionGenerator, link: VisaLink) -> None:
         try:
             if attempt or link.tainted:
                 link.reopen()
-            generator.switch(on=False)
+            generator.switch(on=False, joined=False)
         except PulsetallyError as error:
             problem = str(error)
             continue

@@ -282,6 +282,14 @@ class Unfolding:
                 " does not go up",
                 "write the lower level as down",
             )
+        ramp = max(down.ramp, up.ramp)
+        if min(down.width, up.width) < ramp:
+            self._problem(
+                f"cycling with edges of {show_quantity(max(down.edge, up.edge), 's')}, the longer"
+                f" of its two, leaves no flat top in a width of"
+                f" {show_quantity(min(down.width, up.width), 's')}",
+                "write shorter edges or longer widths",
+            )
         done = 0
         yield from self._pause(step, settings, cycling, done)
         for stop_at in pauses_of(step, pairs):
