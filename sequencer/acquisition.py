@@ -38,6 +38,9 @@ from pulsetally.sequencer.safety import StopSwitch
 
 # The digitizer's range, against the swing that is expected.
 _HEADROOM = 1.2
+# The node's swing that is looked at, against the source's: behind a diode that blocks nothing is
+# expected, and no digitizer has a range for that.
+_LEAST_SHARE = 0.1
 # How long one burst of a cycling lasts at most: whoever stops after the round waits for its end,
 # and whoever can't wait stops at once.
 _BURST_SECONDS = 86_400.0
@@ -300,7 +303,9 @@ class Acquisition:
             before=window.before,
             ranges={
                 int(oscilloscope.source_channel): _range(source),
-                int(oscilloscope.node_channel): _range(node),
+                int(oscilloscope.node_channel): _range(
+                    node, least=_LEAST_SHARE * abs(source[1] - source[0])
+                ),
             },
             trigger_channel=int(oscilloscope.source_channel),
             trigger_volts=sum(source) / 2,
@@ -392,10 +397,10 @@ class Acquisition:
                 return False
 
 
-def _range(levels: list[float]) -> tuple[float, float]:
+def _range(levels: list[float], *, least: float = 0.0) -> tuple[float, float]:
     # Around the pulse and not around zero: a pulse goes one way only, and an 8-bit digitizer
     # has no codes to give away.
-    middle, half = sum(levels) / 2, abs(levels[1] - levels[0]) / 2
+    middle, half = sum(levels) / 2, max(abs(levels[1] - levels[0]), least) / 2
     return middle - _HEADROOM * half, middle + _HEADROOM * half
 
 

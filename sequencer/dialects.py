@@ -5,6 +5,7 @@ one; its mistakes are told like a recipe's.
 """
 
 import re
+from functools import cache
 from importlib.resources import files
 from pathlib import Path as FilePath
 from typing import Annotated, Any
@@ -385,15 +386,21 @@ def shipped_dialects() -> list[str]:
 def find_dialect(written: str, folder: FilePath) -> drivers.Dialect:
     """Find a dialect by a shipped name, or by a path from a folder. Raises DialectError."""
     if written in shipped_dialects():
-        name = f"{written}.yaml"
-        text = (files("pulsetally.drivers") / name).read_text(encoding="utf-8")
-        return parse_dialect(text, file=name)
+        return _shipped(written)
     path = folder / written
     known = ", ".join(shipped_dialects())
     text, mistakes = read_text(path, "dialect", f"write one of {known}, or a file's path")
     if mistakes:
         raise DialectError(mistakes)
     return parse_dialect(text, file=str(path))
+
+
+# Both instruments of a bench mostly speak one dialect, and reading YAML takes a while.
+@cache
+def _shipped(name: str) -> drivers.Dialect:
+    file = f"{name}.yaml"
+    text = (files("pulsetally.drivers") / file).read_text(encoding="utf-8")
+    return parse_dialect(text, file=file)
 
 
 def parse_dialect(text: str, *, file: str) -> drivers.Dialect:

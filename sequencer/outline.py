@@ -293,8 +293,9 @@ def _few(values: Sequence[float], unit: str) -> str:
 def _spell(value: float, unit: str) -> str:
     """Write a value for reading; a count with all its digits, unless it is as round as 1e6."""
     if unit == "s" and value >= 1000:
-        # Nobody thinks in kiloseconds.
-        return f"{value:.6g} s" if value < 1e5 else show_duration(value)
+        # Nobody thinks in kiloseconds; 10000 s stays, and 7200 s are 2 h.
+        whole = value % 60 == 0 or value >= 1e5
+        return show_duration(value) if whole else f"{value:.6g} s"
     if unit or value != int(value):
         return show_quantity(value, unit)
     short = f"{value:.4g}".replace("e+0", "e").replace("e+", "e")

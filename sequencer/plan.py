@@ -175,9 +175,9 @@ def _panel_problems(pulses: list[Pulse], bench: Bench) -> list[str]:
             if not abs(volts) <= limit:
                 told.append(
                     f"the {name} of pulse {pulse.name!r} is {show_quantity(volts, 'V')}, beyond"
-                    f" {show_quantity(limit, 'V')} at the panel, which is what keeps both limits of"
-                    f" {bench.file} whatever a diode does. To fix it, lower the pulse, or raise the"
-                    " limits if the cell bears it."
+                    f" {show_quantity(limit, 'V')} at the panel, which is what keeps both limits"
+                    f" of {bench.file} whatever a diode or a clamp does. To fix it, lower the"
+                    " pulse, or raise the limits if the cell bears it."
                 )
     return list(dict.fromkeys(told))
 

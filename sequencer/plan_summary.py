@@ -29,6 +29,8 @@ def show_plan(
         say(console, plan.recipe.model.purpose)
     say(console, _amount(plan))
     say(console, _duration(plan, now))
+    if plan.asking_seconds:
+        say(console, f"Waiting for a person may add {show_duration(plan.asking_seconds)} to that.")
     free = "" if free_bytes is None else f"; {show_bytes(free_bytes)} are free"
     say(console, f"At most about {show_bytes(plan.disk_bytes)} of logbook{free}.")
     tree = Tree("steps", guide_style="dim")
@@ -115,8 +117,6 @@ def _duration(plan: Plan, now: datetime) -> str:
     words = f"At most about {show_duration(plan.seconds)}"
     if (ends := end_of(plan.seconds, now)) is not None:
         words += f"; started now, it would end on {_moment(ends)}"
-    if plan.asking_seconds:
-        words += f", and {show_duration(plan.asking_seconds)} later if it waits for a person"
     return f"{words}."
 
 

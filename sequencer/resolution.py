@@ -34,8 +34,8 @@ from pulsetally.sequencer.rounds import (
 )
 
 # The end voltage is a parabola through the last fifth of the flat top, and takes six samples for
-# it (analysis/pulses.py); with fewer than 20 its uncertainty is mostly the noise of single ones.
-_LEAST_TOP_SAMPLES, _GOOD_TOP_SAMPLES = 30, 100
+# it (analysis/pulses.py); with fewer than twice that the noise of single ones shows (invented).
+_LEAST_TOP_SAMPLES, _GOOD_TOP_SAMPLES = 30, 60
 # Of a loop, from one end to the other and back; invented: a coercive voltage to a percent or so.
 _LEAST_LOOP_SAMPLES, _GOOD_LOOP_SAMPLES = 200, 1000
 # By how much an edge may differ from the only one that a generator has; its driver says the same.

@@ -10,6 +10,8 @@ For rehearsals and tests only. No real table has one, so nothing that measures m
     :TRUTh:DELivered?               whole pulses that reached the terminal
     :TRUTh:PRESets?                 those of them that go below 0 V, which drive the cell down
     :TRUTh:MAXimum?                 largest EMF, without sign, ever put on the closed output, V
+    :TRUTh:HIGHest?                 largest voltage, without sign, ever across the cell, V; of
+                                    a long train's equal periods those that were integrated
     :TRUTh:CAPacitance?             of cell and probe, F
     :TRUTh:CELL?                    GOOD, OPEN or SHORt (OPEN where it is both)
     :FAULt:ADD <kind>,<instrument>,<exchange from now>[,<value>]
@@ -35,6 +37,9 @@ message that the instrument gets. Kinds, and what their value is (see faults.py)
 
 from collections.abc import Callable
 from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
 
 from pulsetally.simulators.clock import VirtualClock
 from pulsetally.simulators.faults import KINDS, Fault, FaultSchedule
@@ -72,6 +77,8 @@ class BenchControl(ScpiDevice):
     ) -> None:
         super().__init__(identity)
         self._clock = clock
+        highest = _HighestNode()
+        table.observe(highest)
 
         def advance(call: Call) -> None:
             if not clock.may_be_advanced:
@@ -96,6 +103,7 @@ class BenchControl(ScpiDevice):
                 _truth("DELivered", lambda: format_integer(table.delivered)),
                 _truth("PRESets", lambda: format_integer(table.presets)),
                 _truth("MAXimum", lambda: format_real(generator.largest_emf_volts)),
+                _truth("HIGHest", lambda: format_real(highest.volts)),
                 _truth("CAPacitance", lambda: format_real(farads)),
                 _truth("CELL", lambda: _state_of_cell(table)),
             ]
@@ -105,6 +113,22 @@ class BenchControl(ScpiDevice):
     def begin_message(self) -> None:
         """Come up to the present."""
         self._clock.catch_up()
+
+
+class _HighestNode:
+    """Remember the largest voltage across the cell, volts, without its sign."""
+
+    def __init__(self) -> None:
+        self.volts = 0.0
+
+    def saw(
+        self,
+        times: NDArray[np.float64],
+        terminal_volts: NDArray[np.float64],
+        node_volts: NDArray[np.float64],
+    ) -> None:
+        """Take one stretch of the table's course."""
+        self.volts = max(self.volts, float(node_volts.max()), -float(node_volts.min()))
 
 
 def _state_of_cell(table: Table) -> str:

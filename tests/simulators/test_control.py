@@ -46,7 +46,7 @@ def test_the_cell_starts_fully_down_and_nothing_is_on(talk: Talk) -> None:
     assert talk.number(":TRUT:UP?") == 0
     assert talk.say(":TRUT:OUTP?;DEL?") == "0;0"
     assert talk.number(":TRUT:NODE?") == talk.number(":TRUT:TERM?") == 0
-    assert talk.number(":TRUT:MAX?") == 0
+    assert talk.number(":TRUT:MAX?") == talk.number(":TRUT:HIGH?") == 0
 
 
 # FE-23 scaled (A): eps0 500 1e-8 m2 / 150 nm = 295.1396 pF, and 12 pF of probe.
@@ -65,6 +65,9 @@ def test_a_pulse_is_seen_in_every_truth(talk: Talk) -> None:
     assert 0.5 < node < 4
     talk.say(":CLOC:ADV 0.01")
     assert talk.number(":TRUT:MAX?") == pytest.approx(4, abs=1e-3)
+    # The node rises until the pulse's end, 10 us after it was looked at, and falls from there.
+    assert node < talk.number(":TRUT:HIGH?") < 4
+    assert talk.number(":TRUT:NODE?") < 0.5
     assert talk.say(":TRUT:DEL?") == "1"
     up = talk.number(":TRUT:UP?")
     assert up > 0.01
