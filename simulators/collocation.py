@@ -107,7 +107,8 @@ class Trial(NamedTuple):
 
     solved: whether Newton's method converged; if not, the rest means nothing. seconds: its
     length. volts: node at NODES. end: the state after it. kept: exp(-S) of each region over
-    the step. moved: part of the cell that switched. error_volts: the embedded error.
+    the step. moved: part of the cell that switched. error_volts, missed_fraction: the embedded
+    errors of the node and of the part that switched.
     """
 
     solved: bool
@@ -117,6 +118,7 @@ class Trial(NamedTuple):
     kept: Array
     moved: float
     error_volts: float
+    missed_fraction: float
 
 
 def open_shares(equations: Equations, up: Array, side: int) -> Array:
@@ -268,12 +270,13 @@ def try_step(
         equations, begin, seconds, currents, missed_rate, float(shares_left @ slopes[2])
     )
     moved = open_total - float(shares_left.sum())
-    return Trial(True, seconds, (v1, v2, v3), end, kept, moved, error_volts)
+    missed_fraction = EMBEDDED * seconds * abs(missed_rate)
+    return Trial(True, seconds, (v1, v2, v3), end, kept, moved, error_volts, missed_fraction)
 
 
 def unsolved(begin: Point, seconds: float, volts: Triple) -> Trial:
     """Return a trial that failed."""
-    return Trial(False, seconds, volts, begin, begin.open_shares, 0.0, math.inf)
+    return Trial(False, seconds, volts, begin, begin.open_shares, 0.0, math.inf, math.inf)
 
 
 def emf_at_nodes(emf_volts: float, rise_volts: float) -> Triple:

@@ -20,6 +20,7 @@ from pulsetally.simulators import cell, circuit, collocation, march, trajectory
 from pulsetally.simulators.cell import LEAST_DRIVING_VOLTS, Cell, CellDescription
 from pulsetally.simulators.circuit import Circuit, Wiring, node_current
 from pulsetally.simulators.collocation import (
+    EMBEDDED,
     MATRIX,
     MOST_NEWTON,
     NEWTON_TOLERANCE_VOLTS,
@@ -313,7 +314,8 @@ def _try_step(
         emf_slope,
     )
     error_volts = embedded_error(equations, begin, seconds, currents, missed_rate, steepening)
-    return Trial(True, seconds, (v1, v2, v3), end, kept, moved, error_volts)
+    missed_fraction = EMBEDDED * seconds * abs(missed_rate)
+    return Trial(True, seconds, (v1, v2, v3), end, kept, moved, error_volts, missed_fraction)
 
 
 def _switched(up: Any, kept: Any, side: int) -> Any:

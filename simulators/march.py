@@ -30,8 +30,13 @@ Array = NDArray[np.float64]
 # Largest embedded error of a step, V. The embedded formula is of order 3 and the result
 # of order 5, so what is really lost in a step is far less.
 STEP_TOLERANCE_VOLTS = 2e-3
+# Largest embedded error of the part that switches: where the source holds the node, or little
+# charge moves it, its voltage tells nothing of that.
+STEP_TOLERANCE_FRACTION = 1e-3
 # Largest distance between the dense output and the step's inner nodes, V.
 DENSE_TOLERANCE_VOLTS = 1e-4
+# A diode that begins to conduct bends the course more sharply than its nodes tell.
+DIODE_CAUTION = 0.3
 # Right after a kink a fast transient may still run, which hides from that measure.
 KINK_CAUTION = 0.25
 LARGEST_GROWTH, LARGEST_SHRINK, SAFETY = 12.0, 0.15, 0.85
@@ -235,7 +240,8 @@ def find_step(
 ) -> tuple[Trial, Stride]:
     """Find a step that is accurate enough, and how the one after it should be."""
     seconds = stride.next_seconds
-    dense_volts = DENSE_TOLERANCE_VOLTS * (KINK_CAUTION if stride.seconds == 0 else 1.0)
+    caution = 1.0 if equations.linear else DIODE_CAUTION
+    dense_volts = caution * DENSE_TOLERANCE_VOLTS * (KINK_CAUTION if stride.seconds == 0 else 1.0)
     flipped = False
     while True:
         # A sliver left over would cost a whole step.
@@ -253,7 +259,11 @@ def find_step(
                 begin = point_at(equations, up, begin.volts, -begin.side, emf_volts, emf_slope)
         else:
             quintic, off_volts = curve_of(begin, trial)
-            error = max(trial.error_volts / STEP_TOLERANCE_VOLTS, off_volts / dense_volts)
+            error = max(
+                trial.error_volts / (caution * STEP_TOLERANCE_VOLTS),
+                trial.missed_fraction / STEP_TOLERANCE_FRACTION,
+                off_volts / dense_volts,
+            )
             factor = SAFETY * max(error, 1e-9) ** -0.25
             factor = min(max(factor, LARGEST_SHRINK), LARGEST_GROWTH)
             if error <= 1:
