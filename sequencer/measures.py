@@ -28,6 +28,8 @@ from pulsetally.sequencer.records import charge_window, loop_window
 from pulsetally.sequencer.rounds import Ask, Contact, Loop, Pulse, Pund
 from pulsetally.sequencer.safety import StopSwitch
 
+# A switched charge is more than so many of its standard uncertainties.
+_CLEAR = 2.0
 # How often somebody is looked for who was asked for something.
 _LOOK_SECONDS = 0.2
 
@@ -72,8 +74,8 @@ def pund(
 ) -> Generator[Event, None, float | None]:
     """Measure the switched charge; return it, C, or None where it can't be told.
 
-    The mirrored pulse presets; then two pulses up, of which only the first switches, and two
-    down.
+    It is 0 where noise hides it. The mirrored pulse presets; then two pulses up, of which only
+    the first switches, and two down.
     """
     up, down = action.pulse, action.pulse.mirrored()
     shots: list[tuple[Shot, Pulse]] = []
@@ -91,16 +93,18 @@ def pund(
     except SwitchingUnclear as error:
         values = {"problem": str(error)}
     else:
-        switched = result.switched
+        # A share of what is lost in noise says nothing: it counts as none.
+        clear = result.switched > _CLEAR * result.uncertainty
+        switched = result.switched if clear else 0.0
         values = {
-            "switched_coulombs": switched,
+            "switched_coulombs": result.switched,
             "switched_up_coulombs": result.switched_up,
             "switched_down_coulombs": result.switched_down,
             "uncertainty_coulombs": result.uncertainty,
             "asymmetry_coulombs": result.asymmetry,
             "leakage_siemens": result.leakage_siemens,
             # Twice the remanent polarization, C/m2.
-            "switched_polarization": switched / bench.model.cell.area,
+            "switched_polarization": result.switched / bench.model.cell.area,
         }
     yield Found(
         round=number,

@@ -1,0 +1,313 @@
+"""Trains of pulses and cyclings on a simulated bench, over real sockets."""
+
+import json
+from collections.abc import Iterator
+from itertools import pairwise
+from pathlib import Path
+
+import pytest
+import sqlalchemy as sa
+
+from pulsetally.sequencer import logbook as tables
+from pulsetally.sequencer.events import (
+    CyclingBegan,
+    FindingKind,
+    Found,
+    PairsSent,
+    PulseArmed,
+    ReadFinished,
+    Role,
+    RoundSpoiled,
+    RoundsSkipped,
+    RunState,
+    ShotTaken,
+    StopAsked,
+)
+from pulsetally.sequencer.logbook import Logbook
+from pulsetally.sequencer.results import run_result, run_shots
+from pulsetally.sequencer.safety import StopSwitch
+from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.simulate import SimulationSettings
+from pulsetally.simulators.wear import Fatigue
+from tests.sequencer.running import begin, end_of, of_kind
+from tests.simulated import Simulated, simulated
+
+
+@pytest.fixture(scope="module")
+def table() -> Iterator[Simulated]:
+    with simulated() as running:
+        yield running
+
+
+@pytest.fixture
+def logbook(tmp_path: Path) -> Iterator[Logbook]:
+    book = Logbook(tmp_path / "logbook.db")
+    yield book
+    book.close()
+
+
+TRAINS = """  - preset: down
+  - {step: up, count: 5, capture: train, train of: 2}
+  - {read: up, until: 2.5 V, at most: 60, capture: train, train of: 3}
+"""
+
+
+def test_a_train_is_one_trigger_and_many_pulses(table: Simulated, logbook: Logbook) -> None:
+    before = table.truth("DELivered")
+    events = list(begin(table, logbook, TRAINS))
+    assert end_of(events).state is RunState.FINISHED
+    armed = of_kind(events, PulseArmed)
+    assert [(each.role, each.count) for each in armed[:4]] == [
+        (Role.PRESET, 1),
+        (Role.STEP, 2),
+        (Role.STEP, 2),
+        (Role.STEP, 1),
+    ]
+    assert all((each.role, each.count) == (Role.READ, 3) for each in armed[4:])
+    # Each begins where the one before ended, and all that were meant went out.
+    assert armed[0].order == 1
+    for one, next_one in pairwise(armed):
+        assert next_one.order == one.order + one.count
+    sent = sum(each.count for each in armed)
+    assert table.truth("DELivered") - before == sent
+    shots = of_kind(events, ShotTaken)
+    assert [len(each.ends) for each in shots] == [each.count for each in armed]
+
+    (read,) = of_kind(events, ReadFinished)
+    assert (read.reached, read.stepped, read.first) == (True, 5, True)
+    # The read ends with the first train that passes, and counts up to the pulse that did.
+    assert len(read.end_voltages) == 3 * (len(armed) - 4)
+    assert len(read.end_voltages) - 3 < read.count <= len(read.end_voltages)
+    assert (
+        max(read.end_voltages[: read.count - 1], default=0.0)
+        < 2.5
+        < read.end_voltages[read.count - 1]
+    )
+
+
+def test_the_logbook_has_each_pulse_of_a_train(table: Simulated, logbook: Logbook) -> None:
+    events = list(begin(table, logbook, TRAINS))
+    armed = [each for each in of_kind(events, PulseArmed) if each.count > 1]
+    kept = logbook.select(sa.select(tables.trains).order_by(tables.trains.c.id))
+    assert [(row._mapping["count"], row.period_seconds) for row in kept] == [
+        (each.count, each.period) for each in armed
+    ]
+    ends = logbook.select(sa.select(tables.train_ends).order_by(tables.train_ends.c.id))
+    taken = [each for each in of_kind(events, ShotTaken) if len(each.ends) > 1]
+    assert [(row.place, row.end_volts, row.end_uncertainty, row.end_seconds) for row in ends] == [
+        (place, end.volts, end.uncertainty, end.seconds)
+        for each in taken
+        for place, end in enumerate(each.ends, start=1)
+    ]
+    (only,) = run_result(logbook, 1).rounds
+    assert (only.preset, only.stepped) == (True, 5)
+    assert only.reads[0].end_voltages == of_kind(events, ReadFinished)[0].end_voltages
+    # One record each, however many pulses lie in it.
+    assert len(list(run_shots(logbook, 1))) == len(of_kind(events, ShotTaken))
+
+
+def test_a_read_of_trains_sends_no_more_than_its_most(table: Simulated, logbook: Logbook) -> None:
+    before = table.truth("DELivered")
+    steps = TRAINS.replace("at most: 60", "at most: 4").replace("2.5 V", "3.5 V")
+    events = list(begin(table, logbook, steps))
+    (read,) = of_kind(events, ReadFinished)
+    counts = [each.count for each in of_kind(events, PulseArmed) if each.role is Role.READ]
+    assert counts == [3, 1]
+    assert (read.reached, read.count, read.crossing) == (False, 4, None)
+    assert table.truth("DELivered") - before == 1 + 5 + 4
+
+
+def test_a_train_counts_what_single_pulses_count(table: Simulated, logbook: Logbook) -> None:
+    each = "  - preset: down\n  - {read: up, until: 2.5 V, at most: 60}\n"
+    train = each.replace("60}", "60, capture: train, train of: 7}")
+    counts = [
+        of_kind(list(begin(table, logbook, steps)), ReadFinished)[0].crossing
+        for steps in (each, train)
+    ]
+    assert None not in counts
+    # The same cell and the same pulses; what remains of a pulse after its rest of 7 time
+    # constants of 220 kohm and 300 pF is below 1 per mille (closed form).
+    assert counts[0] == pytest.approx(counts[1], abs=0.5)
+
+
+# Cyclings.
+
+CYCLE = """  - cycle: {down: down, up: long}
+    pairs: 200
+    pause at: [10, 100]
+"""
+
+
+def test_a_cycling_sends_exactly_the_pairs_between_its_pauses(
+    table: Simulated, logbook: Logbook
+) -> None:
+    before = table.truth("DELivered")
+    pauses = 0
+    steps = (
+        CYCLE.replace("200", "20").replace("10, 100", "3, 10")
+        + "    steps:\n      - {read: up, until: 2.5 V, at most: 1}\n"
+    )
+    events = []
+    for event in begin(table, logbook, steps):
+        events.append(event)
+        if isinstance(event, PairsSent):
+            # One pulse a pause has gone out beside the pairs.
+            assert table.truth("DELivered") - before == event.done + pauses
+        pauses += isinstance(event, ReadFinished)
+    assert end_of(events).state is RunState.FINISHED
+    assert [each.done for each in of_kind(events, PairsSent)] == [3, 10, 20]
+    assert [(each.done, each.pairs) for each in of_kind(events, CyclingBegan)] == [
+        (0, 3),
+        (3, 7),
+        (10, 10),
+    ]
+    # In time with what was planned: a pair lasts 4 ms.
+    assert [each.seconds for each in of_kind(events, CyclingBegan)] == pytest.approx(
+        [0.012, 0.028, 0.04]
+    )
+    assert [each.settings["cycles"] for each in of_kind(events, ReadFinished)] == [0, 3, 10, 20]
+    (found,) = of_kind(events, Found)
+    assert found.kind is FindingKind.CYCLING
+    assert found.values == {
+        "pairs": 20.0,
+        "planned_pairs": 20.0,
+        "ended": "all pairs were sent",
+    }
+    (kept,) = logbook.select(sa.select(tables.findings.c.found))
+    assert json.loads(kept[0]) == found.values
+    sent = logbook.select(
+        sa.select(tables.trains.c["count"])
+        .join(tables.pulses, tables.trains.c.pulse == tables.pulses.c.id)
+        .where(tables.pulses.c.role == "cycle")
+        .order_by(tables.trains.c.id)
+    )
+    assert [row[0] for row in sent] == [3, 7, 10]
+
+
+STOPS = [
+    ("switched charge below: 50 %", "      - pund: long\n", "36% of the first"),
+    # An invented condition that any second measurement fails.
+    (
+        "full count off by: 1e-9 %",
+        "      - preset: down\n      - {read: up, until: 2.5 V, at most: 60}\n",
+        " at first",
+    ),
+]
+
+
+@pytest.mark.parametrize(("condition", "steps", "reason"), STOPS)
+def test_a_stop_condition_ends_the_cycling_and_not_the_run(
+    logbook: Logbook, condition: str, steps: str, reason: str
+) -> None:
+    recipe = CYCLE + f"    stop when: {{{condition}}}\n    steps:\n{steps}  - preset: down\n"
+    # Closed form: exp(-N/100) is left of the charge; 89 % after 10 pairs and 36 % after 100, with
+    # one cycle of each measurement itself.
+    fatigue = Fatigue(scale_cycles=100.0, exponent=1.0)
+    with simulated(SimulationSettings(cell=CellDescription(fatigue=fatigue))) as worn:
+        events = list(begin(worn, logbook, recipe))
+    assert end_of(events).state is RunState.FINISHED
+    (found,) = [each for each in of_kind(events, Found) if each.kind is FindingKind.CYCLING]
+    (skipped,) = of_kind(events, RoundsSkipped)
+    assert found.values["ended"] == skipped.reason
+    assert skipped.reason.endswith(reason)
+    assert found.values["pairs"] == (100.0 if "charge" in condition else 10.0)
+    # The step after the cycling is still done.
+    assert of_kind(events, PulseArmed)[-1].role is Role.PRESET
+    summary = run_result(logbook, 1).summary
+    assert summary.skipped == skipped.count > 0
+    assert summary.rounds + summary.skipped == summary.planned_rounds
+
+
+@pytest.mark.parametrize("asked", [True, False])
+def test_a_cell_that_opens_ends_the_cycling_or_the_run(logbook: Logbook, asked: bool) -> None:
+    stop_when = "    stop when: {contact is lost: yes}\n" if asked else ""
+    recipe = CYCLE + stop_when + "    steps:\n      - contact: probe\n  - preset: down\n"
+    events = []
+    with simulated() as table:
+        for event in begin(table, logbook, recipe):
+            events.append(event)
+            if isinstance(event, PairsSent) and event.done == 10:
+                with table.client(table.addresses.control) as client:
+                    client.ask(":FAULt:ADD OPEN,GENerator,1;:FAULt:PENDing?")
+        assert table.truth("OUTPut") == 0
+    ended = end_of(events)
+    assert [each.done for each in of_kind(events, PairsSent)] == [10]
+    (spoiled,) = of_kind(events, RoundSpoiled)
+    assert "the cell looks open" in spoiled.reason
+    if asked:
+        assert ended.state is RunState.FINISHED
+        (skipped,) = of_kind(events, RoundsSkipped)
+        assert "the cell looks open" in skipped.reason
+        assert of_kind(events, PulseArmed)[-1].role is Role.PRESET
+    else:
+        assert ended.state is RunState.FAILED
+        assert of_kind(events, RoundsSkipped) == []
+
+
+HOUR = "  - cycle: {down: down, up: long}\n    pairs: 900000\n"
+
+
+def test_a_second_stop_in_the_middle_of_a_burst_aborts_it_and_says_how_many(
+    table: Simulated, logbook: Logbook
+) -> None:
+    before = table.truth("DELivered")
+    stop = StopSwitch()
+    events = []
+    for event in begin(table, logbook, HOUR, stop=stop):
+        events.append(event)
+        if isinstance(event, CyclingBegan):
+            stop.press("Ctrl-C")
+        if isinstance(event, StopAsked):
+            # The burst goes on meanwhile: half a minute of its hour.
+            with table.client(table.addresses.control) as client:
+                client.ask(":CLOCk:ADVance 30;:CLOCk:TIME?")
+            stop.press("Ctrl-C")
+    sent = table.truth("DELivered") - before
+    ended = end_of(events)
+    assert (ended.state, ended.outputs_off) == (RunState.STOPPED, True)
+    assert table.truth("OUTPut") == 0
+    # Nothing more goes out afterwards.
+    with table.client(table.addresses.control) as client:
+        client.ask(":CLOCk:ADVance 30;:CLOCk:TIME?")
+    assert table.truth("DELivered") - before == sent
+    (spoiled,) = of_kind(events, RoundSpoiled)
+    assert spoiled.reason == ended.reason
+    words = ended.reason.removeprefix("Ctrl-C; from 0 to ").partition(" pairs may have gone out")
+    most = int(words[0].replace(",", ""))
+    # 4 ms a pair; the exchanges take some milliseconds too.
+    assert 7_500 <= sent <= most <= 7_600
+    assert [row.spoiled for row in logbook.select(sa.select(tables.round_ends))] == [True]
+
+
+def test_a_stop_before_a_burst_fires_nothing(table: Simulated, logbook: Logbook) -> None:
+    before = table.truth("DELivered")
+    stop = StopSwitch()
+    events = []
+    for event in begin(table, logbook, HOUR, stop=stop):
+        events.append(event)
+        if isinstance(event, PulseArmed):
+            stop.press_hard("the terminal was closed")
+    assert end_of(events).reason == "the terminal was closed; 0 pairs have gone out"
+    assert table.truth("DELivered") == before
+    assert table.truth("OUTPut") == 0
+
+
+def test_cyclings_of_the_same_pulse_have_each_their_own_period(
+    table: Simulated, logbook: Logbook
+) -> None:
+    recipe = (
+        "  - sweep: {down.width: [2 ms, 8 ms]}\n    steps:\n"
+        "      - cycle: {down: down, up: long}\n        pairs: 5\n"
+    )
+    lasted = []
+    with table.client(table.addresses.control) as client:
+        for event in begin(table, logbook, recipe):
+            now = float(client.ask(":CLOCk:TIME?"))
+            if isinstance(event, PulseArmed):
+                began = now
+            if isinstance(event, PairsSent):
+                lasted.append(now - began)
+    sets = logbook.select(sa.select(tables.setups.c.settings).order_by(tables.setups.c.id))
+    periods = [json.loads(row[0])["generator period"] for row in sets]
+    assert periods == pytest.approx([4e-3, 10e-3])
+    assert lasted == pytest.approx([0.02, 0.05], abs=0.02)
