@@ -227,7 +227,7 @@ class Quantified:
         parameters = declared.parameters or {}
         if written not in parameters:
             raise fault(
-                f"{written!r} is neither {self.kind.name} nor a declared parameter",
+                f"{written[:60]!r} is neither {self.kind.name} nor a declared parameter",
                 f"{nearest(written, [*parameters])}, or a value such as '{self.kind.example}'"
                 if parameters
                 else f"write a value such as '{self.kind.example}', or declare the parameter",
@@ -364,7 +364,7 @@ def _mistake(
         names = known(entry["loc"][:-1])
         return placed.mistake(
             path,
-            f"there is no setting {path[-1]!r} here",
+            f"there is no setting {str(path[-1])[:60]!r} here",
             nearest(str(path[-1]), names),
             at_key=True,
         )

@@ -4,11 +4,19 @@ import math
 from collections.abc import Mapping
 
 from pulsetally.sequencer.models import kind_of
-from pulsetally.sequencer.quantities import NUMBER, Kind, QuantityError, parse_quantity
+from pulsetally.sequencer.quantities import (
+    NUMBER,
+    Kind,
+    QuantityError,
+    is_quantity,
+    parse_quantity,
+)
 from pulsetally.sequencer.yaml_places import nearest
 
 # More values than this on one axis are a slip of the pen.
 MOST_VALUES = 100_000
+# From a nanosecond to ten years it is 18.
+_MOST_DECADES = 30
 _WORDS = ("from", "to", "per decade", "points")
 
 
@@ -44,8 +52,12 @@ def axis_values(name: str, written: object, kind: Kind) -> list[float]:
 
 def _value(name: str, written: object, kind: Kind, place: str | int) -> float:
     found = kind_of(written)
-    if found is kind or (found is not None and written == 0):
-        return parse_quantity(written, kind)
+    try:
+        if found is None or found is kind or written == 0:
+            return parse_quantity(written, kind)
+    except QuantityError as error:
+        if is_quantity(str(written)) and "beyond" in error.problem:
+            raise RangeFault(place, error.problem, error.remedy) from error
     raise RangeFault(
         place,
         f"{str(written)[:60]!r} is not {kind.name}, which {name} needs",
@@ -77,13 +89,16 @@ def _range(name: str, written: Mapping[str, object], kind: Kind) -> list[float]:
             raise RangeFault(word, "a range has two ends", "write 2 points or more")
         # The ends are exact, and neighbours don't gather rounding errors.
         return [begin + (end - begin) * step / (count - 1) for step in range(count - 1)] + [end]
-    if begin * end <= 0:
+    # Not their product, which may be too small to tell from 0.
+    if min(begin, end) <= 0 <= max(begin, end):
         raise RangeFault(
             "from",
             "a logarithmic range can't touch or pass 0",
             "write both ends above 0, or 'points' for even steps",
         )
-    decades = abs(math.log10(end / begin))
+    decades = abs(math.log10(abs(end)) - math.log10(abs(begin)))
+    if decades > _MOST_DECADES:
+        raise RangeFault("to", f"the range spans {decades:.0f} decades", "bring its ends closer")
     steps = max(1, round(decades * count))
     if steps >= MOST_VALUES:
         raise RangeFault(word, f"that are {steps} values", "ask for fewer per decade")

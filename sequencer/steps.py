@@ -26,7 +26,16 @@ from pulsetally.sequencer.models import (
     quantity,
     schema_of_quantities,
 )
-from pulsetally.sequencer.quantities import KINDS, NUMBER, SHARE, TIME, VOLTAGE, Kind
+from pulsetally.sequencer.quantities import (
+    KINDS,
+    NUMBER,
+    SHARE,
+    TIME,
+    VOLTAGE,
+    Kind,
+    QuantityError,
+    parse_quantity,
+)
 from pulsetally.sequencer.yaml_places import nearest
 
 # An instrument that counts on for years has lost its end.
@@ -42,7 +51,7 @@ def _pulse_name(written: object, info: ValidationInfo) -> str:
     declared: Declared = info.context or Declared()
     if not isinstance(written, str) or written not in declared.pulses:
         raise fault(
-            f"{written!r} is not a pulse of this recipe",
+            f"{str(written)[:60]!r} is not a pulse of this recipe",
             nearest(str(written), [*declared.pulses]) + ", or declare it under pulses",
         )
     return written
@@ -335,21 +344,16 @@ def _pauses(written: object) -> list[float]:
 
 
 def _pause(written: object) -> float:
-    number = float(written) if isinstance(written, (int, float, str)) and _number(written) else 0.0
+    try:
+        number = parse_quantity(written, NUMBER)
+    except QuantityError:
+        number = 0.0
     if not 1 <= number <= MOST_PAIRS or number != int(number):
         raise fault(
             f"{str(written)[:60]!r} is not a number of pairs",
             f"write whole numbers from 1 to {MOST_PAIRS:g}",
         )
     return number
-
-
-def _number(written: object) -> bool:
-    try:
-        float(str(written))
-    except ValueError:
-        return False
-    return not isinstance(written, bool)
 
 
 STEP_MODELS: dict[str, type[Model]] = {
@@ -383,9 +387,9 @@ def _known_step(written: object) -> object:
     verbs = [*STEP_MODELS]
     if isinstance(written, dict) and written:
         word = str(next(iter(written)))
-        raise fault(f"there is no step {word!r}", nearest(word, verbs))
+        raise fault(f"there is no step {word[:60]!r}", nearest(word, verbs))
     if isinstance(written, str):
-        raise fault(f"{written!r} is not a step", f"write it as '{verbs[0]}: down'")
+        raise fault(f"{written[:60]!r} is not a step", f"write it as '{verbs[0]}: down'")
     raise fault("this is not a step", f"begin it with one of {', '.join(verbs)}")
 
 

@@ -8,7 +8,7 @@ import itertools
 import random
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
-from typing import Any
+from typing import Any, NoReturn
 
 from pulsetally.sequencer.bench import Bench, CellVoltsUnreachable
 from pulsetally.sequencer.models import Declared, Model, Name, kind_of
@@ -34,6 +34,7 @@ from pulsetally.sequencer.rounds import (
     triangle,
 )
 from pulsetally.sequencer.steps import (
+    LONGEST_WAIT,
     MOST_PAIRS,
     PULSE_KINDS,
     AskStep,
@@ -53,8 +54,10 @@ from pulsetally.sequencer.steps import (
 # A night has room for some ten thousand rounds; a million is a mistake in a sweep.
 MOST_ROUNDS = 100_000
 _MOST_ACTIONS = 1_000_000
-# Ten years: nobody waits longer, and a sweep that says so has lost its unit.
-_LONGEST_WAIT = 3.2e8
+# So many turns of repeats and sweeps in which nothing could be done.
+_MOST_IDLE_TURNS = 1000
+# Whoever reads so many problems has seen what is wrong.
+_MOST_PROBLEMS = 100
 
 Settings = dict[str, float]
 
@@ -70,16 +73,21 @@ class _Part:
     begins: bool = False
 
 
+class _Overrun(Exception):
+    """There is no sense in unfolding further; the problems say why."""
+
+
 class Unfolding:
     """Walk a recipe's steps for a bench; rounds() does it, problems and swept tell the rest."""
 
     def __init__(self, recipe: Recipe, bench: Bench) -> None:
         self._recipe, self._bench = recipe, bench
-        self._actions = 0
+        self._actions = self._turns = 0
+        self._made: dict[int, tuple[Settings, Action]] = {}
         self._changed = False
         self._settings: Settings = {}
         self._names: dict[str, Name] = {}
-        self.problems: list[str] = []
+        self.problems: dict[str, None] = {}
         self.swept: dict[str, None] = {}
         model = recipe.model
         self._declared = Declared(tuple(model.pulses), model.parameters)
@@ -113,26 +121,26 @@ class Unfolding:
             pending.clear()
             self._changed = False
 
-        for part in self._walk(self._recipe.model.steps, self._settings):
-            if pending and self._cuts(pending, part):
-                finish()
+        try:
+            for part in self._walk(self._recipe.model.steps, self._settings):
+                if pending and self._cuts(pending, part):
+                    finish()
                 if len(finished) >= MOST_ROUNDS:
-                    self._problem(
+                    self._overrun(
                         f"the recipe has over {MOST_ROUNDS} rounds",
                         "sweep fewer values or repeat less often",
                     )
-                    return tuple(finished)
-            self._actions += 1
-            if self._actions > _MOST_ACTIONS:
-                self._problem(
-                    f"the recipe has over {_MOST_ACTIONS} steps when its repeats are written out",
-                    "repeat less often",
-                )
-                break
-            pending.append(part)
-            self._changed = self._changed or not isinstance(part.action, Contact | Wait)
-            if isinstance(part.action, Cycle):
-                finish()
+                self._actions += 1
+                self._turns = 0
+                if self._actions > _MOST_ACTIONS:
+                    self._too_many_steps()
+                pending.append(part)
+                self._changed = self._changed or not isinstance(part.action, Contact | Wait)
+                if isinstance(part.action, Cycle):
+                    finish()
+        except _Overrun:
+            # A part of the rounds is no plan, and looking at it would take long.
+            return ()
         finish()
         return tuple(finished)
 
@@ -147,7 +155,28 @@ class Unfolding:
         return isinstance(part.action, Preset) and self._changed
 
     def _problem(self, problem: str, remedy: str) -> None:
-        self.problems.append(f"{self._recipe.file}: {problem}. To fix it, {remedy}.")
+        self.problems[f"{self._recipe.file}: {problem}. To fix it, {remedy}."] = None
+
+    def _overrun(self, problem: str, remedy: str) -> NoReturn:
+        self._problem(problem, remedy)
+        raise _Overrun
+
+    def _too_many_steps(self) -> NoReturn:
+        self._overrun(
+            f"the recipe has over {_MOST_ACTIONS} steps when its repeats are written out",
+            "repeat less often",
+        )
+
+    def _turn(self) -> None:
+        """Look at each turn of a repeat or sweep whether there is sense in another one.
+
+        Steps that can't be done make no actions, so that nothing else would end it.
+        """
+        self._turns += 1
+        if self._turns > _MOST_IDLE_TURNS and self.problems:
+            raise _Overrun
+        if len(self.problems) >= _MOST_PROBLEMS:
+            raise _Overrun
 
     # Steps that hold steps.
 
@@ -158,9 +187,11 @@ class Unfolding:
             match step:
                 case RepeatStep():
                     for _ in range(self._whole("repeat", step.repeat, settings, least=1)):
+                        self._turn()
                         yield from self._walk(step.steps, settings, cycling)
                 case SweepStep():
                     for changed in self._combinations(step, settings):
+                        self._turn()
                         yield from self._walk(step.steps, changed, cycling)
                 case TuneStep():
                     if cycling is not None:
@@ -175,9 +206,12 @@ class Unfolding:
                         return
                     yield from self._cycle(step, settings)
                 case _:
-                    yield _Part(
-                        action=self._action(step, settings), settings=settings, cycling=cycling
-                    )
+                    # Repeated under the same settings, it is the same action again.
+                    made = self._made.get(id(step))
+                    if made is None or made[0] is not settings:
+                        made = settings, self._action(step, settings)
+                        self._made[id(step)] = made
+                    yield _Part(action=made[1], settings=settings, cycling=cycling)
 
     def _combinations(self, step: SweepStep, settings: Settings) -> Iterator[Settings]:
         names = list(step.sweep)
@@ -329,10 +363,10 @@ class Unfolding:
         match step:
             case WaitStep():
                 seconds = self._value(step.wait, settings)
-                if not 0 <= seconds <= _LONGEST_WAIT:
+                if not 0 <= seconds <= LONGEST_WAIT:
                     self._problem(
                         f"a wait of {seconds:g} s is swept",
-                        f"sweep waits from 0 s to {_LONGEST_WAIT:g} s",
+                        f"sweep waits from 0 s to {LONGEST_WAIT:g} s",
                     )
                 return Wait(seconds=seconds)
             case PresetStep():
@@ -470,7 +504,11 @@ class Unfolding:
     def _check_pulse(self, pulse: Pulse) -> None:
         if pulse.level == pulse.base:
             self._problem(f"pulse {pulse.name!r}: its level is its base", "make them differ")
-        if not 0 < pulse.width <= 1000 or not 0 < pulse.edge <= 100 or pulse.rest < 0:
+        if (
+            not 0 < pulse.width <= 1000
+            or not 0 < pulse.edge <= 100
+            or not (0 <= pulse.rest <= LONGEST_WAIT)
+        ):
             self._problem(
                 f"pulse {pulse.name!r}: a time in it is out of bounds",
                 "use widths to 1000 s, edges to 100 s, and rests of 0 s or more",

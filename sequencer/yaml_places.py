@@ -12,8 +12,12 @@ from typing import Any
 from pulsetally.sequencer.errors import Mistake
 
 # A recipe is a page or two; a larger file is something else that was named by mistake.
-MOST_BYTES = 1_000_000
+MOST_BYTES = 200_000
 _MOST_DEPTH = 50
+# Keys, values and brackets together; long lists of values are written as ranges.
+_MOST_PARTS = 20_000
+# Among more names than this, looking for the closest takes long and listing them helps nobody.
+_MOST_KNOWN = 100
 
 Path = tuple[str | int, ...]
 
@@ -73,10 +77,14 @@ def spell_path(path: Path) -> str:
 
 def nearest(word: str, known: list[str], use: str = "write") -> str:
     """Name the known word that is closest, or all of them."""
-    close = get_close_matches(word, known, n=1)
+    if not known:
+        return "declare it first"
+    if len(known) > _MOST_KNOWN:
+        return f"{use} one of the {len(known)} that are declared, such as {known[0][:60]!r}"
+    close = get_close_matches(word[:60], known, n=1)
     if close:
         return f"{use} {close[0]!r}"
-    return f"{use} one of {', '.join(known)}" if known else "declare it first"
+    return f"{use} one of {', '.join(known)}"
 
 
 def read_text(path: FilePath, noun: str, remedy: str) -> tuple[str, list[Mistake]]:
@@ -101,7 +109,8 @@ def load_yaml(text: str, file: str) -> PlacedData:
     from ruamel.yaml.events import AliasEvent
 
     placed = PlacedData(file)
-    if len(text.encode()) > MOST_BYTES:
+    # A lone surrogate is no text, and is told as such below.
+    if len(text.encode(errors="surrogatepass")) > MOST_BYTES:
         placed.mistakes.append(
             placed.mistake((), f"the file has over {MOST_BYTES} bytes", "name a recipe or bench")
         )
@@ -109,7 +118,7 @@ def load_yaml(text: str, file: str) -> PlacedData:
     yaml = YAML(typ="safe", pure=True)
     try:
         depth = 0
-        for event in yaml.parse(text):
+        for parts, event in enumerate(yaml.parse(text)):
             depth += type(event).__name__.endswith("StartEvent")
             depth -= type(event).__name__.endswith("EndEvent")
             if isinstance(event, AliasEvent) or getattr(event, "anchor", None):
@@ -121,6 +130,11 @@ def load_yaml(text: str, file: str) -> PlacedData:
                 placed.mistakes.append(
                     placed.mistake((), f"it is nested over {_MOST_DEPTH} deep", "nest less")
                 )
+                return placed
+            if parts > _MOST_PARTS:
+                at = event.start_mark.line + 1, event.start_mark.column + 1
+                problem = f"it goes on beyond {_MOST_PARTS} keys and values"
+                placed.mistakes.append(placed._placed(at, (), problem, "write ranges and repeats"))
                 return placed
         if placed.mistakes:
             return placed
