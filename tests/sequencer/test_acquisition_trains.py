@@ -9,6 +9,7 @@ import pytest
 import sqlalchemy as sa
 
 from pulsetally.sequencer import logbook as tables
+from pulsetally.sequencer.errors import PlanError
 from pulsetally.sequencer.events import (
     CyclingBegan,
     FindingKind,
@@ -24,12 +25,14 @@ from pulsetally.sequencer.events import (
     StopAsked,
 )
 from pulsetally.sequencer.logbook import Logbook
+from pulsetally.sequencer.plan import make_plan
+from pulsetally.sequencer.recipe import parse_recipe
 from pulsetally.sequencer.results import run_result, run_shots
 from pulsetally.sequencer.safety import StopSwitch
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.simulate import SimulationSettings
 from pulsetally.simulators.wear import Fatigue
-from tests.sequencer.running import begin, end_of, of_kind
+from tests.sequencer.running import PULSES, begin, end_of, of_kind
 from tests.simulated import Simulated, simulated
 
 
@@ -311,3 +314,20 @@ def test_cyclings_of_the_same_pulse_have_each_their_own_period(
     periods = [json.loads(row[0])["generator period"] for row in sets]
     assert periods == pytest.approx([4e-3, 10e-3])
     assert lasted == pytest.approx([0.02, 0.05], abs=0.02)
+
+
+def test_a_plan_counts_no_more_pulses_than_a_read_of_trains_sends(table: Simulated) -> None:
+    recipe = parse_recipe(PULSES + TRAINS.replace("at most: 60", "at most: 4"), file="r.yaml")
+    assert make_plan(recipe, table.bench).most_pulses == 1 + 5 + 4
+
+
+@pytest.mark.parametrize("edges", ["down.edge=1 ms", "up.edge=1 ms", "down.width=50 ns"])
+def test_a_pair_that_has_no_flat_tops_is_refused_before_power(table: Simulated, edges: str) -> None:
+    name, _, value = edges.partition("=")
+    steps = "  - preset: long\n  - cycle: {down: down, up: up}\n    pairs: 5\n"
+    # Each pulse alone has its flat top; the generator has one edge for both.
+    text = PULSES.replace("down: {level: -5 V, width: 2 ms", "down: {level: -5 V, width: 4 ms")
+    text = text.replace("up: {level: 4 V, width: 100 us", "up: {level: 4 V, width: 200 us")
+    recipe = parse_recipe(text + steps, file="r.yaml", overrides={name: value})
+    with pytest.raises(PlanError, match="flat top"):
+        make_plan(recipe, table.bench)
