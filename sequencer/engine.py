@@ -145,6 +145,7 @@ class _Conductor:
         for planned in self._plan.rounds:
             # Also before the first: somebody may have asked while the lines were opened.
             if self._stop.after_round:
+                yield from self._leave_group(skipped)
                 raise StopRequested(self._stop.reason)
             if self._group is None or not self._group.holds(planned):
                 skipped = yield from self._leave_group(skipped)
@@ -223,12 +224,13 @@ class _Conductor:
                         acquisition, self._bench, action, number=number, order=order
                     )
                     self._heard.append(partial(_tell_charge, action, charge))
-                    order += 5
+                    # Its pulses drive down as far as they do, which need not be all the way.
+                    order, preset = order + 5, False
                 case Loop():
                     yield from measures.loop(
                         acquisition, self._bench, action, number=number, order=order
                     )
-                    order += 2
+                    order, preset = order + 2, False
                 case Ask():
                     yield from measures.ask(
                         acquisition, self._stop, self._person, action, number=number

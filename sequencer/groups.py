@@ -8,7 +8,7 @@ from collections.abc import Iterator
 from typing import Protocol
 
 from pulsetally.sequencer.analysis.counting import ReadCount
-from pulsetally.sequencer.analysis.tuning import Tuning
+from pulsetally.sequencer.analysis.tuning import TuneStatus, Tuning
 from pulsetally.sequencer.events import Event, FindingKind, Found
 from pulsetally.sequencer.rounds import Cycle, Cycling, Pulse, Pund, Read, Round, Tune
 
@@ -137,9 +137,13 @@ class CyclingGroup:
             values={
                 "pairs": float(self._pairs),
                 "planned_pairs": float(self._cycling.pairs),
-                "ended": self.reason or "all pairs were sent",
+                "ended": self.reason or self._without_reason(),
             },
         )
+
+    def _without_reason(self) -> str:
+        sent = self._pairs >= self._cycling.pairs
+        return "all pairs were sent" if sent else "the run was stopped"
 
 
 class TuneGroup:
@@ -147,7 +151,7 @@ class TuneGroup:
 
     def __init__(self, tune: Tune) -> None:
         self._tune = tune
-        self.reason = "the value was found before"
+        self.reason = ""
         self._tuning = Tuning(
             low=tune.low,
             high=tune.high,
@@ -167,6 +171,8 @@ class TuneGroup:
         """Return the planned round at the next value, or None when the search is over."""
         self._value = self._tuning.next_value()
         if self._value is None:
+            found = self._tuning.result().status is TuneStatus.FOUND
+            self.reason = "the value was found before" if found else "no value in the range does it"
             return None
         self._last = planned.tuned(self._value)
         return self._last
@@ -188,7 +194,8 @@ class TuneGroup:
 
     def findings(self) -> Iterator[Event]:
         """Say which value was found, and how sure that is."""
-        if self._last is None:
+        if self._last is None or self._tuning.next_value() is not None:
+            # Stopped on the way: what was seen so far is no result.
             return
         result = self._tuning.result()
         yield Found(

@@ -173,7 +173,7 @@ class Progress:
         self.ends.clear()
         self.threshold = None
         self._set(event.round.settings)
-        self._preset, self._pending = event.round.repeatable, None
+        self._preset, self._pending = event.round.fills, None
         again = f" again (attempt {event.attempt})" if event.attempt > 1 else ""
         return [f"round {self.round} begins{again}"] if again else []
 

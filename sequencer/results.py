@@ -1,5 +1,6 @@
 """Look up what runs found: logbook -> results, for people and for programs."""
 
+import itertools
 import json
 import os
 import re
@@ -387,7 +388,7 @@ def _rounds(logbook: Logbook, run: int, *, going: bool) -> list[RoundResult]:
             # A round without an end was cut, unless it is the one that is going on.
             spoiled=not going if row.spoiled is None else row.spoiled,
             reason=("still going" if going else "cut off") if row.reason is None else row.reason,
-            preset=_first_change(sent.get(row.id, [])) == Role.PRESET.value,
+            preset=_from_down(sent.get(row.id, [])),
             stepped=sent.get(row.id, []).count(Role.STEP.value),
             reads=tuple(read.get(row.id, [])),
             contacts=tuple(looked.get(row.id, [])),
@@ -403,9 +404,14 @@ def _left_out(found: list[RoundResult]) -> LeftOut:
     return LeftOut(not_reached=not_reached, first_pulse=len(fills) - not_reached)
 
 
-def _first_change(roles: list[str]) -> str:
-    """Return the role of the first pulse that can have changed the cell."""
-    return next((each for each in roles if each != Role.CONTACT.value), "")
+def _from_down(roles: list[str]) -> bool:
+    """Say whether the first read found the cell fully down, or as steps after a preset left it.
+
+    The pulses of a switched charge and of a loop don't preset, though they may end below 0 V.
+    """
+    before = itertools.takewhile(lambda each: each != Role.READ.value, roles)
+    passed_over = (Role.CONTACT.value, Role.STEP.value)
+    return [each for each in before if each not in passed_over] == [Role.PRESET.value]
 
 
 def _round_object(each: RoundResult) -> dict[str, Any]:

@@ -220,6 +220,16 @@ class Round:
         return isinstance(next(harmless, None), Preset | Pund | Loop)
 
     @property
+    def fills(self) -> bool:
+        """Say whether its first read goes from fully down, so that it may give a full count.
+
+        A switched charge or a loop before it drives down as far as its pulses do, and no further.
+        """
+        before = itertools.takewhile(lambda each: not isinstance(each, Read), self.actions)
+        changes = [each for each in before if not isinstance(each, Contact | Wait | Step)]
+        return len(changes) == 1 and isinstance(changes[0], Preset)
+
+    @property
     def most_pulses(self) -> int:
         """Return how many recorded pulses it has if every read goes to its end."""
         return sum(most_pulses(action) for action in self.actions)

@@ -26,6 +26,7 @@ from pulsetally.sequencer.events import (
 )
 from pulsetally.sequencer.logbook import Logbook
 from pulsetally.sequencer.plan import make_plan
+from pulsetally.sequencer.progress import Progress
 from pulsetally.sequencer.recipe import parse_recipe
 from pulsetally.sequencer.results import run_result, run_shots
 from pulsetally.sequencer.safety import StopSwitch
@@ -247,12 +248,53 @@ def test_a_cell_that_opens_ends_the_cycling_or_the_run(logbook: Logbook, asked: 
         assert of_kind(events, RoundsSkipped) == []
 
 
+def test_a_cycling_that_is_stopped_at_a_pause_says_how_far_it_came(
+    table: Simulated, logbook: Logbook
+) -> None:
+    stop = StopSwitch()
+    events = []
+    for event in begin(table, logbook, CYCLE, stop=stop):
+        events.append(event)
+        if isinstance(event, PairsSent):
+            stop.press("Ctrl-C")
+    assert end_of(events).state is RunState.STOPPED
+    (found,) = of_kind(events, Found)
+    assert (found.values["pairs"], found.values["ended"]) == (10.0, "the run was stopped")
+
+
+def test_a_read_after_a_switched_charge_is_no_full_count(
+    table: Simulated, logbook: Logbook
+) -> None:
+    read = "  - {read: up, until: 2.5 V, at most: 30}\n"
+    # The short pulse's mirror image leaves part of what the pulse has switched.
+    steps = "  - preset: down\n  - pund: up\n" + read + "  - preset: down\n" + read
+    events = []
+    progress = Progress(rounds=2, seconds=None)
+    for event in begin(table, logbook, steps):
+        events.append(event)
+        progress.take(event)
+    after, full = of_kind(events, ReadFinished)
+    assert after.crossing is not None
+    assert full.crossing is not None
+    assert after.crossing < full.crossing - 0.2
+    counted = run_result(logbook, 1).full_count
+    assert counted is not None
+    assert (counted.rounds, counted.mean) == (1, full.crossing)
+    assert progress.crossings == [full.crossing]
+
+
 HOUR = "  - cycle: {down: down, up: long}\n    pairs: 900000\n"
 
 
+@pytest.mark.parametrize("family", ["scpi99", "perdiv", "stateword"])
 def test_a_second_stop_in_the_middle_of_a_burst_aborts_it_and_says_how_many(
-    table: Simulated, logbook: Logbook
+    logbook: Logbook, family: str
 ) -> None:
+    with simulated(SimulationSettings(family=family)) as table:
+        aborted_burst(table, logbook)
+
+
+def aborted_burst(table: Simulated, logbook: Logbook) -> None:
     before = table.truth("DELivered")
     stop = StopSwitch()
     events = []

@@ -215,6 +215,27 @@ def test_a_tune_chooses_values_and_leaves_out_what_it_does_not_need() -> None:
     assert found.values["rounds"] == len(wanted)
 
 
+def test_a_tune_that_found_nothing_does_not_say_that_it_did() -> None:
+    plan = planned(TUNE)
+    group = begun(plan)
+
+    def tell(group: Group, each: Round) -> None:
+        read = each.actions[1]
+        assert isinstance(read, Read)
+        group.counted(read, counted(30.0))
+
+    assert len(done(group, plan, tell)) == 2
+    assert group.reason == "no value in the range does it"
+    assert finding(group).values["value"] is None
+
+
+def test_a_tune_that_is_stopped_on_the_way_has_no_result() -> None:
+    plan = planned(TUNE)
+    group = begun(plan)
+    assert group.next_round(plan.rounds[0]) is not None
+    assert list(group.findings()) == []
+
+
 def test_two_tunes_in_a_row_are_two_groups() -> None:
     plan = planned(
         "  - repeat: 2\n    steps:\n"

@@ -138,8 +138,7 @@ def test_a_tune_finds_the_width_and_counts_a_spoiled_round_once(
     spoilt = False
     for event in begin(table, logbook, TUNE):
         events.append(event)
-        third = isinstance(event, PulseArmed) and event.round == 3
-        if third and event.order == 3 and not spoilt:
+        if isinstance(event, PulseArmed) and (event.round, event.order) == (3, 3) and not spoilt:
             spoilt = True
             with table.client(table.addresses.oscilloscope) as client:
                 client.ask(":TRIGger:LEVel 7.9;:TRIGger:LEVel?")
