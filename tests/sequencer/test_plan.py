@@ -107,7 +107,25 @@ def test_a_count_swept_over_fractions_is_refused() -> None:
 
 # What the shipped recipes promise: rounds, what they sweep, and how many rounds can't be repeated:
 # a readback, what follows on a person, and the cycling itself.
-SHIPPED = {}
+SHIPPED: dict[str, tuple[int, tuple[str, ...], int]] = {
+    "amplitude_sweep": (25, ("up.level",), 0),
+    "disturb": (6, (), 0),
+    "endurance": (23, ("cycles",), 7),
+    "full_count": (20, (), 0),
+    "hand_over": (2, (), 1),
+    "hysteresis": (1, (), 0),
+    "imprint": (12, ("fills", "hold"), 0),
+    "pund": (1, (), 0),
+    "readback": (1, (), 1),
+    "rest_sweep": (24, ("up.rest",), 0),
+    "retention": (18, ("hold",), 0),
+    "scatter": (200, (), 0),
+    "step_and_read": (5, ("stored",), 0),
+    "switching_transients": (15, ("try.level", "try.width"), 0),
+    "threshold_study": (90, ("up.level", "threshold"), 0),
+    "tune_count": (12, ("up.width",), 0),
+    "width_sweep": (15, ("up.width",), 0),
+}
 
 
 def test_every_shipped_recipe_is_listed_here() -> None:
