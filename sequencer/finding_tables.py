@@ -140,8 +140,7 @@ def _first_read(each: RoundResult) -> ReadResult | None:
 def _charge_table(result: RunResult, rows: list[Row], *, first: Row) -> Table:
     shift, unit = _scale([_number(each, "switched_coulombs") for each in rows], "C")
     table = Table(
-        "round",
-        *swept_names(result),
+        *_place_names(result),
         f"charge,\n{unit}",
         "2 P_r,\nuC/cm2",
         f"up less down,\n{unit}",
@@ -150,15 +149,14 @@ def _charge_table(result: RunResult, rows: list[Row], *, first: Row) -> Table:
     )
     begin = _number(first, "switched_coulombs")
     for each in rows:
-        cells = swept_cells(result, each.finding.settings)
+        cells = _place_cells(result, each)
         charge = _number(each, "switched_coulombs")
         if charge is None:
-            table.add_row(str(each.round), *cells, _untold(each))
+            table.add_row(*cells, _untold(each))
             continue
         sure = _number(each, "uncertainty_coulombs")
         density = (_number(each, "switched_polarization") or 0.0) * _MICROCOULOMBS
         table.add_row(
-            str(each.round),
             *cells,
             _scaled(charge, sure, shift),
             f"{density:.4g}",
@@ -188,8 +186,7 @@ def _charge_sentences(result: RunResult) -> list[str]:
 
 def _loop_table(result: RunResult, rows: list[Row]) -> Table:
     table = Table(
-        "round",
-        *swept_names(result),
+        *_place_names(result),
         "P_r,\nuC/cm2",
         "V_c up,\nV",
         "V_c\ndown, V",
@@ -199,17 +196,16 @@ def _loop_table(result: RunResult, rows: list[Row]) -> Table:
         title="Loops",
     )
     for each in rows:
-        cells = swept_cells(result, each.finding.settings)
+        cells = _place_cells(result, each)
         remanent = _number(each, "remanent_polarization")
         if remanent is None:
-            table.add_row(str(each.round), *cells, _untold(each))
+            table.add_row(*cells, _untold(each))
             continue
         coulombs = _number(each, "remanent_coulombs")
         sure = _number(each, "remanent_uncertainty_coulombs")
         share = None if not coulombs or sure is None else abs(sure / coulombs)
         volts = _number(each, "volts_uncertainty")
         table.add_row(
-            str(each.round),
             *cells,
             with_uncertainty(
                 remanent * _MICROCOULOMBS, share and share * abs(remanent) * _MICROCOULOMBS
@@ -233,6 +229,15 @@ def _leakage(row: Row) -> str:
         # Nothing was found, and that is how well one would have been seen.
         return f"< {2e9 * sure:.2g}"
     return f"{value * 1e9:.3g}"
+
+
+def _place_names(result: RunResult) -> list[str]:
+    """Return what tells rows apart: what was swept, or else the round."""
+    return swept_names(result) or ["round"]
+
+
+def _place_cells(result: RunResult, row: Row) -> list[str]:
+    return swept_cells(result, row.finding.settings) or [str(row.round)]
 
 
 def _untold(row: Row) -> str:

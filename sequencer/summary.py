@@ -105,7 +105,10 @@ def _show_counts(console: Console, result: RunResult) -> None:
         table = Table(
             *swept_names(result), "full count", "scatter", "rounds", title="Full count, pulses"
         )
-        for each in result.by_setting:
+        # A shuffled sweep is read in order all the same.
+        for each in sorted(
+            result.by_setting, key=lambda one: [one.settings.get(name, 0) for name in result.swept]
+        ):
             table.add_row(
                 *swept_cells(result, each.settings),
                 f"{each.count.mean:.2f}",
@@ -123,7 +126,8 @@ def _why_no_answer(result: RunResult) -> str:
     if not reads:
         # A recipe that measures something else owes no full count.
         return "" if measured else "No read was finished, so there is no full count."
-    if not any(each.preset for each in result.rounds):
+    if not any(each.preset and read.stepped == 0 for each in result.rounds for read in each.reads):
+        # Readbacks, and reads of what was stepped, have words of their own.
         return ""
     if any(not read.reached for read in reads):
         return "No full count: the threshold was not reached; see 'at most' and the threshold."
