@@ -5,10 +5,11 @@ voltages across the cell, and cuts the result at each preset. Every problem is c
 """
 
 import itertools
+import math
 import random
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
-from typing import Any, NoReturn
+from typing import Any
 
 from pulsetally.sequencer.bench import Bench, CellVoltsUnreachable
 from pulsetally.sequencer.models import Declared, Model, Name, kind_of
@@ -121,19 +122,26 @@ class Unfolding:
             pending.clear()
             self._changed = False
 
+        if self._least_rounds(self._recipe.model.steps) > MOST_ROUNDS:
+            # Told without writing them out, which would take long.
+            self._too_many_rounds()
+            return ()
         try:
             for part in self._walk(self._recipe.model.steps, self._settings):
                 if pending and self._cuts(pending, part):
                     finish()
                 if len(finished) >= MOST_ROUNDS:
-                    self._overrun(
-                        f"the recipe has over {MOST_ROUNDS} rounds",
-                        "sweep fewer values or repeat less often",
-                    )
+                    self._too_many_rounds()
+                    raise _Overrun
                 self._actions += 1
                 self._turns = 0
                 if self._actions > _MOST_ACTIONS:
-                    self._too_many_steps()
+                    self._problem(
+                        f"the recipe has over {_MOST_ACTIONS} steps when its repeats are written"
+                        " out",
+                        "repeat less often",
+                    )
+                    raise _Overrun
                 pending.append(part)
                 self._changed = self._changed or not isinstance(part.action, Contact | Wait)
                 if isinstance(part.action, Cycle):
@@ -157,15 +165,28 @@ class Unfolding:
     def _problem(self, problem: str, remedy: str) -> None:
         self.problems[f"{self._recipe.file}: {problem}. To fix it, {remedy}."] = None
 
-    def _overrun(self, problem: str, remedy: str) -> NoReturn:
-        self._problem(problem, remedy)
-        raise _Overrun
-
-    def _too_many_steps(self) -> NoReturn:
-        self._overrun(
-            f"the recipe has over {_MOST_ACTIONS} steps when its repeats are written out",
-            "repeat less often",
+    def _too_many_rounds(self) -> None:
+        self._problem(
+            f"the recipe has over {MOST_ROUNDS} rounds", "sweep fewer values or repeat less often"
         )
+
+    def _least_rounds(self, steps: list[Any]) -> int:
+        """Return a number of rounds that there are at least; each preset begins one."""
+        total = 0
+        for step in steps:
+            match step:
+                case PresetStep():
+                    total += 1
+                case RepeatStep():
+                    total += _least(step.repeat) * self._least_rounds(step.steps)
+                case SweepStep():
+                    counts = [len(self._axis(*each)) for each in step.sweep.items()]
+                    turns = counts[0] if step.together else math.prod(counts)
+                    total += turns * self._least_rounds(step.steps)
+                case CycleStep():
+                    bursts = len(pauses_of(step, _least(step.pairs)))
+                    total += bursts * (1 + self._least_rounds(step.steps))
+        return total
 
     def _turn(self) -> None:
         """Look at each turn of a repeat or sweep whether there is sense in another one.
@@ -519,6 +540,11 @@ class Unfolding:
                 f" flat top in a width of {show_quantity(pulse.width, 's')}",
                 "write a shorter edge or a longer width",
             )
+
+
+def _least(count: float | Name) -> int:
+    """Return what a count is at least; what is named may be swept."""
+    return 1 if isinstance(count, Name) else int(count)
 
 
 def _written(written: object) -> float:
