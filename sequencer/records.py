@@ -11,7 +11,7 @@ CHARGE_POINTS = 10_000
 # The share of a record that lies before the trigger, and what is seen of the base beside that.
 BEFORE = 0.1
 # A train's flat tops have so many samples each; the end voltage is fitted to a fifth of them.
-_TOP_SAMPLES, _LEAST_TOP_SAMPLES = 200, 60
+_TOP_SAMPLES, _LEAST_TOP_SAMPLES = 200, 80
 # More than that in one record, and fetching it takes longer than it saves.
 MOST_POINTS = 1_000_000
 
