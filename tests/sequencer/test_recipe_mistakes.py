@@ -61,7 +61,7 @@ MISTAKES = [
     ("ask", "ask: hello", "ask: 5", "ask", "'5' is not text", "a word or a sentence"),
     ("ask", "within: 1 h", "within: 60", "within", "60 has no unit", "'60 us'"),
     ("ask", "within: 1 h", "within: 20000 d", "within", "above 3.2e+08", "3.2e+08 or less"),
-    ("ask", "otherwise: stop", "otherwise: go", "otherwise", "not known here", "one of stop, go on"),
+    ("ask", "otherwise: stop", "otherwise: go", "otherwise", "not known here", "stop, go on"),
     ("repeat", "repeat: 2", "repeat: 0", "repeat", "below 1", "1 or more"),
     ("repeat", ROUND, "steps: []", "steps", "the list is empty", "at least one item"),
     ("repeat", ROUND, "steps: {preset: down}", "steps", "not a list", "write '- '"),

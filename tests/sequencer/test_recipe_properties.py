@@ -333,6 +333,7 @@ def test_nasty_input_gives_a_clear_error(name: str) -> None:
             assert each.column >= 1
             assert each.remedy
     else:
+        assert isinstance(error, PlanError)
         told = error.problems
         assert all("To fix it, " in each for each in told)
     assert any(word in each for each in told for word in words.split("|")), told[:3]
