@@ -149,7 +149,12 @@ def parse_quantity(written: str, kind: Kind) -> float | int:
             # Not for quantiphy, which would take the m of metres for milli.
             return float(number)
         if unit.endswith(symbol) and len(prefix) == 1 and prefix in _PREFIXES:
-            return float(Quantity(f"{number} {prefix}{symbol}", units=symbol))
+            # Of the prefix alone, since quantiphy ignores it behind an exponent: 1e3 mV is 1 V.
+            factor = float(Quantity(f"1 {prefix}{symbol}", units=symbol))
+            value = float(Decimal(number) * Decimal(repr(factor)))
+            if abs(value) > _MOST:
+                raise QuantityError(f"{written[:60]!r} is not a finite number", _write(kind))
+            return value
     raise QuantityError(f"{written[:60]!r} is not {kind.name}{kind.units}", _write(kind))
 
 

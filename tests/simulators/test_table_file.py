@@ -260,6 +260,9 @@ def test_every_number_comes_back_as_it_was_written(kind: Kind, value: float) -> 
         ("0.0001 cm2", "an area", 1e-8),
         ("25 uC/cm2", "a polarization", 0.25),
         ("220 kohm", "a resistance", 220e3),
+        # An exponent and a prefix both count.
+        ("1e3 mohm", "a resistance", 1.0),
+        ("2.2E-3Mohm", "a resistance", 2200.0),
         ("1.9 M\N{OHM SIGN}", "a resistance", 1.9e6),
         ("150nm", "a length", 150e-9),
         ("2 m", "a length", 2.0),
