@@ -323,9 +323,9 @@ def test_a_long_train_has_fewer_samples_on_a_top_and_at_last_too_few() -> None:
     # closed form: a period is 11 flat tops and a bit; 1e6 samples are 200 on each of 450 tops.
     assert train_points(pulse, 450) < 1_000_000
     assert train_points(pulse, 460) == 1_000_000
-    assert train_points(pulse, 1400) == 1_000_000
-    with pytest.raises(RecordTooLong, match=r"a train of 1600 needs .* samples"):
-        train_points(pulse, 1600)
+    assert train_points(pulse, 1100) == 1_000_000
+    with pytest.raises(RecordTooLong, match=r"a train of 1200 needs .* samples"):
+        train_points(pulse, 1200)
 
 
 def test_a_short_train_has_no_fewer_samples_than_one_pulse() -> None:
