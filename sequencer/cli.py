@@ -427,6 +427,7 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
     from pulsetally.sequencer.events import RunState
     from pulsetally.sequencer.live import follow
     from pulsetally.sequencer.logbook import Logbook
+    from pulsetally.sequencer.models import units_of
     from pulsetally.sequencer.person import AlwaysReady, whoever_is_there
     from pulsetally.sequencer.progress import Progress
     from pulsetally.sequencer.results import run_result
@@ -437,7 +438,12 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
     book, stop = Logbook(path), StopSwitch()
     # How long a rehearsal takes depends on this machine, not on the plan.
     seconds = plan.seconds if mode == "run" else None
-    progress = Progress(rounds=len(plan.rounds), seconds=seconds, swept=plan.swept)
+    progress = Progress(
+        rounds=len(plan.rounds),
+        seconds=seconds,
+        swept=plan.swept,
+        units=units_of(plan.recipe.model.parameters),
+    )
     for warning in plan.warnings:
         say(console, f"Note: {warning}.")
     broken = ""

@@ -57,7 +57,10 @@ def finding_sentences(result: RunResult) -> list[str]:
     return [
         *_contact_sentences(result),
         *_charge_sentences(result),
-        *(_tune_sentence(each.finding.values) for each in rows_of(result, FindingKind.TUNE)),
+        *(
+            _tune_sentence(each.finding.values, result.units)
+            for each in rows_of(result, FindingKind.TUNE)
+        ),
         *(_cycling_sentence(each.finding.values) for each in rows_of(result, FindingKind.CYCLING)),
         *_readback_sentences(result),
     ]
@@ -85,7 +88,10 @@ def with_uncertainty(value: float, uncertainty: float | None) -> str:
 
 def swept_cells(result: RunResult, settings: dict[str, float]) -> list[str]:
     """Return what was swept, one cell a name; empty where it isn't in force."""
-    return [show_setting(name, settings[name]) if name in settings else "" for name in result.swept]
+    return [
+        show_setting(name, settings[name], result.units) if name in settings else ""
+        for name in result.swept
+    ]
 
 
 def swept_names(result: RunResult) -> list[str]:
@@ -275,17 +281,17 @@ def _contact_sentences(result: RunResult) -> list[str]:
     return [f"Contact: {told}."]
 
 
-def _tune_sentence(values: dict[str, Any]) -> str:
+def _tune_sentence(values: dict[str, Any], units: dict[str, str]) -> str:
     setting, wanted = str(values["setting"]), float(values["wanted_count"])
     rounds, status = int(values["rounds"]), TuneStatus(values["status"])
     begin = f"Tuned {setting} to a full count of {wanted:g}"
     reason = _TUNE_WORDS[status]
     if values["value"] is None:
         return f"{begin}: no value was found in {rounds} rounds; {reason}."
-    value = show_setting(setting, float(values["value"]))
+    value = show_setting(setting, float(values["value"]), units)
     if values["uncertainty"] is not None:
         sure = float(f"{float(values['uncertainty']):.2g}")
-        value += f" ± {show_setting(setting, sure)}"
+        value += f" ± {show_setting(setting, sure, units)}"
     told = f"{begin}: {value}, found in {rounds} rounds"
     if values["count"] is not None:
         told += f"; the full count there is about {float(values['count']):.2f}"

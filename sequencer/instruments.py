@@ -12,7 +12,6 @@ from pulsetally.sequencer.clock import BenchClock, Clock, WallClock
 from pulsetally.sequencer.errors import OutputsNotConfirmed
 from pulsetally.sequencer.safety import quiet
 
-
 # A simulated bench works as long as a month of cycling takes it, and a real one has no clock.
 _CLOCK_SECONDS = 300.0
 
@@ -55,7 +54,9 @@ class Instruments:
         self.oscilloscope.identify()
         self.clock = WallClock()
         if bench.model.clock is not None:
-            own = self._opened.enter_context(contextlib.closing(VisaLink(bench.model.clock, seconds=_CLOCK_SECONDS)))
+            own = self._opened.enter_context(
+                contextlib.closing(VisaLink(bench.model.clock, seconds=_CLOCK_SECONDS))
+            )
             self.clock = BenchClock(own)
             self.clock.now()
 

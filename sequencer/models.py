@@ -7,7 +7,7 @@ line, column, what was found, what is allowed, what to write.
 import inspect
 import math
 import re
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Annotated, Any
 
@@ -324,6 +324,12 @@ def kind_of(written: object) -> Kind | None:
             continue
         return kind
     return None
+
+
+def units_of(parameters: Mapping[str, Any]) -> dict[str, str]:
+    """Return the SI unit of each parameter that has one, from its value as written."""
+    kinds = {name: kind_of(written) for name, written in parameters.items()}
+    return {name: kind.unit for name, kind in kinds.items() if kind is not None and kind.unit}
 
 
 def field_names(model: type[BaseModel]) -> list[str]:

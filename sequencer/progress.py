@@ -48,6 +48,7 @@ class Progress:
     round: int = 0
     attempt: int = 1
     swept: tuple[str, ...] = ()
+    units: Mapping[str, str] = field(default_factory=dict)
     setting: str = ""
     pulses: int = 0
     stepped: int = 0
@@ -121,7 +122,7 @@ class Progress:
             case ContactChecked():
                 return _contact_lines(event)
             case Found():
-                return [finding_line(event.round, event.kind, event.values)]
+                return [finding_line(event.round, event.kind, event.values, self.units)]
             case CyclingBegan():
                 pairs = "1 pair" if event.pairs == 1 else f"{event.pairs:,} pairs"
                 self.doing = f"cycling {pairs}"
@@ -179,7 +180,7 @@ class Progress:
 
     def _set(self, settings: Mapping[str, float]) -> None:
         setting = ", ".join(
-            f"{name} = {show_setting(name, settings[name])}"
+            f"{name} = {show_setting(name, settings[name], self.units)}"
             for name in self.swept
             if name in settings
         )
@@ -228,7 +229,12 @@ def _contact_lines(event: ContactChecked) -> list[str]:
     return [*lines, f"round {event.round}: {result.note}"] if result.note else lines
 
 
-def finding_line(round_number: int, kind: FindingKind, values: Mapping[str, object]) -> str:
+def finding_line(
+    round_number: int,
+    kind: FindingKind,
+    values: Mapping[str, object],
+    units: Mapping[str, str],
+) -> str:
     """Write what was measured beside a count as one line."""
     begin = f"round {round_number}: "
     if "problem" in values:
@@ -251,7 +257,7 @@ def finding_line(round_number: int, kind: FindingKind, values: Mapping[str, obje
             value = values["value"]
             if value is None:
                 return f"{begin}{values['setting']} was not found: {values['status']}"
-            shown = show_setting(str(values["setting"]), _number(values, "value"))
+            shown = show_setting(str(values["setting"]), _number(values, "value"), units)
             words = f"{begin}{values['setting']} = {shown} ({values['status']})"
             count = values["count"]
             return words if count is None else f"{words}, full count {count:.2f}"
@@ -262,14 +268,14 @@ def _number(values: Mapping[str, object], name: str) -> float:
     return value if isinstance(value, float) else 0.0
 
 
-def show_setting(name: str, value: float) -> str:
-    """Write a swept setting's value with its unit, as far as its name tells it."""
+def show_setting(name: str, value: float, units: Mapping[str, str]) -> str:
+    """Write a swept setting's value with its unit. units: of parameters; pulses' are known."""
     from pulsetally.sequencer.steps import PULSE_KINDS
 
     if name == "cycles":
         return f"{value:,.0f}"
     kind = PULSE_KINDS.get(name.rpartition(".")[2]) if "." in name else None
-    return show_quantity(value, kind.unit if kind else "")
+    return show_quantity(value, kind.unit if kind else units.get(name, ""))
 
 
 def printable(text: str, most: int = 500) -> str:

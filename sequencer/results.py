@@ -6,7 +6,7 @@ import os
 import re
 import socket
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import sqlalchemy as sa
@@ -30,6 +30,8 @@ from pulsetally.sequencer.logbook import (
     trains,
     unpack,
 )
+from pulsetally.sequencer.models import units_of
+from pulsetally.sequencer.yaml_places import load_yaml
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -133,7 +135,7 @@ class LeftOut:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RunResult:
-    """All that a run found."""
+    """All that a run found. units: SI units of the recipe's parameters that have one."""
 
     summary: RunSummary
     identities: dict[str, str]
@@ -142,6 +144,7 @@ class RunResult:
     full_count: CountStatistics | None
     left_out: LeftOut
     by_setting: tuple[SettingCount, ...]
+    units: dict[str, str] = field(default_factory=dict)
 
     def as_object(self) -> dict[str, Any]:
         """Return the result as an object for JSON; volts, seconds and pulses throughout."""
@@ -160,6 +163,7 @@ class RunResult:
             "skipped_rounds": summary.skipped,
             "shots": summary.shots,
             "swept": list(self.swept),
+            "units": self.units,
             "rounds": [_round_object(each) for each in self.rounds],
             "full_count": _statistics_object(self.full_count),
             "left_out": {
@@ -223,6 +227,7 @@ def run_result(logbook: Logbook, run: int) -> RunResult:
         left_out=_left_out(found),
         full_count=full_count([each for group in groups.values() for each in group]),
         by_setting=tuple(by_setting),
+        units=_units(logbook, run),
     )
 
 
@@ -305,6 +310,13 @@ def _alive(process: int) -> bool:
     except PermissionError:
         return True
     return True
+
+
+def _units(logbook: Logbook, run: int) -> dict[str, str]:
+    text = logbook.select(sa.select(runs.c.recipe_text).where(runs.c.id == run))[0][0]
+    recipe = load_yaml(text, "recipe").data
+    parameters = recipe.get("parameters") if isinstance(recipe, dict) else None
+    return units_of(parameters) if isinstance(parameters, dict) else {}
 
 
 def _identities(logbook: Logbook, run: int) -> dict[str, str]:
