@@ -89,7 +89,8 @@ def read(**changes: Any) -> ReadResult:
     return ReadResult(**(made | changes))
 
 
-# JCGM 100:2008, 7.2.6 (from memory): an uncertainty has two digits at most, and the value ends where it does.
+# JCGM 100:2008, 7.2.6 (from memory): an uncertainty has two digits at most, and the value ends
+# where it does.
 @pytest.mark.parametrize(
     ("value", "uncertainty", "words"),
     [
