@@ -36,6 +36,8 @@ from pulsetally.sequencer.records import Window, fitted, train_period, train_win
 from pulsetally.sequencer.rounds import Cycle, Pulse
 from pulsetally.sequencer.safety import StopSwitch
 
+# What is expected later than so many polls is waited for without asking.
+_WORTH_WAITING = 20
 # The digitizer's range, against the swing that is expected.
 _HEADROOM = 1.2
 # The node's swing that is looked at, against the source's: behind a diode that blocks nothing is
@@ -128,7 +130,8 @@ class Acquisition:
         before = burst.window.before if burst.window else 0.0
         armed, done = self.oscilloscope.armed, self.oscilloscope.done
         patience = armed.limit_seconds + 2 * before * self._record_seconds
-        if not self._until(self.oscilloscope.is_armed, patience, armed.poll_seconds):
+        expected = before * self._record_seconds
+        if not self._until(self.oscilloscope.is_armed, patience, armed.poll_seconds, expected):
             raise InstrumentError(
                 self.oscilloscope.address,
                 "",
@@ -146,7 +149,8 @@ class Acquisition:
         )
         self.generator.fire()
         patience = done.limit_seconds + self._record_seconds
-        if not self._until(self.oscilloscope.is_done, patience, done.poll_seconds):
+        expected = (1 - before) * self._record_seconds
+        if not self._until(self.oscilloscope.is_done, patience, done.poll_seconds, expected):
             self.oscilloscope.abort()
             raise ShotMissing(order, f"pulse {order} was fired and the oscilloscope saw no trigger")
         shot, node = self._fetch()
@@ -385,10 +389,20 @@ class Acquisition:
         if self._stop.at_once:
             raise StopRequested(self._stop.reason)
 
-    def _until(self, condition: Callable[[], bool], seconds: float, poll_seconds: float) -> bool:
+    def _until(
+        self,
+        condition: Callable[[], bool],
+        seconds: float,
+        poll_seconds: float,
+        expected_seconds: float = 0.0,
+    ) -> bool:
+        """Ask until a condition holds, seconds at most; it can't hold before it is expected."""
         if condition():
             return True
         deadline = self.clock.now() + seconds
+        if expected_seconds > _WORTH_WAITING * poll_seconds:
+            # A record of a minute is no reason to ask thirty thousand times.
+            self.clock.sleep(expected_seconds, lambda: self._stop.at_once)
         while True:
             self.clock.sleep(poll_seconds)
             if condition():
