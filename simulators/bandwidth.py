@@ -53,6 +53,11 @@ def last_values(
     times: Array, signals: tuple[Array, ...], begin: Array, lag_seconds: float
 ) -> Array:
     """Return what the pole makes of courses at their last knot; as knot_values, but quicker."""
+    length = float(times[-1] - times[-2])
+    if length > FORGOTTEN_LAGS * lag_seconds:
+        # Most stretches end at rest or on a slow piece, far from anything that is remembered.
+        share = lag_seconds / length
+        return np.array([signal[-1] - (signal[-1] - signal[-2]) * share for signal in signals])
     first = int(np.searchsorted(times, times[-1] - FORGOTTEN_LAGS * lag_seconds)) - 1
     if first > 0:
         # Whatever it was, it is forgotten at the end.
