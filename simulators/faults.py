@@ -187,8 +187,10 @@ class FaultSchedule:
 
     def add(self, fault: Fault) -> None:
         """Add a fault; an exchange that has passed counts as the next one."""
-        # A stream of its own: noise and domains are the same with and without faults.
-        random = np.random.default_rng((self._seed, 2, self._added))
+        # A stream of its own: noise and domains are the same with and without faults. Of a
+        # spawn key, since a 0 at the end of (seed, 2, 0) makes no difference to (seed, 2).
+        spawned = np.random.SeedSequence(self._seed, spawn_key=(self._added,))
+        random = np.random.default_rng(spawned)
         self._entries.append(_Entry(fault, random))
         self._added += 1
 

@@ -4,6 +4,7 @@ import math
 from dataclasses import fields, replace
 from typing import Any
 
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
@@ -179,6 +180,18 @@ def test_one_more_fault_changes_nothing_about_the_others() -> None:
     assert run(schedule, 300) == alone
     # Two with the same chance fall on different exchanges.
     assert run(FaultSchedule([fault("garbage"), garbage], seed=3), 300, "garbage")[1:] != alone
+
+
+# The bench draws domains, lifetimes and jitters from these (cell.py, ageing.py,
+# generator_model.py, digitizer.py).
+@pytest.mark.parametrize("other", [(7,), (7, 1), (7, 2), (7, 3)])
+def test_no_fault_draws_what_another_part_of_the_bench_draws(other: tuple[int, ...]) -> None:
+    drawn = np.random.default_rng(other if len(other) > 1 else other[0]).random(200)
+    expected = [exchange for exchange, share in enumerate(drawn, 1) if share < 0.1]
+    for ahead in range(3):
+        # Each fault draws by itself, wherever it stands in the list.
+        faults = [*[fault("garbage")] * ahead, RANDOM]
+        assert run(FaultSchedule(faults, seed=7), 200) != expected
 
 
 # A: the number of happenings is binomial. 3000 draws of 0.1: 300 with a standard deviation of
