@@ -24,7 +24,7 @@ class SimulationSettings:
     transport: how generator and oscilloscope are reached, one of TRANSPORTS; pseudo-
     terminals exist only where the system has them. The control port stays on plain TCP.
     faults: what goes wrong and when.
-    seed: of everything random. *_port: 0 for any free one.
+    seed: of everything random, at least 0. *_port: 0 for any free one.
     exchange_seconds: virtual time that each program message takes.
     real_time: virtual time follows the clock on the wall instead.
     until_stdin_closes: end when standard input does, besides SIGTERM and SIGINT.
@@ -66,6 +66,8 @@ class SimulationSettings:
             )
         if self.transport == "serial" and (self.generator_port or self.oscilloscope_port):
             raise ValueError("generator_port and oscilloscope_port are of no use with serial")
+        if self.seed < 0:
+            raise ValueError(f"seed must be 0 or more, not {self.seed}")
         if not 0 <= self.exchange_seconds <= 3600:
             raise ValueError(
                 f"exchange_seconds must be from 0 to 3600 s, not {self.exchange_seconds}"

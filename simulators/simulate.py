@@ -294,7 +294,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument(
         "--table", metavar="FILE|NAME", help="a table file, or the name of one that ships"
     )
-    parser.add_argument("--seed", type=int, help="seed of everything random (1)")
+    parser.add_argument("--seed", type=int, help="seed of everything random, at least 0 (1)")
     parser.add_argument(
         "--domains",
         type=int,

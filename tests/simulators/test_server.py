@@ -223,3 +223,11 @@ def test_faulty_settings_are_refused() -> None:
         SimulationSettings(control_port=70_000)
     with pytest.raises(ValueError, match="exchange_seconds"):
         SimulationSettings(exchange_seconds=-1.0)
+    with pytest.raises(ValueError, match="seed must be 0 or more, not -1"):
+        SimulationSettings(seed=-1)
+
+
+def test_a_seed_below_0_is_a_mistake_of_usage(capsys: pytest.CaptureFixture[str]) -> None:
+    with pytest.raises(SystemExit, match="2"):
+        main(["--seed", "-1"])
+    assert "seed must be 0 or more, not -1" in capsys.readouterr().err
