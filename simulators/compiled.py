@@ -10,8 +10,10 @@ import hashlib
 import os
 import warnings
 from collections.abc import Callable
-from functools import cache
+from contextlib import suppress
+from functools import cache, partial
 from pathlib import Path
+from typing import TypeVar
 
 from pulsetally.simulators import march
 from pulsetally.simulators.collocation import Equations
@@ -30,6 +32,8 @@ March = Callable[
     ],
     march.Course,
 ]
+
+Compiled = TypeVar("Compiled")
 
 RunLot = Callable[[LotNumbers, Pieces, Array], bool]
 
@@ -100,7 +104,7 @@ def _load() -> March | None:
         _complain(error)
         return None
     try:
-        compiled: March = kernel.compile_march(folder)
+        compiled: March = load_or_compile(kernel.compile_march, folder)
         return compiled
     except kernel.CompileErrors as error:
         _complain(error)
@@ -115,11 +119,37 @@ def _load_lot() -> RunLot | None:
     from pulsetally.simulators import kernel, lot_kernel
 
     try:
-        run: RunLot = lot_kernel.compile_lot(compiled, folder)
+        run: RunLot = load_or_compile(partial(lot_kernel.compile_lot, compiled), folder)
         return run
     except kernel.CompileErrors as error:
         _complain(error)
         return None
+
+
+def load_or_compile(compile_in: Callable[[Path], Compiled], folder: Path) -> Compiled:
+    """Load what was compiled from a folder, or compile it; if the files there are damaged, anew.
+
+    compile_in: does it with numba's own files, and trusts them. Where a disk was full or the
+    power failed they are cut, and reading them back may raise anything at all.
+    Raises what compile_in raises in a folder without such files.
+    """
+    try:
+        return compile_in(folder)
+    except Exception:
+        if not _discard(folder):
+            raise
+    return compile_in(folder)
+
+
+def _discard(folder: Path) -> bool:
+    """Remove what numba has kept in a folder; tell whether there was anything."""
+    # An index first: it names files of code, and without it none is looked for.
+    kept = [*folder.rglob("*.nbi"), *folder.rglob("*.nbc")]
+    for file in kept:
+        # Another process may have been faster.
+        with suppress(OSError):
+            file.unlink()
+    return bool(kept)
 
 
 def _complain(error: Exception) -> None:

@@ -3,9 +3,10 @@
 import os
 import subprocess
 import sys
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import replace
 from pathlib import Path
+from pickle import UnpicklingError
 
 import numpy as np
 import pytest
@@ -14,7 +15,13 @@ from numpy.typing import NDArray
 from pulsetally.simulators import compiled
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.circuit import Wiring
-from pulsetally.simulators.compiled import WORTH_PULSES, march_in_use, use_compiled, use_numpy
+from pulsetally.simulators.compiled import (
+    WORTH_PULSES,
+    load_or_compile,
+    march_in_use,
+    use_compiled,
+    use_numpy,
+)
 from pulsetally.simulators.drive import PulseTrain
 from pulsetally.simulators.lot import draw_cells, run_lot
 from pulsetally.simulators.march import march
@@ -114,6 +121,7 @@ EXTREME = {
             activation_spread=1.0,
             imprint_volts=-1.0,
             leak_ohms=1e6,
+            domains=168,
             fatigue=Fatigue(scale_cycles=10, recovered_share=0.5, recovery_volts=3),
             thermal=Thermal(kelvin=350),
         ),
@@ -192,6 +200,46 @@ def test_a_compiled_lot_has_the_end_voltages_of_the_table() -> None:
             table.advance(train.width_seconds)
             assert volts == pytest.approx(table.node_volts, abs=1e-6)
             table.advance(train.period_seconds - train.width_seconds)
+
+
+def twice(number: float) -> float:
+    return 2 * number
+
+
+def compile_twice(folder: Path) -> Callable[[float], float]:
+    from numba import float64, njit
+
+    from pulsetally.simulators.kernel import kept_in
+
+    with kept_in(folder):
+        function: Callable[[float], float] = njit((float64,), cache=True)(twice)
+    return function
+
+
+@needs_numba
+@pytest.mark.parametrize("length", [0, 20])
+@pytest.mark.parametrize("suffix", ["nbi", "nbc"])
+def test_damaged_machine_code_is_compiled_anew(tmp_path: Path, suffix: str, length: int) -> None:
+    compile_twice(tmp_path)
+    for file in tmp_path.rglob(f"*.{suffix}"):
+        os.truncate(file, length)
+    with pytest.raises((EOFError, UnpicklingError)):
+        compile_twice(tmp_path)
+    assert load_or_compile(compile_twice, tmp_path)(21.0) == 42.0
+    # And kept again.
+    assert compile_twice(tmp_path)(21.0) == 42.0
+
+
+def test_what_does_not_compile_is_not_tried_twice(tmp_path: Path) -> None:
+    tried: list[Path] = []
+
+    def fail(folder: Path) -> None:
+        tried.append(folder)
+        raise RuntimeError("no compiler")
+
+    with pytest.raises(RuntimeError, match="no compiler"):
+        load_or_compile(fail, tmp_path)
+    assert tried == [tmp_path]
 
 
 def told(code: str, **environment: str) -> list[str]:
