@@ -114,6 +114,17 @@ class Circuit:
         """Part of a constant EMF that a linear circuit's node settles to."""
         return 1 / (self.wiring.branch_ohms * self.node_siemens) if self.relay_on else 0.0
 
+    def lag_volts(self, moved_volts: float, before_volts: float, period_seconds: float) -> float:
+        """Return how far the node is from where it repeats in a train of this period, V.
+
+        moved_volts: by how much it moved in the last period; before_volts: in the one before.
+        """
+        if self.relay_on and self.wiring.diode_saturation_amperes is not None:
+            # What is left is a geometric series, as far as can be told.
+            ratio = moved_volts / before_volts if before_volts else 0.0
+            return abs(moved_volts) / (1 - ratio) if 0 < ratio < 1 else abs(moved_volts)
+        return abs(moved_volts) * (1 + self.farads / (self.node_siemens * period_seconds))
+
     @property
     def branches(self) -> "Branches":
         """What carries current into the node now, as plain numbers."""

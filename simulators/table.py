@@ -14,6 +14,7 @@ from pulsetally.simulators.circuit import Circuit, Wiring
 from pulsetally.simulators.drive import PulseTrain, Rest
 from pulsetally.simulators.incubation import solver_of
 from pulsetally.simulators.repetition import Period
+from pulsetally.simulators.ripple import Ripple, ripple_of
 from pulsetally.simulators.solver import Ramp, Solver
 
 Array = NDArray[np.float64]
@@ -26,13 +27,16 @@ LAST_PAIRS = 5
 MOST_PAIRS_OF_DOMAINS = 3
 
 # Of a train that has more whole periods than this before it, most are not integrated. The
-# first and the last ones are; and more where the node's voltage does not repeat, V.
+# last ones are; and, unless the node only sees the mean of them, the first ones, until the
+# node is this close to where it repeats, V. After this many, what it still has to go is lost.
 MANY_PERIODS = 100
 FIRST_PERIODS = 2
 LAST_PERIODS = 5
 FEWEST_AT_ONCE = 4
-REPEATED_VOLTS = 1e-4
-MOST_FIRST_PERIODS = 50
+REPEATED_VOLTS = 3e-4
+MOST_FIRST_PERIODS = 2000
+# Of the mean of a train a piece at once is not longer than this part of what is over.
+MEAN_PIECE_SHARE = 0.25
 # Of a cell whose electrodes touch.
 SHORT_OHMS = 5.0
 
@@ -218,7 +222,11 @@ class Table:
             self._count_pulses()
 
     def _pass_many_periods(self, end_seconds: float) -> bool:
-        """Pass most of the train's periods before an instant; False where they are few."""
+        """Pass most of the train's periods before an instant; False where they are few.
+
+        Lost are, behind a diode, what the node moves by after MOST_FIRST_PERIODS of them, and
+        in what is left out altogether the order of events: ageing is that of a mean period.
+        """
         train = self._drive
         if not isinstance(train, PulseTrain) or train.count <= MANY_PERIODS:
             return False
@@ -229,14 +237,24 @@ class Table:
         whole = train.pulses_begun(end_seconds) - 1 - index
         if whole <= MANY_PERIODS:
             return False
+        if any(needs() for needs in self._needing_detail):
+            return False
+        ripple = ripple_of(train, self._circuit)
+        seconds = whole * train.period_seconds
+        if ripple and ripple.is_harmless(self._cell, self.node_volts, seconds):
+            self._pass_mean(train, ripple, index, whole - LAST_PERIODS)
+            return True
         integrated = 0
+        moved_volts = math.inf
         while whole > LAST_PERIODS and not any(needs() for needs in self._needing_detail):
             begin, begin_volts = self._ageing.tally, self.node_volts
             self._period = Period(self._cell, repeats=whole)
             self._advance_to(train.pulse_start(index + 1), in_detail=True)
             period, self._period = self._period, None
             index, whole, integrated = index + 1, whole - 1, integrated + 1
-            repeated = abs(self.node_volts - begin_volts) < REPEATED_VOLTS
+            before_volts, moved_volts = moved_volts, self.node_volts - begin_volts
+            lag_volts = self._circuit.lag_volts(moved_volts, before_volts, train.period_seconds)
+            repeated = lag_volts < REPEATED_VOLTS
             if integrated < FIRST_PERIODS or not (repeated or integrated >= MOST_FIRST_PERIODS):
                 continue
             many, mean = self._most_periods(
@@ -267,10 +285,33 @@ class Table:
         self._ageing.repeat(mean, many)
         begin_seconds = self.now
         self.now = train.pulse_start(index + many)
+        self._leave_out(train, index, many, begin_seconds, self.node_volts)
+
+    def _pass_mean(self, train: PulseTrain, ripple: Ripple, index: int, many: int) -> None:
+        """Pass periods that only the mean of is seen by the node."""
+        begin_seconds, begin_volts = self.now, self.node_volts
+        end_seconds = train.pulse_start(index + many)
+        self._solver.node_volts -= ripple.begin_volts
+        while self.now < end_seconds:
+            # Ageing, which comes between pieces, slows down; so do what it acts on.
+            longest = max(train.period_seconds, MEAN_PIECE_SHARE * (self.now - begin_seconds))
+            later_seconds = max(self.now + longest, math.nextafter(self.now, math.inf))
+            stop_seconds = self._up_to_date_until(min(end_seconds, later_seconds))
+            seconds = stop_seconds - self.now
+            ramp = Ramp(begin_volts=ripple.mean_volts, volts_per_second=0.0, seconds=seconds)
+            self._integrate(ramp, sampled=False)
+            self.now = stop_seconds
+        self._solver.node_volts += ripple.begin_volts
+        self._leave_out(train, index, many, begin_seconds, begin_volts)
+
+    def _leave_out(
+        self, train: PulseTrain, index: int, many: int, begin_seconds: float, begin_volts: float
+    ) -> None:
+        """Count periods that have been passed, and show them as one stretch at rest."""
         if self._circuit.relay_on:
             self._deliver(train, many)
         self._settled_pulses = index + many
-        self._show_rest(begin_seconds)
+        self._show_rest(begin_seconds, begin_volts)
 
     def cycle(self, down: PulseTrain, up: PulseTrain, *, pairs: int) -> None:
         """Deliver pairs of pulses, down then up, from now on, and let their time pass.
@@ -321,10 +362,10 @@ class Table:
         if self._circuit.relay_on:
             for train in (down, up):
                 self._deliver(train, repeats)
-        self._show_rest(begin_seconds)
+        self._show_rest(begin_seconds, self.node_volts)
 
-    def _show_rest(self, begin_seconds: float) -> None:
-        volts = np.full(2, self.node_volts)
+    def _show_rest(self, begin_seconds: float, begin_volts: float) -> None:
+        volts = np.array([begin_volts, self.node_volts])
         terminal_volts = np.full(2, self.terminal_volts)
         for observer in self._observers:
             observer.saw(np.array([begin_seconds, self.now]), terminal_volts, volts)
@@ -337,9 +378,10 @@ class Table:
         # The clock is coarse late in virtual time, but it must go on.
         return max(self.now + longest, math.nextafter(self.now, math.inf))
 
-    def _pass(self, ramp: Ramp, stop_seconds: float) -> None:
+    def _integrate(self, ramp: Ramp, *, sampled: bool) -> tuple[Array, Array]:
+        """Integrate along a ramp and let the cell age by it; return the node's course."""
         up_before, volts_before = self.up_fraction, self.node_volts
-        times, node_volts = self._solver.run(ramp, sampled=bool(self._observers))
+        times, node_volts = self._solver.run(ramp, sampled=sampled)
         # A cell that is open has nothing of the node's voltage.
         share = 1.0 if self._circuit.cell_on else 0.0
         self._ageing.add(
@@ -350,6 +392,10 @@ class Table:
         )
         if self._period is not None:
             self._period.add(times, share * node_volts)
+        return times, node_volts
+
+    def _pass(self, ramp: Ramp, stop_seconds: float) -> None:
+        times, node_volts = self._integrate(ramp, sampled=bool(self._observers))
         begin_seconds, self.now = self.now, stop_seconds
         if not self._observers:
             return
