@@ -45,6 +45,15 @@ class AddressLock:
             self._file = None
 
 
+def holder_of(address: str) -> str | None:
+    """Say which process uses an instrument's address now; None where none does."""
+    try:
+        AddressLock(address).release()
+    except AddressBusy as error:
+        return error.problem.removeprefix("it is in use by ")
+    return None
+
+
 def _base(argument: str) -> str:
     return Path(argument).name
 

@@ -152,7 +152,16 @@ class Acquisition:
         expected = (1 - before) * self._record_seconds
         if not self._until(self.oscilloscope.is_done, patience, done.poll_seconds, expected):
             self.oscilloscope.abort()
-            raise ShotMissing(order, f"pulse {order} was fired and the oscilloscope saw no trigger")
+            if not self.generator.output_is_on():
+                # Somebody wants it off; to switch it on again would be the wrong answer.
+                raise InstrumentError(
+                    self.generator.address,
+                    "",
+                    f"its output was found off after pulse {order} was due, so somebody or an"
+                    " overload has switched it off",
+                    "find out why before you run again",
+                )
+            raise ShotMissing(order, "it was fired and the oscilloscope saw no trigger")
         shot, node = self._fetch()
         self._next_at = shot.bench_seconds + pulse.rest
         ends, problem = self._reduce(shot, node, burst)

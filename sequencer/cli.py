@@ -148,7 +148,8 @@ def rehearse(
     domains: DomainsOption = None,
 ) -> None:
     """Run a recipe on the simulated bench."""
-    from pulsetally.sequencer.rehearsal import simulated_bench
+    from pulsetally.sequencer.rehearsal import faults_told, simulated_bench
+    from pulsetally.sequencer.summary import say
 
     given = (("--table", table), ("--seed", seed), ("--domains", domains))
     # With the equals sign, a name that begins with a dash is no option.
@@ -163,6 +164,8 @@ def rehearse(
             with _recipe_checked(recipe, overrides), simulated_bench(None, options) as bench:
                 plan, bench = _planned(recipe, bench, overrides)
                 status = _carry_out(plan, bench, logbook, mode="rehearsal")
+                if words := faults_told(bench):
+                    say(_console(), words)
     raise typer.Exit(status)
 
 
@@ -364,6 +367,7 @@ def bench_probe(
 @bench_app.command("quiet", epilog="Example: pulsetally bench quiet my_bench.yaml")
 def bench_quiet(bench: Annotated[Path, typer.Argument(help="The bench file.")]) -> None:
     """Switch the outputs off and read that back, whatever state things are in."""
+    from pulsetally.drivers.lock import holder_of
     from pulsetally.sequencer.bench import load_bench
     from pulsetally.sequencer.instruments import quiet_bench
     from pulsetally.sequencer.summary import say
@@ -375,6 +379,12 @@ def bench_quiet(bench: Annotated[Path, typer.Argument(help="The bench file.")]) 
             _console(),
             f"{table.model.generator.address}: the output is off, and reads back as off.",
         )
+        if (holder := holder_of(table.model.generator.address)) is not None:
+            _complain(
+                f"{holder} is using this generator and may switch its output on again. To fix it,"
+                " end that process before you touch the cell, then ask for quiet once more."
+            )
+            raise typer.Exit(FAILED)
 
 
 @contextmanager

@@ -58,7 +58,7 @@ def contact(
         )
     except (ContactUnclear, PulseUnreadable) as error:
         raise ContactLost(
-            f"contact can't be judged: {error}. To fix it, use a longer pulse."
+            f"contact can't be judged: {error}."
         ) from error
     yield ContactChecked(round=number, pulse=pulse.name, result=result)
     if result.verdict is not Verdict.GOOD:

@@ -5,6 +5,7 @@ session of its own, so that Ctrl-C in the terminal reaches the run and not the i
 it ends when its standard input closes, so that it never outlives a program that was killed.
 """
 
+import contextlib
 import json
 import subprocess
 import sys
@@ -15,6 +16,8 @@ from importlib.resources import files
 from typing import IO, Any
 
 from pulsetally.drivers.errors import PulsetallyError
+from pulsetally.drivers.link import VisaLink
+from pulsetally.drivers.numbers import NumberError, parse_whole
 from pulsetally.sequencer.bench import Bench, BenchModel, parse_bench
 from pulsetally.sequencer.quantities import (
     AREA,
@@ -222,3 +225,18 @@ def _why_not(complaints: IO[str]) -> str:
     said = _said(complaints).splitlines()
     why = said[-1] if said else "it said nothing"
     return f"the simulated bench did not start ({why}). To fix it, try 'pulsetally simulate'."
+
+
+def faults_told(bench: Bench) -> str:
+    """Say which of a simulated bench's faults happened; empty where it has none, or is gone."""
+    if bench.model.clock is None:
+        return ""
+    try:
+        with contextlib.closing(VisaLink(bench.model.clock)) as link:
+            happened = parse_whole(link.ask(":FAULt:COUNt?"))
+            pending = parse_whole(link.ask(":FAULt:PENDing?"))
+    except (PulsetallyError, NumberError):
+        return ""
+    if not happened and not pending:
+        return ""
+    return f"Faults of the simulated bench: {happened} happened, {pending} did not come (yet)."

@@ -50,6 +50,8 @@ class RunSummary:
     planned_rounds: int
     shots: int
     skipped: int = 0
+    bench: str = ""
+    bench_file: str = ""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -153,6 +155,8 @@ class RunResult:
             "run": summary.run,
             "recipe": summary.title,
             "mode": summary.mode,
+            "bench": summary.bench,
+            "bench_file": summary.bench_file,
             "state": summary.state,
             "reason": summary.reason,
             "outputs_off": summary.outputs_off,
@@ -299,6 +303,8 @@ def _summary(row: Any) -> RunSummary:
         planned_rounds=row.planned_rounds,
         shots=row.shots_taken,
         skipped=row.rounds_skipped,
+        bench=row.bench_name,
+        bench_file=row.bench_file,
     )
 
 

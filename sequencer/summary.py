@@ -53,6 +53,8 @@ def show_result(console: Console, result: RunResult, *, rounds: bool = True) -> 
     if rounds and summary.reason and summary.state != "finished":
         say(console, summary.reason)
     if rounds:
+        if summary.bench:
+            say(console, f"bench: {summary.bench} ({summary.bench_file})")
         for role, identity in result.identities.items():
             say(console, f"{role}: {identity}")
     needed = summary.planned_rounds - summary.skipped

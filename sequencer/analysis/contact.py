@@ -87,7 +87,9 @@ def judge_contact(
     inside = (times > begin + ramp / 2) & (times < end - ramp / 2)
     elapsed, volts = times[inside] - begin, node[inside] - node_base
     if elapsed.size < _LEAST_SAMPLES:
-        raise ContactUnclear(f"only {elapsed.size} samples lie on the pulse")
+        raise ContactUnclear(
+            f"only {elapsed.size} samples lie on the pulse; use a longer pulse or shorter edges"
+        )
     interval = float(times[1] - times[0])
     resolution = max(2 * interval, ramp)
     tail = float(np.mean(volts[-max(5, elapsed.size // 10) :]))
@@ -100,6 +102,11 @@ def judge_contact(
             resolution=resolution,
         )
     final, tau = _fit_charge(elapsed, volts, resolution, float(elapsed[-1]))
+    if tau <= resolution and expected_tau is not None and expected_tau <= 2 * resolution:
+        raise ContactUnclear(
+            f"with this wiring even a good cell has a time constant of {expected_tau:.2g} s, and"
+            f" the record shows none below {resolution:.2g} s; use a shorter pulse with shorter edges"
+        )
     is_open = tau <= max(_OPEN_FACTOR * probe_tau, resolution)
     return ContactResult(
         verdict=Verdict.OPEN if is_open else Verdict.GOOD,
@@ -128,6 +135,8 @@ def _fit_charge(
     bounds = math.log(shortest / 10), math.log(longest * 10)
     found = minimize_scalar(misfit, bounds=bounds, method="bounded", options={"xatol": 1e-4})
     if not found.success:
-        raise ContactUnclear("the time constant could not be fitted")
+        raise ContactUnclear(
+            "the time constant could not be fitted; use a longer pulse, or look at its record"
+        )
     curve = shape(float(found.x))
     return float(curve @ volts) / float(curve @ curve), math.exp(float(found.x))

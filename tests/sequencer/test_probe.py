@@ -1,6 +1,7 @@
 """bench probe, list and quiet, on simulated benches and on a dialect that doesn't fit."""
 
 import json
+import re
 import time
 from pathlib import Path
 
@@ -71,6 +72,18 @@ def test_quiet_works_while_somebody_else_holds_the_bench() -> None:
         assert table.truth("OUTPut") == 1
         quiet_bench(table.bench)
         assert table.truth("OUTPut") == 0
+
+
+def test_quiet_says_that_somebody_may_switch_the_output_on_again(tmp_path: Path) -> None:
+    with simulated() as table, open_instruments(table.bench) as instruments:
+        (tmp_path / "bench.yaml").write_text(table.bench.text)
+        instruments.generator.prepare()
+        instruments.generator.switch(on=True)
+        done = pulsetally("bench", "quiet", "bench.yaml", cwd=tmp_path)
+        assert table.truth("OUTPut") == 0
+    assert done.returncode == 1
+    assert "the output is off, and reads back as off" in done.stdout
+    assert re.search(r"process \d+ .* may switch its output on again", done.stderr)
 
 
 def test_a_bench_in_use_is_refused_naming_who_has_it(tmp_path: Path) -> None:

@@ -47,6 +47,11 @@ def test_a_bare_probe_is_open_and_a_held_node_is_short() -> None:
     assert judge(0.0002, 1e-6)[0] is Verdict.SHORT
 
 
+def test_wiring_that_is_too_fast_for_the_record_is_unclear_and_not_open() -> None:
+    with pytest.raises(ContactUnclear, match="use a shorter pulse"):
+        judge(0.196, 0.5e-6, expected=0.6e-6)
+
+
 def test_a_time_constant_far_off_is_said() -> None:
     assert judge(0.196, CELL_TAU)[2] == ""
     assert "3 times the one expected" in judge(0.196, 3 * CELL_TAU)[2]
