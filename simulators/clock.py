@@ -5,7 +5,18 @@ import time
 from collections.abc import Callable
 from itertools import count
 
-from pulsetally.simulators.table import Table
+from pulsetally.simulators.table import Array, Table
+
+# While it sleeps, a clock in real time looks this often (s) whether it is to end.
+LONGEST_SLEEP_SECONDS = 0.1
+
+
+class BenchEndsError(SystemExit):
+    """The bench is to end while its time passes.
+
+    It goes through all that follows a message, and through the event loop, which stops for
+    a SystemExit and reports any other exception as a fault.
+    """
 
 
 class Appointment:
@@ -25,6 +36,8 @@ class VirtualClock:
     Every instrument lets time pass through here, never through the table itself, so that
     a relay closes and a burst ends at its own instant whoever moves the clock.
     may_be_advanced: whether somebody may move it at will.
+    is_to_end: asked again and again while time passes; once it says yes, whoever lets time
+    pass gets BenchEndsError. It may answer for another thread or for a signal.
     """
 
     may_be_advanced = True
@@ -33,6 +46,7 @@ class VirtualClock:
         self._table = table
         self._agenda: list[tuple[float, int, Appointment]] = []
         self._order = count()
+        self.is_to_end: Callable[[], bool] = lambda: False
 
     @property
     def now(self) -> float:
@@ -61,6 +75,15 @@ class VirtualClock:
             self._pass_until(due_seconds)
             appointment.action()
         self._pass_until(at_seconds)
+
+    def saw(self, times: Array, terminal_volts: Array, node_volts: Array) -> None:
+        """Look whether to end; as an observer of the table, whose stretches can take minutes."""
+        del times, terminal_volts, node_volts
+        self._end_if_asked()
+
+    def _end_if_asked(self) -> None:
+        if self.is_to_end():
+            raise BenchEndsError
 
     def _pass_until(self, at_seconds: float) -> None:
         # Twice where the first sum was rounded: a burst's end must really be reached.
@@ -96,7 +119,9 @@ class WallClock(VirtualClock):
     def advance_to(self, at_seconds: float) -> None:
         """Wait until an instant."""
         while (seconds := at_seconds - (self._wall() - self._zero_seconds)) > 0:
-            self._sleep(seconds)
+            self._end_if_asked()
+            # In slices: a signal alone does not end a sleep.
+            self._sleep(min(seconds, LONGEST_SLEEP_SECONDS))
         # To the instant itself, and then on: a sleep may last longer.
         super().advance_to(at_seconds)
         self.catch_up()

@@ -13,7 +13,7 @@ from dataclasses import asdict, dataclass, replace
 from typing import Any, Protocol
 
 from pulsetally.simulators.cell import DEFAULT_DOMAINS, CellDescription
-from pulsetally.simulators.clock import VirtualClock, WallClock
+from pulsetally.simulators.clock import BenchEndsError, VirtualClock, WallClock
 from pulsetally.simulators.compiled import use_compiled
 from pulsetally.simulators.control import BenchControl
 from pulsetally.simulators.digitizer import Digitizer
@@ -53,6 +53,7 @@ class Bench:
             self.table.short_cell()
         clock = WallClock if settings.real_time else VirtualClock
         self.clock = clock(self.table)
+        self.table.observe(self.clock)
         family = FAMILIES[settings.family]
         self.digitizer = Digitizer(
             clock=self.clock,
@@ -104,10 +105,19 @@ def _identity(what: str, adds: str, settings: SimulationSettings) -> str:
 
 
 async def serve_until(
-    settings: SimulationSettings, announce: Callable[[Addresses], None], stop: asyncio.Event
+    settings: SimulationSettings,
+    announce: Callable[[Addresses], None],
+    stop: asyncio.Event,
+    *,
+    is_to_end: Callable[[], bool] = lambda: False,
 ) -> None:
-    """Serve the bench in the running event loop until stop is set."""
+    """Serve the bench in the running event loop until stop is set.
+
+    is_to_end: for a message that takes long, during which the loop sees no stop: where it
+    says yes, the message is left in its middle, and BenchEndsError leaves the loop.
+    """
     bench = Bench(settings)
+    bench.clock.is_to_end = is_to_end
     for mishaps in (bench.generator_mishaps, bench.oscilloscope_mishaps):
         mishaps.later = asyncio.get_running_loop().call_later
 
@@ -184,16 +194,20 @@ _LISTENERS: dict[str, _Listener] = {"tcp": _port, "serial": _terminal, "hislip":
 def serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
     """Serve the bench until SIGTERM, SIGINT or, when asked, the end of standard input.
 
+    A message that is being followed meanwhile, however long it would take, is left.
     announce: called once, when all three listen. To be called in the main thread.
     Raises OSError when a port is taken.
     """
-    asyncio.run(_serve(settings, announce))
+    with suppress(BenchEndsError):
+        asyncio.run(_serve(settings, announce))
 
 
 async def _serve(settings: SimulationSettings, announce: Callable[[Addresses], None]) -> None:
-    loop, stop = asyncio.get_running_loop(), asyncio.Event()
+    loop, stop, ended = asyncio.get_running_loop(), asyncio.Event(), False
 
     def end(*_: object) -> None:
+        nonlocal ended
+        ended = True
         # A loop that is closing no longer needs to hear of the end.
         with suppress(RuntimeError):
             loop.call_soon_threadsafe(stop.set)
@@ -210,7 +224,7 @@ async def _serve(settings: SimulationSettings, announce: Callable[[Addresses], N
     if settings.until_stdin_closes:
         threading.Thread(target=read_to_the_end, daemon=True).start()
     try:
-        await serve_until(settings, announce, stop)
+        await serve_until(settings, announce, stop, is_to_end=lambda: ended)
     finally:
         for number, handler in before.items():
             signal.signal(number, handler)

@@ -1,6 +1,7 @@
 """A bench that keeps real time, as a process of its own and by a clock that tests can turn."""
 
 import json
+import signal
 import subprocess
 import sys
 import time
@@ -13,7 +14,12 @@ import pytest
 from pulsetally.sequencer.bench import load_bench
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.circuit import Wiring
-from pulsetally.simulators.clock import VirtualClock, WallClock
+from pulsetally.simulators.clock import (
+    LONGEST_SLEEP_SECONDS,
+    BenchEndsError,
+    VirtualClock,
+    WallClock,
+)
 from pulsetally.simulators.simulate import Bench, SimulationSettings, chosen_settings
 from pulsetally.simulators.table import Table
 from tests.simulated import PlainClient
@@ -68,6 +74,16 @@ def test_an_instant_that_has_passed_is_not_waited_for() -> None:
     clock.advance_to(1.0)
     assert wall.slept == []
     assert clock.now == 3.0
+
+
+def test_waiting_ends_soon_after_it_is_asked_to() -> None:
+    wall = Wall()
+    clock = clock_on(wall)
+    asked_seconds = wall.seconds + 3.0
+    clock.is_to_end = lambda: wall.seconds >= asked_seconds
+    with pytest.raises(BenchEndsError):
+        clock.advance_to(60.0)
+    assert asked_seconds <= wall.seconds <= asked_seconds + LONGEST_SLEEP_SECONDS
 
 
 def test_a_virtual_clock_has_nothing_to_catch_up_with() -> None:
@@ -146,3 +162,49 @@ def test_the_bench_file_of_real_time_names_no_clock(tmp_path: Path) -> None:
     model = load_bench(file).model
     assert model.generator.address == addresses["generator"]
     assert model.clock is None
+
+
+def end_by(process: subprocess.Popen[str], way: str) -> None:
+    if way == "closed input":
+        assert process.stdin is not None
+        process.stdin.close()
+    else:
+        process.send_signal(signal.SIGINT if way == "Ctrl-C" else signal.SIGTERM)
+
+
+@pytest.mark.parametrize("way", ["Ctrl-C", "terminated", "closed input"])
+@pytest.mark.parametrize("busy", ["waits", "computes"])
+def test_a_bench_ends_when_asked_even_in_a_long_message(busy: str, way: str) -> None:
+    flags = ["--real-time"] if busy == "waits" else []
+    module = "pulsetally.simulators.simulate"
+    with subprocess.Popen(
+        [sys.executable, "-m", module, "--json", "--until-stdin-closes", "--pulses=1", *flags],
+        stdin=subprocess.PIPE,
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+    ) as process:
+        assert process.stdout is not None
+        assert process.stderr is not None
+        addresses = json.loads(process.stdout.readline())
+        clients = [PlainClient(addresses[name]) for name in ("generator", "oscilloscope")]
+        generator, oscilloscope = clients
+        no_error = '0,"No error"'
+        # What comes in one piece is followed in one go: with the answer to the first message
+        # the second one has begun.
+        if busy == "waits":
+            generator.write(":PULS:PER 100;WIDT 60;:OUTP ON")
+            assert generator.ask(":INIT;*TRG;:SYST:ERR?\n*OPC?") == no_error
+        else:
+            generator.write(":PULS:PER 1E-6;WIDT 5E-7;COUN 1E9;:OUTP ON;*WAI")
+            assert generator.ask(":INIT;*TRG;:SYST:ERR?") == no_error
+            setting = ":SWE:TINT 0.1;POIN 10000;:TRIG:SOUR IMM"
+            assert oscilloscope.ask(f"{setting};:INIT;:SYST:ERR?\n*OPC?") == no_error
+        end_by(process, way)
+        try:
+            assert process.wait(10) == 0
+        finally:
+            process.kill()
+        assert process.stderr.read() == ""
+        for client in clients:
+            client.close()
