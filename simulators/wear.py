@@ -83,8 +83,13 @@ class Fatigue:
 
     def recovered(self, cycles: float) -> float:
         """Return the number of cycles that tells the wear after one strong preset."""
-        loss = (1 - self.recovered_share) * (1 - self.kept(cycles))
-        return cycles if loss >= 1 else self.cycles_at(1 - loss)
+        # Not by way of what is kept: of a small loss, that leaves nothing.
+        loss = (self.recovered_share - 1) * math.expm1(
+            -((cycles / self.scale_cycles) ** self.exponent)
+        )
+        if loss >= 1:
+            return cycles
+        return float(self.scale_cycles * (-math.log1p(-loss)) ** (1 / self.exponent))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

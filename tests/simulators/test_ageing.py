@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from pulsetally.simulators.ageing import Traps
+from pulsetally.simulators.ageing import Traps, worn_after
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.table import Table
@@ -116,6 +116,38 @@ def test_a_strong_preset_brings_back_its_share() -> None:
     table.rest_at(-8.0)
     table.advance(1e-3)
     assert 0.25 - table.remanent_polarization == pytest.approx(0.25 * (0.25 - worn), rel=1e-6)
+
+
+# Fatigue, wear before, pairs. One by one is the reference.
+WEARING = [
+    (Fatigue(scale_cycles=1e5, recovered_share=1e-6), 0.0, 30_000),
+    (Fatigue(scale_cycles=400.0, recovered_share=0.01), 0.0, 20),
+    (Fatigue(scale_cycles=400.0, recovered_share=0.01), 0.0, 20_000),
+    (Fatigue(scale_cycles=1e4, recovered_share=0.5), 1e6, 2000),
+    (Fatigue(scale_cycles=100.0, recovered_share=1e-3), 1e7, 30_000),
+    (Fatigue(scale_cycles=1e4, exponent=2.0, recovered_share=1e-3), 0.0, 30_000),
+]
+
+
+@pytest.mark.parametrize(("fatigue", "worn_cycles", "pairs"), WEARING)
+def test_wear_and_recovery_at_once_are_as_good_as_in_turn(
+    fatigue: Fatigue, worn_cycles: float, pairs: int
+) -> None:
+    expected = worn_cycles
+    for _ in range(pairs):
+        expected = fatigue.recovered(expected + 0.25) + 0.25
+    assert worn_after(fatigue, worn_cycles, 0.5, pairs) == pytest.approx(expected, rel=1e-4)
+
+
+# A: of a loss in proportion to the cycles, N/scale, each pair adds 1 and takes share N away:
+# (1 - exp(-share pairs))/share, where a pair is a small part of that.
+@pytest.mark.parametrize("pairs", [10**6, 10**9, 10**10, 10**12])
+def test_wear_goes_on_however_often_a_cell_recovers(pairs: int) -> None:
+    fatigue = Fatigue(scale_cycles=1e14, exponent=1.0, recovered_share=1e-9, recovery_volts=4.0)
+    expected = -math.expm1(-1e-9 * pairs) * 1e9
+    assert worn_after(fatigue, 0.0, 1.0, pairs) == pytest.approx(expected, rel=1e-4)
+    none = replace(fatigue, recovered_share=0.0)
+    assert worn_after(none, 0.0, 1.0, pairs) == pairs
 
 
 # A: P_0 (1 - 0.02 log10(t/1 s)); 1 s to 10 years, printed to six digits.

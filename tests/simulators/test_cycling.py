@@ -103,6 +103,15 @@ def test_a_thousand_million_pairs_take_no_time() -> None:
     assert table.polarization == pytest.approx(expected, rel=1e-3)
 
 
+# A: exp(-(1e8/1e9)^0.3); presets that bring nothing back change nothing.
+def test_wear_goes_on_through_a_hundred_million_recoveries_of_nothing() -> None:
+    fatigue = Fatigue(scale_cycles=1e9, recovered_share=0.0, recovery_volts=4.0)
+    table = connected(CellDescription(regions=8, fatigue=fatigue), FAST)
+    table.cycle(train(-8.0), train(8.0), pairs=10**8)
+    expected = 0.25 * math.exp(-(0.1**0.3))
+    assert table.remanent_polarization == pytest.approx(expected, rel=1e-5)
+
+
 def test_a_cell_breaks_down_on_its_way() -> None:
     breakdown = Breakdown(scale_cycles=1e6, shape=3.0, short_ohms=50.0)
     table = connected(CellDescription(breakdown=breakdown, regions=8), FAST, seed=4)

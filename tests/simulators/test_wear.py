@@ -31,6 +31,12 @@ def test_recovery_brings_back_its_share_of_the_loss() -> None:
     assert Fatigue().recovered(1e9) == pytest.approx(1e9, rel=1e-12)
 
 
+# A: a loss of (N/scale)^3 = 1e-27 is in proportion to the cube; half of it is 0.5^(1/3) N.
+def test_a_loss_too_small_to_be_seen_in_what_is_kept_recovers_too() -> None:
+    fatigue = Fatigue(scale_cycles=1e9, exponent=3.0, recovered_share=0.5, recovery_volts=6.0)
+    assert fatigue.recovered(1.0) == pytest.approx(0.793701, abs=5e-7)
+
+
 # A: 1 - 0.02 log10(t/1 s); 1 s to 10 years (3.15576e8 s), printed to six digits.
 def test_retention_loses_a_share_in_each_decade() -> None:
     retention = Retention(loss_per_decade=0.02, onset_seconds=1.0)
