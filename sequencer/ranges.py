@@ -2,6 +2,8 @@
 
 import math
 from collections.abc import Mapping
+from decimal import Decimal
+from fractions import Fraction
 
 from pulsetally.sequencer.models import kind_of
 from pulsetally.sequencer.quantities import (
@@ -87,8 +89,7 @@ def _range(name: str, written: Mapping[str, object], kind: Kind) -> list[float]:
     if word == "points":
         if count < 2:
             raise RangeFault(word, "a range has two ends", "write 2 points or more")
-        # The ends are exact, and neighbours don't gather rounding errors.
-        return [begin + (end - begin) * step / (count - 1) for step in range(count - 1)] + [end]
+        return _even(begin, end, count)
     # Not their product, which may be too small to tell from 0.
     if min(begin, end) <= 0 <= max(begin, end):
         raise RangeFault(
@@ -102,7 +103,30 @@ def _range(name: str, written: Mapping[str, object], kind: Kind) -> list[float]:
     steps = max(1, round(decades * count))
     if steps >= MOST_VALUES:
         raise RangeFault(word, f"that are {steps} values", "ask for fewer per decade")
+    if end == _decades_away(begin, whole := round(math.log10(end / begin))):
+        return _by_decade(begin, whole, count)
     return [begin * (end / begin) ** (step / steps) for step in range(steps)] + [end]
+
+
+def _even(begin: float, end: float, points: int) -> list[float]:
+    """Return evenly spaced values, each as a decimal has it: 0.3, and not 0.3 and a bit."""
+    first, last = (Fraction(repr(each)) for each in (begin, end))
+    return [float(first + (last - first) * step / (points - 1)) for step in range(points)]
+
+
+def _decades_away(value: float, decades: int) -> float:
+    # In decimal, so that ten times 2 is 20 even where powers of ten are no exact floats.
+    return float(Decimal(repr(value)).scaleb(decades))
+
+
+def _by_decade(begin: float, decades: int, count: int) -> list[float]:
+    """Return count values a decade over whole decades, exact at each of them."""
+    way = 1 if decades > 0 else -1
+    values = []
+    for step in range(abs(decades) * count + 1):
+        whole, rest = divmod(step, count)
+        values.append(_decades_away(begin, way * whole) * 10 ** (way * rest / count))
+    return values
 
 
 def _whole(written: object, place: str) -> int:

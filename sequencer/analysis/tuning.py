@@ -212,6 +212,10 @@ class Tuning:
         return math.log(value) if self._logarithmic else value
 
     def _value(self, position: float) -> float:
+        for end in (self._low, self._high):
+            # exp(log(end)) may be a little off, and an end is tried as it was written.
+            if position == self._position(end):
+                return end
         value = math.exp(position) if self._logarithmic else position
         return min(max(value, self._low), self._high)
 

@@ -9,6 +9,8 @@ from hypothesis import strategies as st
 from pulsetally.sequencer.bench import Bench, CellVoltsUnreachable, parse_bench
 from pulsetally.sequencer.errors import PlanError
 from pulsetally.sequencer.plan import Plan, make_plan
+from pulsetally.sequencer.quantities import NUMBER
+from pulsetally.sequencer.ranges import axis_values
 from pulsetally.sequencer.recipe import parse_recipe
 from pulsetally.sequencer.records import (
     POINTS,
@@ -72,6 +74,28 @@ def test_a_range_may_go_down() -> None:
         "hold",
     )
     assert [hold for (hold,) in found] == pytest.approx([100, 10, 1])
+
+
+@pytest.mark.parametrize(
+    ("written", "values"),
+    [
+        # In decimal, as a person writes them.
+        ({"from": 1, "to": 1000, "per decade": 1}, [1, 10, 100, 1000]),
+        ({"from": 20000, "to": 2, "per decade": 1}, [20000, 2000, 200, 20, 2]),
+        ({"from": 0.3, "to": 300, "per decade": 1}, [0.3, 3, 30, 300]),
+        ({"from": 0.1, "to": 0.7, "points": 7}, [0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7]),
+    ],
+)
+def test_whole_decades_and_points_of_a_range_are_exact(
+    written: dict[str, float], values: list[float]
+) -> None:
+    assert axis_values("n", written, NUMBER) == values
+
+
+def test_every_whole_decade_within_a_finer_range_is_exact() -> None:
+    found = axis_values("n", {"from": 7, "to": 7e6, "per decade": 3}, NUMBER)
+    assert found[::3] == [7 * 10**decade for decade in range(7)]
+    assert found == pytest.approx([7 * 10 ** (step / 3) for step in range(19)], rel=1e-14)
 
 
 def test_axes_that_move_together_form_no_grid() -> None:

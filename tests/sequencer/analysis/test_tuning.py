@@ -176,3 +176,11 @@ def test_what_cannot_be_is_named() -> None:
         tuning.add(1.0, 9.0, too_many=True)
     with pytest.raises(ValueError, match=r"count is nan"):
         tuning.add(1.0, math.nan)
+
+
+@pytest.mark.parametrize(("low", "high"), [(60e-6, 200e-6), (1e-6, 1e-3), (3.0, 7.0), (0.1, 0.7)])
+def test_the_ends_are_tried_exactly_as_written(low: float, high: float) -> None:
+    tuning = Tuning(low, high, 9, 0.5, MOST_ROUNDS, logarithmic=True)
+    first = tuning.next_value()
+    tuning.add(low, 20.0)
+    assert (first, tuning.next_value()) == (low, high)
