@@ -86,6 +86,9 @@ class Unfolding:
         self._actions = self._turns = 0
         self._made: dict[int, tuple[Settings, Action]] = {}
         self._changed = False
+        # What is swept or tuned at the step that is looked at, and anywhere, of parameters.
+        self._inside: list[str] = []
+        self._elsewhere = {*_swept(recipe.model.steps)}.intersection(recipe.model.parameters)
         self._settings: Settings = {}
         self._names: dict[str, Name] = {}
         self.problems: dict[str, None] = {}
@@ -113,7 +116,7 @@ class Unfolding:
                 finished.append(
                     Round(
                         number=len(finished) + 1,
-                        settings=self._all(first.settings),
+                        settings=first.settings,
                         actions=tuple(each.action for each in pending),
                         cycling=first.cycling,
                         tune=first.tune,
@@ -211,16 +214,21 @@ class Unfolding:
                         self._turn()
                         yield from self._walk(step.steps, settings, cycling)
                 case SweepStep():
+                    if not self._enter([*step.sweep]):
+                        continue
                     for changed in self._combinations(step, settings):
                         self._turn()
                         yield from self._walk(step.steps, changed, cycling)
+                    del self._inside[-len(step.sweep) :]
                 case TuneStep():
                     if cycling is not None:
                         self._problem(
                             "a tune stands inside a cycle", "tune before or after cycling"
                         )
                         return
-                    yield from self._tune(step, settings)
+                    if self._enter([step.tune]):
+                        yield from self._tune(step, settings)
+                        del self._inside[-1:]
                 case CycleStep():
                     if cycling is not None:
                         self._problem("a cycle stands inside a cycle", "write one after the other")
@@ -232,7 +240,19 @@ class Unfolding:
                     if made is None or made[0] is not settings:
                         made = settings, self._action(step, settings)
                         self._made[id(step)] = made
-                    yield _Part(action=made[1], settings=settings, cycling=cycling)
+                    yield _Part(action=made[1], settings=self._all(settings), cycling=cycling)
+
+    def _enter(self, names: list[str]) -> bool:
+        """Note that these are swept or tuned from here on; say whether they may be."""
+        for name in names:
+            if name in self._inside:
+                self._problem(
+                    f"{name!r} is swept inside a sweep or tune of itself, which would change nothing",
+                    "sweep it once",
+                )
+                return False
+        self._inside += names
+        return True
 
     def _combinations(self, step: SweepStep, settings: Settings) -> Iterator[Settings]:
         names = list(step.sweep)
@@ -257,10 +277,17 @@ class Unfolding:
         low, high = self._axis(step.tune, step.between)
         self.swept[step.tune] = None
 
+        inside = tuple(self._inside)
+
         def actions(value: float) -> tuple[tuple[Action, ...], Settings]:
             changed = settings | {step.tune: value}
-            parts = tuple(self._action(each, changed) for each in step.steps)
-            return parts, self._all(changed)
+            # Called again when the round's turn has come, long after this walk.
+            before, self._inside = self._inside, [*inside]
+            try:
+                parts = tuple(self._action(each, changed) for each in step.steps)
+                return parts, self._all(changed)
+            finally:
+                self._inside = before
 
         if not self._tunable(step.steps):
             return
@@ -289,7 +316,7 @@ class Unfolding:
             for place, action in enumerate(lowest):
                 yield _Part(
                     action=action,
-                    settings=settings | {step.tune: low},
+                    settings=self._all(settings | {step.tune: low}),
                     tune=tune,
                     begins=place == 0,
                 )
@@ -350,7 +377,7 @@ class Unfolding:
         for stop_at in pauses_of(step, pairs):
             yield _Part(
                 action=Cycle(down=down, up=up, pairs=stop_at - done, done=done),
-                settings=settings | {"cycles": float(done)},
+                settings=self._all(settings | {"cycles": float(done)}),
                 cycling=cycling,
                 begins=True,
             )
@@ -463,14 +490,25 @@ class Unfolding:
 
     def _train(self, step: StepStep | ReadStep, settings: Settings) -> int:
         if step.capture == "each":
+            if "train_of" in step.model_fields_set:
+                self._problem(
+                    "'train of' stands at a step or read that captures each pulse by itself",
+                    "add 'capture: train', or leave it out",
+                )
             return 1
         return self._whole("train of", step.train_of, settings, least=1)
 
     # Values.
 
     def _all(self, settings: Settings) -> Settings:
-        """Return settings with those that are declared as parameters resolved."""
-        return {key: settings[name.word] for key, name in self._names.items()} | settings
+        """Return settings with those that are declared as parameters resolved.
+
+        A parameter that is swept somewhere else is not among them: its value as declared means
+        nothing here, and would be taken for one of the sweep's.
+        """
+        absent = self._elsewhere.difference(self._inside)
+        kept = {name: value for name, value in settings.items() if name not in absent}
+        return {key: settings[name.word] for key, name in self._names.items()} | kept
 
     def _value(self, value: float | Name, settings: Settings) -> float:
         return settings[value.word] if isinstance(value, Name) else value
@@ -552,6 +590,15 @@ def _written(written: object) -> float:
     if kind is None:
         raise ValueError(f"{written!r} passed as a quantity")
     return parse_quantity(written, kind)
+
+
+def _swept(steps: list[Any]) -> Iterator[str]:
+    for step in steps:
+        if isinstance(step, SweepStep):
+            yield from step.sweep
+        if isinstance(step, TuneStep):
+            yield step.tune
+        yield from _swept(getattr(step, "steps", []))
 
 
 def _verbs(steps: list[Any]) -> Iterator[type[Model]]:
