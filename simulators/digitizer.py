@@ -10,7 +10,7 @@ errors of SCPI-99.
 import math
 from collections import deque
 from collections.abc import Callable
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from typing import NamedTuple
 
 import numpy as np
@@ -65,7 +65,7 @@ class Digitizer:
     """The oscilloscope of the simulated bench; it observes the table.
 
     imperfections: what it can do and how wrong it is. seed: of what is random in that.
-    power_on: the settings it starts with and is reset to.
+    power_on: the settings it starts with and is reset to, as near as it can have them.
     changed: called when something changed by itself, also for a moment, as time passed.
     ignores_trigger: asked at each trigger that would be taken; when so nothing happens.
     """
@@ -80,15 +80,15 @@ class Digitizer:
         seed: int = 1,
     ) -> None:
         self.imperfections = imperfections or DigitizerImperfections()
-        power_on = replace(power_on, digitizer=self.imperfections)
-        self._clock, self._converter, self._power_on = clock, converter, power_on
+        self._clock, self._converter = clock, converter
+        self.power_on = power_on.within(self.imperfections)
         self.changed: Callable[[], None] = lambda: None
         self.ignores_trigger: Callable[[], bool] = lambda: False
         self._random = np.random.default_rng(seed)
         # A stream of its own: the noise is the same with and without jitter.
         self._jitter = np.random.default_rng((seed, 3))
         self._lagging_volts: _Floats | None = None
-        self.settings = power_on
+        self.settings = self.power_on
         self._acquisition: _Acquisition | None = None
         self._record: Record | None = None
         self._seen_seconds = clock.now
@@ -127,7 +127,7 @@ class Digitizer:
     def reset(self) -> None:
         """Forget the record and go back to the settings after power-on."""
         self._acquisition = self._record = None
-        self.settings = self._power_on
+        self.settings = self.power_on
 
     def trigger(self) -> None:
         """Trigger by command; -211 unless armed with the command as source."""

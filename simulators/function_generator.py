@@ -16,8 +16,6 @@ SETTLING = 2
 SWEEPING = 8
 WAITING_FOR_TRIGGER = 32
 
-POWER_ON = PulseSettings()
-
 
 def load(infinity: str) -> Number:
     """Return the parameter for a load in ohms; infinity: the word for an open circuit."""
@@ -34,23 +32,23 @@ class FunctionGenerator(ScpiDevice):
     def __init__(self, identity: str, model: GeneratorModel, manner: Manner) -> None:
         super().__init__(identity, manner)
         self.model = model
-        source = model.source
+        source, initial = model.source, model.power_on
         self.width_parameter = number(
             source.shortest_width_seconds,
             source.longest_width_seconds,
-            POWER_ON.width_seconds,
+            initial.width_seconds,
             unit="S",
         )
         self.period_parameter = number(
             source.shortest_period_seconds,
             source.longest_period_seconds,
-            POWER_ON.period_seconds,
+            initial.period_seconds,
             unit="S",
         )
         self.edge_parameter = number(
             source.shortest_edge_seconds,
             source.longest_edge_seconds,
-            POWER_ON.leading_seconds,
+            initial.leading_seconds,
             unit="S",
         )
         model.changed = self.refresh
@@ -98,7 +96,8 @@ class FunctionGenerator(ScpiDevice):
 
     def count_parameter(self, most: int) -> Number:
         """Return the parameter for the pulses of a burst; most: what the family accepts."""
-        return number(1, min(most, self.model.source.most_pulses), POWER_ON.count, whole=True)
+        most = min(most, self.model.source.most_pulses)
+        return number(1, most, self.model.power_on.count, whole=True)
 
     def level(self, default_emf_volts: float) -> Number:
         """Return the parameter for one level on the panel."""

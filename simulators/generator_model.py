@@ -144,8 +144,21 @@ class GeneratorModel:
 
     @property
     def power_on(self) -> PulseSettings:
-        """The settings that it starts with and is reset to."""
-        return PulseSettings(source=self.source)
+        """The settings that it starts with and is reset to, as near as it can have them."""
+        source, usual = self.source, PulseSettings()
+        edge_seconds, width_seconds, period_seconds = source.pulse_near(
+            usual.leading_seconds, usual.width_seconds, usual.period_seconds
+        )
+        # With few bits the usual level may be one of the converter's last, or its 0 V.
+        highest_volts = source.coded_volts(source.span_volts)
+        return PulseSettings(
+            source=source,
+            high_emf_volts=max(source.volts_per_code, min(HIGH_AT_POWER_ON, highest_volts)),
+            width_seconds=width_seconds,
+            period_seconds=period_seconds,
+            leading_seconds=edge_seconds,
+            trailing_seconds=edge_seconds,
+        )
 
     # What it is doing.
 

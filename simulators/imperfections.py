@@ -7,6 +7,8 @@ size that data sheets of bench instruments state (common practice).
 import math
 from dataclasses import dataclass
 
+from pulsetally.simulators.drive import RAMP_SHARE
+
 # What is sent for a sample has room for this many bits in the widest of the languages.
 MOST_BITS = 16
 
@@ -24,6 +26,7 @@ class SourceImperfections:
     relay_seconds: from the command to close the output until it is closed.
     trigger_delay_seconds: from the trigger to the begin of the burst.
     trigger_jitter_seconds: standard deviation of that delay; it never becomes negative.
+    Raises ValueError for a number out of its range, and where no pulse has room.
     """
 
     bits: int = 14
@@ -53,10 +56,55 @@ class SourceImperfections:
             _check(shortest, getattr(self, shortest), " s", 1e-12, 1.0)
             longest = f"longest_{name}_seconds"
             _check(longest, getattr(self, longest), " s", getattr(self, shortest), 1e6)
+        self._check_room()
         _check("most_pulses", self.most_pulses, "", 1, 10**15)
         _check("relay_seconds", self.relay_seconds, " s", 0.0, 10.0)
         for name in ("trigger_delay_seconds", "trigger_jitter_seconds"):
             _check(name, getattr(self, name), " s", 0.0, 1.0)
+
+    def _check_room(self) -> None:
+        _, width_seconds, period_seconds = self.shortest_pulse()
+        for name, needed in (("width", width_seconds), ("period", period_seconds)):
+            longest = f"longest_{name}_seconds"
+            if needed > getattr(self, longest) * (1 + 1e-9):
+                raise ValueError(
+                    f"{longest} is {getattr(self, longest):g} s; the shortest pulse, of "
+                    "shortest_edge_seconds and shortest_width_seconds in whole time_step_seconds, "
+                    f"needs {needed:g} s"
+                )
+
+    def shortest_pulse(self) -> tuple[float, float, float]:
+        """Return the edges, the width and the period of the shortest pulse accepted, s."""
+        return self.pulse_near(0.0, 0.0, 0.0)
+
+    def pulse_near(
+        self, edge_seconds: float, width_seconds: float, period_seconds: float
+    ) -> tuple[float, float, float]:
+        """Return edges, width and period of the nearest pulse that is accepted, s.
+
+        Both edges are alike. Where the three have no room together, the period goes before the
+        width, and the width before the edges.
+        """
+        longest_period_seconds = self._stepped_down(self.longest_period_seconds)
+        # At its shortest, a pulse is as wide as one ramp and lasts two.
+        ramp_room = min(
+            self._stepped_down(min(self.longest_width_seconds, longest_period_seconds / 2)),
+            longest_period_seconds - self._stepped_up(self.shortest_width_seconds),
+        )
+        edge_room = ramp_room * RAMP_SHARE
+        edge_seconds = min(edge_seconds, self.longest_edge_seconds, edge_room)
+        edge_seconds = max(edge_seconds, self.shortest_edge_seconds)
+        ramp_seconds = edge_seconds / RAMP_SHARE
+        width_room = min(self.longest_width_seconds, longest_period_seconds - ramp_seconds)
+        width_seconds = max(
+            self._stepped_down(min(width_seconds, width_room)),
+            self._stepped_up(max(self.shortest_width_seconds, ramp_seconds)),
+        )
+        period_seconds = max(
+            self._stepped_down(min(period_seconds, longest_period_seconds)),
+            self._stepped_up(max(self.shortest_period_seconds, width_seconds + ramp_seconds)),
+        )
+        return edge_seconds, width_seconds, period_seconds
 
     @property
     def volts_per_code(self) -> float:
@@ -83,6 +131,20 @@ class SourceImperfections:
             return round(seconds * whole) / whole
         return round(seconds / self.time_step_seconds) * self.time_step_seconds
 
+    def _stepped_down(self, seconds: float) -> float:
+        stepped = self.stepped(seconds)
+        over = stepped - seconds > self._grace_seconds(seconds)
+        return self.stepped(stepped - self.time_step_seconds) if over else stepped
+
+    def _stepped_up(self, seconds: float) -> float:
+        stepped = self.stepped(seconds)
+        under = seconds - stepped > self._grace_seconds(seconds)
+        return self.stepped(stepped + self.time_step_seconds) if under else stepped
+
+    def _grace_seconds(self, seconds: float) -> float:
+        """Return by how much a time may miss a whole step because of rounding, s."""
+        return max(1e-3 * min(self.time_step_seconds, seconds), 4 * math.ulp(seconds))
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class DigitizerImperfections:
@@ -98,7 +160,8 @@ class DigitizerImperfections:
     trigger_jitter_seconds: standard deviation of where a record says its trigger was.
     longest_record_points: most samples of a record.
     shortest_interval_seconds, longest_interval_seconds: from sample to sample.
-    smallest_range_volts, largest_range_volts: peak to peak. largest_offset_volts: of the
+    smallest_range_volts, largest_range_volts: peak to peak. Of both, and of the intervals, there
+    are the 1-2-5 steps within (of volts per division, for ranges). largest_offset_volts: of the
     middle of the screen, either sign.
     """
 

@@ -33,7 +33,7 @@ class Oscilloscope(ScpiDevice):
         self.model = model
         digitizer = model.imperfections
         self.points_parameter = number(
-            FEWEST_POINTS, digitizer.longest_record_points, ScopeSettings().points, whole=True
+            FEWEST_POINTS, digitizer.longest_record_points, model.power_on.points, whole=True
         )
         self.volts_parameter = number(
             -digitizer.largest_offset_volts, digitizer.largest_offset_volts, 0.0, unit="V"

@@ -1,7 +1,7 @@
 """What an oscilloscope can be set to, what it is doing, and the record it makes."""
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from enum import Enum, auto
 
 import numpy as np
@@ -11,6 +11,7 @@ from pulsetally.simulators.imperfections import DigitizerImperfections
 
 CHANNELS = 2
 DIVISIONS = 8
+TIME_DIVISIONS = 10
 
 LARGEST_DELAY_SECONDS = 1e4
 FEWEST_POINTS = 10
@@ -107,6 +108,20 @@ class ScopeSettings:
         intervals = self.possible_delay_seconds / self.sample_seconds
         return round(self.reference * (self.record_points - 1) - intervals)
 
+    def within(self, digitizer: DigitizerImperfections) -> "ScopeSettings":
+        """Return the nearest settings that an oscilloscope can have."""
+        interval, span_seconds = interval_limits(digitizer), self.span_seconds
+        if span_seconds is not None:
+            span_seconds = TIME_DIVISIONS * _clipped(span_seconds / TIME_DIVISIONS, interval)
+        return replace(
+            self,
+            digitizer=digitizer,
+            range_volts=tuple(_clipped(v, range_limits(digitizer)) for v in self.range_volts),
+            points=min(self.points, digitizer.longest_record_points),
+            interval_seconds=_clipped(self.interval_seconds, interval),
+            span_seconds=span_seconds,
+        )
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Record:
@@ -143,3 +158,33 @@ def next_step(value: float) -> float:
         if value <= candidate * (1 + 1e-9):
             return candidate
     return float(f"2e{exponent + 1}")
+
+
+def last_step(value: float) -> float:
+    """Return the largest 1-2-5 step that is not above a positive value."""
+    exponent = math.floor(math.log10(value))
+    for step in (10, 5, 2):
+        candidate = float(f"{step}e{exponent}")
+        if candidate <= value * (1 + 1e-9):
+            return candidate
+    return float(f"1e{exponent}")
+
+
+def range_limits(digitizer: DigitizerImperfections) -> tuple[float, float]:
+    """Return the smallest and the largest range that has a step, V peak to peak."""
+    return (
+        DIVISIONS * next_step(digitizer.smallest_range_volts / DIVISIONS),
+        DIVISIONS * last_step(digitizer.largest_range_volts / DIVISIONS),
+    )
+
+
+def interval_limits(digitizer: DigitizerImperfections) -> tuple[float, float]:
+    """Return the shortest and the longest interval that is a step, s; per division, too."""
+    return (
+        next_step(digitizer.shortest_interval_seconds),
+        last_step(digitizer.longest_interval_seconds),
+    )
+
+
+def _clipped(value: float, limits: tuple[float, float]) -> float:
+    return max(limits[0], min(value, limits[1]))

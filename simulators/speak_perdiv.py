@@ -6,23 +6,19 @@ The oscilloscope has 8 bits and a screen of 8 by 10 divisions.
 import numpy as np
 
 from pulsetally.simulators.digitizer import Digitizer
-from pulsetally.simulators.function_generator import (
-    POWER_ON,
-    FunctionGenerator,
-    load,
-)
-from pulsetally.simulators.generator_model import (
-    FireSource,
-    GeneratorModel,
-)
+from pulsetally.simulators.function_generator import FunctionGenerator, load
+from pulsetally.simulators.generator_model import FireSource, GeneratorModel
 from pulsetally.simulators.oscilloscope import DELAY, Oscilloscope
 from pulsetally.simulators.scope_settings import (
     DIVISIONS,
+    TIME_DIVISIONS,
     Converter,
     ScopeSettings,
     ScopeState,
     TriggerInput,
+    interval_limits,
     next_step,
+    range_limits,
 )
 from pulsetally.simulators.scpi_blocks import definite_block
 from pulsetally.simulators.scpi_device import Answer, Call, Command, Manner, ScpiDevice
@@ -39,7 +35,6 @@ from pulsetally.simulators.scpi_rows import (
     whole,
 )
 
-TIME_DIVISIONS = 10
 CONVERTER = Converter(bits=8, noise_codes=0.5)
 # Of one burst.
 MOST_PULSES = 10**12
@@ -100,8 +95,8 @@ class PerdivGenerator(FunctionGenerator):
 
     def _source_commands(self) -> list[Command]:
         source = ":SOURce<1>"
-        origin = self.model.source
-        high, low = POWER_ON.high_volts, POWER_ON.low_volts
+        origin, initial = self.model.source, self.model.power_on
+        high, low = initial.high_volts, initial.low_volts
         amplitude = Number(
             limits=lambda: self.level_limits(
                 origin.volts_per_code, 2 * origin.span_volts, high - low
@@ -112,7 +107,7 @@ class PerdivGenerator(FunctionGenerator):
         frequency = number(
             1 / origin.longest_period_seconds,
             1 / origin.shortest_period_seconds,
-            1 / POWER_ON.period_seconds,
+            1 / initial.period_seconds,
             unit="HZ",
         )
         pulse = f"{source}:FUNCtion:PULSe"
@@ -205,18 +200,13 @@ class PerdivOscilloscope(Oscilloscope):
         self._channel, self._binary = 0, True
 
     def _screen_commands(self) -> list[Command]:
-        digitizer = self.model.imperfections
+        digitizer, initial = self.model.imperfections, self.model.power_on
+        smallest, largest = range_limits(digitizer)
         volts_per_division = number(
-            digitizer.smallest_range_volts / DIVISIONS,
-            digitizer.largest_range_volts / DIVISIONS,
-            SCOPE_POWER_ON.range_volts[0] / DIVISIONS,
-            unit="V",
+            smallest / DIVISIONS, largest / DIVISIONS, initial.range_volts[0] / DIVISIONS, unit="V"
         )
         seconds_per_division = number(
-            digitizer.shortest_interval_seconds,
-            digitizer.longest_interval_seconds,
-            (SCOPE_POWER_ON.span_seconds or 0.0) / TIME_DIVISIONS,
-            unit="S",
+            *interval_limits(digitizer), (initial.span_seconds or 0.0) / TIME_DIVISIONS, unit="S"
         )
         return [
             channel_quantity(

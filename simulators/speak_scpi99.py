@@ -4,17 +4,15 @@ SCPI-99 has no node OUTPut:LOAD; it is here because bench generators have it.
 """
 
 from pulsetally.simulators.digitizer import Digitizer
-from pulsetally.simulators.function_generator import (
-    POWER_ON,
-    FunctionGenerator,
-    load,
-)
+from pulsetally.simulators.function_generator import FunctionGenerator, load
 from pulsetally.simulators.generator_model import FireSource, GeneratorModel
 from pulsetally.simulators.oscilloscope import Oscilloscope
 from pulsetally.simulators.scope_settings import (
     Converter,
     ScopeSettings,
     TriggerInput,
+    interval_limits,
+    range_limits,
 )
 from pulsetally.simulators.scpi_blocks import definite_block
 from pulsetally.simulators.scpi_device import SCPI99, Answer, Call, Command
@@ -65,7 +63,8 @@ class Scpi99Generator(FunctionGenerator):
         voltage = f"{source}:VOLTage[:LEVel][:IMMediate]"
         pulse = f"{source}:PULSe"
         edge = f"{pulse}:TRANsition"
-        high, low = self.level(POWER_ON.high_volts), self.level(POWER_ON.low_volts)
+        initial = self.model.power_on
+        high, low = self.level(initial.high_volts), self.level(initial.low_volts)
         polarities = {"NORMal": False, "INVerted": True}
         return [
             choice(
@@ -154,22 +153,11 @@ class Scpi99Oscilloscope(Oscilloscope):
         self._binary = self._big_endian = True
 
     def _input_commands(self) -> list[Command]:
-        digitizer = self.model.imperfections
-        initial = ScopeSettings()
+        digitizer, initial = self.model.imperfections, self.model.power_on
         ranges = "[:SENSe<1-2>]:VOLTage[:DC]:RANGe"
         sweep = "[:SENSe<1>]:SWEep"
-        peak_to_peak = number(
-            digitizer.smallest_range_volts,
-            digitizer.largest_range_volts,
-            initial.range_volts[0],
-            unit="V",
-        )
-        interval = number(
-            digitizer.shortest_interval_seconds,
-            digitizer.longest_interval_seconds,
-            initial.interval_seconds,
-            unit="S",
-        )
+        peak_to_peak = number(*range_limits(digitizer), initial.range_volts[0], unit="V")
+        interval = number(*interval_limits(digitizer), initial.interval_seconds, unit="S")
         share = number(0.0, 1.0, initial.reference)
         return [
             channel_quantity(f"{ranges}:PTPeak", peak_to_peak, self.set_range, self.range_volts),

@@ -7,11 +7,7 @@ byte first, and no newline follows their block.
 import math
 
 from pulsetally.simulators.digitizer import Digitizer
-from pulsetally.simulators.function_generator import (
-    POWER_ON,
-    FunctionGenerator,
-    load,
-)
+from pulsetally.simulators.function_generator import FunctionGenerator, load
 from pulsetally.simulators.generator_model import FireSource, GeneratorModel
 from pulsetally.simulators.oscilloscope import DELAY, Oscilloscope
 from pulsetally.simulators.scope_settings import (
@@ -19,6 +15,8 @@ from pulsetally.simulators.scope_settings import (
     ScopeSettings,
     ScopeState,
     TriggerInput,
+    interval_limits,
+    range_limits,
 )
 from pulsetally.simulators.scpi_blocks import definite_block
 from pulsetally.simulators.scpi_device import Answer, Call, Command, Manner, ScpiDevice
@@ -88,7 +86,8 @@ class StatewordGenerator(FunctionGenerator):
         self.declare([*self._level_commands(), *self._time_commands(), *self._burst_commands()])
 
     def _level_commands(self) -> list[Command]:
-        high, low = self.level(POWER_ON.high_volts), self.level(POWER_ON.low_volts)
+        initial = self.model.power_on
+        high, low = self.level(initial.high_volts), self.level(initial.low_volts)
 
         def write_load(ohms: float) -> str:
             return "HIZ" if math.isinf(ohms) else real(ohms)
@@ -172,18 +171,10 @@ class StatewordOscilloscope(Oscilloscope):
         self._channel = 0
 
     def _input_commands(self) -> list[Command]:
-        digitizer = self.model.imperfections
-        full_scale = number(
-            digitizer.smallest_range_volts,
-            digitizer.largest_range_volts,
-            SCOPE_POWER_ON.range_volts[0],
-            unit="V",
-        )
-        rate = number(
-            1 / digitizer.longest_interval_seconds,
-            1 / digitizer.shortest_interval_seconds,
-            1 / SCOPE_POWER_ON.interval_seconds,
-        )
+        digitizer, initial = self.model.imperfections, self.model.power_on
+        full_scale = number(*range_limits(digitizer), initial.range_volts[0], unit="V")
+        shortest, longest = interval_limits(digitizer)
+        rate = number(1 / longest, 1 / shortest, 1 / initial.interval_seconds)
         return [
             channel_quantity(
                 ":CH<1-2>:RANGE", full_scale, self.set_range, self.range_volts, write=real
