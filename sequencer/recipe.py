@@ -12,8 +12,18 @@ from pathlib import Path as FilePath
 from typing import Any
 
 from pulsetally.sequencer.errors import Mistake, RecipeError
-from pulsetally.sequencer.models import WORD, Declared, field_names, is_tag, kind_of, validate
-from pulsetally.sequencer.quantities import Kind
+from pulsetally.sequencer.models import (
+    WORD,
+    Declared,
+    Model,
+    Name,
+    field_names,
+    is_tag,
+    kind_of,
+    quantified,
+    validate,
+)
+from pulsetally.sequencer.quantities import NUMBER, Kind
 from pulsetally.sequencer.ranges import RangeFault, axis_values
 from pulsetally.sequencer.steps import (
     PULSE_KINDS,
@@ -95,12 +105,14 @@ def parse_recipe(text: str, *, file: str, overrides: Mapping[str, str] | None = 
     if isinstance(placed.data, dict) and "bench" in placed.data and "recipe" not in placed.data:
         problem, remedy = "this is a bench file, not a recipe", "name a recipe here"
         raise RecipeError([placed.mistake((), problem, remedy)])
+    hidden = _hidden(placed, overrides or {})
     mistakes = _apply_overrides(placed, overrides or {})
     declared = _declared(placed)
     mistakes += _check_parameters(placed, declared)
     model, found = validate(RecipeModel, placed, known=_known, context=declared)
     mistakes += found
-    mistakes += _check_sweeps(placed, declared, overrides or {})
+    given = dict.fromkeys(overrides or {}, "--set") | hidden
+    mistakes += _check_sweeps(placed, declared, given, _uses(model))
     if mistakes:
         raise RecipeError(sorted(mistakes, key=lambda each: (each.line, each.column)))
     return Recipe(file=file, text=text, overrides=dict(overrides or {}), model=model)
@@ -124,6 +136,33 @@ def _group(placed: PlacedData, name: str) -> dict[str, Any]:
 
 def _declared(placed: PlacedData) -> Declared:
     return Declared(tuple(_group(placed, "pulses")), _group(placed, "parameters"))
+
+
+def _hidden(placed: PlacedData, overrides: Mapping[str, str]) -> dict[str, str]:
+    """Return parameter -> option that puts a value where a pulse setting names the parameter."""
+    pulses, hidden = _group(placed, "pulses"), {}
+    for name in overrides:
+        pulse, _, setting = name.partition(".")
+        written = pulses[pulse].get(setting) if isinstance(pulses.get(pulse), dict) else None
+        if isinstance(written, str) and written in _group(placed, "parameters"):
+            hidden[written] = f"--set {name}"
+    return hidden
+
+
+def _uses(held: object) -> dict[str, Kind]:
+    """Return parameter -> kind of quantity that it is used as, one with a unit before a number."""
+    uses: dict[str, Kind] = {}
+    if isinstance(held, Model):
+        for name, field in type(held).model_fields.items():
+            value, read = getattr(held, name), quantified(field)
+            if isinstance(value, Name) and read is not None:
+                uses |= {value.word: read.kind} if read.kind.unit else {}
+            else:
+                uses |= _uses(value)
+    elif isinstance(held, list | dict):
+        for each in held.values() if isinstance(held, dict) else held:
+            uses |= _uses(each)
+    return uses
 
 
 def _apply_overrides(placed: PlacedData, overrides: Mapping[str, str]) -> list[Mistake]:
@@ -199,8 +238,12 @@ def _steps(steps: object, path: Path) -> Iterator[tuple[dict[str, Any], Path]]:
 
 
 def _check_sweeps(
-    placed: PlacedData, declared: Declared, overrides: Mapping[str, str]
+    placed: PlacedData,
+    declared: Declared,
+    given: Mapping[str, str],
+    uses: Mapping[str, Kind],
 ) -> list[Mistake]:
+    """Look at every sweep and tune. given: parameter or setting -> option that would cancel it."""
     mistakes: list[Mistake] = []
     steps = placed.data.get("steps") if isinstance(placed.data, dict) else None
     for step, path in _steps(steps, ("steps",)):
@@ -210,14 +253,15 @@ def _check_sweeps(
             for name, written in axes.items():
                 here = (*path, "sweep", name)
                 found, more = _check_axis(placed, declared, name, written, here)
-                mistakes += more + _check_override(placed, name, here, overrides)
+                mistakes += more or _check_unit(declared, name, found, placed, here, uses)
+                mistakes += _check_override(placed, name, here, given)
                 lengths.add(len(found))
             if step.get("together") in ("yes", True) and len(lengths) > 1 and 0 not in lengths:
                 problem = f"axes that move together have {_list(sorted(lengths))} values"
                 remedy = "give all of them as many values"
                 mistakes.append(placed.mistake((*path, "sweep"), problem, remedy))
         if isinstance(step.get("tune"), str) and isinstance(step.get("between"), list):
-            mistakes += _check_tune(placed, declared, step, path, overrides)
+            mistakes += _check_tune(placed, declared, step, path, given, uses)
     return mistakes
 
 
@@ -226,13 +270,38 @@ def _list(numbers: list[int]) -> str:
 
 
 def _check_override(
-    placed: PlacedData, name: str, path: Path, overrides: Mapping[str, str]
+    placed: PlacedData, name: str, path: Path, given: Mapping[str, str]
 ) -> list[Mistake]:
-    if name not in overrides:
+    if name not in given:
         return []
-    problem = f"{name!r} is swept here, so --set would change nothing"
-    remedy = "change the sweep, or leave that --set out"
-    return [placed.mistake(path, problem, remedy, at_key=True)]
+    verb = "tuned" if path[-1] == "tune" else "swept"
+    problem = f"{name!r} is {verb} here, so --set would change nothing"
+    if given[name] != "--set":
+        problem = f"{name!r} is {verb} here, and {given[name]} takes its place in a pulse"
+    remedy = f"change the {'tune' if verb == 'tuned' else 'sweep'}, or leave that --set out"
+    return [placed.mistake(path, problem, remedy, at_key=verb == "swept")]
+
+
+def _check_unit(
+    declared: Declared,
+    name: str,
+    values: list[float],
+    placed: PlacedData,
+    path: Path,
+    uses: Mapping[str, Kind],
+) -> list[Mistake]:
+    """Refuse numbers without a unit for what was declared as 0, which needs none, and is a time."""
+    kind = uses.get(name)
+    if kind is None or axis_kind(name, declared) is not NUMBER or not any(values):
+        return []
+    problem = (
+        f"{name!r} is used as {kind.name} and declared without a unit, so that these have none"
+    )
+    return [
+        placed.mistake(
+            path, problem, f"declare it as '{name}: 0 {kind.unit}', and write units here"
+        )
+    ]
 
 
 def _check_axis(
@@ -253,7 +322,8 @@ def _check_tune(
     declared: Declared,
     step: dict[str, Any],
     path: Path,
-    overrides: Mapping[str, str],
+    given: Mapping[str, str],
+    uses: Mapping[str, Kind],
 ) -> list[Mistake]:
     name = step["tune"]
     if axis_kind(name, declared) is None:
@@ -262,11 +332,9 @@ def _check_tune(
     if len(ends) == 2 and ends[0] >= ends[1]:
         problem, remedy = "the first value is not the smaller one", "write [smaller, larger]"
         mistakes.append(placed.mistake((*path, "between"), problem, remedy))
-    if name in overrides:
-        problem = f"{name!r} is tuned here, so --set would change nothing"
-        remedy = "leave that --set out"
-        mistakes.append(placed.mistake((*path, "tune"), problem, remedy))
-    return mistakes
+    if not mistakes:
+        mistakes += _check_unit(declared, name, ends, placed, (*path, "between"), uses)
+    return mistakes + _check_override(placed, name, (*path, "tune"), given)
 
 
 def _unknown_setting(

@@ -178,3 +178,48 @@ def test_a_mangled_recipe_gives_mistakes_and_nothing_else(data: st.DataObject) -
     middle = data.draw(st.text(alphabet=":-[]{}'\"&*!|>#%@ \n\tabc01", max_size=10))
     mistakes = outcome(GOOD[:begin] + middle + GOOD[end:])
     assert mistakes is None or mistakes
+
+
+@pytest.mark.parametrize(
+    ("step", "place"),
+    [
+        ("{sweep: {stored: [1, 2], wide: [1 ms, 2 ms]}", "steps[0].sweep.wide"),
+        ("{tune: wide, between: [1 ms, 2 ms], full count: 9", "steps[0].tune"),
+    ],
+)
+def test_an_override_that_takes_the_place_of_a_swept_parameter_is_refused(
+    step: str, place: str
+) -> None:
+    text = (
+        "recipe: test\nparameters: {stored: 2, wide: 1 ms}\n"
+        "pulses: {down: {level: -5 V, width: 2 ms}, up: {level: 4 V, width: wide}}\n"
+        f"steps:\n  - {step}, steps: [{{preset: down}}, {{read: up, until: 2 V, at most: 9}}]}}\n"
+    )
+    (told,) = mistakes_of(text, {"up.width": "3ms"})
+    assert told.path == place
+    assert "--set up.width takes its place" in told.problem
+    assert "leave that --set out" in told.remedy
+    parse_recipe(text, file="r.yaml", overrides={"up.edge": "3us"})
+
+
+@pytest.mark.parametrize(
+    ("step", "place"),
+    [
+        ("{sweep: {hold: [0, 3]}", "steps[0].sweep.hold"),
+        ("{sweep: {hold: {from: 1, to: 3, points: 3}}", "steps[0].sweep.hold"),
+        ("{tune: hold, between: [0, 3], full count: 9", "steps[0].between"),
+    ],
+)
+def test_numbers_without_a_unit_are_refused_for_what_is_used_as_a_time(
+    step: str, place: str
+) -> None:
+    round_ = "steps: [{preset: down}, {wait: hold}, {read: up, until: 2 V, at most: 9}]"
+    text = (
+        "recipe: test\nparameters: {hold: 0}\n"
+        "pulses: {down: {level: -5 V, width: 2 ms}, up: {level: 4 V, width: 1 ms}}\n"
+        f"steps:\n  - {step}, {round_}}}\n"
+    )
+    (told,) = mistakes_of(text)
+    assert told.path == place
+    assert "used as a time" in told.problem
+    assert "declare it as 'hold: 0 s'" in told.remedy
