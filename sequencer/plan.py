@@ -25,7 +25,9 @@ from pulsetally.sequencer.rounds import (
     Ask,
     Contact,
     Cycle,
+    Loop,
     Pulse,
+    Pund,
     Read,
     Round,
     Step,
@@ -106,6 +108,7 @@ def make_plan(recipe: Recipe, bench: Bench) -> Plan:
         warnings=(
             *_warnings(rounds, volts, bench),
             *_contact_warnings(rounds, bench),
+            *_charge_warnings(rounds, bench),
             *record_warnings(records),
         ),
     )
@@ -200,6 +203,17 @@ def _contact_warnings(rounds: tuple[Round, ...], bench: Bench) -> Iterator[str]:
             )
     if pulses and bench.model.wiring.series_diode is not None:
         yield "behind a series diode a small pulse hardly conducts, so contact can't be judged well"
+
+
+def _charge_warnings(rounds: tuple[Round, ...], bench: Bench) -> Iterator[str]:
+    kinds = {type(action) for each in rounds for action in each.actions}
+    if bench.model.wiring.series_diode is not None:
+        for kind, name in ((Pund, "the switched charge"), (Loop, "the loop")):
+            if kind in kinds:
+                yield (
+                    "behind a series diode source and node don't tell the series resistor's"
+                    f" voltage, so {name} can't be measured well"
+                )
 
 
 def _warnings(rounds: tuple[Round, ...], volts: list[PulseVolts], bench: Bench) -> Iterator[str]:

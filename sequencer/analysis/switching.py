@@ -17,6 +17,7 @@ from pulsetally.sequencer.analysis.charge import (
 )
 from pulsetally.sequencer.analysis.hysteresis import LoopResult, loop_of
 from pulsetally.sequencer.analysis.pulses import Samples
+from pulsetally.sequencer.quantities import show_quantity
 
 __all__ = [
     "ChargeMoved",
@@ -37,6 +38,10 @@ _LEAST_TAIL = 4
 # Back at rest: the node, as a share of the farthest it went; the source likewise.
 _RELAXED_SHARE = 0.02
 _BACK_SHARE = 0.1
+# What goes up comes down: both directions must agree to this share of what switched, or to so
+# many standard uncertainties of their difference.
+_AGREE_SHARE = 0.2
+_AGREE_SIGMAS = 10.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -141,7 +146,9 @@ def pund_of(p: ChargeMoved, u: ChargeMoved, n: ChargeMoved, d: ChargeMoved) -> P
     gives exactly 0: each of its charges is. A leakage current's charge is the same for both pulses
     of a pair but for the time in which the switching cell holds the node down; so U and D are
     subtracted in proportion to their volt-seconds, and leakage drops out wholly.
-    Raises SwitchingUnclear where the pulses don't go up, up, down, down.
+    Raises SwitchingUnclear where the pulses don't go up, up, down, down, and where the two
+    directions contradict each other: a diode in series or a pulse too short for one direction
+    does that, and then neither charge is what the cell switches.
     """
     for name, moved, sign in (("P", p, 1), ("U", u, 1), ("N", n, -1), ("D", d, -1)):
         if moved.volt_seconds * sign <= 0:
@@ -156,6 +163,13 @@ def pund_of(p: ChargeMoved, u: ChargeMoved, n: ChargeMoved, d: ChargeMoved) -> P
     uncertainty = math.hypot(
         p.uncertainty, up_share * u.uncertainty, n.uncertainty, down_share * d.uncertainty
     )
+    far = max(_AGREE_SIGMAS * uncertainty, _AGREE_SHARE * abs(up + down) / 2)
+    if abs(up - down) > far:
+        raise SwitchingUnclear(
+            f"up and down contradict each other: P - U is {show_quantity(up, 'C', 3)}, D - N"
+            f" {show_quantity(down, 'C', 3)}, {show_quantity(uncertainty, 'C', 2)} uncertain. A"
+            " diode in series, a clamp, or pulses too short for one direction can do that"
+        )
     return PundResult(
         switched_up=up,
         switched_down=down,

@@ -157,6 +157,16 @@ def test_a_threshold_is_compared_with_what_the_node_can_reach() -> None:
         )
 
 
+def test_what_a_diode_in_series_spoils_is_told() -> None:
+    text = shipped_bench().text
+    diode = text.replace("series diode: none", "series diode: {saturation current: 3 uA}")
+    recipe = parse_recipe(HEAD + "  - pund: up\n  - {loop: 4 V, period: 9 ms}\n", file="r.yaml")
+    told = " ".join(make_plan(recipe, parse_bench(diode, file="b.yaml")).warnings)
+    assert "so the switched charge can't be measured well" in told
+    assert "so the loop can't be measured well" in told
+    assert "behind a series diode" not in " ".join(make_plan(recipe, shipped_bench()).warnings)
+
+
 def test_what_the_driver_would_refuse_is_refused_in_the_plan() -> None:
     text = shipped_bench().text.replace("node: 6 V", "node: 4 V")
     text = text.replace("series diode: none", "series diode: {saturation current: 1e-12 A}")

@@ -36,9 +36,11 @@ class Trace:
 
 
 @cache
-def four_pulses(cell: CellDescription, *, points: int = 6000) -> list[Record]:
+def four_pulses(
+    cell: CellDescription, wiring: Wiring | None = None, *, points: int = 6000
+) -> list[Record]:
     """Preset by -5 V for 2 ms; record two such pulses up and two down, with 5 ms after each."""
-    table = Table(cell, Wiring())
+    table = Table(cell, wiring or Wiring())
     table.connect(True)
     records = []
     for level in (-5.0, 5.0, 5.0, -5.0, -5.0):

@@ -14,6 +14,7 @@ from pulsetally.sequencer.analysis.switching import (
     pund_of,
 )
 from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.circuit import Wiring
 from tests.sequencer.analysis.switching_records import (
     BEFORE,
     PROBE_FARADS,
@@ -122,6 +123,27 @@ def test_four_pulses_find_the_remanent_charge_of_the_simulated_cell(leak_ohms: f
     assert found.switched == pytest.approx(cell.switchable_coulombs, rel=0.002)
     assert abs(found.asymmetry) < 0.002 * cell.switchable_coulombs
     assert found.leakage_siemens == pytest.approx(1 / leak_ohms, abs=1e-8)
+
+
+def test_a_charge_behind_a_diode_is_unclear_where_up_and_down_contradict_each_other() -> None:
+    # The diode's own voltage counts as the series resistor's: the computed currents are wrong.
+    diode = Wiring(diode_saturation_amperes=3e-6, diode_emission=1.05)
+    with pytest.raises(
+        SwitchingUnclear, match=r"contradict each other: P - U is 4\.\d+ nC, D - N 2"
+    ):
+        pund(four_pulses(CellDescription(), diode), before=BEFORE)
+
+
+def test_up_and_down_may_differ_by_what_noise_explains() -> None:
+    def told(coulombs: float, sign: int, sure: float) -> ChargeMoved:
+        return ChargeMoved(coulombs=coulombs, volt_seconds=sign * 1e-2, uncertainty=sure)
+
+    # Invented: 1 and 2 pC switched; uncertainties of 1 pC hide that, of 0.01 pC don't.
+    charges = ((1e-12, 1), (0.0, 1), (-2e-12, -1), (0.0, -1))
+    noisy = pund_of(*(told(charge, sign, 1e-12) for charge, sign in charges))
+    assert noisy.switched == pytest.approx(1.5e-12)
+    with pytest.raises(SwitchingUnclear, match="contradict"):
+        pund_of(*(told(charge, sign, 1e-14) for charge, sign in charges))
 
 
 def test_imprint_leaves_the_switched_charge_alone() -> None:
