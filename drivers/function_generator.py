@@ -154,6 +154,11 @@ class FunctionGenerator(Instrument):
         """Trigger: send the pulses that were set up. This can't be taken back."""
         self._send(self._dialect.fire, self._channel)
 
+    @property
+    def tells_idle(self) -> bool:
+        """Say whether it can tell that no pulse is being sent."""
+        return self._dialect.idle is not None
+
     def is_idle(self) -> bool:
         """Say whether no pulse is being sent; True where the instrument can't tell."""
         idle = self._dialect.idle

@@ -46,6 +46,11 @@ _LEAST_SHARE = 0.1
 # How long one burst of a cycling lasts at most: whoever stops after the round waits for its end,
 # and whoever can't wait stops at once.
 _BURST_SECONDS = 86_400.0
+# Whether a burst has begun is looked at where it lasts so long, for half of it and no longer
+# than the second: an instrument may need a moment.
+_SEEN_SECONDS, _BEGIN_SECONDS = 0.05, 1.0
+# How much longer than it should a burst may take.
+_MARGIN_SECONDS, _MARGIN_SHARE = 5.0, 0.01
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -53,7 +58,8 @@ class Burst:
     """What one trigger sends and what is recorded of it.
 
     count: pulses. ends: whether end voltages are wanted. window: None where nothing is recorded.
-    own_period: seconds from one pulse to the next where the pulse doesn't tell.
+    own_period: seconds from one pulse to the next where the pulse doesn't tell. swings: its base
+    is one end of a swing, and no place for the cell to rest at.
     """
 
     pulse: Pulse
@@ -61,6 +67,7 @@ class Burst:
     count: int = 1
     ends: bool = True
     own_period: float | None = None
+    swings: bool = False
 
     @property
     def period(self) -> float:
@@ -102,6 +109,9 @@ class Acquisition:
         self._next_at = 0.0
         self._stop_announced = False
         self._record_seconds = 0.0
+        self._swung = False
+        # Of the present cycling or the last one: how many pairs have gone out at least and at most.
+        self.pairs_out = 0, 0
 
     def deliver(
         self,
@@ -183,9 +193,10 @@ class Acquisition:
         """Have the generator send pairs by itself, in bursts, and wait for their ends.
 
         Yields PulseArmed before each burst. A stop in the middle of one aborts it; StopRequested
-        says how many pairs may have gone out then.
+        says how many pairs may have gone out then, and pairs_out does after any error.
         """
         left, pulse = action.pairs, action.pulse
+        self.pairs_out = action.done, action.done
         most = max(1, int(min(self.generator.most_count, _BURST_SECONDS / action.period)))
         self._pause(self._next_at - self.clock.now())
         while left:
@@ -194,7 +205,12 @@ class Acquisition:
                 raise StopRequested(f"{self._stop.reason}; {sent:,} pairs have gone out")
             count = min(left, most)
             burst = Burst(
-                pulse=pulse, count=count, window=None, ends=False, own_period=action.period
+                pulse=pulse,
+                count=count,
+                window=None,
+                ends=False,
+                own_period=action.period,
+                swings=True,
             )
             yield from self._set_up(burst)
             yield PulseArmed(
@@ -207,25 +223,35 @@ class Acquisition:
             )
             if self._stop.at_once:
                 raise StopRequested(f"{self._stop.reason}; {sent:,} pairs have gone out")
+            self.pairs_out = sent, sent + count
             self.generator.fire()
             fired = self.clock.now()
             seconds = count * action.period
+            margin = _MARGIN_SECONDS + _MARGIN_SHARE * seconds
+            self._see_begin(count, seconds, sent)
             try:
-                yield from self.wait(seconds)
+                yield from self.wait(fired + seconds - self.clock.now())
+                if not self.generator.tells_idle:
+                    # It may have begun late, and nobody would know that it still goes on.
+                    yield from self.wait(margin)
             except StopRequested as error:
                 self.generator.abort()
+                # Its answer says that the generator has heard the abort too: until then it sends.
+                self.generator.output_is_on()
                 # The pair that was going on may have been cut anywhere.
                 begun = math.ceil((self.clock.now() - fired) / action.period) + 1
                 most_sent = sent + min(count, begun)
+                self.pairs_out = sent, most_sent
                 raise StopRequested(
                     f"{error}; from {sent:,} to {most_sent:,} pairs may have gone out"
                 ) from error
-            if not self._until(self.generator.is_idle, 5.0 + 0.01 * seconds, 2e-3):
+            if not self._until(self.generator.is_idle, margin, 2e-3):
                 self.generator.abort()
                 raise self._not_cycling(
-                    f"its burst of {count} pulse pairs should have taken {seconds:.6g} s and goes"
-                    " on after that",
-                    "compare its period and count with the recipe",
+                    f"its burst of {count} pulse pairs should have taken {seconds:.6g} s and is"
+                    " not over after that: it goes on, or never began",
+                    "compare its period and count with the recipe, and look whether it still waits"
+                    " for a trigger",
                 )
             if not self.generator.output_is_on():
                 raise self._not_cycling(
@@ -235,8 +261,24 @@ class Acquisition:
                 )
             left -= count
             order += 1
+            self.pairs_out = sent + count, sent + count
             yield PairsSent(round=number, done=action.pairs - left, planned=action.pairs)
         self._next_at = self.clock.now()
+
+    def _see_begin(self, count: int, seconds: float, sent: int) -> None:
+        """Raise where the generator says that it sends nothing though it was triggered."""
+        if seconds <= _SEEN_SECONDS or not self.generator.tells_idle:
+            return
+        deadline = self.clock.now() + min(seconds / 2, _BEGIN_SECONDS)
+        while self.generator.is_idle():
+            if self.clock.now() >= deadline:
+                self.generator.abort()
+                self.pairs_out = sent, sent
+                raise self._not_cycling(
+                    f"its burst of {count} pulse pairs did not start when it was triggered",
+                    "look at its front panel, and whether its dialect fires as its manual says",
+                )
+            self.clock.sleep(2e-3)
 
     def _not_cycling(self, problem: str, remedy: str) -> InstrumentError:
         return InstrumentError(self.generator.address, "", problem, remedy)
@@ -256,6 +298,12 @@ class Acquisition:
         """Switch the output off and read that back, until the next burst is set up."""
         self._ready_for = None
         self.generator.switch(on=False)
+        self._swung = False
+
+    def release(self) -> None:
+        """Switch the output off where it would hold the cell at one end of a loop or cycling."""
+        if self._swung:
+            self.switch_off()
 
     def stay_off(self) -> None:
         """Look whether the output is still off, and switch it off if somebody switched it on.
@@ -293,6 +341,7 @@ class Acquisition:
             acquisition = self._acquisition(pulse, burst.window)
             acquired = self.oscilloscope.set_acquisition(acquisition)
             self._record_seconds = acquisition.points * acquisition.sample_interval
+        self._swung = burst.swings and pulse.base != 0
         self.generator.switch(on=True)
         self.clock.sleep(self.generator.settle_seconds)
         self._ready_for = burst

@@ -154,7 +154,14 @@ class _Conductor:
             if each is None:
                 skipped += 1
                 continue
-            yield from self._attempts(each)
+            try:
+                yield from self._attempts(each)
+            except PulsetallyError as error:
+                if self._group is not None:
+                    stopped = isinstance(error, StopRequested)
+                    self._group.broken("" if stopped else f"the run failed: {error}")
+                    yield from self._group.findings()
+                raise
         yield from self._leave_group(skipped)
 
     def _leave_group(self, skipped: int) -> Generator[Event, None, int]:
@@ -199,6 +206,7 @@ class _Conductor:
         for action in each.actions:
             match action:
                 case Wait():
+                    acquisition.release()
                     yield WaitBegan(round=number, seconds=action.seconds)
                     yield from acquisition.wait(action.seconds)
                 case Preset():
@@ -291,15 +299,16 @@ class _Conductor:
             done=action.done,
             seconds=action.pairs * action.period,
         )
-        sent = action.done
-        for event in self._acquisition.cycle(action, number=each.number, order=order):
-            if isinstance(event, PairsSent):
-                event = replace(event, done=action.done + event.done, planned=planned)
-                sent = event.done
-                order += 1
-            yield event
-        if self._group is not None:
-            self._group.cycled(sent)
+        try:
+            for event in self._acquisition.cycle(action, number=each.number, order=order):
+                if isinstance(event, PairsSent):
+                    event = replace(event, done=action.done + event.done, planned=planned)
+                    order += 1
+                yield event
+        finally:
+            # Also of a cycling that was cut short it is known how many may have gone out.
+            if self._group is not None:
+                self._group.cycled(*self._acquisition.pairs_out)
         return order
 
 

@@ -15,7 +15,7 @@ from rich.table import Table
 from pulsetally.sequencer.analysis.counting import CountStatistics, full_count
 from pulsetally.sequencer.analysis.tuning import TuneStatus
 from pulsetally.sequencer.events import FindingKind
-from pulsetally.sequencer.progress import printable, show_setting
+from pulsetally.sequencer.progress import pairs_words, printable, show_setting
 from pulsetally.sequencer.quantities import show_quantity
 from pulsetally.sequencer.results import Finding, ReadResult, RoundResult, RunResult
 
@@ -299,9 +299,9 @@ def _tune_sentence(values: dict[str, Any], units: dict[str, str]) -> str:
 
 
 def _cycling_sentence(values: dict[str, Any]) -> str:
-    pairs, planned = float(values["pairs"]), float(values["planned_pairs"])
+    planned = float(values["planned_pairs"])
     return printable(
-        f"Cycling ended after {pairs:,.0f} of {planned:,.0f} pairs: {values['ended']}."
+        f"Cycling ended after {pairs_words(values)} of {planned:,.0f} pairs: {values['ended']}."
     )
 
 

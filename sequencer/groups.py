@@ -30,8 +30,11 @@ class Group(Protocol):
     def switched(self, pund: Pund, coulombs: float | None) -> None:
         """Hear a switched charge; None where it could not be told."""
 
-    def cycled(self, pairs: int) -> None:
-        """Hear how many pairs have gone out in all."""
+    def cycled(self, least: int, most: int) -> None:
+        """Hear how many pairs have gone out in all, at least and at most."""
+
+    def broken(self, why: str) -> None:
+        """Hear that the run ends in the middle of the group; why is empty after a stop."""
 
     def ends_at_lost_contact(self, why: str) -> bool:
         """Hear that the cell is open or short; say whether that ends the group and no more."""
@@ -62,7 +65,8 @@ class CyclingGroup:
     def __init__(self, cycling: Cycling) -> None:
         self._cycling = cycling
         self.reason = ""
-        self._pairs, self._lost = 0, False
+        self._least = self._most = 0
+        self._lost = False
         # By what was measured: a pause may do so with several pulses or settings.
         self._first_charges: dict[_What, float] = {}
         self._first_counts: dict[_What, float] = {}
@@ -115,9 +119,13 @@ class CyclingGroup:
         elif coulombs < least * first:
             self.reason = f"the switched charge is {coulombs / first:.0%} of the first"
 
-    def cycled(self, pairs: int) -> None:
+    def cycled(self, least: int, most: int) -> None:
         """Remember how many pairs have gone out in all."""
-        self._pairs = pairs
+        self._least, self._most = least, most
+
+    def broken(self, why: str) -> None:
+        """Remember why it ends, unless it had ended before."""
+        self.reason = self.reason or why.rstrip(".")
 
     def ends_at_lost_contact(self, why: str) -> bool:
         """Stop where the recipe says that a lost cell ends the cycling."""
@@ -129,20 +137,24 @@ class CyclingGroup:
         """Say how many pairs went out, and why not more."""
         if self._last is None:
             return
+        values: dict[str, float | str | None] = {
+            "pairs": float(self._least),
+            "planned_pairs": float(self._cycling.pairs),
+            "ended": self.reason or self._without_reason(),
+        }
+        if self._most != self._least:
+            # It was cut short where nobody could count: pairs are those that surely went out.
+            values["most_pairs"] = float(self._most)
         yield Found(
             round=self._last.number,
             kind=FindingKind.CYCLING,
             pulse="",
             settings=self._last.settings,
-            values={
-                "pairs": float(self._pairs),
-                "planned_pairs": float(self._cycling.pairs),
-                "ended": self.reason or self._without_reason(),
-            },
+            values=values,
         )
 
     def _without_reason(self) -> str:
-        sent = self._pairs >= self._cycling.pairs
+        sent = self._least >= self._cycling.pairs
         return "all pairs were sent" if sent else "the run was stopped"
 
 
@@ -185,8 +197,11 @@ class TuneGroup:
     def switched(self, pund: Pund, coulombs: float | None) -> None:
         """Take no notice: a tune measures counts."""
 
-    def cycled(self, pairs: int) -> None:
+    def cycled(self, least: int, most: int) -> None:
         """Take no notice: a tune doesn't cycle."""
+
+    def broken(self, why: str) -> None:
+        """Take no notice: what was seen so far is no result."""
 
     def ends_at_lost_contact(self, why: str) -> bool:
         """Let the run end: nothing can be tuned without a cell."""

@@ -57,9 +57,7 @@ def contact(
             expected_tau=bench.cell_tau(),
         )
     except (ContactUnclear, PulseUnreadable) as error:
-        raise ContactLost(
-            f"contact can't be judged: {error}."
-        ) from error
+        raise ContactLost(f"contact can't be judged: {error}.") from error
     yield ContactChecked(round=number, pulse=pulse.name, result=result)
     if result.verdict is not Verdict.GOOD:
         raise ContactLost(
@@ -137,7 +135,7 @@ def loop(
     The first triangle brings the cell to where the second one begins and ends.
     """
     pulse = action.pulse
-    burst = Burst(pulse=pulse, window=loop_window(pulse), ends=False)
+    burst = Burst(pulse=pulse, window=loop_window(pulse), ends=False, swings=True)
     for place in range(2):
         taken = yield from acquisition.deliver(
             burst, number=number, order=order + place, role=Role.LOOP

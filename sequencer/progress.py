@@ -211,7 +211,7 @@ class Progress:
         if event.stepped == 0 and event.first:
             if self._preset and event.reached:
                 self._pending = event
-            return f"{begin}: full after {event.count} pulses, crossing {count}"
+            return f"{begin}: full after {_many(event.count, 'pulse')}, crossing {count}"
         before = f"after {event.stepped} stepped, " if event.stepped else ""
         return f"{begin}: {before}{event.count} remaining, crossing {count}"
 
@@ -252,7 +252,7 @@ def finding_line(
             )
             return f"{begin}remanent polarization {remanent} uC/cm2, coercive {up} and {down}"
         case FindingKind.CYCLING:
-            return f"{begin}{_number(values, 'pairs'):,.0f} pairs: {values['ended']}"
+            return f"{begin}{pairs_words(values)} pairs: {values['ended']}"
         case FindingKind.TUNE:
             value = values["value"]
             if value is None:
@@ -261,6 +261,18 @@ def finding_line(
             words = f"{begin}{values['setting']} = {shown} ({values['status']})"
             count = values["count"]
             return words if count is None else f"{words}, full count {count:.2f}"
+
+
+def pairs_words(values: Mapping[str, object]) -> str:
+    """Write how many pairs went out, as a range where a cycling was cut short."""
+    least = f"{_number(values, 'pairs'):,.0f}"
+    if "most_pairs" not in values:
+        return least
+    return f"{least} to {_number(values, 'most_pairs'):,.0f}"
+
+
+def _many(count: int, thing: str) -> str:
+    return f"{count:,} {thing}" if count == 1 else f"{count:,} {thing}s"
 
 
 def _number(values: Mapping[str, object], name: str) -> float:

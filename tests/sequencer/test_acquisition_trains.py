@@ -2,13 +2,17 @@
 
 import json
 from collections.abc import Iterator
+from dataclasses import replace
+from importlib.resources import files
 from itertools import pairwise
 from pathlib import Path
 
 import pytest
 import sqlalchemy as sa
 
+from pulsetally.sequencer import engine
 from pulsetally.sequencer import logbook as tables
+from pulsetally.sequencer.bench import parse_bench
 from pulsetally.sequencer.errors import PlanError
 from pulsetally.sequencer.events import (
     CyclingBegan,
@@ -23,7 +27,9 @@ from pulsetally.sequencer.events import (
     RunState,
     ShotTaken,
     StopAsked,
+    WaitBegan,
 )
+from pulsetally.sequencer.finding_tables import finding_sentences
 from pulsetally.sequencer.logbook import Logbook
 from pulsetally.sequencer.plan import make_plan
 from pulsetally.sequencer.progress import Progress
@@ -31,6 +37,7 @@ from pulsetally.sequencer.recipe import parse_recipe
 from pulsetally.sequencer.results import run_result, run_shots
 from pulsetally.sequencer.safety import StopSwitch
 from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.imperfections import SourceImperfections
 from pulsetally.simulators.simulate import SimulationSettings
 from pulsetally.simulators.wear import Fatigue
 from tests.sequencer.running import PULSES, begin, end_of, of_kind
@@ -322,6 +329,110 @@ def aborted_burst(table: Simulated, logbook: Logbook) -> None:
     # 4 ms a pair; the exchanges take some milliseconds too.
     assert 7_500 <= sent <= most <= 7_600
     assert [row.spoiled for row in logbook.select(sa.select(tables.round_ends))] == [True]
+    (found,) = of_kind(events, Found)
+    assert found.values == {
+        "pairs": 0.0,
+        "most_pairs": float(most),
+        "planned_pairs": 900_000.0,
+        "ended": "the run was stopped",
+    }
+    assert f"after 0 to {most:,} of 900,000 pairs" in finding_sentences(run_result(logbook, 1))[0]
+
+
+def own_dialect(table: Simulated, folder: Path, *changes: tuple[str, str]) -> Simulated:
+    """Return a simulated bench whose first dialect is changed, as a file beside its bench file."""
+    text = (files("pulsetally.drivers") / "scpi99.yaml").read_text(encoding="utf-8")
+    for before, after in (("dialect: scpi99", "dialect: mine"), *changes):
+        assert before in text
+        text = text.replace(before, after)
+    (folder / "mine.yaml").write_text(text, encoding="utf-8")
+    bench = table.bench.text.replace("dialect: scpi99", "dialect: mine.yaml")
+    return replace(table, bench=parse_bench(bench, file="b.yaml", folder=folder))
+
+
+SHORT_BURSTS = "most pulses a trigger: 1e12", "most pulses a trigger: 300"
+
+
+def test_a_cycling_that_is_stopped_between_two_bursts_says_how_many_pairs_went_out(
+    table: Simulated, logbook: Logbook, tmp_path: Path
+) -> None:
+    stop = StopSwitch()
+    events = []
+    steps = "  - cycle: {down: down, up: long}\n    pairs: 1000\n"
+    before = table.truth("DELivered")
+    for event in begin(own_dialect(table, tmp_path, SHORT_BURSTS), logbook, steps, stop=stop):
+        events.append(event)
+        if isinstance(event, PairsSent):
+            stop.press("Ctrl-C")
+    assert table.truth("DELivered") - before == 300
+    (found,) = of_kind(events, Found)
+    assert found.values == {
+        "pairs": 300.0,
+        "planned_pairs": 1000.0,
+        "ended": "the run was stopped",
+    }
+
+
+@pytest.mark.parametrize("family", ["scpi99", "perdiv", "stateword"])
+def test_a_cycling_whose_trigger_is_ignored_is_not_taken_for_one_that_was_sent(
+    logbook: Logbook, family: str
+) -> None:
+    events = []
+    with simulated(SimulationSettings(family=family)) as table:
+        # A burst of 40 ms would be over before anybody looks.
+        for event in begin(table, logbook, CYCLE.replace("10, 100", "100")):
+            events.append(event)
+            if isinstance(event, PulseArmed):
+                with table.client(table.addresses.control) as client:
+                    client.ask(":FAULt:ADD TRIG,GENerator,1;:FAULt:PENDing?")
+        assert table.truth("DELivered") == 0
+    ended = end_of(events)
+    assert (ended.state, of_kind(events, PairsSent)) == (RunState.FAILED, [])
+    assert "did not start" in ended.reason or "never began" in ended.reason
+    (found,) = of_kind(events, Found)
+    assert found.values["pairs"] == 0
+    assert ended.reason.rstrip(".") in str(found.values["ended"])
+
+
+def test_a_generator_that_can_not_tell_when_it_is_done_is_given_time_for_its_last_pairs(
+    logbook: Logbook, tmp_path: Path
+) -> None:
+    idle = '  idle: {ask: ":STATus:OPERation:CONDition?", none of bits: 40}\n'
+    late = SourceImperfections(trigger_delay_seconds=20e-3)
+    with simulated(SimulationSettings(source=late)) as table:
+        mine = own_dialect(table, tmp_path, SHORT_BURSTS, (idle, ""))
+        events = list(begin(mine, logbook, "  - cycle: {down: down, up: long}\n    pairs: 700\n"))
+        # A burst that the next one's set-up cuts off loses its last pairs.
+        assert table.truth("DELivered") == 700
+    assert [each.done for each in of_kind(events, PairsSent)] == [300, 600, 700]
+
+
+WAITS_AFTER_SWINGS = [
+    "  - {loop: 5 V, period: 10 ms}\n  - wait: 100 s\n",
+    "  - cycle: {down: down, up: long}\n    pairs: 5\n  - wait: 100 s\n",
+]
+
+
+@pytest.mark.parametrize("steps", WAITS_AFTER_SWINGS)
+def test_a_wait_after_a_swing_does_not_hold_the_cell_at_its_lower_end(
+    table: Simulated, logbook: Logbook, steps: str
+) -> None:
+    outputs = []
+    for event in begin(table, logbook, steps):
+        if isinstance(event, WaitBegan):
+            outputs.append(table.truth("OUTPut"))
+    assert outputs == [0]
+
+
+def test_a_wait_at_a_base_that_was_asked_for_keeps_it(table: Simulated, logbook: Logbook) -> None:
+    recipe = PULSES.replace("up: {level: 4 V", "up: {base: 0.5 V, level: 4 V")
+    plan = make_plan(
+        parse_recipe(recipe + "  - step: up\n  - wait: 10 s\n", file="r.yaml"), table.bench
+    )
+    recorder = logbook.begin_run(plan, table.bench, mode="run")
+    for event in engine.run(plan, table.bench, recorder, StopSwitch()):
+        if isinstance(event, WaitBegan):
+            assert table.truth("TERMinal") == pytest.approx(0.5, abs=0.01)
 
 
 def test_a_stop_before_a_burst_fires_nothing(table: Simulated, logbook: Logbook) -> None:

@@ -76,7 +76,7 @@ def told_charges(charges: dict[str, list[float | None]]) -> Callable[[Group, Rou
             if isinstance(action, Pund):
                 group.switched(action, next(left[action.pulse.name]))
             if isinstance(action, Cycle):
-                group.cycled(action.done + action.pairs)
+                group.cycled(*[action.done + action.pairs] * 2)
 
     return tell
 
