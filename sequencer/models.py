@@ -32,6 +32,7 @@ from pulsetally.sequencer.quantities import (
     format_quantity,
     is_quantity,
     parse_quantity,
+    plain_quantity,
     quantity_pattern,
     show_quantity,
 )
@@ -132,20 +133,6 @@ class Declared:
     parameters: dict[str, Any] | None = None
 
 
-def _checked(
-    value: float, least: float | None, most: float | None, above: float | None, whole: bool
-) -> float:
-    if least is not None and value < least:
-        raise fault(f"{value:g} is below {least:g}", f"write {least:g} or more")
-    if above is not None and value <= above:
-        raise fault(f"{value:g} is not above {above:g}", f"write more than {above:g}")
-    if most is not None and value > most:
-        raise fault(f"{value:g} is above {most:g}", f"write {most:g} or less")
-    if whole and value != int(value):
-        raise fault(f"{value:g} is not a whole number", f"write {int(value)} or {int(value) + 1}")
-    return value
-
-
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Quantified:
     """Read a quantity of one kind, or the name of a parameter, in a model's field.
@@ -220,7 +207,21 @@ class Quantified:
             raise fault(error.problem, error.remedy) from error
 
     def _checked(self, value: float) -> float:
-        return _checked(value, self.least, self.most, self.above, self.whole)
+        # Bounds are told as a file has them: without its unit a value would be refused again.
+        shown = plain_quantity(value, self.kind)
+        if self.least is not None and value < self.least:
+            least = plain_quantity(self.least, self.kind)
+            raise fault(f"{shown} is below {least}", f"write {least} or more")
+        if self.above is not None and value <= self.above:
+            above = plain_quantity(self.above, self.kind)
+            raise fault(f"{shown} is not above {above}", f"write more than {above}")
+        if self.most is not None and value > self.most:
+            most = plain_quantity(self.most, self.kind)
+            raise fault(f"{shown} is above {most}", f"write {most} or less")
+        if self.whole and value != int(value):
+            whole = math.floor(value)
+            raise fault(f"{shown} is not a whole number", f"write {whole} or {whole + 1}")
+        return value
 
     def _named(self, written: str, info: ValidationInfo) -> Name:
         declared: Declared = info.context or Declared()

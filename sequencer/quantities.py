@@ -171,13 +171,23 @@ def format_quantity(value: float, kind: Kind) -> str:
     if kind is AREA:
         return f"{_plain(value * 1e12)} um2"
     if kind is SHARE:
-        return f"{Decimal(repr(value)).scaleb(2)} %"
+        number = Decimal(repr(value)).scaleb(2)
+        short = f"{_plain(float(number))} %"
+        # 1.0E+2 % is right too, but nobody writes it.
+        return short if parse_quantity(short, kind) == value else f"{number} %"
     if not kind.unit:
         return _plain(value)
     text = Quantity(value, kind.unit).render(prec="full", form="si")
     if parse_quantity(text, kind) == value:
         return text
     return f"{value!r} {kind.unit}"
+
+
+def plain_quantity(value: float, kind: Kind) -> str:
+    """Write a value as format_quantity does, but 1000 s and not 1 ks."""
+    if kind is TIME and abs(value) >= 1:
+        return f"{_plain(value)} {kind.unit}"
+    return format_quantity(value, kind)
 
 
 def show_quantity(value: float, unit: str, digits: int = 4) -> str:

@@ -15,12 +15,14 @@ from pulsetally.sequencer.quantities import (
     LENGTH,
     NUMBER,
     RESISTANCE,
+    SHARE,
     TIME,
     VOLTAGE,
     Kind,
     QuantityError,
     format_quantity,
     parse_quantity,
+    plain_quantity,
     quantity_pattern,
     show_duration,
     show_quantity,
@@ -96,6 +98,19 @@ def test_writing_and_reading_gives_the_same_value(kind: Kind, value: float) -> N
     again = parse_quantity(format_quantity(value, kind), kind)
     # An area is written in um2, whose factor is not a power of two.
     assert again == (pytest.approx(value, rel=1e-15) if kind is AREA else value)
+    assert parse_quantity(plain_quantity(value, kind), kind) == again
+
+
+def test_bounds_are_written_as_people_write_them() -> None:
+    written = [(1.0, SHARE), (0.5, SHARE), (1000.0, TIME), (3.2e8, TIME), (1e-4, TIME), (0.0, TIME)]
+    assert [plain_quantity(value, kind) for value, kind in written] == [
+        "100 %",
+        "50 %",
+        "1000 s",
+        "320000000 s",
+        "100 us",
+        "0 s",
+    ]
 
 
 @given(st.data(), st.sampled_from(KINDS))

@@ -293,9 +293,9 @@ NASTY = {
     "a time beyond floats": (HEAD + "  - {wait: 1e400 s}\n", "'1e400 s' is beyond every range"),
     "a prefix beyond floats": (HEAD + "  - {loop: 1e300 kV, period: 1 s}\n",
         "'1e300 kV' is beyond every range"),
-    "an answer for ever": (HEAD + "  - {ask: hello, within: 1e300 s}\n", "is above 3.2e+08"),
+    "an answer for ever": (HEAD + "  - {ask: hello, within: 1e300 s}\n", "is above 320000000 s"),
     "a rest for ever": (HEAD.replace("width: 1 ms", "width: 1 ms, rest: 1e300 s")
-        + "  - {preset: up}\n", "is above 3.2e+08"),
+        + "  - {preset: up}\n", "is above 320000000 s"),
     "anchors that explode": ("a: &a [x, x]\n" + "".join(f"a{n}: &a{n} [*a, *a]\n"
         for n in range(30)) + "recipe: x\n", "anchors and aliases are not allowed"),
     "brackets": ("recipe: " + "[" * 100_000, "nested over 50 deep"),
