@@ -29,6 +29,10 @@ FATIGUE_STEP = 0.1
 NEGLIGIBLE_KEPT = 0.01
 FULL_CYCLES = 0.999
 IMPRINT_JUMP_VOLTS = 0.01
+# Or until a rest that goes on all the time has lost this part. And a rest in each of them is
+# the same one if it is as long to within this part of a pair.
+REST_LOSS = 0.02
+REST_TOLERANCE = 1e-2
 # Many pairs that wear and recover at once: until the wear has changed by this part of itself.
 _WEAR_STEP = 0.01
 
@@ -89,13 +93,15 @@ class Tally(NamedTuple):
     """Running sums of a cell's history.
 
     seconds: virtual time. cycles: switched. recoveries: strong presets. state_seconds:
-    integral of the state (-1 down to 1 up) over time, s.
+    integral of the state (-1 down to 1 up) over time, s. rest_seconds: of the present rest
+    until now, as long as it would take at the reference temperature (no sum: it starts again).
     """
 
     seconds: float
     cycles: float
     recoveries: int
     state_seconds: float
+    rest_seconds: float = 0.0
 
     def since(self, begin: "Tally") -> "Tally":
         """Return what came since an earlier tally."""
@@ -104,6 +110,7 @@ class Tally(NamedTuple):
             self.cycles - begin.cycles,
             self.recoveries - begin.recoveries,
             self.state_seconds - begin.state_seconds,
+            self.rest_seconds - begin.rest_seconds,
         )
 
 
@@ -124,7 +131,6 @@ class Ageing:
         self._traps = Traps(growth) if growth is not None else None
         self._worn_cycles = 0.0
         self._is_strong = False
-        self._rest_seconds = 0.0
         self.last_cycles = math.inf
         if options.breakdown is not None:
             # A stream of its own: the domains are dealt the same with and without it.
@@ -156,8 +162,8 @@ class Ageing:
 
     def add(
         self, seconds: float, *, up_before: float, volts_before: float, volts_after: float
-    ) -> None:
-        """Add a piece that has just been integrated.
+    ) -> float:
+        """Add a piece that has just been integrated; return what is kept of Retention's side.
 
         up_before: up fraction at its begin. volts_*: of the node at both ends.
         """
@@ -169,15 +175,17 @@ class Ageing:
         if self._traps is not None:
             self._traps.hold(self._imprint_speed() * seconds, state)
             self._move_imprint()
-        self._rest(seconds, volts_before, volts_after)
         done = self.tally
         self.tally = Tally(
             done.seconds + seconds,
             done.cycles + cycles,
             done.recoveries + recovered,
             done.state_seconds + state * seconds,
+            done.rest_seconds,
         )
+        kept = self._rest(seconds, volts_before, volts_after)
         self._break_down()
+        return kept
 
     def most_repeats(self, pair: Tally) -> float:
         """Return how often a pair may be repeated before its own effect changes."""
@@ -212,7 +220,10 @@ class Ageing:
             done.cycles + repeats * pair.cycles,
             done.recoveries + repeats * pair.recoveries,
             done.state_seconds + repeats * pair.state_seconds,
+            done.rest_seconds,
         )
+        if self.rests_throughout(pair):
+            self._rest_on(repeats * pair.rest_seconds)
         if pair.recoveries:
             self._alternate(pair.cycles, repeats)
         else:
@@ -264,18 +275,55 @@ class Ageing:
         self._worn_cycles = worn_after(fatigue, self._worn_cycles, cycles, repeats)
         self._cell.weaken(fatigue.kept(self._worn_cycles))
 
-    def _rest(self, seconds: float, volts_before: float, volts_after: float) -> None:
+    def rests_throughout(self, pair: Tally) -> bool:
+        """Tell whether a pair, or a period, was all of it a rest, which goes on and on."""
+        retention = self._options.retention
+        if retention is None:
+            return False
+        whole = self._speed(retention.activation_ev) * pair.seconds
+        return pair.rest_seconds > (1 - REST_TOLERANCE) * whole
+
+    def rest_repeats(self, period: Tally) -> bool:
+        """Tell whether a period loses as much as the one after it, or rests throughout."""
+        retention = self._options.retention
+        if retention is None or self.rests_throughout(period):
+            return True
+        whole = self._speed(retention.activation_ev) * period.seconds
+        return abs(period.rest_seconds) < REST_TOLERANCE * whole
+
+    def most_rests(self, pair: Tally, repeats: int) -> int:
+        """Return how many of these repeats may pass before rest has lost too much."""
+        while self.rests_throughout(pair) and repeats > 1:
+            if self._kept_in(repeats * pair.rest_seconds) > 1 - REST_LOSS:
+                break
+            repeats = max(1, repeats // 4)
+        return repeats
+
+    def _rest(self, seconds: float, volts_before: float, volts_after: float) -> float:
         """Lose some of the kept state; a piece that ends at rest is rest from its begin."""
         retention = self._options.retention
         if retention is None:
-            return
+            return 1.0
         if max(abs(volts_before), abs(volts_after)) > retention.rest_volts:
-            self._rest_seconds = 0.0
+            self.tally = self.tally._replace(rest_seconds=0.0)
         if abs(volts_after) > retention.rest_volts:
-            return
-        before = 1 + retention.kept(self._rest_seconds)
-        self._rest_seconds += self._speed(retention.activation_ev) * seconds
-        self._cell.lose(retention.side, (1 + retention.kept(self._rest_seconds)) / before)
+            return 1.0
+        return self._rest_on(self._speed(retention.activation_ev) * seconds)
+
+    def _rest_on(self, seconds: float) -> float:
+        """Let a rest go on, s at the reference temperature; return what is kept."""
+        retention, kept = self._options.retention, self._kept_in(seconds)
+        self.tally = self.tally._replace(rest_seconds=self.tally.rest_seconds + seconds)
+        if retention is not None:
+            self._cell.lose(retention.side, kept)
+        return kept
+
+    def _kept_in(self, seconds: float) -> float:
+        """Return what more of a rest would keep of each region's part on Retention's side."""
+        retention, so_far = self._options.retention, self.tally.rest_seconds
+        if retention is None:
+            return 1.0
+        return (1 + retention.kept(so_far + seconds)) / (1 + retention.kept(so_far))
 
     def _break_down(self) -> None:
         breakdown = self._options.breakdown

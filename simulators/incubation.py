@@ -1,12 +1,14 @@
 """Let nothing switch before the voltage has stayed beyond a threshold long enough."""
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import Cell
 from pulsetally.simulators.circuit import Circuit
 from pulsetally.simulators.march import NEVER, Stop, is_beyond
-from pulsetally.simulators.solver import Ramp, Solver
+from pulsetally.simulators.solver import Memory, Ramp, Solver
 from pulsetally.simulators.wear import Incubation
 
 Array = NDArray[np.float64]
@@ -14,6 +16,8 @@ Array = NDArray[np.float64]
 # The voltage has come back below this part of the threshold before the time starts again:
 # an instant exactly at the threshold must not be both in and out.
 LEAVING_SHARE = 0.9
+# Two periods of a train have waited alike if they agree to within this part of a period.
+SAME_SHARE = 1e-3
 
 
 def solver_of(cell: Cell, circuit: Circuit) -> Solver:
@@ -59,6 +63,33 @@ class IncubatingSolver(Solver):
         rising = np.concatenate((np.diff(whole) > 0, [True]))
         rising[0] = True
         return whole[rising], all_volts[rising]
+
+    @property
+    def memory(self) -> Memory:
+        """On which side the node is beyond, and how long it has waited there."""
+        waiting = self._beyond_side != 0 and self.cell.frozen
+        return Memory(self._beyond_side, waiting, self._waited_seconds if waiting else 0.0)
+
+    def most_repeats(self, begin: Memory, period_seconds: float) -> float:
+        """Return how often a period that began with a memory comes again as it just did.
+
+        One that waits for all of it does so until the time is over; another one if it ends
+        with the memory that it began with.
+        """
+        now = self.memory
+        if (begin.side, begin.waiting) != (now.side, now.waiting):
+            return 0
+        more_seconds = now.waited_seconds - begin.waited_seconds
+        if abs(more_seconds) < SAME_SHARE * period_seconds:
+            return math.inf
+        if abs(more_seconds - period_seconds) > SAME_SHARE * period_seconds:
+            return 0
+        return max(0, math.ceil((self._incubation.seconds - now.waited_seconds) / more_seconds) - 1)
+
+    def repeat(self, begin: Memory, repeats: int) -> None:
+        """Let the memory be as after so many more of these periods."""
+        if self.memory.waiting:
+            self._waited_seconds += repeats * (self._waited_seconds - begin.waited_seconds)
 
     def _stop(self) -> Stop:
         return NEVER if self.cell.frozen else self._leaving()

@@ -21,6 +21,8 @@ _TINY = 1e-6
 _LEAST_VOLTS = 1e-3
 # What all repeats together switch less than, as a part of the cell.
 _NOTHING = 1e-9
+# In place of a piece's length: it takes no time.
+LOSS = -1.0
 
 
 class Period:
@@ -37,23 +39,54 @@ class Period:
         # out because it is too little for one piece.
         self._logs: Array = np.zeros_like(self._begin)
         self._left_out: Array = np.zeros_like(self._begin)
-        # For each piece: kept, added and its length in seconds.
+        # For each piece: kept, added and its length in seconds, or LOSS.
         self._pieces: list[tuple[Array, Array, float]] = []
         self._largest_volts = _LEAST_VOLTS
 
     def add(self, times: Array, node_volts: Array) -> None:
-        """Add a piece that was just integrated: its course, in s and V."""
+        """Add a piece that was just integrated, before any loss: its course, in s and V."""
         before, after = self._before, self._cell.up.copy()
         driving = node_volts - self._cell.imprint_volts
         self._largest_volts = max(self._largest_volts, float(np.max(np.abs(driving))))
         kept, added = _map_of(before, after)
+        self._append(kept, added, float(times[-1] - times[0]))
+        if not (self._was_frozen or self._cell.frozen) and np.array_equal(before, after):
+            self._add_left_out(before, times, driving)
+        self._before, self._was_frozen = after, self._cell.frozen
+
+    def lose(self, side: int, kept: float) -> None:
+        """Add a loss that has just come: this part was kept of what each region has on a side.
+
+        It is no switching: it uses nothing.
+        """
+        if kept == 1:
+            return
+        share = np.full_like(self._begin, kept)
+        self._append(share, np.zeros_like(share) if side > 0 else 1 - share, LOSS)
+        self._before = self._cell.up.copy()
+
+    def without_losses(self) -> "Period":
+        """Return the same period without its losses, of a cell that has had them before it."""
+        other = Period(self._cell, repeats=self._repeats)
+        other._largest_volts, other._left_out = self._largest_volts, self._left_out
+        other._logs = self._logs.copy()
+        begin = self._begin
+        for kept, added, seconds in self._pieces:
+            if seconds == LOSS:
+                other._logs -= np.log(kept)
+                begin = kept * begin + added
+        other._begin = other._before = begin
+        for kept, added, seconds in self._pieces:
+            if seconds != LOSS:
+                other._pieces.append((kept, added, seconds))
+                other._before = kept * other._before + added
+        return other
+
+    def _append(self, kept: Array, added: Array, seconds: float) -> None:
         self._left_out *= kept
         with np.errstate(divide="ignore"):
             self._logs += np.log(kept)
-        if not (self._was_frozen or self._cell.frozen) and np.array_equal(before, after):
-            self._add_left_out(before, times, driving)
-        self._pieces.append((kept, added, float(times[-1] - times[0])))
-        self._before, self._was_frozen = after, self._cell.frozen
+        self._pieces.append((kept, added, seconds))
 
     def _add_left_out(self, up: Array, times: Array, driving: Array) -> None:
         """Add what switches in a piece that the solver took for nothing: it may add up."""
@@ -107,6 +140,8 @@ class Period:
         for kept, added, seconds in self._pieces:
             up = kept * up + added
             before, fraction = fraction, float(weights @ up)
+            if seconds == LOSS:
+                continue
             cycles += abs(fraction - before) / 2
             state_seconds += (before + fraction - 1) * seconds
         return cycles, state_seconds

@@ -1,6 +1,8 @@
 """Carry one cell and its node along straight pieces of the EMF."""
 
+import math
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -49,6 +51,18 @@ class Ramp:
         )
 
 
+class Memory(NamedTuple):
+    """What a solver knows besides the cell and the node.
+
+    side: on which the node has been beyond a threshold, 1 or -1; 0 where it has not, or
+    where there is none. waited_seconds: for how long; 0 from when that was long enough.
+    """
+
+    side: int = 0
+    waiting: bool = False
+    waited_seconds: float = 0.0
+
+
 class Solver:
     """Integrate one cell in one circuit.
 
@@ -91,6 +105,19 @@ class Solver:
                 times.append(more_times)
                 volts.append(more_volts)
         return np.concatenate(times), np.concatenate(volts)
+
+    @property
+    def memory(self) -> Memory:
+        """What it knows now."""
+        return Memory()
+
+    def most_repeats(self, begin: Memory, period_seconds: float) -> float:
+        """Return how often a period that began with a memory comes again as it just did."""
+        del begin, period_seconds
+        return math.inf
+
+    def repeat(self, begin: Memory, repeats: int) -> None:
+        """Let the memory be as after so many more of these periods."""
 
     def _stop(self) -> Stop:
         """Tell where to return before the ramp's end; for those who watch the node."""

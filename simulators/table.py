@@ -248,20 +248,26 @@ class Table:
         moved_volts = math.inf
         while whole > LAST_PERIODS and not any(needs() for needs in self._needing_detail):
             begin, begin_volts = self._ageing.tally, self.node_volts
+            memory = self._solver.memory
             self._period = Period(self._cell, repeats=whole)
             self._advance_to(train.pulse_start(index + 1), in_detail=True)
             period, self._period = self._period, None
             index, whole, integrated = index + 1, whole - 1, integrated + 1
             before_volts, moved_volts = moved_volts, self.node_volts - begin_volts
             lag_volts = self._circuit.lag_volts(moved_volts, before_volts, train.period_seconds)
-            repeated = lag_volts < REPEATED_VOLTS
-            if integrated < FIRST_PERIODS or not (repeated or integrated >= MOST_FIRST_PERIODS):
+            last = self._ageing.tally.since(begin)
+            repeated = lag_volts < REPEATED_VOLTS and self._ageing.rest_repeats(last)
+            alike = self._solver.most_repeats(memory, train.period_seconds)
+            if integrated >= MOST_FIRST_PERIODS:
+                repeated, alike = True, alike or math.inf
+            if integrated < FIRST_PERIODS or not repeated:
                 continue
-            many, mean = self._most_periods(
-                period, self._ageing.tally.since(begin), whole - LAST_PERIODS
-            )
+            if self._ageing.rests_throughout(last):
+                period = period.without_losses()
+            many, mean = self._most_periods(period, last, int(min(alike, whole - LAST_PERIODS)))
             if many >= FEWEST_AT_ONCE:
                 self._cell.up = period.after(many)
+                self._solver.repeat(memory, many)
                 self._repeat_periods(train, mean, index, many)
                 index, whole = index + many, whole - many
         return integrated > 0
@@ -278,7 +284,7 @@ class Table:
             cycles, state_seconds = period.mean_use(many)
             mean = last._replace(cycles=cycles, state_seconds=state_seconds)
             many = int(max(1, min(many, self._ageing.most_repeats(mean))))
-            many = self._ageing.most_held(mean, many)
+            many = self._ageing.most_rests(mean, self._ageing.most_held(mean, many))
         return many, mean
 
     def _repeat_periods(self, train: PulseTrain, mean: Tally, index: int, many: int) -> None:
@@ -349,7 +355,7 @@ class Table:
                 most_pairs = MOST_PAIRS_OF_DOMAINS
             if pairs > last and (settled or integrated >= most_pairs):
                 many = int(max(1, min(pairs - last, self._ageing.most_repeats(pair))))
-                many = self._ageing.most_held(pair, many)
+                many = self._ageing.most_rests(pair, self._ageing.most_held(pair, many))
                 self._repeat(down, up, pair, many)
                 pairs -= many
                 before, integrated = None, 0
@@ -384,14 +390,17 @@ class Table:
         times, node_volts = self._solver.run(ramp, sampled=sampled)
         # A cell that is open has nothing of the node's voltage.
         share = 1.0 if self._circuit.cell_on else 0.0
-        self._ageing.add(
+        if self._period is not None:
+            self._period.add(times, share * node_volts)
+        kept = self._ageing.add(
             ramp.seconds,
             up_before=up_before,
             volts_before=share * volts_before,
             volts_after=share * self.node_volts,
         )
-        if self._period is not None:
-            self._period.add(times, share * node_volts)
+        retention = self._cell.description.retention
+        if self._period is not None and retention is not None:
+            self._period.lose(retention.side, kept)
         return times, node_volts
 
     def _pass(self, ramp: Ramp, stop_seconds: float) -> None:

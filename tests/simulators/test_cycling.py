@@ -103,6 +103,16 @@ def test_a_thousand_million_pairs_take_no_time() -> None:
     assert table.polarization == pytest.approx(expected, rel=1e-3)
 
 
+# A: the mean of 1 and of what the law keeps of a cell wholly down, at rest from 0 s on.
+def test_pairs_below_rest_voltage_let_a_rest_go_on() -> None:
+    retention = Retention(onset_seconds=1e-3, side=-1)
+    table = connected(CellDescription(regions=8, retention=retention), FAST)
+    table.cycle(train(-0.3), train(0.3), pairs=10**6)
+    expected = (1 - retention.kept(400.0)) / 2
+    assert table.up_fraction == pytest.approx(expected, abs=1e-6)
+    assert table.cycles == pytest.approx(0.0, abs=1e-6)
+
+
 # A: exp(-(1e8/1e9)^0.3); presets that bring nothing back change nothing.
 def test_wear_goes_on_through_a_hundred_million_recoveries_of_nothing() -> None:
     fatigue = Fatigue(scale_cycles=1e9, recovered_share=0.0, recovery_volts=4.0)

@@ -90,6 +90,30 @@ CASES: dict[str, tuple[dict[str, Any], float, float, int, float, float]] = {
         0.0,
         0.0,
     ),
+    "disturb pulses, incubation over before the next one": (
+        {"incubation": Incubation(seconds=3e-3)},
+        0.9,
+        1.4,
+        110,
+        5e-4,
+        1e-3,
+    ),
+    "disturb pulses, incubation over in the last ones": (
+        {"incubation": Incubation(seconds=21e-3)},
+        0.9,
+        1.4,
+        110,
+        1e-4,
+        1e-3,
+    ),
+    "loss between disturb pulses": (
+        {"retention": Retention(loss_per_decade=1e-3, onset_seconds=1e-5, side=-1)},
+        0.0,
+        1.0,
+        150,
+        1e-3,
+        1e-2,
+    ),
     "a leak": ({"leak_ohms": 1e5}, 0.0, 2.0, 150, 5e-4, 1e-3),
     "imprint and retention": (
         {
@@ -219,6 +243,28 @@ def test_many_periods_are_the_period_many_times() -> None:
         total += cycles
         assert np.allclose(period.after(repeats), up, atol=1e-14)
         assert period.mean_use(repeats)[0] == pytest.approx(total / repeats, rel=1e-12)
+
+
+RESTING = {
+    "log time": Retention(onset_seconds=1e-3, loss_per_decade=0.1, side=-1),
+    "stretched": Retention(law="stretched", onset_seconds=1.0, side=-1),
+}
+
+
+# A: pulses that stay at rest do nothing to the law of the loss. A cell wholly down, at rest
+# from 0 s on, has the mean of 1 and what the law keeps left of it.
+@pytest.mark.parametrize("law", RESTING)
+@pytest.mark.parametrize("count", [150, 10**6, 10**10])
+def test_a_rest_goes_on_through_pulses_below_rest_voltage(law: str, count: int) -> None:
+    retention = RESTING[law]
+    table = connected(CellDescription(regions=8, retention=retention), FAST)
+    table.play(train(0.0, 0.3, count))
+    table.advance(2e-4 * count)
+    expected = (1 - retention.kept(2e-4 * count)) / 2
+    assert expected > 0.005
+    assert table.up_fraction == pytest.approx(expected, abs=1e-6)
+    # What is lost is not switched.
+    assert table.cycles == pytest.approx(0.0, abs=1e-6)
 
 
 # What each family calls a burst, and how many pulses it takes at most.
