@@ -3,7 +3,8 @@
 For rehearsals and tests only. No real table has one, so nothing that measures may use it.
 
     :CLOCk:TIME?                    virtual time, s
-    :CLOCk:ADVance <seconds>        let time pass; -221 on a bench that keeps real time
+    :CLOCk:ADVance <seconds>        let time pass; -221 on a bench that keeps real time, and
+                                    beyond 2e9 s in all
     :TRUTh:POLarization?            of the cell, C/m2; UP? the part of it that is up, 0 to 1
     :TRUTh:NODE?, TERMinal?         volts across the cell, and at the generator's terminal
     :TRUTh:OUTPut?                  whether the generator's output is commanded on, 1 or 0
@@ -43,7 +44,7 @@ from numpy.typing import NDArray
 
 from pulsetally.simulators.clock import VirtualClock
 from pulsetally.simulators.faults import KINDS, Fault, FaultSchedule
-from pulsetally.simulators.generator_model import GeneratorModel
+from pulsetally.simulators.generator_model import LATEST_SECONDS, GeneratorModel
 from pulsetally.simulators.scpi_device import Call, Command, ScpiDevice
 from pulsetally.simulators.scpi_errors import ScpiError
 from pulsetally.simulators.scpi_headers import short_form
@@ -83,7 +84,13 @@ class BenchControl(ScpiDevice):
         def advance(call: Call) -> None:
             if not clock.may_be_advanced:
                 raise ScpiError(-221, "the clock follows real time; wait instead")
-            clock.advance(call.number())
+            seconds = call.number()
+            if clock.now + seconds > LATEST_SECONDS:
+                raise ScpiError(
+                    -221,
+                    f"it is {clock.now:.3g} s; virtual time goes to {LATEST_SECONDS:g} s",
+                )
+            clock.advance(seconds)
 
         self.declare(
             [

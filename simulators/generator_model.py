@@ -24,6 +24,12 @@ LARGEST_LOAD_OHMS = 1e6
 # Near 1 V, and a code of a 14-bit converter.
 HIGH_AT_POWER_ON = 819 * SourceImperfections().volts_per_code
 
+# Time is one floating-point number, whose steps grow as it does: 0.24 us at the latest end of
+# a burst, s (63 years). And no step may be more than a part of a pulse's width: so much of it is
+# the error of a pulse's charge (with 0.01 of it, counts were seen to be 0.3 % off).
+LATEST_SECONDS = 2e9
+LARGEST_STEP_SHARE = 0.005
+
 # A linear ramp goes from 10 % to 90 % in this part of its whole duration.
 RAMP_SHARE = 0.8
 
@@ -235,10 +241,14 @@ class GeneratorModel:
     # Bursts.
 
     def initiate(self) -> None:
-        """Wait for a trigger, or fire when the source wants none; -213 when already busy."""
+        """Wait for a trigger, or fire when the source wants none; -213 when already busy.
+
+        -221 for a burst by whose end the bench's clock is too coarse for its pulses.
+        """
         self.refuse_after_conflict()
         if self._initiated or self._burst is not None:
             raise ScpiError(-213)
+        self._refuse_beyond_clock()
         if self.fire_source is FireSource.AT_ONCE:
             if not self.ignores_trigger():
                 self._fire()
@@ -250,6 +260,7 @@ class GeneratorModel:
         self.refuse_after_conflict()
         if not self._initiated or self.fire_source is not FireSource.COMMAND:
             raise ScpiError(-211)
+        self._refuse_beyond_clock()
         if not self.ignores_trigger():
             self._fire()
 
@@ -269,6 +280,24 @@ class GeneratorModel:
         """Raise -221 where the settings meant for what comes now were put back."""
         if self._conflict:
             raise ScpiError(-221, "the settings of this message were put back")
+
+    def _refuse_beyond_clock(self) -> None:
+        settings = self._settings
+        before_seconds = (settings.count - 1) * settings.period_seconds
+        end_seconds = self._clock.now + before_seconds + settings.width_seconds
+        if end_seconds > LATEST_SECONDS:
+            raise ScpiError(
+                -221,
+                f"the burst would end at {end_seconds:.3g} s; virtual time goes to "
+                f"{LATEST_SECONDS:g} s",
+            )
+        shortest_seconds = math.ulp(end_seconds) / LARGEST_STEP_SHARE
+        if settings.width_seconds < shortest_seconds:
+            raise ScpiError(
+                -221,
+                f"the burst would end at {end_seconds:.3g} s of virtual time, where a width is "
+                f"at least {shortest_seconds:.2g} s",
+            )
 
     def _fire(self) -> None:
         settings, source = self._settings, self.source
