@@ -92,9 +92,13 @@ def begin(
 @app.command(epilog="Example: pulsetally check my_recipe.yaml --bench my_bench.yaml")
 def check(
     file: Annotated[
-        str | None, typer.Argument(help="A recipe, a shipped recipe's name, or a bench file.")
+        str | None,
+        typer.Argument(help="A recipe, a bench file or a table file, by path or shipped name."),
     ] = None,
     bench: Annotated[Path | None, typer.Option(help="The bench it would run on.")] = None,
+    text: Annotated[
+        bool, typer.Option("--text", help="Print the file's own text instead, to copy it.")
+    ] = False,
     overrides: SetOption = None,
     logbook: LogbookOption = None,
     as_json: JsonOption = False,
@@ -103,7 +107,7 @@ def check(
         typer.Option(help="Print the JSON schema of recipes or bench files instead."),
     ] = None,
 ) -> None:
-    """Read a recipe or bench file, and say what it will do or what is wrong with it."""
+    """Read a recipe, bench or table file, and say what it will do or what is wrong with it."""
     if schema is not None:
         from pulsetally.sequencer.schemas import schema_text
 
@@ -112,6 +116,9 @@ def check(
     if file is None:
         _complain("check what? To fix it, name a recipe or a bench file, or give --schema.")
         raise typer.Exit(WRONG_INPUT)
+    if _is_table(file):
+        _check_table(file, as_text=text)
+        return
     from pulsetally.sequencer.bench import is_bench_file, load_bench
     from pulsetally.sequencer.forecast import free_bytes
     from pulsetally.sequencer.plan_summary import plan_object, show_plan
@@ -121,6 +128,9 @@ def check(
         # A pipe can be read once only, and is taken for a recipe.
         if Path(file).is_file() and is_bench_file(Path(file)):
             found = load_bench(Path(file))
+            if text:
+                typer.echo(found.text, nl=False)
+                return
             limit, notes = found.panel_limit(), found.notes()
             if as_json:
                 _print_json({"bench": found.model.bench, "panel_limit": limit, "notes": notes})
@@ -131,11 +141,46 @@ def check(
                     " at the panel keep its limits")  # fmt: skip
             return
         plan, table = _planned(file, bench, overrides)
+        if text:
+            typer.echo(plan.recipe.text, nl=False)
+            return
         now, free = datetime.now().astimezone(), free_bytes(_logbook_path(logbook))
         if as_json:
             _print_json(plan_object(plan, table, now=now, free_bytes=free))
         else:
             show_plan(_console(), plan, table, now=now, free_bytes=free)
+
+
+def _is_table(file: str) -> bool:
+    """Say whether this names a table file, and no recipe."""
+    from pulsetally.sequencer.recipe import shipped_recipes
+    from pulsetally.sequencer.yaml_places import load_yaml, read_text
+
+    if Path(file).is_file():
+        data = load_yaml(read_text(Path(file), "file", "name a file")[0], file).data
+        return isinstance(data, dict) and "table" in data and "recipe" not in data
+    if file in shipped_recipes():
+        return False
+    from pulsetally.simulators.table_file import shipped_tables
+
+    return file in shipped_tables()
+
+
+def _check_table(file: str, *, as_text: bool) -> None:
+    from pulsetally.sequencer.summary import say
+    from pulsetally.simulators.table_file import find_table, table_text
+    from pulsetally.simulators.table_file_yaml import TableFileError
+
+    try:
+        found = find_table(file)
+    except TableFileError as error:
+        _complain(str(error))
+        raise typer.Exit(WRONG_INPUT) from error
+    if as_text:
+        typer.echo(table_text(found.settings, title=found.title, purpose=found.purpose), nl=False)
+        return
+    say(_console(), f"{found.title}: well written. {found.purpose}".rstrip())
+    say(_console(), f"Rehearse on it with: pulsetally rehearse full_count --table {file}")
 
 
 @app.command(epilog="Example: pulsetally rehearse full_count --set rounds=5")
@@ -456,6 +501,8 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
     )
     for warning in plan.warnings:
         say(console, f"Note: {warning}.")
+    if mode == "rehearsal" and plan.asking_seconds:
+        say(console, "Note: a rehearsal answers by itself what the recipe asks.")
     broken = ""
     with signals(stop):
         recorder = book.begin_run(plan, bench, mode=mode)

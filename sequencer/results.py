@@ -5,8 +5,8 @@ import json
 import os
 import re
 import socket
-from collections.abc import Iterable
-from dataclasses import dataclass, field
+from collections.abc import Iterable, Iterator
+from dataclasses import asdict, dataclass, field
 from typing import Any
 
 import sqlalchemy as sa
@@ -124,6 +124,19 @@ class SettingCount:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class SettingLeftOut:
+    """One combination of swept settings at which no round gave a count with a fraction.
+
+    at_most: pulses that were not enough, or None where the first pulse was already too many.
+    rounds: how many.
+    """
+
+    settings: dict[str, float]
+    at_most: int | None
+    rounds: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class LeftOut:
     """Count the rounds that a full count can't use, though they are complete.
 
@@ -137,7 +150,11 @@ class LeftOut:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RunResult:
-    """All that a run found. units: SI units of the recipe's parameters that have one."""
+    """All that a run found.
+
+    units: SI units of the recipe's parameters that have one. left_out_by_setting: the settings
+    that by_setting lacks.
+    """
 
     summary: RunSummary
     identities: dict[str, str]
@@ -147,6 +164,7 @@ class RunResult:
     left_out: LeftOut
     by_setting: tuple[SettingCount, ...]
     units: dict[str, str] = field(default_factory=dict)
+    left_out_by_setting: tuple[SettingLeftOut, ...] = ()
 
     def as_object(self) -> dict[str, Any]:
         """Return the result as an object for JSON; volts, seconds and pulses throughout."""
@@ -174,6 +192,7 @@ class RunResult:
                 "not_reached": self.left_out.not_reached,
                 "first_pulse": self.left_out.first_pulse,
             },
+            "left_out_by_setting": [asdict(each) for each in self.left_out_by_setting],
             "full_count_by_setting": [
                 {"settings": each.settings, **(_statistics_object(each.count) or {})}
                 for each in self.by_setting
@@ -232,6 +251,7 @@ def run_result(logbook: Logbook, run: int) -> RunResult:
         full_count=full_count([each for group in groups.values() for each in group]),
         by_setting=tuple(by_setting),
         units=_units(logbook, run),
+        left_out_by_setting=tuple(_settings_left_out(found, swept, {*groups})),
     )
 
 
@@ -316,6 +336,20 @@ def _alive(process: int) -> bool:
     except PermissionError:
         return True
     return True
+
+
+def _settings_left_out(
+    found: list[RoundResult], swept: list[str], counted: set[tuple[tuple[str, float], ...]]
+) -> Iterator[SettingLeftOut]:
+    lacking: dict[tuple[tuple[str, float], ...], list[ReadResult]] = {}
+    for each in found:
+        if (read := each.fill) is not None and read.crossing is None:
+            place = tuple((name, read.settings[name]) for name in swept if name in read.settings)
+            if place and place not in counted:
+                lacking.setdefault(place, []).append(read)
+    for place, reads_here in lacking.items():
+        most = None if reads_here[0].reached else reads_here[0].count
+        yield SettingLeftOut(settings=dict(place), at_most=most, rounds=len(reads_here))
 
 
 def _units(logbook: Logbook, run: int) -> dict[str, str]:

@@ -107,16 +107,18 @@ def _show_counts(console: Console, result: RunResult) -> None:
         table = Table(
             *swept_names(result), "full count", "scatter", "rounds", title="Full count, pulses"
         )
+        rows: list[tuple[dict[str, float], tuple[str, str, int]]] = [
+            (each.settings, (f"{each.count.mean:.2f}", _scatter(each.count), each.count.rounds))
+            for each in result.by_setting
+        ]
+        # A setting at which nothing could be counted says something too.
+        for left in result.left_out_by_setting:
+            words = "at most 1" if left.at_most is None else f"> {left.at_most}"
+            rows.append((left.settings, (words, "", left.rounds)))
         # A shuffled sweep is read in order all the same.
-        for each in sorted(
-            result.by_setting, key=lambda one: [one.settings.get(name, 0) for name in result.swept]
-        ):
-            table.add_row(
-                *swept_cells(result, each.settings),
-                f"{each.count.mean:.2f}",
-                _scatter(each.count),
-                str(each.count.rounds),
-            )
+        rows.sort(key=lambda row: [row[0].get(name, 0) for name in result.swept])
+        for settings, (count, scatter, rounds) in rows:
+            table.add_row(*swept_cells(result, settings), count, scatter, str(rounds))
         console.print(table)
         return
     say(console, f"Full count: {spell_count(result.full_count)}", style="bold")

@@ -1,19 +1,19 @@
 """Unfold a recipe: repeats, sweeps, tunings and cyclings written out as rounds.
 
 Walks the steps with the settings that are in force at each, works out names, sweeps and
-voltages across the cell, and cuts the result at each preset. Every problem is collected.
+voltages across the cell, and cuts the result into rounds. Every problem is collected.
 """
 
 import itertools
 import math
 import random
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from typing import Any
 
 from pulsetally.sequencer.bench import Bench, CellVoltsUnreachable
-from pulsetally.sequencer.models import Declared, Model, Name, kind_of
-from pulsetally.sequencer.quantities import parse_quantity, show_quantity
+from pulsetally.sequencer.models import Declared, Model, Name, kind_of, quantified
+from pulsetally.sequencer.quantities import QuantityError, parse_quantity, show_quantity
 from pulsetally.sequencer.ranges import axis_values
 from pulsetally.sequencer.recipe import Recipe, axis_kind
 from pulsetally.sequencer.rounds import (
@@ -31,12 +31,14 @@ from pulsetally.sequencer.rounds import (
     Step,
     Tune,
     Wait,
-    pulses_of,
+    kept_before,
     triangle,
 )
+from pulsetally.sequencer.step_rules import stop_faults, swept_names, tune_fault, tuned_faults
 from pulsetally.sequencer.steps import (
     LONGEST_WAIT,
     MOST_PAIRS,
+    MOST_TUNING_ROUNDS,
     PULSE_KINDS,
     AskStep,
     ContactStep,
@@ -85,10 +87,9 @@ class Unfolding:
         self._recipe, self._bench = recipe, bench
         self._actions = self._turns = 0
         self._made: dict[int, tuple[Settings, Action]] = {}
-        self._changed = False
         # What is swept or tuned at the step that is looked at, and anywhere, of parameters.
         self._inside: list[str] = []
-        self._elsewhere = {*_swept(recipe.model.steps)}.intersection(recipe.model.parameters)
+        self._elsewhere = {*swept_names(recipe.model.steps)}.intersection(recipe.model.parameters)
         self._settings: Settings = {}
         self._names: dict[str, Name] = {}
         self.problems: dict[str, None] = {}
@@ -123,7 +124,6 @@ class Unfolding:
                     )
                 )
             pending.clear()
-            self._changed = False
 
         if self._least_rounds(self._recipe.model.steps) > MOST_ROUNDS:
             # Told without writing them out, which would take long.
@@ -131,8 +131,11 @@ class Unfolding:
             return ()
         try:
             for part in self._walk(self._recipe.model.steps, self._settings):
-                if pending and self._cuts(pending, part):
+                if pending and (kept := self._kept(pending, part)) is not None:
+                    goes_with_it = pending[kept:]
+                    del pending[kept:]
                     finish()
+                    pending += goes_with_it
                 if len(finished) >= MOST_ROUNDS:
                     self._too_many_rounds()
                     raise _Overrun
@@ -146,7 +149,6 @@ class Unfolding:
                     )
                     raise _Overrun
                 pending.append(part)
-                self._changed = self._changed or not isinstance(part.action, Contact | Wait)
                 if isinstance(part.action, Cycle):
                     finish()
         except _Overrun:
@@ -155,15 +157,14 @@ class Unfolding:
         finish()
         return tuple(finished)
 
-    def _cuts(self, pending: list[_Part], part: _Part) -> bool:
-        """Say whether a part begins a new round."""
+    def _kept(self, pending: list[_Part], part: _Part) -> int | None:
+        """Return how many parts stay in their round where this one begins a new one, or None."""
         before = pending[0]
         if part.begins or (before.cycling, before.tune) != (part.cycling, part.tune):
-            return True
-        if isinstance(part.action, Cycle):
-            return True
-        # What only looks leaves the cell as it is, so that a preset may follow it.
-        return isinstance(part.action, Preset) and self._changed
+            return len(pending)
+        if isinstance(part.action, Preset | Pund | Loop | Cycle):
+            return kept_before(pending, part.action)
+        return None
 
     def _problem(self, problem: str, remedy: str) -> None:
         self.problems[f"{self._recipe.file}: {problem}. To fix it, {remedy}."] = None
@@ -247,7 +248,7 @@ class Unfolding:
         for name in names:
             if name in self._inside:
                 self._problem(
-                    f"{name!r} is swept inside a sweep or tune of itself, which would change nothing",
+                    f"{name!r} is swept inside its own sweep or tune, which would undo that",
                     "sweep it once",
                 )
                 return False
@@ -289,29 +290,23 @@ class Unfolding:
             finally:
                 self._inside = before
 
-        if not self._tunable(step.steps):
+        if (fault := tune_fault(step)) is not None:
+            self._problem(*fault)
             return
-        most = self._whole("at most", step.at_most, settings, least=3)
+        most = self._whole("at most", step.at_most, settings, least=3, most=MOST_TUNING_ROUNDS)
         tune = Tune(
             name=step.tune,
             low=low,
             high=high,
-            target=self._value(step.full_count, settings),
-            within=self._value(step.within, settings),
+            target=self._bounded(step, "full_count", settings),
+            within=self._bounded(step, "within", settings),
             at_most=most,
             actions=actions,
         )
         # Both ends are looked at now, so that no value between them can break a limit.
         lowest, highest = actions(low)[0], actions(high)[0]
-        ways = [
-            [each.rising for action in some for each in pulses_of(action)]
-            for some in (lowest, highest)
-        ]
-        if ways[0] != ways[1]:
-            self._problem(
-                f"tuning {step.tune!r} from {low:g} to {high:g} turns a pulse round on the way",
-                "keep level on one side of base",
-            )
+        for told in tuned_faults(step, lowest, highest):
+            self._problem(*told)
         for _ in range(most):
             for place, action in enumerate(lowest):
                 yield _Part(
@@ -321,28 +316,6 @@ class Unfolding:
                     begins=place == 0,
                 )
 
-    def _tunable(self, steps: Sequence[Model]) -> bool:
-        plain = (PresetStep, StepStep, ReadStep, WaitStep, ContactStep)
-        if not all(isinstance(each, plain) for each in steps):
-            self._problem(
-                "the steps of a tune hold something else than preset, step, read, wait and contact",
-                "leave the rest out of it",
-            )
-            return False
-        kept = [each for each in steps if not isinstance(each, WaitStep | ContactStep)]
-        presets = sum(isinstance(each, PresetStep) for each in kept)
-        if len(kept) < 2 or not isinstance(kept[0], PresetStep) or presets > 1:
-            self._problem(
-                "the steps of a tune are not one round", "write one preset, then one read"
-            )
-            return False
-        if not isinstance(kept[1], ReadStep):
-            self._problem(
-                "a tune has no read right after its preset", "read before anything is stepped"
-            )
-            return False
-        return True
-
     def _cycle(self, step: CycleStep, settings: Settings) -> Iterator[_Part]:
         pairs = self._whole("pairs", step.pairs, settings, least=1, most=MOST_PAIRS)
         if not pairs:
@@ -350,11 +323,12 @@ class Unfolding:
         stop = step.stop_when
         cycling = Cycling(
             pairs=pairs,
-            least_charge=self._optional(stop.switched_charge_below, settings),
-            most_off=self._optional(stop.full_count_off_by, settings),
+            least_charge=self._optional(stop, "switched_charge_below", settings),
+            most_off=self._optional(stop, "full_count_off_by", settings),
             contact=stop.contact_is_lost,
         )
-        self._check_stops(step)
+        for told in stop_faults(step):
+            self._problem(*told)
         if step.steps:
             self.swept["cycles"] = None
         down, up = (self._pulse(each, settings) for each in (step.cycle.down, step.cycle.up))
@@ -390,20 +364,6 @@ class Unfolding:
         parts = self._walk(step.steps, settings | {"cycles": float(done)}, cycling)
         for place, part in enumerate(parts):
             yield replace(part, begins=True) if place == 0 else part
-
-    def _check_stops(self, step: CycleStep) -> None:
-        held = set(_verbs(step.steps))
-        for name, needed, value in (
-            ("switched charge below", PundStep, step.stop_when.switched_charge_below),
-            ("full count off by", ReadStep, step.stop_when.full_count_off_by),
-            ("contact is lost", ContactStep, step.stop_when.contact_is_lost or None),
-        ):
-            if value is not None and needed not in held:
-                verb = needed.__name__.removesuffix("Step").lower()
-                self._problem(
-                    f"a cycle stops on {name!r}, and nothing in its steps measures that",
-                    f"add a '{verb}' to its steps",
-                )
 
     # Steps that do something.
 
@@ -443,7 +403,7 @@ class Unfolding:
             case AskStep():
                 return Ask(
                     message=step.ask,
-                    seconds=self._value(step.within, settings),
+                    seconds=self._bounded(step, "within", settings),
                     go_on=step.otherwise == "go on",
                 )
             case _:
@@ -513,8 +473,22 @@ class Unfolding:
     def _value(self, value: float | Name, settings: Settings) -> float:
         return settings[value.word] if isinstance(value, Name) else value
 
-    def _optional(self, value: float | Name | None, settings: Settings) -> float | None:
-        return None if value is None else self._value(value, settings)
+    def _optional(self, held: Model, name: str, settings: Settings) -> float | None:
+        return None if getattr(held, name) is None else self._bounded(held, name, settings)
+
+    def _bounded(self, held: Model, name: str, settings: Settings) -> float:
+        """Return the value of a model's setting, which where it is swept keeps the same bounds."""
+        value = self._value(getattr(held, name), settings)
+        field = type(held).model_fields[name]
+        if (read := quantified(field)) is not None:
+            try:
+                read.check(value)
+            except QuantityError as error:
+                self._problem(
+                    f"a value swept as {field.alias or name!r} does not fit: {error.problem}",
+                    error.remedy,
+                )
+        return value
 
     def _whole(
         self,
@@ -590,21 +564,6 @@ def _written(written: object) -> float:
     if kind is None:
         raise ValueError(f"{written!r} passed as a quantity")
     return parse_quantity(written, kind)
-
-
-def _swept(steps: list[Any]) -> Iterator[str]:
-    for step in steps:
-        if isinstance(step, SweepStep):
-            yield from step.sweep
-        if isinstance(step, TuneStep):
-            yield step.tune
-        yield from _swept(getattr(step, "steps", []))
-
-
-def _verbs(steps: list[Any]) -> Iterator[type[Model]]:
-    for step in steps:
-        yield type(step)
-        yield from _verbs(getattr(step, "steps", []))
 
 
 def pauses_of(step: CycleStep, pairs: int) -> list[int]:

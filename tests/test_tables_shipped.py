@@ -201,3 +201,43 @@ def test_a_wiring_that_no_bench_file_can_say_is_told_so(tmp_path: Path) -> None:
     assert done.returncode == 2
     assert "wiring.series resistance: 0 is not above 0" in done.stderr
     assert "Traceback" not in done.stderr
+
+
+def program(*arguments: str, cwd: Path) -> "subprocess.CompletedProcess[str]":
+    return subprocess.run(
+        [PROGRAM, *arguments], cwd=cwd, capture_output=True, text=True, timeout=60, check=False
+    )
+
+
+def test_a_table_file_can_be_checked_and_copied(tmp_path: Path) -> None:
+    copied = program("check", "worn", "--text", cwd=tmp_path)
+    assert copied.returncode == 0
+    (tmp_path / "mine.yaml").write_text(copied.stdout)
+    assert find_table(str(tmp_path / "mine.yaml")).settings == find_table("worn").settings
+    checked = program("check", "mine.yaml", cwd=tmp_path)
+    assert (checked.returncode, checked.stdout.split(":")[0]) == (0, "worn cell")
+    (tmp_path / "mine.yaml").write_text(copied.stdout.replace("imprint: 300 mV", "imprnt: 300 mV"))
+    refused = program("check", "mine.yaml", cwd=tmp_path)
+    assert refused.returncode == 2
+    assert "imprnt" in refused.stderr
+    assert "write 'imprint'" in refused.stderr
+
+
+def test_a_shipped_recipe_can_be_copied(tmp_path: Path) -> None:
+    copied = program("check", "retention", "--text", cwd=tmp_path)
+    (tmp_path / "mine.yaml").write_text(copied.stdout)
+    assert parse_recipe(copied.stdout, file="mine.yaml").model == find_recipe("retention").model
+
+
+def test_a_rehearsal_says_which_faults_of_its_table_came(tmp_path: Path) -> None:
+    (tmp_path / "t.yaml").write_text(
+        "table: late\nfaults:\n"
+        "  - {fault: late answer, instrument: oscilloscope, exchange: 30, time: 10 ms}\n"
+        "  - {fault: no answer, instrument: oscilloscope, exchange: 999999}\n"
+    )
+    arguments = ("rehearse", "full_count", "--set", "rounds=1", "--table", "t.yaml")
+    done = program(*arguments, cwd=tmp_path)
+    assert done.returncode == 0, done.stderr
+    assert "Faults of the simulated bench: 1 happened, 1 did not come (yet)." in done.stdout
+    shown = program("show", cwd=tmp_path)
+    assert "bench: late" in shown.stdout

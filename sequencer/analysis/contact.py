@@ -105,7 +105,7 @@ def judge_contact(
     if tau <= resolution and expected_tau is not None and expected_tau <= 2 * resolution:
         raise ContactUnclear(
             f"with this wiring even a good cell has a time constant of {expected_tau:.2g} s, and"
-            f" the record shows none below {resolution:.2g} s; use a shorter pulse with shorter edges"
+            f" the record shows none below {resolution:.2g} s; use a shorter pulse and edges"
         )
     is_open = tau <= max(_OPEN_FACTOR * probe_tau, resolution)
     return ContactResult(

@@ -25,7 +25,8 @@ from pulsetally.sequencer.unfold import Unfolding
 
 HEAD = """\
 recipe: test
-parameters: {stored: 2, hold: 10 s, wide: 100 us, low: 2.5 V, size: 4 V, slow: 20 ms}
+parameters:
+  {stored: 2, hold: 10 s, wide: 100 us, low: 2.5 V, size: 4 V, slow: 20 ms, share: 50 %, many: 9}
 pulses:
   down: {level: -5 V, width: 2 ms}
   up: {level: 4 V, width: wide}
@@ -193,6 +194,8 @@ def test_stated_pauses_are_done_in_order_and_once() -> None:
 
 TUNE = "tune: up.width, between: [50 us, 200 us], full count: 9"
 CYCLE = "cycle: {down: down, up: up}, pairs: 10"
+COUNT = "tune: up.width, between: [50 us, 200 us]"
+ROUND = f"steps: [{{preset: down}}, {READ}]"
 REFUSED = [
     (f"{{{CYCLE}, steps: [{{{TUNE}, steps: [{{preset: down}}, {READ}]}}]}}",
      "a tune stands inside a cycle"),
@@ -205,6 +208,33 @@ REFUSED = [
      "the steps of a tune are not one round"),
     (f"{{{TUNE}, steps: [{{preset: down}}, {{step: up}}, {READ}]}}",
      "a tune has no read right after its preset"),
+    ("{tune: stored, between: [20, 60], full count: 9, steps: [{preset: down},"
+     " {read: up, until: low, at most: stored}]}",
+     "a tune tries fractions of 'stored', and 'at most' in its steps is a whole number"),
+    ("{tune: stored, between: [1, 20], full count: 9, steps: [{preset: down},"
+     " {read: up, until: low, at most: 60, capture: train, train of: stored}]}",
+     "a tune tries fractions of 'stored', and 'train of' in its steps is a whole number"),
+    (f"{{tune: stored, between: [1, 20], full count: 9, steps: [{{preset: down}}, {READ},"
+     " {step: up, count: stored}]}",
+     "a tune tries fractions of 'stored', and 'count' in its steps is a whole number"),
+    (f"{{tune: hold, between: [1 s, 9 s], full count: 9, steps: [{{preset: down}}, {READ},"
+     " {wait: hold}]}", "nothing up to the first read of a tune depends on 'hold'"),
+    (f"{{tune: slow, between: [1 s, 9 s], full count: 9, steps: [{{preset: down}}, {READ}]}}",
+     "nothing up to the first read of a tune depends on 'slow'"),
+    (f"{{sweep: {{stored: [12, 0.5]}}, steps: [{{{COUNT}, full count: stored, {ROUND}}}]}}",
+     "a value swept as 'full count' does not fit: 0.5 is not above 1"),
+    (f"{{sweep: {{stored: [0]}}, steps: [{{{COUNT}, full count: 9, within: stored, {ROUND}}}]}}",
+     "a value swept as 'within' does not fit: 0 is not above 0"),
+    (f"{{sweep: {{many: [300]}}, steps: [{{{COUNT}, full count: 9, at most: many, {ROUND}}}]}}",
+     "at most is 300 in a sweep"),
+    ("{sweep: {hold: [-5 s]}, steps: [{preset: down}, {ask: hello, within: hold}]}",
+     "a value swept as 'within' does not fit: -5"),
+    ("{sweep: {hold: [1e12 s]}, steps: [{preset: down}, {ask: hello, within: hold}]}",
+     "a value swept as 'within' does not fit: 1"),
+    (f"{{sweep: {{share: [500 %]}}, steps: [{{{CYCLE}, stop when: {{switched charge below: share}},"
+     " steps: [{pund: up}]}]}", "a value swept as 'switched charge below' does not fit: "),
+    (f"{{sweep: {{share: [-50 %]}}, steps: [{{{CYCLE}, stop when: {{full count off by: share}},"
+     f" {ROUND}}}]}}", "a value swept as 'full count off by' does not fit: -"),
     ("{cycle: {down: up, up: down}, pairs: 10}", "cycling from 4 V to -5 V does not go up"),
     (f"{{{CYCLE}, stop when: {{switched charge below: 50 %}}, steps: [{{preset: down}}, {READ}]}}",
      "a cycle stops on 'switched charge below', and nothing in its steps measures that"),
@@ -369,3 +399,29 @@ def test_trains_send_as_many_pulses_as_were_asked_for() -> None:
     assert (step.count, step.train, read.train) == (5, 3, 3)
     # The last train is as long as is left.
     assert plan.most_pulses == 1 + 5 + 7
+
+
+def test_a_parameter_is_listed_only_inside_its_sweep() -> None:
+    plan = plan_of(
+        "  - {preset: down}\n"
+        "  - sweep: {hold: [1 s, 10 s]}\n"
+        "    steps: [{preset: down}, {wait: hold}]\n"
+        "  - {preset: down}"
+    )
+    assert [each.settings.get("hold") for each in plan.rounds] == [None, 1, 10, None]
+
+
+def test_what_is_swept_is_not_swept_inside_again() -> None:
+    steps = (
+        "  - sweep: {up.level: [3 V, 4 V]}\n"
+        "    steps:\n"
+        "      - sweep: {up.level: [3.5 V]}\n"
+        "        steps: [{preset: down}]\n"
+    )
+    with pytest.raises(PlanError, match="swept inside its own sweep"):
+        plan_of(steps)
+
+
+def test_trains_are_captured_as_trains() -> None:
+    with pytest.raises(PlanError, match="add 'capture: train'"):
+        plan_of("  - {preset: down}\n  - {step: up, count: 5, train of: 3}")
