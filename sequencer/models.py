@@ -206,6 +206,14 @@ class Quantified:
         except QuantityError as error:
             raise fault(error.problem, error.remedy) from error
 
+    def check(self, value: float) -> None:
+        """Look whether a value in SI units keeps the bounds. Raises QuantityError."""
+        try:
+            self._checked(value)
+        except PydanticCustomError as error:
+            told = error.context or {}
+            raise QuantityError(told["problem"], told["remedy"]) from error
+
     def _checked(self, value: float) -> float:
         # Bounds are told as a file has them: without its unit a value would be refused again.
         shown = plain_quantity(value, self.kind)

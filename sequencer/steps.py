@@ -40,7 +40,7 @@ from pulsetally.sequencer.yaml_places import nearest
 
 # An instrument that counts on for years has lost its end.
 MOST_PAIRS = 1_000_000_000_000
-_MOST_TUNING_ROUNDS = 200
+MOST_TUNING_ROUNDS = 200
 # Ten years: nobody waits longer.
 LONGEST_WAIT = 3.2e8
 
@@ -275,7 +275,7 @@ class TuneStep(Model):
     at_most: Annotated[
         Value,
         Field(alias="at most"),
-        quantity(NUMBER, least=3, most=_MOST_TUNING_ROUNDS, whole=True, names=True),
+        quantity(NUMBER, least=3, most=MOST_TUNING_ROUNDS, whole=True, names=True),
     ] = 12.0
     steps: Annotated[list["Step"], Field(min_length=1)]
 
