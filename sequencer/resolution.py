@@ -189,3 +189,27 @@ def _pulse_problems(
             f"pulse {pulse.name!r} goes down from its base, and the generator of {file} makes only"
             " pulses upwards. To fix it, use another generator."
         )
+
+
+# What a pulse puts across a cell that does not switch, as a share of where it would settle.
+_LEAST_SETTLED = 0.5
+
+
+def settling_warnings(actions: Iterable[Action], bench: Bench) -> Iterator[str]:
+    """Tell of pulses that are over before the wiring lets the cell see much of them."""
+    tau = bench.cell_tau() or bench.probe_tau()
+    told: dict[str, float] = {}
+    for action in actions:
+        for pulse in pulses_of(action):
+            width = pulse.width
+            if isinstance(action, Cycle):
+                width = min(action.down.width, action.up.width)
+            told[pulse.name] = min(width, told.get(pulse.name, math.inf))
+    for name, width in told.items():
+        share = -math.expm1(-width / tau)
+        if share < _LEAST_SETTLED:
+            yield (
+                f"pulse {name!r} of {show_quantity(width, 's')} is short against the wiring's time"
+                f" constant of {show_quantity(tau, 's', 3)}: a cell that doesn't switch sees"
+                f" {share:.2g} of the voltage told"
+            )

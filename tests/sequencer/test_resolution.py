@@ -209,3 +209,21 @@ def test_a_run_takes_the_records_that_the_plan_promised(family: str, tmp_path: P
     for record in plan.records:
         assert shots[record.name].node.codes.size == record.points
         assert shots[record.name].sample_interval == pytest.approx(record.given, rel=1e-6)
+
+
+# closed form: 1 - exp(-t / tau), with 220.05 kohm beside 10 Mohm and 307.1 pF: 66.1 us.
+def test_a_pulse_that_is_over_before_the_cell_sees_it_is_mentioned() -> None:
+    text = (
+        "recipe: short\npulses:\n  down: {level: -5 V, width: 2 ms}\n"
+        "  up: {level: 4 V, width: 1 us}\n"
+        "steps:\n  - cycle: {down: down, up: up}\n    pairs: 10\n"
+    )
+
+    def told(recipe: str) -> list[str]:
+        warnings = make_plan(parse_recipe(recipe, file="r.yaml"), shipped_bench()).warnings
+        return [each for each in warnings if "is short against" in each]
+
+    (words,) = told(text)
+    assert "sees 0.015 of the voltage told" in words
+    assert "time constant of 66.1 us" in words
+    assert told(text.replace("1 us", "100 us")) == []
