@@ -5,8 +5,9 @@ across the cell has been worked out.
 """
 
 import itertools
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from typing import Protocol
 
 # The share of a ramp that lies between 10 % and 90 %.
 _RAMP_SHARE = 0.8
@@ -240,6 +241,47 @@ class Round:
             return self
         actions, settings = self.tune.actions(value)
         return replace(self, actions=actions, settings=settings)
+
+
+class Acting(Protocol):
+    """Something that holds an action."""
+
+    @property
+    def action(self) -> Action:
+        """Return it."""
+
+
+def kept_before(pending: Sequence[Acting], action: Action) -> int | None:
+    """Return how many parts of a round stay in it when a next action begins a new round.
+
+    What comes after them goes with the next action; None where the action belongs to the round.
+    """
+    match action:
+        case Cycle():
+            return len(pending)
+        case Preset():
+            # What only looks leaves the cell as it is, so that a preset may follow it.
+            looks = all(isinstance(each.action, Contact | Wait) for each in pending)
+            return None if looks else len(pending)
+        case Pund() | Loop():
+            return _kept_before_charge(pending)
+        case _:
+            return None
+
+
+def _kept_before_charge(pending: Sequence[Acting]) -> int | None:
+    kept = len(pending)
+    while kept and isinstance(pending[kept - 1].action, Contact | Wait | Ask):
+        kept -= 1
+    if not kept:
+        return None
+    # These bring the cell to where they need it, so that a wait before them can be repeated with
+    # the second one. What else is held through a wait is what its measurement is about.
+    if isinstance(pending[kept - 1].action, Pund | Loop):
+        return kept
+    held = any(isinstance(each.action, Wait | Ask) for each in pending[kept:])
+    measured = any(isinstance(each.action, Read | Pund | Loop) for each in pending)
+    return kept if measured and not held else None
 
 
 def most_pulses(action: Action) -> int:

@@ -113,9 +113,9 @@ SHIPPED: dict[str, tuple[int, tuple[str, ...], int]] = {
     "endurance": (23, ("cycles",), 7),
     "full_count": (20, (), 0),
     "hand_over": (2, (), 1),
-    "hysteresis": (1, (), 0),
+    "hysteresis": (3, (), 0),
     "imprint": (12, ("fills", "hold"), 0),
-    "pund": (1, (), 0),
+    "pund": (5, (), 0),
     "readback": (1, (), 1),
     "rest_sweep": (24, ("up.rest",), 0),
     "retention": (18, ("hold",), 0),
@@ -200,3 +200,15 @@ def test_settings_declared_as_parameters_are_known_in_every_round() -> None:
         "  - sweep: {up.width: [80 us]}\n    steps: [{preset: down}]\n  - preset: down\n"
     )
     assert [each.settings["up.width"] for each in plan.rounds] == [80e-6, 100e-6]
+
+
+@pytest.mark.parametrize("level", ["6 V", "-6 V"])
+def test_a_pulse_exactly_at_the_limit_is_planned_and_one_beyond_is_not(level: str) -> None:
+    text = HEAD.replace("steps:", f"  most: {{level: {level}, width: 1 ms, at: cell}}\nsteps:")
+    text += "  - preset: most\n"
+    recipe = parse_recipe(text, file="r.yaml")
+    (voltage, *_) = make_plan(recipe, shipped_bench()).volts
+    # The shipped bench's limit across the cell.
+    assert abs(voltage.cell) == pytest.approx(6, rel=1e-12)
+    with pytest.raises(PlanError, match="beyond the node limit of 6 V"):
+        make_plan(parse_recipe(text.replace("6 V", "6.000001 V"), file="r.yaml"), shipped_bench())
