@@ -10,6 +10,13 @@ from pulsetally.drivers.link import Link
 
 # The share of a linear ramp that lies between 10 % and 90 %.
 _RAMP_SHARE = 0.8
+# Of a limit: what a voltage that was worked out through the wiring may be off by rounding.
+_ROUNDING = 1e-9
+
+
+def keeps_limit(volts: float, limit: float) -> bool:
+    """Say whether a voltage of either sign keeps a limit, up to rounding."""
+    return abs(volts) <= limit * (1 + _ROUNDING)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -120,7 +127,7 @@ class FunctionGenerator(Instrument):
     def check_limits(self, pulse: PulseSetting) -> None:
         """Raise LimitError when a pulse goes beyond the limit at the panel."""
         for name, volts in (("base", pulse.base), ("level", pulse.level)):
-            if not abs(volts) <= self._limit:
+            if not keeps_limit(volts, self._limit):
                 raise LimitError(
                     self.address,
                     "",

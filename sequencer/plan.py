@@ -6,6 +6,7 @@ Everything here happens before power: a plan that stands keeps every limit.
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 
+from pulsetally.drivers.function_generator import keeps_limit
 from pulsetally.sequencer.bench import Bench
 from pulsetally.sequencer.errors import PlanError
 from pulsetally.sequencer.forecast import EMPTY_BYTES, disk_bytes_of, seconds_of
@@ -159,7 +160,7 @@ def _limit_problems(volts: list[PulseVolts], bench: Bench) -> list[str]:
             ("at the terminal", each.terminal, limits.source, "source"),
             ("across the cell", each.cell, limits.node, "node"),
         ):
-            if not abs(value) <= limit:
+            if not keeps_limit(value, limit):
                 what = "" if each.end == "level" else "the base of "
                 problems.append(
                     f"{what}pulse {each.name!r} of {show_quantity(each.panel, 'V')} at the panel"
@@ -175,7 +176,7 @@ def _panel_problems(pulses: list[Pulse], bench: Bench) -> list[str]:
     limit, told = bench.panel_limit(), []
     for pulse in pulses:
         for name, volts in (("base", pulse.base), ("level", pulse.level)):
-            if not abs(volts) <= limit:
+            if not keeps_limit(volts, limit):
                 told.append(
                     f"the {name} of pulse {pulse.name!r} is {show_quantity(volts, 'V')}, beyond"
                     f" {show_quantity(limit, 'V')} at the panel, which is what keeps both limits"
