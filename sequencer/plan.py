@@ -27,11 +27,13 @@ from pulsetally.sequencer.rounds import (
     Contact,
     Cycle,
     Loop,
+    Preset,
     Pulse,
     Pund,
     Read,
     Round,
     Step,
+    Wait,
     pulses_of,
 )
 from pulsetally.sequencer.unfold import Unfolding
@@ -226,6 +228,8 @@ def _warnings(rounds: tuple[Round, ...], volts: list[PulseVolts], bench: Bench) 
                 f"{what}pulse {each.name!r} hardly reaches the cell: of {sent} at the terminal"
                 f" {left} are left; a series diode blocks one polarity"
             )
-    if rounds and not rounds[0].repeatable:
+    planned = (action for each in rounds for action in each.actions)
+    first = next((each for each in planned if not isinstance(each, Contact | Wait | Ask)), None)
+    if first is not None and not isinstance(first, Preset | Pund | Loop):
         yield "the recipe begins without a preset: the first round starts from an unknown state"
     yield from bench.notes()
