@@ -31,6 +31,9 @@ from pulsetally.simulators.scpi_errors import ScpiError
 
 _Floats = NDArray[np.float64]
 _PORTION = 1 << 16
+# Of a long train while armed: 4 stretches make a pulse, so that these are 1000 pulses. A train
+# of a million, at which nothing triggers, is not to be integrated for half an hour.
+MOST_ARMED_STRETCHES = 4000
 
 
 class _Stretch(NamedTuple):
@@ -49,6 +52,7 @@ class _Acquisition:
     stretches: deque["_Stretch"] = field(default_factory=deque)
     trigger_seconds: float | None = None
     first_seconds: float = math.inf
+    armed_stretches: int = 0
 
     @property
     def armed_seconds(self) -> float:
@@ -68,6 +72,7 @@ class Digitizer:
     power_on: the settings it starts with and is reset to, as near as it can have them.
     changed: called when something changed by itself, also for a moment, as time passed.
     ignores_trigger: asked at each trigger that would be taken; when so nothing happens.
+    most_armed_stretches: how many of a long train's it wants to see while armed.
     """
 
     def __init__(
@@ -84,6 +89,7 @@ class Digitizer:
         self.power_on = power_on.within(self.imperfections)
         self.changed: Callable[[], None] = lambda: None
         self.ignores_trigger: Callable[[], bool] = lambda: False
+        self.most_armed_stretches = MOST_ARMED_STRETCHES
         self._random = np.random.default_rng(seed)
         # A stream of its own: the noise is the same with and without jitter.
         self._jitter = np.random.default_rng((seed, 3))
@@ -110,8 +116,19 @@ class Digitizer:
 
     @property
     def needs_detail(self) -> bool:
-        """Whether each pulse of the course goes into a record that is under way."""
-        return self.state in (ScopeState.FILLING, ScopeState.ACQUIRING)
+        """Whether each pulse of the course matters to a record that is under way.
+
+        While armed, it may trigger or lie before a trigger to come. That holds for the first
+        most_armed_stretches; behind them a trigger on a level that the node creeps up to may
+        come some pulses late, and a pre-trigger shows but the last pulses of a long train.
+        """
+        acquisition = self._acquisition
+        if acquisition is None or self.state is not ScopeState.ARMED:
+            return acquisition is not None
+        if acquisition.armed_stretches >= self.most_armed_stretches:
+            return False
+        settings = acquisition.settings
+        return settings.source.column is not None or settings.points_before > 0
 
     @property
     def kept_stretches(self) -> int:
@@ -208,6 +225,7 @@ class Digitizer:
         before = acquisition.stretches[-1] if acquisition.stretches else None
         acquisition.stretches.append(_Stretch(times, terminal_volts, node_volts, begin_volts))
         if acquisition.trigger_seconds is None:
+            acquisition.armed_stretches += self._is_armed()
             self._look_for_trigger(acquisition, before)
         if self._seen_seconds >= acquisition.last_seconds:
             self._finish(acquisition)
