@@ -112,6 +112,7 @@ def make_plan(recipe: Recipe, bench: Bench) -> Plan:
             *_warnings(rounds, volts, bench),
             *_contact_warnings(rounds, bench),
             *_charge_warnings(rounds, bench),
+            *dict.fromkeys(_direction_warnings(rounds)),
             *record_warnings(records),
         ),
     )
@@ -217,6 +218,28 @@ def _charge_warnings(rounds: tuple[Round, ...], bench: Bench) -> Iterator[str]:
                     "behind a series diode source and node don't tell the series resistor's"
                     f" voltage, so {name} can't be measured well"
                 )
+
+
+def _direction_warnings(rounds: tuple[Round, ...]) -> Iterator[str]:
+    """Tell of reads that go the way of their preset, and so find the cell full."""
+    for each in rounds:
+        preset: Pulse | None = None
+        for action in each.actions:
+            if isinstance(action, Preset):
+                preset = action.pulse
+                continue
+            if preset is None or isinstance(action, Wait | Contact):
+                continue
+            onward = isinstance(action, Step | Read) and action.pulse.rising == preset.rising
+            if onward and isinstance(action, Read):
+                yield (
+                    f"the preset {preset.name!r} goes {'up' if preset.rising else 'down'}, and so"
+                    f" does the read {action.pulse.name!r} after it, which finds a cell that is"
+                    " full already"
+                )
+            if isinstance(action, Read) or not onward:
+                # The cell is now elsewhere than its preset had it.
+                preset = None
 
 
 def _warnings(rounds: tuple[Round, ...], volts: list[PulseVolts], bench: Bench) -> Iterator[str]:

@@ -212,3 +212,24 @@ def test_a_pulse_exactly_at_the_limit_is_planned_and_one_beyond_is_not(level: st
     assert abs(voltage.cell) == pytest.approx(6, rel=1e-12)
     with pytest.raises(PlanError, match="beyond the node limit of 6 V"):
         make_plan(parse_recipe(text.replace("6 V", "6.000001 V"), file="r.yaml"), shipped_bench())
+
+
+UP = "{read: up, until: 2.5 V, at most: 9}"
+
+
+@pytest.mark.parametrize(
+    ("steps", "told"),
+    [
+        (f"[{{preset: top}}, {{wait: hold}}, {UP}]", True),
+        (f"[{{preset: top}}, {{step: up}}, {UP}]", True),
+        (f"[{{preset: down}}, {UP}]", False),
+        (f"[{{preset: top}}, {{step: down}}, {UP}]", False),
+        (f"[{{preset: top}}, {{read: down, until: -2.5 V, at most: 9}}, {UP}]", False),
+    ],
+)
+def test_a_read_that_goes_the_way_of_its_preset_is_mentioned(steps: str, *, told: bool) -> None:
+    text = HEAD.replace("steps:", "  top: {level: 5 V, width: 2 ms}\nsteps:")
+    text += f"  - repeat: 2\n    steps: {steps}\n"
+    warnings = make_plan(parse_recipe(text, file="r.yaml"), shipped_bench()).warnings
+    found = [each for each in warnings if "'top' goes up, and so does the read 'up'" in each]
+    assert len(found) == told
