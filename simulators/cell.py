@@ -14,6 +14,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from pulsetally.simulators.ranges import Ranges, check_ranges
 from pulsetally.simulators.wear import (
     Breakdown,
     Fatigue,
@@ -32,6 +33,18 @@ DEFAULT_DOMAINS = 168
 # A slip in a file should be told, and not fill the memory or the integers of a dealt hand.
 MOST_REGIONS = 100_000
 MOST_DOMAINS = 10**15
+
+RANGES: Ranges = {
+    "area": (1e-20, 1.0),
+    "thickness": (1e-10, 0.01),
+    "relative_permittivity": (0.1, 1e7),
+    "remanent_polarization": (0.0, 100.0),
+    "activation_volts": (0.5, 1e6),
+    "activation_spread": (0.0, 1e6),
+    "attempt_seconds": (1e-15, 1e6),
+    "leak_ohms": (1e-3, math.inf),
+    "imprint_volts": (-1e3, 1e3),
+}
 
 # A normal distribution has no lower end: activation voltages stop at this part of their
 # mean, so that the law stays a barrier for every region.
@@ -114,6 +127,7 @@ class CellDescription:
             raise ValueError(f"leak_ohms is {self.leak_ohms}; it must be above 0")
         if not math.isfinite(self.imprint_volts):
             raise ValueError(f"imprint_volts is {self.imprint_volts}; it must be finite")
+        check_ranges(self, RANGES)
         if self.domains is not None and not 1 <= self.domains <= MOST_DOMAINS:
             raise ValueError(f"domains is {self.domains}; it must be from 1 to {MOST_DOMAINS:.0e}")
 

@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from pulsetally.simulators.cell import CellDescription
+from pulsetally.simulators.ranges import Ranges, check_ranges
 
 # k T/q at 27 degrees Celsius, from the 2019 SI constants.
 BOLTZMANN_JOULES_PER_KELVIN = 1.380649e-23
@@ -26,6 +27,18 @@ CLAMP_FOLD_VOLTS = 0.025
 # Beyond this many folds (10 uA times e^20 is 5 kA) the clamp goes on as a straight
 # line: a solver's trial voltage must not overflow.
 _MOST_CLAMP_FOLDS = 20.0
+
+RANGES: Ranges = {
+    "source_ohms": (0.0, 1e12),
+    "series_ohms": (0.0, 1e12),
+    "diode_saturation_amperes": (1e-30, 1.0),
+    "diode_emission": (0.1, 100.0),
+    "clamp_volts": (1e-3, 1e4),
+    "probe_ohms": (1e-3, math.inf),
+    "probe_farads": (0.0, 1.0),
+}
+# Of source and series resistance together: with less, the node would follow within no time.
+LEAST_BRANCH_OHMS = 1e-3
 
 # What is left of a node without cell and probe: its voltage must have something to be on.
 STRAY_FARADS = 1e-13
@@ -66,6 +79,12 @@ class Wiring:
             value = getattr(self, name)
             if value is not None and not 0 < value < math.inf:
                 raise ValueError(f"{name} is {value}; it must be above 0")
+        check_ranges(self, RANGES)
+        if self.branch_ohms < LEAST_BRANCH_OHMS:
+            raise ValueError(
+                f"source_ohms and series_ohms together are {self.branch_ohms}; "
+                f"they must be at least {LEAST_BRANCH_OHMS}"
+            )
 
     @property
     def branch_ohms(self) -> float:

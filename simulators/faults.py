@@ -21,7 +21,7 @@ GARBAGE = "\x15\x81~?\xfe%%;;\n"
 
 # Beyond this nobody waits for an answer, and an instrument would rather be repaired.
 LONGEST_SECONDS = 86_400.0
-LARGEST_SHORT_OHMS = 1e6
+SMALLEST_SHORT_OHMS, LARGEST_SHORT_OHMS = 1e-3, 1e6
 _LONGEST_MESSAGE = 65_536
 _LARGEST_ERROR = 32_767
 
@@ -71,7 +71,7 @@ class Fault:
     followed: whether the instrument does what the message says before the line fails.
     number, message: an error's number (-32768 to 32767, not 0) and what it adds to the text;
     garbage: the characters, each of them one byte; '' for GARBAGE.
-    ohms: the short across the cell, above 0.
+    ohms: the short across the cell, 1e-3 to 1e6.
     Raises ValueError.
     """
 
@@ -136,9 +136,10 @@ class Fault:
             raise self._wrong(
                 f"has number {self.number}; it must be from -32768 to 32767 and not 0"
             )
-        if not 0 < self.ohms <= LARGEST_SHORT_OHMS:
+        if not SMALLEST_SHORT_OHMS <= self.ohms <= LARGEST_SHORT_OHMS:
             raise self._wrong(
-                f"has ohms {self.ohms}; it must be above 0, and {LARGEST_SHORT_OHMS:g} at most"
+                f"has ohms {self.ohms}; it must be from {SMALLEST_SHORT_OHMS:g} "
+                f"to {LARGEST_SHORT_OHMS:g}"
             )
         if len(self.message) > _LONGEST_MESSAGE or any(ord(c) > 255 for c in self.message):
             raise self._wrong(

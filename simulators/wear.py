@@ -8,7 +8,43 @@ import math
 from dataclasses import dataclass
 from typing import Literal
 
+from pulsetally.simulators.ranges import Ranges, check_ranges
+
 BOLTZMANN_EV_PER_KELVIN = 8.617333262e-5
+
+# By the names of the classes below.
+RANGES: dict[str, Ranges] = {
+    "Incubation": {"seconds": (1e-15, 1e12), "threshold_volts": (1e-9, 1e4)},
+    "ImprintGrowth": {
+        "volts_per_decade": (1e-12, 1e3),
+        "onset_seconds": (1e-15, 1e15),
+        "activation_ev": (0.0, 10.0),
+    },
+    "Fatigue": {
+        "scale_cycles": (1e-6, 1e30),
+        "exponent": (0.05, 20.0),
+        "recovery_volts": (1e-9, math.inf),
+    },
+    "Retention": {
+        "loss_per_decade": (1e-12, 10.0),
+        "onset_seconds": (1e-15, 1e15),
+        "exponent": (0.05, 20.0),
+        "rest_volts": (1e-9, 1e4),
+        "activation_ev": (0.0, 10.0),
+    },
+    "Thermal": {
+        "kelvin": (1e-3, 1e4),
+        "reference_kelvin": (1.0, 1e4),
+        "activation_per_kelvin": (-10.0, 10.0),
+    },
+    "Breakdown": {
+        "scale_cycles": (1e-6, 1e30),
+        "shape": (0.05, 100.0),
+        "short_ohms": (1e-3, 1e12),
+    },
+}
+# Far beyond any process that somebody waits for.
+_MOST_EXPONENT = 200.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -27,6 +63,7 @@ class Incubation:
 
     def __post_init__(self) -> None:
         _check_above_zero(self, "seconds", "threshold_volts")
+        check_ranges(self, RANGES["Incubation"])
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -45,6 +82,7 @@ class ImprintGrowth:
     def __post_init__(self) -> None:
         _check_above_zero(self, "volts_per_decade", "onset_seconds")
         _check_not_negative(self, "activation_ev")
+        check_ranges(self, RANGES["ImprintGrowth"])
 
     def shift_volts(self, held_seconds: float) -> float:
         """Return how far a state held this long has moved the imprint voltage, V."""
@@ -72,10 +110,11 @@ class Fatigue:
             raise ValueError(f"recovered_share is {self.recovered_share}; it must be from 0 to 1")
         if not self.recovery_volts > 0:
             raise ValueError(f"recovery_volts is {self.recovery_volts}; it must be above 0")
+        check_ranges(self, RANGES["Fatigue"])
 
     def kept(self, cycles: float) -> float:
         """Return the part of the remanent polarization left after this many cycles."""
-        return math.exp(-((cycles / self.scale_cycles) ** self.exponent))
+        return math.exp(-_power(cycles / self.scale_cycles, self.exponent))
 
     def cycles_at(self, kept: float) -> float:
         """Return the cycles after which this part, above 0 to 1, is left."""
@@ -85,7 +124,7 @@ class Fatigue:
         """Return the number of cycles that tells the wear after one strong preset."""
         # Not by way of what is kept: of a small loss, that leaves nothing.
         loss = (self.recovered_share - 1) * math.expm1(
-            -((cycles / self.scale_cycles) ** self.exponent)
+            -_power(cycles / self.scale_cycles, self.exponent)
         )
         if loss >= 1:
             return cycles
@@ -121,12 +160,13 @@ class Retention:
             raise ValueError(f"side is {self.side}; it must be 1 or -1")
         _check_above_zero(self, "loss_per_decade", "onset_seconds", "exponent", "rest_volts")
         _check_not_negative(self, "activation_ev")
+        check_ranges(self, RANGES["Retention"])
 
     def kept(self, rest_seconds: float) -> float:
         """Return the polarization of a cell wholly in the state, relative to the start."""
         lapse = rest_seconds / self.onset_seconds
         if self.law == "stretched":
-            return math.exp(-(lapse**self.exponent))
+            return math.exp(-_power(lapse, self.exponent))
         return max(0.0, 1 - self.loss_per_decade * math.log10(lapse)) if lapse > 1 else 1.0
 
 
@@ -149,6 +189,7 @@ class Thermal:
             raise ValueError(
                 f"activation_per_kelvin is {self.activation_per_kelvin}; it must be finite"
             )
+        check_ranges(self, RANGES["Thermal"])
 
     def activation_factor(self, kelvin: float) -> float:
         """Return by what the activation voltages are multiplied at a temperature."""
@@ -156,9 +197,9 @@ class Thermal:
 
     def acceleration(self, activation_ev: float, kelvin: float) -> float:
         """Return how much faster than at the reference a process runs (Arrhenius)."""
-        return math.exp(
-            activation_ev / BOLTZMANN_EV_PER_KELVIN * (1 / self.reference_kelvin - 1 / kelvin)
-        )
+        barrier_kelvin = activation_ev / BOLTZMANN_EV_PER_KELVIN
+        exponent = barrier_kelvin / self.reference_kelvin - barrier_kelvin / kelvin
+        return math.exp(min(exponent, _MOST_EXPONENT))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -175,6 +216,7 @@ class Breakdown:
 
     def __post_init__(self) -> None:
         _check_above_zero(self, "scale_cycles", "shape", "short_ohms")
+        check_ranges(self, RANGES["Breakdown"])
 
     def cycles_at(self, survival: float) -> float:
         """Return the cycles after which this part of all cells, above 0 to 1, still lives."""
@@ -182,6 +224,14 @@ class Breakdown:
 
 
 Option = Incubation | ImprintGrowth | Fatigue | Retention | Thermal | Breakdown
+
+
+def _power(base: float, exponent: float) -> float:
+    """Return base (0 or more) to the exponent; inf where that is too large for a float."""
+    try:
+        return float(base**exponent)
+    except OverflowError:
+        return math.inf
 
 
 def _check_above_zero(option: Option, *names: str) -> None:

@@ -77,7 +77,7 @@ def test_only_a_fault_of_the_cell_has_an_instant(kind: str) -> None:
         ({"kind": "error entry", "number": 0}, "number 0; it must be from -32768 to 32767"),
         ({"kind": "error entry", "number": 40_000}, "number 40000"),
         ({"kind": "garbage", "message": "\u20ac"}, "write characters up to"),
-        ({"kind": "cell shorts", "ohms": 0.0}, "ohms 0.0; it must be above 0"),
+        ({"kind": "cell shorts", "ohms": 0.0}, "ohms 0.0; it must be from 0.001 to"),
         (
             {"kind": "cell opens", "exchange": None, "at_seconds": 1.0},
             "at_seconds and an instrument; leave the instrument out",
