@@ -164,7 +164,10 @@ def format_quantity(value: float, kind: Kind) -> str:
         return str(int(value))
     texts = []
     for unit in kind.shown:
-        texts.append(f"{_plain(float(Decimal(value) / Decimal(kind.factors[unit])))} {unit}")
+        number = float(Decimal(value) / Decimal(kind.factors[unit]))
+        # A number that can be read may have a hundredfold in another unit that can't.
+        if abs(number) <= _MOST:
+            texts.append(f"{_plain(number)} {unit}")
     if kind.scaled:
         texts.append(Quantity(value, kind.unit).render(prec="full", form="si"))
     # The shortest that is exact; what is left is the number itself with its SI unit.

@@ -19,6 +19,8 @@ from pulsetally.simulators.simulate import chosen_settings, main
 from pulsetally.simulators.table_file import find_table, parse_table, table_text
 from pulsetally.simulators.table_file_quantities import (
     KINDS,
+    PER_KELVIN,
+    POLARIZATION,
     Kind,
     QuantityError,
     format_quantity,
@@ -245,6 +247,8 @@ def placed_in(outer: Any, inner: Any) -> Any:
 @example(KINDS[0], 0.1 + 0.2)
 @example(KINDS[0], -0.0)
 @example(KINDS[0], 5e-324)
+@example(POLARIZATION, 1e300)
+@example(PER_KELVIN, -1e300)
 def test_every_number_comes_back_as_it_was_written(kind: Kind, value: float) -> None:
     assume(abs(value) <= 1e300)
     if kind.whole:
