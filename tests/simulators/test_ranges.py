@@ -9,7 +9,8 @@ from pulsetally.simulators import cell, circuit, wear
 from pulsetally.simulators.cell import CellDescription
 from pulsetally.simulators.circuit import Wiring
 from pulsetally.simulators.settings import SimulationSettings
-from pulsetally.simulators.table_file import TableFileError, parse_table
+from pulsetally.simulators.table_file import parse_table
+from pulsetally.simulators.table_file_yaml import TableFileError
 from pulsetally.simulators.wear import (
     Breakdown,
     Fatigue,
