@@ -3,9 +3,7 @@
 Heavy libraries are imported inside the commands that need them, so that help is quick.
 """
 
-import json
 import os
-import sys
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
 from datetime import datetime
@@ -15,15 +13,24 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-if TYPE_CHECKING:
-    from rich.console import Console
+from pulsetally.sequencer.bench_commands import JsonOption, bench_app
+from pulsetally.sequencer.telling import (
+    DONE,
+    FAILED,
+    OUTPUTS_UNKNOWN,
+    WRONG_INPUT,
+    complain,
+    console,
+    print_json,
+    silence_output,
+    told,
+)
 
+if TYPE_CHECKING:
     from pulsetally.sequencer.bench import Bench
     from pulsetally.sequencer.errors import Mistake
     from pulsetally.sequencer.plan import Plan
     from pulsetally.sequencer.recipe import Recipe
-
-DONE, FAILED, WRONG_INPUT, OUTPUTS_UNKNOWN = 0, 1, 2, 3
 
 app = typer.Typer(
     add_completion=True,
@@ -31,6 +38,8 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     epilog="Begin with: pulsetally rehearse full_count",
 )
+
+app.add_typer(bench_app, name="bench")
 
 RecipeArgument = Annotated[
     str, typer.Argument(help="A recipe's path, or the name of one that ships.")
@@ -67,9 +76,6 @@ class SchemaName(StrEnum):
 
     RECIPE = "recipe"
     BENCH = "bench"
-
-
-JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON, for programs.")]
 
 
 def _version(asked: bool) -> None:
@@ -114,7 +120,7 @@ def check(
         typer.echo(schema_text(schema.value), nl=False)
         return
     if file is None:
-        _complain("check what? To fix it, name a recipe or a bench file, or give --schema.")
+        complain("check what? To fix it, name a recipe or a bench file, or give --schema.")
         raise typer.Exit(WRONG_INPUT)
     if _is_table(file):
         _check_table(file, as_text=text)
@@ -124,7 +130,7 @@ def check(
     from pulsetally.sequencer.plan_summary import plan_object, show_plan
     from pulsetally.sequencer.summary import say
 
-    with _told():
+    with told():
         # A pipe can be read once only, and is taken for a recipe.
         if Path(file).is_file() and is_bench_file(Path(file)):
             found = load_bench(Path(file))
@@ -133,11 +139,11 @@ def check(
                 return
             limit, notes = found.panel_limit(), found.notes()
             if as_json:
-                _print_json({"bench": found.model.bench, "panel_limit": limit, "notes": notes})
+                print_json({"bench": found.model.bench, "panel_limit": limit, "notes": notes})
             else:
                 for note in notes:
-                    say(_console(), f"Note: {note}.")
-                say(_console(), f"{found.model.bench}: well written; at most {limit:.4g} V"
+                    say(console(), f"Note: {note}.")
+                say(console(), f"{found.model.bench}: well written; at most {limit:.4g} V"
                     " at the panel keep its limits")  # fmt: skip
             return
         plan, table = _planned(file, bench, overrides)
@@ -146,9 +152,9 @@ def check(
             return
         now, free = datetime.now().astimezone(), free_bytes(_logbook_path(logbook))
         if as_json:
-            _print_json(plan_object(plan, table, now=now, free_bytes=free))
+            print_json(plan_object(plan, table, now=now, free_bytes=free))
         else:
-            show_plan(_console(), plan, table, now=now, free_bytes=free)
+            show_plan(console(), plan, table, now=now, free_bytes=free)
 
 
 def _is_table(file: str) -> bool:
@@ -174,13 +180,13 @@ def _check_table(file: str, *, as_text: bool) -> None:
     try:
         found = find_table(file)
     except TableFileError as error:
-        _complain(str(error))
+        complain(str(error))
         raise typer.Exit(WRONG_INPUT) from error
     if as_text:
         typer.echo(table_text(found.settings, title=found.title, purpose=found.purpose), nl=False)
         return
-    say(_console(), f"{found.title}: well written. {found.purpose}".rstrip())
-    say(_console(), f"Rehearse on it with: pulsetally rehearse full_count --table {file}")
+    say(console(), f"{found.title}: well written. {found.purpose}".rstrip())
+    say(console(), f"Rehearse on it with: pulsetally rehearse full_count --table {file}")
 
 
 @app.command(epilog="Example: pulsetally rehearse full_count --set rounds=5")
@@ -199,7 +205,7 @@ def rehearse(
     given = (("--table", table), ("--seed", seed), ("--domains", domains))
     # With the equals sign, a name that begins with a dash is no option.
     options = [f"{name}={value}" for name, value in given if value is not None]
-    with _told():
+    with told():
         if table is None:
             plan, shipped = _planned(recipe, None, overrides)
             options.append(f"--pulses={plan.most_pulses}")
@@ -210,7 +216,7 @@ def rehearse(
                 plan, bench = _planned(recipe, bench, overrides)
                 status = _carry_out(plan, bench, logbook, mode="rehearsal")
                 if words := faults_told(bench):
-                    say(_console(), words)
+                    say(console(), words)
     raise typer.Exit(status)
 
 
@@ -222,7 +228,7 @@ def run(
     logbook: LogbookOption = None,
 ) -> None:
     """Run a recipe on the instruments of a bench file."""
-    with _told():
+    with told():
         plan, table = _planned(recipe, bench, overrides)
         status = _carry_out(plan, table, logbook, mode="run")
     raise typer.Exit(status)
@@ -237,14 +243,14 @@ def runs(logbook: LogbookOption = None, as_json: JsonOption = False) -> None:
     from pulsetally.sequencer.results import list_runs
     from pulsetally.sequencer.summary import say, show_runs
 
-    with _told():
+    with told():
         path = _logbook_path(logbook)
         found = list_runs(Logbook(path, create=False))
         if as_json:
-            _print_json([asdict(each) for each in found])
+            print_json([asdict(each) for each in found])
         else:
-            show_runs(_console(), found)
-            say(_console(), f"logbook: {path}")
+            show_runs(console(), found)
+            say(console(), f"logbook: {path}")
 
 
 @app.command(epilog="Example: pulsetally show latest --json")
@@ -258,13 +264,13 @@ def show(
     from pulsetally.sequencer.results import find_run, run_result
     from pulsetally.sequencer.summary import show_result
 
-    with _told():
+    with told():
         book = Logbook(_logbook_path(logbook), create=False)
         result = run_result(book, find_run(book, which))
         if as_json:
-            _print_json(result.as_object())
+            print_json(result.as_object())
         else:
-            show_result(_console(), result)
+            show_result(console(), result)
 
 
 @app.command(epilog="Example: pulsetally simulate --write-bench bench.yaml")
@@ -295,7 +301,7 @@ def simulate(
 ) -> None:
     """Start the simulated instruments and keep them until Ctrl-C."""
     if serial and hislip:
-        _complain("--serial and --hislip can't be had together. To fix it, leave one out.")
+        complain("--serial and --hislip can't be had together. To fix it, leave one out.")
         raise typer.Exit(WRONG_INPUT)
     from pulsetally.sequencer.bench import parse_bench
     from pulsetally.sequencer.errors import InputError
@@ -319,10 +325,10 @@ def simulate(
                 parse_bench(text, file=str(write_bench))
                 write_bench.write_text(text, encoding="utf-8")
             except InputError as error:
-                _complain(str(error))
+                complain(str(error))
                 raise typer.Exit(WRONG_INPUT) from error
             except OSError as error:
-                _complain(f"{write_bench}: the bench file can't be written: {error.strerror}")
+                complain(f"{write_bench}: the bench file can't be written: {error.strerror}")
                 raise typer.Exit(WRONG_INPUT) from error
         tell(addresses, facts, as_json=as_json)
 
@@ -339,7 +345,7 @@ def simulate(
             control_port=control_port,
         )
     except ValueError as error:
-        _complain(str(error) if table else f"the simulated bench can't be made: {error}.")
+        complain(str(error) if table else f"the simulated bench can't be made: {error}.")
         raise typer.Exit(WRONG_INPUT) from error
     facts = facts_of(settings, title)
     # Before anybody can connect: no client would wait for a compiler.
@@ -347,89 +353,8 @@ def simulate(
     try:
         serve(settings, announce)
     except OSError as error:
-        _complain(f"the simulated bench can't listen: {error.strerror}. To fix it, use port 0.")
+        complain(f"the simulated bench can't listen: {error.strerror}. To fix it, use port 0.")
         raise typer.Exit(FAILED) from error
-
-
-bench_app = typer.Typer(no_args_is_help=True, help="Look at a bench: list, probe, quiet.")
-app.add_typer(bench_app, name="bench")
-
-
-@bench_app.command("list", epilog="Example: pulsetally bench list my_bench.yaml")
-def bench_list(
-    benches: Annotated[
-        list[Path] | None, typer.Argument(metavar="[BENCH]...", help="Bench files to look at too.")
-    ] = None,
-    serial: Annotated[bool, typer.Option("--serial", help="Ask serial ports as well.")] = False,
-    search: Annotated[
-        bool, typer.Option(help="Search this machine's ports and, by broadcast, the network.")
-    ] = True,
-    as_json: JsonOption = False,
-) -> None:
-    """List the addresses that can be found, with who answers; two seconds at most."""
-    from dataclasses import asdict
-
-    from pulsetally.sequencer.bench import load_bench
-    from pulsetally.sequencer.discovery import identify_all, visible_addresses
-    from pulsetally.sequencer.summary import show_found
-
-    with _told():
-        models = [load_bench(each).model for each in benches or []]
-        addresses = visible_addresses() if search else []
-        for model in models:
-            addresses += [model.generator.address, model.oscilloscope.address]
-        found = identify_all(addresses, serial_too=serial)
-        if as_json:
-            _print_json([asdict(each) for each in found])
-        else:
-            show_found(_console(), found)
-
-
-@bench_app.command("probe", epilog="Example: pulsetally bench probe my_bench.yaml")
-def bench_probe(
-    bench: Annotated[Path, typer.Argument(help="The bench file.")], as_json: JsonOption = False
-) -> None:
-    """Try each command that a run would use, with the outputs off; fires nothing."""
-    from dataclasses import asdict
-
-    from pulsetally.sequencer.bench import load_bench
-    from pulsetally.sequencer.instruments import open_links
-    from pulsetally.sequencer.probe import probe
-    from pulsetally.sequencer.summary import show_checks
-
-    with _told():
-        table = load_bench(bench)
-        with open_links(table) as (generator, oscilloscope):
-            checks = list(probe(table, generator, oscilloscope))
-        if as_json:
-            _print_json([asdict(each) for each in checks])
-        else:
-            show_checks(_console(), checks)
-        if any(each.holds is False for each in checks):
-            raise typer.Exit(FAILED)
-
-
-@bench_app.command("quiet", epilog="Example: pulsetally bench quiet my_bench.yaml")
-def bench_quiet(bench: Annotated[Path, typer.Argument(help="The bench file.")]) -> None:
-    """Switch the outputs off and read that back, whatever state things are in."""
-    from pulsetally.drivers.lock import holder_of
-    from pulsetally.sequencer.bench import load_bench
-    from pulsetally.sequencer.instruments import quiet_bench
-    from pulsetally.sequencer.summary import say
-
-    with _told():
-        table = load_bench(bench)
-        quiet_bench(table)
-        say(
-            _console(),
-            f"{table.model.generator.address}: the output is off, and reads back as off.",
-        )
-        if (holder := holder_of(table.model.generator.address)) is not None:
-            _complain(
-                f"{holder} is using this generator and may switch its output on again. To fix it,"
-                " end that process before you touch the cell, then ask for quiet once more."
-            )
-            raise typer.Exit(FAILED)
 
 
 @contextmanager
@@ -489,7 +414,7 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
     from pulsetally.sequencer.safety import StopSwitch, signals
     from pulsetally.sequencer.summary import say, show_result
 
-    console, path = _console(), _logbook_path(logbook)
+    screen, path = console(), _logbook_path(logbook)
     book, stop = Logbook(path), StopSwitch()
     # How long a rehearsal takes depends on this machine, not on the plan.
     seconds = plan.seconds if mode == "run" else None
@@ -500,9 +425,9 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
         units=units_of(plan.recipe.model.parameters),
     )
     for warning in plan.warnings:
-        say(console, f"Note: {warning}.")
+        say(screen, f"Note: {warning}.")
     if mode == "rehearsal" and plan.asking_seconds:
-        say(console, "Note: a rehearsal answers by itself what the recipe asks.")
+        say(screen, "Note: a rehearsal answers by itself what the recipe asks.")
     broken = ""
     with signals(stop):
         recorder = book.begin_run(plan, bench, mode=mode)
@@ -510,35 +435,30 @@ def _carry_out(plan: "Plan", bench: "Bench", logbook: Path | None, *, mode: str)
         person = AlwaysReady() if mode == "rehearsal" else whoever_is_there()
         with closing(engine.run(plan, bench, recorder, stop, person)) as events:
             try:
-                follow(events, progress, console)
+                follow(events, progress, screen)
             except OSError as error:
                 broken = f"the view could not be written ({error.strerror})"
     # What the run says of its end counts, not what could be written into the logbook.
     ended = recorder.ended
     if broken:
-        _silence_output()
-        _complain(f"the run was stopped, since {broken}; what it measured is kept in {path}")
+        silence_output()
+        complain(f"the run was stopped, since {broken}; what it measured is kept in {path}")
     else:
         try:
-            show_result(console, run_result(book, recorder.run), rounds=False)
+            show_result(screen, run_result(book, recorder.run), rounds=False)
         except LogbookError as error:
-            _complain(str(error))
+            complain(str(error))
         option = "" if logbook is None else f" --logbook {path}"
-        say(console, f"Everything is kept in {path} as run {recorder.run};"
+        say(screen, f"Everything is kept in {path} as run {recorder.run};"
             f" see it with: pulsetally show {recorder.run}{option}")  # fmt: skip
     if ended is None or ended.state is not RunState.FINISHED:
-        _complain(f"the run {ended.state}: {ended.reason}" if ended else "the run has no end")
+        complain(f"the run {ended.state}: {ended.reason}" if ended else "the run has no end")
     if ended is None or ended.outputs_off is False:
-        _complain(ended.unconfirmed if ended else "OUTPUTS NOT CONFIRMED OFF: look at them.")
+        complain(ended.unconfirmed if ended else "OUTPUTS NOT CONFIRMED OFF: look at them.")
         return OUTPUTS_UNKNOWN
     if ended.outputs_off and not broken:
-        say(console, "Outputs are off, and read back as off.")
+        say(screen, "Outputs are off, and read back as off.")
     return DONE if ended.state is RunState.FINISHED else FAILED
-
-
-def _silence_output() -> None:
-    """Keep Python from failing once more on an output that can't be written."""
-    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _overrides(written: list[str]) -> "tuple[dict[str, str], list[Mistake]]":
@@ -565,56 +485,6 @@ def _overrides(written: list[str]) -> "tuple[dict[str, str], list[Mistake]]":
 
 def _logbook_path(given: Path | None) -> Path:
     return given or Path(os.environ.get("PULSETALLY_LOGBOOK") or "logbook.db")
-
-
-def _console() -> "Console":
-    from rich.console import Console
-
-    return Console(highlight=False)
-
-
-def _print_json(value: object) -> None:
-    typer.echo(json.dumps(value, ensure_ascii=True, allow_nan=False))
-
-
-def _complain(words: str) -> None:
-    from pulsetally.sequencer.progress import printable
-
-    for line in words.splitlines():
-        typer.echo(printable(line, 5000), err=True)
-
-
-@contextmanager
-def _told() -> Iterator[None]:
-    """Turn our errors into sentences and exit statuses; there is no traceback for them."""
-    from pulsetally.drivers.errors import PulsetallyError
-    from pulsetally.sequencer.errors import (
-        InputError,
-        LogbookError,
-        OutputsNotConfirmed,
-        PlanError,
-    )
-    from pulsetally.sequencer.rehearsal import TableRefused
-
-    statuses: list[tuple[type[Exception], int]] = [
-        (InputError, WRONG_INPUT),
-        (PlanError, WRONG_INPUT),
-        (TableRefused, WRONG_INPUT),
-        # Once a run has begun, the engine itself takes care of a logbook that fails.
-        (LogbookError, WRONG_INPUT),
-        (OutputsNotConfirmed, OUTPUTS_UNKNOWN),
-        (PulsetallyError, FAILED),
-    ]
-    try:
-        yield
-    except PulsetallyError as error:
-        _complain(str(error))
-        status = next(code for kind, code in statuses if isinstance(error, kind))
-        raise typer.Exit(status) from error
-    except OSError as error:
-        _silence_output()
-        _complain(f"the output can't be written ({error.strerror})")
-        raise typer.Exit(FAILED) from error
 
 
 def main() -> None:
