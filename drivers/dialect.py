@@ -163,13 +163,16 @@ class Speech:
 class GeneratorDialect(Speech):
     """How a function generator is spoken to.
 
-    settle_seconds: of the output relay. most_count: pulses that one trigger can send.
+    idle: no pulse is being sent and none is waited for. sending: pulses are being sent, where that
+    is more than the opposite of idle. settle_seconds: of the output relay. most_count: pulses that
+    one trigger can send.
     """
 
     output: Setting
     load: Setting | None
     fire: tuple[str, ...]
     idle: Predicate | None
+    sending: Predicate | None = None
     settle_seconds: float = 0.05
     fixed_edge: float | None = None
     most_count: int = 1_000_000

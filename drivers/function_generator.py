@@ -171,6 +171,18 @@ class FunctionGenerator(Instrument):
         idle = self._dialect.idle
         return idle is None or self.says_yes(idle, self._channel)
 
+    @property
+    def tells_sending(self) -> bool:
+        """Say whether it can tell that pulses are being sent."""
+        return self._dialect.sending is not None or self.tells_idle
+
+    def is_sending(self) -> bool:
+        """Say whether pulses are being sent; False where the instrument can't tell."""
+        sending = self._dialect.sending
+        if sending is None:
+            return not self.is_idle()
+        return self.says_yes(sending, self._channel)
+
     def abort(self) -> None:
         """End what is being sent; the output stays at the pulse's base."""
         self._send(self._dialect.abort, self._channel)

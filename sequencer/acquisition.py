@@ -248,10 +248,9 @@ class Acquisition:
             if not self._until(self.generator.is_idle, margin, 2e-3):
                 self.generator.abort()
                 raise self._not_cycling(
-                    f"its burst of {count} pulse pairs should have taken {seconds:.6g} s and is"
-                    " not over after that: it goes on, or never began",
-                    "compare its period and count with the recipe, and look whether it still waits"
-                    " for a trigger",
+                    f"its burst of {count} pulse pairs should have taken {seconds:.6g} s and goes"
+                    " on after that",
+                    "compare its period and count with the recipe",
                 )
             if not self.generator.output_is_on():
                 raise self._not_cycling(
@@ -267,10 +266,10 @@ class Acquisition:
 
     def _see_begin(self, count: int, seconds: float, sent: int) -> None:
         """Raise where the generator says that it sends nothing though it was triggered."""
-        if seconds <= _SEEN_SECONDS or not self.generator.tells_idle:
+        if seconds <= _SEEN_SECONDS or not self.generator.tells_sending:
             return
         deadline = self.clock.now() + min(seconds / 2, _BEGIN_SECONDS)
-        while self.generator.is_idle():
+        while not self.generator.is_sending():
             if self.clock.now() >= deadline:
                 self.generator.abort()
                 self.pairs_out = sent, sent

@@ -283,6 +283,7 @@ class GeneratorSection(_SpeechSection):
     load: SettingSection | None = None
     fire: Annotated[Commands, Field(min_length=1)]
     idle: PredicateSection | None = None
+    sending: PredicateSection | None = None
     fixed_edge: Annotated[float | None, Field(alias="fixed edge"), quantity(TIME, above=0)] = None
     most_pulses_a_trigger: Annotated[
         float,
@@ -310,6 +311,7 @@ class GeneratorSection(_SpeechSection):
             load=self.load.build("load") if self.load else None,
             fire=tuple(self.fire),
             idle=self.idle.build() if self.idle else None,
+            sending=self.sending.build() if self.sending else None,
             settle_seconds=self.output_settles_in,
             fixed_edge=self.fixed_edge,
             most_count=int(self.most_pulses_a_trigger),
@@ -453,6 +455,7 @@ _GROUPS: dict[str, type[Model]] = {
     "output": SettingSection,
     "load": SettingSection,
     "idle": PredicateSection,
+    "sending": PredicateSection,
     "armed": PredicateSection,
     "done": PredicateSection,
     "waveform": WaveformSection,

@@ -196,6 +196,9 @@ def _probe_generator(bench: Bench, link: VisaLink) -> Iterator[Check]:
         return "switched off and read back as off; it was never switched on here"
 
     yield prober.check("output", output)
+    if dialect.sending is not None:
+        said = {True: "sending: yes", False: "sending: no"}
+        yield prober.check("sending", lambda: said[generator.is_sending()])
     if dialect.idle is None:
         yield Check(
             instrument=prober.name, name="idle", holds=None, detail="the dialect has no question"
