@@ -196,6 +196,8 @@ def show_quantity(value: float, unit: str, digits: int = 4) -> str:
         return f"{value} {unit}".strip()
     if unit == "m2":
         return f"{value * 1e12:.{digits}g} um2"
+    if unit == "%":
+        return f"{value * 100:.{digits}g} %"
     if not unit:
         return f"{value:.{digits}g}"
     return Quantity(value, unit).render(prec=digits - 1, form="si")

@@ -140,6 +140,8 @@ def test_what_people_read() -> None:
     assert show_quantity(1e-4, "s") == "100 us"
     assert show_quantity(3.913875, "V") == "3.914 V"
     assert show_quantity(8.0, "") == "8"
+    # A share takes no prefix.
+    assert show_quantity(0.5, "%") == "50 %"
     assert [show_duration(each) for each in (0.44, 12, 200, 7500, 273_600)] == [
         "0.4 s",
         "12 s",
