@@ -150,7 +150,8 @@ def test_a_full_count_too_far_from_the_first_ends_it(
 ) -> None:
     plan = planned(CYCLE)
     group = begun(plan)
-    (read,) = (each for each in plan.rounds[1].actions if isinstance(each, Read))
+    planned_actions = (each for one in plan.rounds for each in one.actions)
+    read = next(each for each in planned_actions if isinstance(each, Read))
     for crossing in counts:
         group.counted(read, counted(crossing))
     assert group.reason == reason
