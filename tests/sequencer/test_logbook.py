@@ -27,8 +27,9 @@ from pulsetally.sequencer.events import (
     Waveform,
 )
 from pulsetally.sequencer.logbook import LOGBOOK_VERSION, Logbook, Recorder, _pack, unpack
+from pulsetally.sequencer.models import units_of
 from pulsetally.sequencer.plan import Plan, make_plan
-from pulsetally.sequencer.recipe import find_recipe
+from pulsetally.sequencer.recipe import find_recipe, parse_recipe
 from pulsetally.sequencer.rehearsal import shipped_bench
 from pulsetally.sequencer.results import find_run, list_runs, run_result, run_shots
 
@@ -204,3 +205,18 @@ def test_what_is_no_run_number_is_refused(logbook: Logbook, which: str) -> None:
     logbook.begin_run(plan(), shipped_bench(), mode="run")
     with pytest.raises(LogbookError, match="there is no run"):
         find_run(logbook, which)
+
+
+def test_swept_parameters_have_their_units_beside_what_was_overridden(logbook: Logbook) -> None:
+    text = (
+        "recipe: r\nparameters: {w: 100 us, volts: 4 V, rounds: 3}\n"
+        "pulses:\n  down: {level: -5 V, width: 2 ms}\n  up: {level: volts, width: w}\n"
+        "steps:\n  - sweep: {w: [80 us, 90 us]}\n    steps:\n      - repeat: rounds\n"
+        "        steps: [{preset: down}, {step: up}]\n"
+    )
+    recipe = parse_recipe(text, file="r.yaml", overrides={"rounds": "1", "volts": "3 V"})
+    swept = make_plan(recipe, shipped_bench())
+    logbook.begin_run(swept, shipped_bench(), mode="rehearsal")
+    found = run_result(logbook, 1)
+    assert (found.swept, found.units) == (("w",), {"w": "s", "volts": "V"})
+    assert units_of(recipe.model.parameters) == found.units
