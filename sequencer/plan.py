@@ -20,6 +20,7 @@ from pulsetally.sequencer.resolution import (
     record_problems,
     record_warnings,
     records_of,
+    settling_warnings,
 )
 from pulsetally.sequencer.rounds import (
     Action,
@@ -114,6 +115,7 @@ def make_plan(recipe: Recipe, bench: Bench) -> Plan:
             *_charge_warnings(rounds, bench),
             *dict.fromkeys(_direction_warnings(rounds)),
             *record_warnings(records),
+            *settling_warnings(actions, bench),
         ),
     )
 
