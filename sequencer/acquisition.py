@@ -129,8 +129,7 @@ class Acquisition:
         its record isn't there.
         """
         pulse = burst.pulse
-        if self._unannounced:
-            yield self._announce()
+        yield from self.tell_stop()
         # The rest is spent at the base of the pulse before; only then comes the next one's.
         self._pause(self._next_at - self.clock.now())
         yield from self._set_up(burst)
@@ -431,6 +430,11 @@ class Acquisition:
             elif left > part:
                 self.generator.output_is_on()
                 self.oscilloscope.identify()
+
+    def tell_stop(self) -> Iterator[Event]:
+        """Tell, once, that somebody has asked for an end."""
+        if self._unannounced:
+            yield self._announce()
 
     @property
     def _unannounced(self) -> bool:

@@ -145,6 +145,7 @@ class _Conductor:
         for planned in self._plan.rounds:
             # Also before the first: somebody may have asked while the lines were opened.
             if self._stop.after_round:
+                yield from self._acquisition.tell_stop()
                 yield from self._leave_group(skipped)
                 raise StopRequested(self._stop.reason)
             if self._group is None or not self._group.holds(planned):

@@ -199,7 +199,7 @@ def test_a_wiring_that_no_bench_file_can_say_is_told_so(tmp_path: Path) -> None:
     (tmp_path / "bare.yaml").write_text("table: bare\nwiring: {series resistance: 0}\n")
     done = pulsetally("rehearse", "full_count", "--table", "bare.yaml", cwd=tmp_path)
     assert done.returncode == 2
-    assert "wiring.series resistance: 0 is not above 0" in done.stderr
+    assert "wiring.series resistance: 0 ohm is not above 0 ohm" in done.stderr
     assert "Traceback" not in done.stderr
 
 

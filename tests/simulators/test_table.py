@@ -288,10 +288,13 @@ DIODES = [(1.0 + 0.6551181180, 0.6551181180, 1e-3), (5.0, 0.6928878324, 4.307112
 def test_diode_drops_its_voltage_at_rest(
     emf_volts: float, drop_volts: float, amperes: float
 ) -> None:
-    # The leak is so small a resistance that the node stays at 0 V.
+    # The leak is so small a resistance that the node stays at 0 V but for a microvolt, which
+    # the EMF has on top.
+    leak_ohms = 1e-3
+    emf_volts += leak_ohms * amperes
     wiring = Wiring(source_ohms=50, series_ohms=950, diode_saturation_amperes=1e-14)
     table = connected(
-        CellDescription(activation_volts=1e5, activation_spread=0.0, leak_ohms=1e-6), wiring
+        CellDescription(activation_volts=1e5, activation_spread=0.0, leak_ohms=leak_ohms), wiring
     )
     table.rest_at(emf_volts)
     table.advance(1e-3)
