@@ -86,7 +86,7 @@ class Unfolding:
     def __init__(self, recipe: Recipe, bench: Bench) -> None:
         self._recipe, self._bench = recipe, bench
         self._actions = self._turns = 0
-        self._made: dict[int, tuple[Settings, Action]] = {}
+        self._made: dict[int, tuple[Settings, Action, Settings]] = {}
         # What is swept or tuned at the step that is looked at, and anywhere, of parameters.
         self._inside: list[str] = []
         self._elsewhere = {*swept_names(recipe.model.steps)}.intersection(recipe.model.parameters)
@@ -239,9 +239,9 @@ class Unfolding:
                     # Repeated under the same settings, it is the same action again.
                     made = self._made.get(id(step))
                     if made is None or made[0] is not settings:
-                        made = settings, self._action(step, settings)
+                        made = settings, self._action(step, settings), self._all(settings)
                         self._made[id(step)] = made
-                    yield _Part(action=made[1], settings=self._all(settings), cycling=cycling)
+                    yield _Part(action=made[1], settings=made[2], cycling=cycling)
 
     def _enter(self, names: list[str]) -> bool:
         """Note that these are swept or tuned from here on; say whether they may be."""
