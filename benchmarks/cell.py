@@ -28,6 +28,7 @@ import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import replace
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -229,7 +230,7 @@ def measure_sockets(repeats: int, pulses: int) -> dict[str, float]:
                 for index in range(pulses):
                     if index % 12 == 0:
                         preset(generator, oscilloscope)
-                    seconds += timed(lambda: fire(generator, oscilloscope))  # noqa: B023
+                    seconds += timed(partial(fire, generator, oscilloscope))
                 rates[name].append(pulses / seconds)
     return {f"pulses_per_second{name}": statistics.median(each) for name, each in rates.items()}
 
@@ -243,7 +244,7 @@ def measure_lots(most_cells: int) -> dict[str, float]:
         cells = draw_cells(CELL, count, relative_spread=0.05, seed=1)
         for name, compiled in (("", None), ("_numpy", False)):
             numbers[f"lot_{count}_s{name}"] = timed(
-                lambda: run_lot(cells, WIRING, PULSES, compiled=compiled)  # noqa: B023
+                partial(run_lot, cells, WIRING, PULSES, compiled=compiled)
             )
     return numbers
 

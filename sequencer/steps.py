@@ -323,10 +323,10 @@ class CycleStep(Model):
     pairs: Annotated[Value, quantity(NUMBER, least=1, most=MOST_PAIRS, whole=True, names=True)]
     pause_at: Annotated[
         list[float],
-        Field(alias="pause at"),
+        Field(alias="pause at", default_factory=list),
         BeforeValidator(lambda written: _pauses(written)),
         WithJsonSchema({"type": "array", "items": _PAIRS_SCHEMA}),
-    ] = []  # noqa: RUF012 - a model's default, which pydantic copies
+    ]
     per_decade: Annotated[
         float, Field(alias="pauses per decade"), quantity(NUMBER, least=0, most=20, whole=True)
     ] = 0.0

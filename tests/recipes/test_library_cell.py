@@ -2,6 +2,7 @@
 
 import math
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -21,8 +22,8 @@ from tests.simulated import simulated
 TRUE = DigitizerImperfections(offset_shares=(0.0, 0.0))
 
 
-def bench_with(**options: object) -> SimulationSettings:
-    return SimulationSettings(cell=CellDescription(**options), digitizer=TRUE)  # type: ignore[arg-type]
+def bench_with(**options: Any) -> SimulationSettings:
+    return SimulationSettings(cell=CellDescription(**options), digitizer=TRUE)
 
 
 # Closed form: pulses that switch the whole cell move 2 P_r A.

@@ -2,6 +2,7 @@
 
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -34,14 +35,14 @@ steps:
 SHIPPED = shipped_bench()
 
 
-def with_scope(bench: Bench = SHIPPED, **abilities: float | int | None) -> Bench:
-    return replace(bench, oscilloscope_dialect=replace(bench.oscilloscope_dialect, **abilities))  # type: ignore[arg-type]
+def with_scope(bench: Bench = SHIPPED, **abilities: Any) -> Bench:
+    return replace(bench, oscilloscope_dialect=replace(bench.oscilloscope_dialect, **abilities))
 
 
-def with_generator(**abilities: object) -> Bench:
+def with_generator(**abilities: Any) -> Bench:
     return replace(
         SHIPPED,
-        generator_dialect=replace(SHIPPED.generator_dialect, **abilities),  # type: ignore[arg-type]
+        generator_dialect=replace(SHIPPED.generator_dialect, **abilities),
     )
 
 

@@ -2,7 +2,7 @@
 
 import math
 from dataclasses import replace
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 import pytest
@@ -174,8 +174,9 @@ def test_an_up_cell_loses_polarization_as_a_stretched_exponential() -> None:
 
 
 def test_the_other_state_is_kept() -> None:
-    for side, level_volts in ((1, -8.0), (-1, 8.0)):
-        table = connected(CellDescription(retention=Retention(side=side)))  # type: ignore[arg-type]  # a plain int
+    cases: list[tuple[Literal[1, -1], float]] = [(1, -8.0), (-1, 8.0)]
+    for side, level_volts in cases:
+        table = connected(CellDescription(retention=Retention(side=side)))
         pulse(table, level_volts, 2e-3)
         before = table.polarization
         table.advance(1e8)

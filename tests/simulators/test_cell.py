@@ -1,6 +1,7 @@
 """The cell alone: charges, capacitances, the activation law and the domains."""
 
 import math
+from typing import Any
 
 import numpy as np
 import pytest
@@ -189,6 +190,6 @@ MISTAKES = [
 
 @pytest.mark.parametrize(("name", "value", "message"), MISTAKES)
 def test_impossible_cells_are_refused(name: str, value: float, message: str) -> None:
+    changes: dict[str, Any] = {name: value}
     with pytest.raises(ValueError, match=f"{name} is {value}; it {message}"):
-        # The fields differ in type, which a dict of them can't say.
-        CellDescription(**{name: value})  # type: ignore[arg-type]
+        CellDescription(**changes)

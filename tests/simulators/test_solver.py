@@ -37,13 +37,12 @@ STIFF = Wiring(source_ohms=1e-3, series_ohms=0, probe_ohms=math.inf, probe_farad
 
 
 def one_region(**changes: float) -> CellDescription:
-    regions: dict[str, float] = {
+    regions: dict[str, Any] = {
         "remanent_polarization": 1e-9,
         "relative_permittivity": 1.0,
         "activation_spread": 0.0,
     }
-    # The fields differ in type, which a dict of them can't say.
-    return CellDescription(**(regions | changes), regions=1)  # type: ignore[arg-type]
+    return CellDescription(**(regions | changes), regions=1)
 
 
 # A: at constant voltage one region is 1 - exp(-t/tau) (KAI with n = 1; at t = tau that is

@@ -8,6 +8,7 @@ import os
 import select
 import socket
 import threading
+from abc import ABC, abstractmethod
 from collections.abc import Awaitable, Callable, Iterator
 from contextlib import contextmanager
 from typing import Protocol
@@ -39,18 +40,19 @@ class Line(Protocol):
         """Go away."""
 
 
-class ByteLine:
+class ByteLine(ABC):
     """A line that carries bytes and no messages: a newline ends them."""
 
     def __init__(self) -> None:
         self._heard = b""
 
+    @abstractmethod
     def send(self, data: bytes) -> None:
-        raise NotImplementedError
+        """Send bytes."""
 
+    @abstractmethod
     def arrived(self) -> bytes:
         """Wait for bytes and return them."""
-        raise NotImplementedError
 
     def tell(self, message: bytes) -> None:
         self.send(message + b"\n")
